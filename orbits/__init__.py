@@ -1,0 +1,32 @@
+"""Nodeline: from calibrated OIFITS nights to companions, orbits and stellar masses."""
+
+from importlib import import_module
+
+_HOMES = {
+    "InputError": ".errors",
+    "NodelineError": ".errors",
+    "NothingFound": ".errors",
+    "Observable": ".observation",
+    "Observation": ".observation",
+    "Positions": ".positions",
+    "System": ".system",
+    "Velocities": ".velocities",
+    "read_positions": ".positions",
+    "read_system": ".system",
+    "read_velocities": ".velocities",
+    "write_positions": ".positions",
+    "write_velocities": ".velocities",
+}
+
+__all__ = sorted(_HOMES)
+
+
+def __getattr__(name: str) -> object:
+    """Import a public name when it is first asked for, so that `import orbits` stays quick."""
+    if name not in _HOMES:
+        raise AttributeError(f"module 'orbits' has no attribute {name!r}")
+    return getattr(import_module(_HOMES[name], __name__), name)
+
+
+def __dir__() -> list[str]:
+    return __all__

@@ -1,0 +1,6 @@
+"""``python -m orbits`` is ``nodeline``."""
+
+from .cli import main
+
+if __name__ == "__main__":
+    main()

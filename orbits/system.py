@@ -1,0 +1,148 @@
+"""The system file (TOML): what belongs together.
+
+name = "Harrow 7"
+[nights]
+files = ["nights/*.fits"]      # OIFITS, relative to this file
+[positions]
+tables = ["positions.ecsv"]
+[velocities]
+tables = ["velocities.ecsv"]
+[parallax]
+value = 12.3                   # mas
+error = 0.2
+[fit]
+live_points = 500
+"""
+
+import tomllib
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from .errors import InputError
+
+
+@dataclass(frozen=True, kw_only=True)
+class Parallax:
+    """A measured parallax, mas."""
+
+    value: float
+    error: float
+
+
+@dataclass(frozen=True, kw_only=True)
+class System:
+    """A star and all that was gathered about it; paths are absolute."""
+
+    path: Path
+    name: str
+    nights: tuple[Path, ...] = ()
+    target: str | None = None
+    field: float | None = None
+    """Half-width of the searched field, mas; from the data where None."""
+    diameter: float | None = None
+    """Uniform-disc diameter of the primary, mas; fitted where None."""
+    flip_phase: bool = False
+    """The OIFITS files use the opposite sign of phase."""
+    positions: tuple[Path, ...] = ()
+    velocities: tuple[Path, ...] = ()
+    parallax: Parallax | None = None
+    live_points: int = 500
+
+    @property
+    def results(self) -> Path:
+        """The folder beside the system file that holds what was derived from it."""
+        return self.path.with_name(f"{self.path.stem}-results")
+
+
+def read_system(path: Path) -> System:
+    """Read a system file.
+
+    Raises
+    ------
+    InputError
+        If the file is missing or not TOML, a key is unknown, a value has the wrong type, or a
+        file that it names does not exist.
+    """
+    path = Path(path).absolute()
+    if not path.is_file():
+        raise InputError(f"{path}: no such file")
+    try:
+        tree = tomllib.loads(path.read_text(encoding="utf-8"))
+    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
+        raise InputError(f"{path}: not TOML: {error}") from error
+    values = _check(path, tree, SCHEMA, "")
+    return System(
+        path=path,
+        name=values.get("name", path.stem),
+        nights=_files(path, values, "nights", "files"),
+        positions=_files(path, values, "positions", "tables"),
+        velocities=_files(path, values, "velocities", "tables"),
+        parallax=_parallax(path, values),
+        **{key: values["nights"][key] for key in _NIGHTS if key in values.get("nights", {})},
+        **{key: value for key, value in values.get("fit", {}).items()},
+    )
+
+
+_NIGHTS = ("target", "field", "diameter", "flip_phase")
+
+SCHEMA: dict[str, Any] = {
+    "name": str,
+    "nights": {"files": list, "target": str, "field": float, "diameter": float, "flip_phase": bool},
+    "positions": {"tables": list},
+    "velocities": {"tables": list},
+    "parallax": {"value": float, "error": float},
+    "fit": {"live_points": int},
+}
+
+
+def _check(path: Path, tree: dict, schema: dict, where: str) -> dict:
+    """The tree with integers made floats where the schema says so; refuses what it lacks."""
+    checked = {}
+    for key, value in tree.items():
+        name = f"{where}{key}"
+        if key not in schema:
+            raise InputError(f"{path}: unknown key {name!r}; known here are {', '.join(schema)}")
+        wanted = schema[key]
+        if isinstance(wanted, dict):
+            if not isinstance(value, dict):
+                raise InputError(f"{path}: {name} is a table: write [{name}]")
+            checked[key] = _check(path, value, wanted, f"{name}.")
+            continue
+        if wanted is float and type(value) is int:
+            value = float(value)
+        if type(value) is not wanted:
+            kinds = {str: "a text", float: "a number", int: "a whole number", list: "a list"}
+            raise InputError(
+                f"{path}: {name} must be {kinds.get(wanted, 'true or false')}, got {value!r}"
+            )
+        checked[key] = value
+    return checked
+
+
+def _files(path: Path, values: dict, section: str, key: str) -> tuple[Path, ...]:
+    """The files that the patterns of a section match, each of which must match one."""
+    found: list[Path] = []
+    for pattern in values.get(section, {}).get(key, []):
+        if not isinstance(pattern, str):
+            raise InputError(f"{path}: {section}.{key} must list file names, got {pattern!r}")
+        base = Path(pattern)
+        matches = (
+            sorted(base.parent.glob(base.name))
+            if base.is_absolute()
+            else sorted(path.parent.glob(pattern))
+        )
+        if not matches:
+            raise InputError(f"{path}: {section}.{key}: no file matches {pattern!r}")
+        found += [match for match in matches if match not in found]
+    return tuple(found)
+
+
+def _parallax(path: Path, values: dict) -> Parallax | None:
+    given = values.get("parallax")
+    if given is None:
+        return None
+    for key in ("value", "error"):
+        if not given.get(key, 0) > 0:
+            raise InputError(f"{path}: parallax.{key} must be a positive number of mas")
+    return Parallax(**given)

@@ -1,0 +1,1 @@
+"""Simulations that check statistical claims."""
