@@ -11,6 +11,7 @@ from .errors import InputError
 from .files import whole_file
 from .rows import Rows
 from .tables import Column, read_table, require, require_finite
+from .times import YEAR_KINDS, tdb_of_utc, tdb_of_year, utc_of_tdb
 
 COLUMNS = (
     Column("mjd", u.day),
@@ -135,12 +136,10 @@ def read_positions(path: Path) -> Positions:
 
 def write_positions(path: Path, positions: Positions, *, force: bool = False) -> None:
     """Write `positions` as ECSV with units, readable by `read_positions`."""
-    from astropy.time import Time
-
     major, minor, angle = error_ellipse(positions.covariance)
     table = Table(
         {
-            "mjd": Time(positions.mjd, format="mjd", scale="tdb").utc.mjd * u.day,
+            "mjd": utc_of_tdb(positions.mjd) * u.day,
             "separation": positions.separation * u.mas,
             "position_angle": positions.position_angle * u.deg,
             "error_major": major * u.mas,
@@ -159,21 +158,18 @@ def write_positions(path: Path, positions: Positions, *, force: bool = False) ->
 
 
 def _times(path: Path, table: Table) -> np.ndarray:
-    from astropy.time import Time
-
     if "mjd" in table.colnames:
         require_finite(path, table, "mjd")
-        return Time(np.asarray(table["mjd"]), format="mjd", scale="utc").tdb.mjd
+        return tdb_of_utc(table["mjd"])
     require(path, table, "year")
     require_finite(path, table, "year")
-    forms = {"besselian": "byear", "julian": "jyear"}
     kind = table.meta.get("year_kind")
-    if kind not in forms:
+    if kind not in YEAR_KINDS:
         raise InputError(
             f"{path}: column year needs 'year_kind' in the table's metadata: "
             f"besselian or julian, got {kind!r}"
         )
-    return Time(np.asarray(table["year"]), format=forms[kind], scale="tdb").mjd
+    return tdb_of_year(table["year"], kind)
 
 
 def _covariance(path: Path, table: Table) -> np.ndarray:

@@ -66,7 +66,8 @@ def require_finite(path: Path, table: Table, *names: str, positive: bool = False
         if bad.any():
             row = int(np.argmax(bad))
             wanted = "a positive number" if positive else "a number"
-            raise InputError(f"{path}: row {row + 1}, column {name}: {values[row]} is not {wanted}")
+            what = f"{values[row]} is not" if values[row] == values[row] else "empty or not"
+            raise InputError(f"{path}: row {row + 1}, column {name}: {what} {wanted}")
 
 
 def _parse(path: Path) -> Table:

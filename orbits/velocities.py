@@ -12,6 +12,7 @@ from .errors import InputError
 from .files import whole_file
 from .rows import Rows
 from .tables import Column, read_table, require, require_finite
+from .times import tdb_of_utc, utc_of_tdb
 
 COLUMNS = (
     Column("mjd", u.day),
@@ -51,8 +52,6 @@ def read_velocities(path: Path) -> Velocities:
     InputError
         If a column is missing, unknown, without unit, or holds a value that cannot be used.
     """
-    from astropy.time import Time
-
     path = Path(path)
     table = read_table(path, COLUMNS)
     require(path, table, "mjd", "velocity", "error", "star")
@@ -60,7 +59,7 @@ def read_velocities(path: Path) -> Velocities:
     require_finite(path, table, "error", positive=True)
     empty = np.full(len(table), "", dtype=object)
     return Velocities(
-        mjd=Time(np.asarray(table["mjd"]), format="mjd", scale="utc").tdb.mjd,
+        mjd=tdb_of_utc(table["mjd"]),
         velocity=np.asarray(table["velocity"]),
         error=np.asarray(table["error"]),
         star=_stars(path, table["star"]),
@@ -71,11 +70,9 @@ def read_velocities(path: Path) -> Velocities:
 
 def write_velocities(path: Path, velocities: Velocities, *, force: bool = False) -> None:
     """Write `velocities` as ECSV with units, readable by `read_velocities`."""
-    from astropy.time import Time
-
     table = Table(
         {
-            "mjd": Time(velocities.mjd, format="mjd", scale="tdb").utc.mjd * u.day,
+            "mjd": utc_of_tdb(velocities.mjd) * u.day,
             "velocity": velocities.velocity * u.km / u.s,
             "error": velocities.error * u.km / u.s,
             "star": [STARS[star] for star in velocities.star],
