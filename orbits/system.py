@@ -14,12 +14,12 @@ error = 0.2
 live_points = 500
 """
 
-import tomllib
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 from .errors import InputError
+from .toml import read_toml
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -65,13 +65,7 @@ def read_system(path: Path) -> System:
         file that it names does not exist.
     """
     path = Path(path).absolute()
-    if not path.is_file():
-        raise InputError(f"{path}: no such file")
-    try:
-        tree = tomllib.loads(path.read_text(encoding="utf-8"))
-    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
-        raise InputError(f"{path}: not TOML: {error}") from error
-    values = _check(path, tree, SCHEMA, "")
+    values = read_toml(path, SCHEMA)
     return System(
         path=path,
         name=values.get("name", path.stem),
@@ -94,30 +88,6 @@ SCHEMA: dict[str, Any] = {
     "parallax": {"value": float, "error": float},
     "fit": {"live_points": int},
 }
-
-
-def _check(path: Path, tree: dict, schema: dict, where: str) -> dict:
-    """The tree with integers made floats where the schema says so; refuses what it lacks."""
-    checked = {}
-    for key, value in tree.items():
-        name = f"{where}{key}"
-        if key not in schema:
-            raise InputError(f"{path}: unknown key {name!r}; known here are {', '.join(schema)}")
-        wanted = schema[key]
-        if isinstance(wanted, dict):
-            if not isinstance(value, dict):
-                raise InputError(f"{path}: {name} is a table: write [{name}]")
-            checked[key] = _check(path, value, wanted, f"{name}.")
-            continue
-        if wanted is float and type(value) is int:
-            value = float(value)
-        if type(value) is not wanted:
-            kinds = {str: "a text", float: "a number", int: "a whole number", list: "a list"}
-            raise InputError(
-                f"{path}: {name} must be {kinds.get(wanted, 'true or false')}, got {value!r}"
-            )
-        checked[key] = value
-    return checked
 
 
 def _files(path: Path, values: dict, section: str, key: str) -> tuple[Path, ...]:
