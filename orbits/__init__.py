@@ -3,6 +3,7 @@
 from importlib import import_module
 
 _HOMES = {
+    "Elements": ".elements",
     "InputError": ".errors",
     "NodelineError": ".errors",
     "NothingFound": ".errors",
