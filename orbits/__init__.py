@@ -12,6 +12,8 @@ _HOMES = {
     "Positions": ".positions",
     "System": ".system",
     "Velocities": ".velocities",
+    "read": ".oifits",
+    "read_epochs": ".oifits",
     "read_positions": ".positions",
     "read_system": ".system",
     "read_velocities": ".velocities",

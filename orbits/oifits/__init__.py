@@ -1,0 +1,27 @@
+"""OIFITS, the open exchange format of optical interferometry: reading, checking, writing."""
+
+from .epochs import observations, read, read_epochs
+from .joining import join
+from .loading import load
+from .model import T3, Array, Corr, Flux, Inspol, OIFile, Target, Vis, Vis2, Wavelength
+from .problems import Problem, Severity
+
+__all__ = [
+    "T3",
+    "Array",
+    "Corr",
+    "Flux",
+    "Inspol",
+    "OIFile",
+    "Problem",
+    "Severity",
+    "Target",
+    "Vis",
+    "Vis2",
+    "Wavelength",
+    "join",
+    "load",
+    "observations",
+    "read",
+    "read_epochs",
+]

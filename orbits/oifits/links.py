@@ -1,0 +1,215 @@
+"""Links between the tables of one file: names and ids resolved, once, when it is read."""
+
+from pathlib import Path
+from typing import TypeVar
+
+import numpy as np
+from astropy.io import fits
+
+from ..errors import InputError
+from .blocks import card, text
+from .model import (
+    Array,
+    Corr,
+    DataTable,
+    Inspol,
+    OIFile,
+    OtherHDU,
+    Table,
+    Target,
+    Wavelength,
+    attribute,
+    columns,
+)
+from .problems import Log
+
+T = TypeVar("T", bound=Table)
+
+
+def assemble(
+    path: Path, header: fits.Header, tables: list[Table], others: list[OtherHDU], log: Log
+) -> OIFile:
+    """An `OIFile` of the tables that were read, with every link that can be resolved.
+
+    Data tables whose target or spectral set-up is unknown are left out.
+
+    Raises
+    ------
+    InputError
+        If no OI_TARGET, no OI_WAVELENGTH or no table of data is usable.
+    """
+    target = _target(path, [t for t in tables if isinstance(t, Target)], log)
+    wavelengths = _unique([t for t in tables if isinstance(t, Wavelength)], "insname", log)
+    arrays = _unique([t for t in tables if isinstance(t, Array)], "arrname", log)
+    correlations = _unique([t for t in tables if isinstance(t, Corr)], "corrname", log)
+    if not wavelengths:
+        raise InputError(f"{path}: no usable OI_WAVELENGTH table, so no datum has a wavelength")
+    data = []
+    for table in tables:
+        if isinstance(table, DataTable) and _linked(table, wavelengths, arrays, correlations, log):
+            rows = _rows_of_known_targets(table, target, log)
+            if len(rows):
+                data.append(rows)
+    if not data:
+        raise InputError(
+            f"{path}: no usable table of data (OI_VIS2, OI_T3, OI_VIS or OI_FLUX)" + _because(log)
+        )
+    primary, history = _primary(header)
+    return OIFile(
+        target=target,
+        wavelengths=wavelengths,
+        data=data,
+        arrays=arrays,
+        correlations=correlations,
+        polarisations=[t for t in tables if isinstance(t, Inspol)],
+        primary=primary,
+        history=history,
+        others=others,
+        version=2 if text(header, "CONTENT").upper() == "OIFITS2" else 1,
+        source=str(path),
+        problems=log.problems,
+    )
+
+
+def _because(log: Log) -> str:
+    """The last thing that was left out, as the reason of an error."""
+    left_out = [p for p in log.problems if p.severity == 2]
+    return f": {left_out[-1].table}: {left_out[-1].what}" if left_out else ""
+
+
+def _target(path: Path, tables: list[Target], log: Log) -> Target:
+    if not tables:
+        raise InputError(f"{path}: no usable OI_TARGET table{_because(log)}")
+    table = tables[0]
+    for other in tables[1:]:
+        log.suspicious(other.label, "a second OI_TARGET table", f"only {table.label} is used")
+    if not len(table):
+        raise InputError(f"{path}: {table.label} has no rows")
+    keep = np.ones(len(table), dtype=bool)
+    first: dict[int, str] = {}
+    for row, (number, name) in enumerate(zip(table.target_id, table.target, strict=True)):
+        known = first.get(int(number))
+        if known is None:
+            first[int(number)] = str(name)
+        else:
+            if plain(known) != plain(str(name)):
+                raise InputError(
+                    f"{path}: {table.label}: TARGET_ID {number} is both {known!r} and {str(name)!r}"
+                )
+            keep[row] = False
+            log.note(table.label, f"TARGET_ID {number} appears twice", "one row is kept")
+    return table if keep.all() else table.select(keep)
+
+
+def plain(name: str) -> str:
+    """A name for comparison: without regard to case and repeated blanks."""
+    return " ".join(name.split()).casefold()
+
+
+def _unique(tables: list[T], key: str, log: Log) -> list[T]:
+    """Tables of which no two have the same name; of equal ones the first."""
+    kept: dict[str, T] = {}
+    ambiguous: set[str] = set()
+    for table in tables:
+        name = getattr(table, key)
+        if name not in kept:
+            kept[name] = table
+        elif same_content(kept[name], table):
+            log.note(table.label, f"{key.upper()} {name!r} appears twice, alike", "one is kept")
+        else:
+            ambiguous.add(name)
+            log.unusable(
+                table.label,
+                f"{key.upper()} {name!r} appears twice with other contents",
+                "what refers to it is left out",
+            )
+    return [table for name, table in kept.items() if name not in ambiguous]
+
+
+def same_content(a: Table, b: Table) -> bool:
+    """Whether two tables of one kind have equal columns."""
+    for column in columns(type(a)):
+        x, y = getattr(a, attribute(column.name)), getattr(b, attribute(column.name))
+        if (x is None) != (y is None):
+            return False
+        if x is not None and not np.array_equal(x, y, equal_nan=column.code in "EDC"):
+            return False
+    return True
+
+
+def _linked(table, wavelengths, arrays, correlations, log: Log) -> bool:
+    """Resolve the names that a table of data refers to; whether it can be used."""
+    name = _match(table.insname, [w.insname for w in wavelengths])
+    if name is None:
+        known = ", ".join(repr(w.insname) for w in wavelengths)
+        log.unusable(
+            table.label,
+            f"INSNAME {table.insname!r} has no OI_WAVELENGTH (there are {known})",
+            "the table is left out",
+        )
+        return False
+    if name != table.insname:
+        log.note(table.label, f"INSNAME is {table.insname!r}, not {name!r}", "taken as the same")
+        table.insname = name
+    nwave = len(next(w for w in wavelengths if w.insname == name))
+    if table.flag.shape[1] != nwave:
+        log.unusable(
+            table.label,
+            f"it has {table.flag.shape[1]} channels, the OI_WAVELENGTH {name!r} has {nwave}",
+            "the table is left out",
+        )
+        return False
+    for key, known in (
+        ("arrname", [a.arrname for a in arrays]),
+        ("corrname", [c.corrname for c in correlations]),
+    ):
+        wanted = getattr(table, key)
+        if wanted is None:
+            continue
+        found = _match(wanted, known)
+        if found is None:
+            log.suspicious(
+                table.label,
+                f"{key.upper()} {wanted!r} has no table",
+                "stations have no names"
+                if key == "arrname"
+                else "its data are taken as independent",
+            )
+        setattr(table, key, found)
+    return True
+
+
+def _match(wanted: str, known: list[str]) -> str | None:
+    """The known name that `wanted` means: the same, or the only one alike but for case, blanks."""
+    if wanted in known:
+        return wanted
+    alike = [name for name in known if plain(name) == plain(wanted)]
+    return alike[0] if len(alike) == 1 else None
+
+
+def _rows_of_known_targets(table: DataTable, target: Target, log: Log) -> DataTable:
+    known = np.isin(table.target_id, target.target_id)
+    if known.all():
+        return table
+    unknown = sorted({int(i) for i in table.target_id[~known]})
+    log.unusable(
+        table.label,
+        f"{np.count_nonzero(~known)} rows have TARGET_ID {', '.join(map(str, unknown[:5]))}, "
+        "which OI_TARGET does not know",
+        "these rows are left out",
+    )
+    return table.select(known)
+
+
+def _primary(header: fits.Header) -> tuple[dict[str, object], list[str]]:
+    """The keywords of the primary header that say something, and its history."""
+    skip = {"SIMPLE", "BITPIX", "EXTEND", "CHECKSUM", "DATASUM", "COMMENT", "HISTORY", ""}
+    keywords: dict[str, object] = {}
+    for entry in header.cards:
+        name = entry.keyword
+        if name in skip or name.startswith("NAXIS"):
+            continue
+        value = card(header, name)
+        if value is not None:
+            keywords[name] = value
+    return keywords, [str(line) for line in header["HISTORY"]] if "HISTORY" in header else []

@@ -1,0 +1,222 @@
+"""Reading: from the HDUs of a file to an `OIFile`, naming whatever departs from the standard."""
+
+from pathlib import Path
+
+import numpy as np
+
+from ..errors import InputError
+from . import links
+from .bintable import BinTable, Field, Malformed
+from .blocks import HDU, card, read_hdus, text
+from .model import (
+    DTYPES,
+    KINDS,
+    NWAVE,
+    Column,
+    ExtraColumn,
+    Keyword,
+    OIFile,
+    OtherHDU,
+    Table,
+    attribute,
+    columns,
+    keywords,
+)
+from .problems import Log
+from .units import factor
+
+STRUCTURAL = {
+    "XTENSION", "SIMPLE", "BITPIX", "NAXIS", "NAXIS1", "NAXIS2", "PCOUNT", "GCOUNT", "TFIELDS",
+    "EXTNAME", "EXTVER", "EXTEND", "OI_REVN", "CHECKSUM", "DATASUM", "END", "",
+}  # fmt: skip
+COMPATIBLE = {
+    "L": "L", "I": "IJBK", "J": "IJBK", "E": "EDIJBK", "D": "EDIJBK", "C": "CM", "A": "A",
+}  # fmt: skip
+"""Which forms of the file can stand for a form of the standard."""
+
+
+def load(path: str | Path) -> OIFile:
+    """Read an OIFITS file, version 1 or 2, plain or gzipped.
+
+    What departs from the standard is listed in `OIFile.problems`; what cannot be used is left
+    out and listed too.
+
+    Raises
+    ------
+    InputError
+        If the file is missing, not FITS, cut short, or has no usable OIFITS data.
+    """
+    path = Path(path)
+    log = Log(str(path))
+    tables: list[Table] = []
+    others: list[OtherHDU] = []
+    primary: HDU | None = None
+    foreign = True
+    for hdu in read_hdus(path):
+        if hdu.number == 0:
+            primary = hdu
+            continue
+        kind = KINDS.get(hdu.name)
+        if kind is None:
+            others.append(OtherHDU(hdu.name, hdu.raw))
+            continue
+        foreign = False
+        try:
+            tables.append(_table(kind, hdu, log))
+        except Malformed as fault:
+            log.unusable(f"{hdu.name} (HDU {hdu.number})", str(fault), "the table is left out")
+    if primary is None or foreign:
+        raise InputError(f"{path}: FITS, but not OIFITS: it has no OI_ table")
+    return links.assemble(path, primary.header, tables, others, log)
+
+
+def _table(kind: type[Table], hdu: HDU, log: Log) -> Table:
+    label = f"{hdu.name} (HDU {hdu.number})"
+    content = BinTable(hdu)
+    found: dict[str, Field] = {}
+    extra: dict[str, ExtraColumn] = {}
+    known = {column.name: column for column in columns(kind)}
+    for field in content.fields:
+        name = field.name.upper()
+        if name in known and name not in found:
+            found[name] = field
+        elif field.code in "PQ":
+            log.note(label, f"column {field.name} has rows of varying length", "it is not kept")
+        else:
+            extra[field.name] = ExtraColumn(field.cards, np.array(content.raw(field)))
+    values: dict[str, object] = {}
+    units: dict[str, str] = {}
+    for column in known.values():
+        if column.name not in found:
+            _missing(kind, column, label, log)
+            continue
+        field = found[column.name]
+        try:
+            values[attribute(column.name)] = _values(content, field, column, label, log)
+        except Malformed as fault:
+            if not column.optional and column.fill is None:
+                raise
+            log.unusable(label, str(fault), "the column is left out")
+            continue
+        if column.unit == "free":
+            units[column.name] = field.unit
+    values |= _keywords(kind, hdu, label, log)
+    try:
+        return kind(
+            **values,
+            units=units,
+            extra=extra,
+            cards=_cards(kind, hdu),
+            hdu=hdu.number,
+            revn=_revision(hdu),
+        )
+    except ValueError as fault:
+        raise Malformed(str(fault).removeprefix(f"{kind.extname}: ")) from fault
+
+
+def _values(content: BinTable, field: Field, column: Column, label: str, log: Log) -> np.ndarray:
+    """The values of a column in the type, shape and unit of the standard."""
+    name = column.name
+    if field.code not in COMPATIBLE[column.code]:
+        raise Malformed(f"column {name} has the form {field.cards['TFORM']!r}, not {column.code}")
+    values = content.values(field)
+    if column.code == "A":
+        return _texts(values)
+    if column.code == "L":
+        # Neither T nor F: undefined. In the one place where it matters, FLAG, that means bad.
+        values = values != ord("F")
+    elif column.code == "I" and field.code == "K" and values.size:
+        limit = np.iinfo(np.int32)
+        if values.min() < limit.min or values.max() > limit.max:
+            raise Malformed(f"column {name} has numbers beyond 32 bits")
+    values = _shaped(values, field, column)
+    values = values.astype(DTYPES[column.code])
+    if column.unit not in ("free", ""):
+        scale = factor(column.unit, field.unit)
+        if scale is None:
+            log.suspicious(
+                label,
+                f"column {name} has the unit {field.unit!r}",
+                f"its numbers are taken as {column.unit}",
+            )
+        elif scale != 1.0:
+            values *= values.dtype.type(scale)
+            log.note(label, f"column {name} is in {field.unit}", f"converted to {column.unit}")
+    return values
+
+
+def _shaped(values: np.ndarray, field: Field, column: Column) -> np.ndarray:
+    nrow, repeat = values.shape
+    if NWAVE not in column.shape:
+        wanted = int(np.prod(column.shape, dtype=int))
+        if repeat != wanted:
+            raise Malformed(f"column {column.name} has {repeat} values a row, not {wanted}")
+        return values.reshape(nrow, *column.shape)
+    if len(column.shape) == 2:
+        side = round(repeat**0.5)
+        if side * side != repeat:
+            raise Malformed(f"column {column.name} has {repeat} values a row, which is no square")
+        return values.reshape(nrow, side, side)
+    return values
+
+
+def _texts(values: np.ndarray) -> np.ndarray:
+    """Text without the blanks and NULs that pad it."""
+    cells = [v.split(b"\0")[0].decode("latin-1").strip() for v in values.tolist()]
+    return np.array(cells, dtype=str) if cells else np.empty(0, dtype="U1")
+
+
+def _missing(kind: type[Table], column: Column, label: str, log: Log) -> None:
+    if column.optional or column.since == 2:
+        return
+    if column.fill is None:
+        raise Malformed(f"column {column.name} is missing")
+    log.suspicious(label, f"column {column.name} is missing", f"taken as {column.fill}")
+
+
+def _keywords(kind: type[Table], hdu: HDU, label: str, log: Log) -> dict[str, object]:
+    values: dict[str, object] = {}
+    for keyword in keywords(kind):
+        value = _keyword(keyword, hdu, label, log)
+        if value is not None:
+            values[attribute(keyword.name)] = value
+        elif keyword.compulsory and keyword.fill is None:
+            if keyword.name == "DATE-OBS":
+                log.note(label, "keyword DATE-OBS is missing", "not needed: MJD is used")
+                values["date_obs"] = ""
+            else:
+                raise Malformed(f"keyword {keyword.name} is missing")
+    return values
+
+
+def _keyword(keyword: Keyword, hdu: HDU, label: str, log: Log) -> object | None:
+    value = card(hdu.header, keyword.name)
+    if value is None:
+        return None
+    if keyword.kind is str:
+        return text(hdu.header, keyword.name)
+    if isinstance(value, bool) or not isinstance(value, int | float) or not np.isfinite(value):
+        log.suspicious(label, f"keyword {keyword.name} is {value!r}, not a number", "ignored")
+        return None
+    return keyword.kind(value)
+
+
+def _revision(hdu: HDU) -> int | None:
+    value = card(hdu.header, "OI_REVN")
+    return value if isinstance(value, int) and not isinstance(value, bool) else None
+
+
+def _cards(kind: type[Table], hdu: HDU) -> list[tuple[str, object, str]]:
+    """Header cards that neither FITS nor the standard gives a meaning here."""
+    skip = STRUCTURAL | {keyword.name for keyword in keywords(kind)}
+    kept = []
+    for entry in hdu.header.cards:
+        name = entry.keyword
+        column_card = name.startswith(("TTYPE", "TFORM", "TUNIT", "TNULL", "TSCAL", "TZERO",
+                                       "TDISP", "TDIM")) and name[-1:].isdigit()  # fmt: skip
+        if name in skip or column_card:
+            continue
+        value = card(hdu.header, name) if name not in ("COMMENT", "HISTORY") else entry.value
+        if value is not None:
+            kept.append((name, value, entry.comment))
+    return kept
