@@ -8,6 +8,7 @@ The bispectrum is V(u1, v1) V(u2, v2) conj(V(u1 + u2, v1 + v2)).
 from dataclasses import dataclass, field
 
 import numpy as np
+from scipy import sparse
 
 from .rows import Rows
 
@@ -88,6 +89,8 @@ class Observation:
     """Squared visibilities."""
     t3: Observable = field(default_factory=lambda: Observable.empty(2))
     """Closure phases, rad."""
+    correlation: sparse.csr_array | None = None
+    """Correlation matrix of the data kept, `v2` before `t3`; None where they are independent."""
     files: tuple[str, ...] = ()
 
     @property

@@ -30,6 +30,12 @@ def tdb_of_year(year: np.ndarray, kind: str) -> np.ndarray:
         return Time(np.asarray(year, dtype=float), format=YEAR_KINDS[kind], scale="tdb").mjd
 
 
+def date_of_utc(mjd: float) -> str:
+    """Calendar date of MJD UTC, as YYYY-MM-DD."""
+    with _quiet_offline_astropy() as Time:
+        return Time(mjd, format="mjd", scale="utc").strftime("%Y-%m-%d")
+
+
 @contextmanager
 def _quiet_offline_astropy() -> Iterator[type]:
     """astropy's Time, never asking the network, nor warning of years without leap seconds.

@@ -61,13 +61,14 @@ def blank_night(
     second = at[:, triangles[:, 2]] - at[:, triangles[:, 1]]
     common = {"spectrum": spectrum, "mjd": np.asarray(mjd, float), "integration": integration}
     v2 = _blank(sides[:, :, None], pairs, first_row=0, **common)
+    legs = np.stack([first, second], axis=2)
     return Observation(
         target=target,
         instruments=(spectrum.name,),
         stations=array.stations,
         v2=v2,
-        t3=_blank(np.stack([first, second], axis=2), triangles, first_row=sides[..., 0].size, **common),
-    )  # fmt: skip
+        t3=_blank(legs, triangles, first_row=sides[..., 0].size, **common),
+    )
 
 
 def observe(

@@ -4,9 +4,13 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+import astropy.units as u
 import numpy as np
+from astropy.time import Time
 
+from ..elements import Elements
 from ..errors import InputError
+from ..masses import amplitudes, kepler_axis
 from ..toml import read_toml
 from .array import Array
 from .nights import Noise, Spectrum
@@ -84,6 +88,38 @@ class Scenario:
     nights: Programme
     noise: Noise
     velocities: Spectroscopy | None = None
+
+    @property
+    def parallax(self) -> float:
+        """mas"""
+        return 1000.0 / self.star.distance
+
+    @property
+    def elements(self) -> Elements:
+        """The orbit on the sky: its size follows from the masses and the distance."""
+        orbit = self.orbit
+        axis = kepler_axis(orbit.period, orbit.primary_mass + orbit.companion_mass)
+        return Elements(
+            period=orbit.period * u.day,
+            periastron=Time(orbit.periastron, format="mjd", scale="tdb"),
+            eccentricity=orbit.eccentricity,
+            semimajor_axis=axis * self.parallax * u.mas,
+            inclination=orbit.inclination * u.deg,
+            node=orbit.node * u.deg,
+            argument=orbit.argument * u.deg,
+        )
+
+    @property
+    def amplitudes(self) -> tuple[float, float]:
+        """Velocity semi-amplitudes of the primary and of the companion, km/s."""
+        orbit = self.orbit
+        return amplitudes(
+            orbit.period,
+            orbit.eccentricity,
+            np.radians(orbit.inclination),
+            orbit.primary_mass,
+            orbit.companion_mass,
+        )
 
 
 SCHEMA: dict[str, Any] = {
