@@ -143,3 +143,8 @@ def legend_below(drawing: "Figure", handles: list, *, columns: int) -> None:
     """Put the key under the picture, where it cannot cover anything."""
     if handles:
         drawing.legend(handles=handles, loc="outside lower center", ncols=columns)
+
+
+def angular_unit(extent: float) -> tuple[str, float]:
+    """Name of the unit to label an angle of `extent` mas in, and its number in one mas."""
+    return ("arcsec", 1e-3) if extent > 4000 else ("mas", 1.0)

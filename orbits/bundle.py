@@ -1,0 +1,177 @@
+"""A bundle: one orbit together with those that its errors or its posterior allow.
+
+Solutions of a fit and entries of a catalogue both become a Bundle; drawings, ephemerides and
+tables of events are functions of it. Plain numbers: d, MJD TDB, mas, deg, km/s.
+"""
+
+from collections.abc import Mapping
+from dataclasses import dataclass, fields
+from typing import TYPE_CHECKING, Self
+
+import numpy as np
+
+from .elements import Elements, thiele_innes
+from .kepler import eccentric_anomaly, mean_anomaly, true_anomaly
+from .rows import Rows
+
+if TYPE_CHECKING:
+    from .positions import Positions
+    from .velocities import Velocities
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class Orbits(Rows):
+    """n orbits; conventions as in `Elements`."""
+
+    period: np.ndarray
+    """(n,) d, > 0."""
+    periastron: np.ndarray
+    """(n,) MJD TDB."""
+    eccentricity: np.ndarray
+    """(n,) in [0, 1)."""
+    semimajor_axis: np.ndarray
+    """(n,) mas, of the relative orbit."""
+    inclination: np.ndarray
+    """(n,) deg; below 90 the position angle grows with time."""
+    node: np.ndarray
+    """(n,) deg."""
+    argument: np.ndarray
+    """(n,) deg, of the companion's relative orbit."""
+    k1: np.ndarray
+    """(n,) km/s: half the range of the primary's velocity; NaN where unknown. So are k2, gamma."""
+    k2: np.ndarray
+    """(n,) km/s, of the companion."""
+    gamma: np.ndarray
+    """(n,) km/s, of the centre of mass."""
+
+    @classmethod
+    def of(cls, columns: Mapping[str, np.ndarray]) -> Self:
+        """Orbits from a mapping of names to (n,) arrays; k1, k2 and gamma may be missing."""
+        n = len(columns["period"])
+        return cls(
+            **{
+                f.name: np.array(columns.get(f.name, np.full(n, np.nan)), dtype=np.float64)
+                for f in fields(cls)
+            }
+        )
+
+    @property
+    def thiele_innes(self) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+        """A, B, F, G, each (n,), mas: north = A X + F Y, east = B X + G Y."""
+        angles = (np.radians(v) for v in (self.inclination, self.node, self.argument))
+        return thiele_innes(self.semimajor_axis, *angles)
+
+    def anomaly(self, mjd: np.ndarray) -> np.ndarray:
+        """(n, m) eccentric anomaly, rad, at the (m,) times `mjd` (TDB), or (n, m) times."""
+        mean = mean_anomaly(mjd, self.period[:, None], self.periastron[:, None])
+        return eccentric_anomaly(mean, self.eccentricity[:, None])
+
+    def at_anomaly(self, anomaly: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """(n, m) East and North offset, mas, at eccentric anomalies (m,) or (n, m), rad."""
+        A, B, F, G = (constant[:, None] for constant in self.thiele_innes)
+        e = self.eccentricity[:, None]
+        X, Y = np.cos(anomaly) - e, np.sqrt((1 - e) * (1 + e)) * np.sin(anomaly)
+        return B * X + G * Y, A * X + F * Y
+
+    def offsets(self, mjd: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """(n, m) East and North offset, mas, at the times `mjd` (TDB), (m,) or (n, m)."""
+        return self.at_anomaly(self.anomaly(mjd))
+
+    def velocities(self, mjd: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """(n, m) velocities of primary and companion, km/s, at `mjd` (TDB); NaN where unknown.
+
+        The companion recedes at the node: V2 = gamma + K2 [cos(w + v) + e cos w], with w the
+        argument of its relative orbit, and V1 the same with -K1.
+        """
+        w, e = np.radians(self.argument)[:, None], self.eccentricity[:, None]
+        course = np.cos(w + true_anomaly(self.anomaly(mjd), e)) + e * np.cos(w)
+        gamma = self.gamma[:, None]
+        return gamma - self.k1[:, None] * course, gamma + self.k2[:, None] * course
+
+    def phase(self, mjd: np.ndarray) -> np.ndarray:
+        """(n, m) phase in [0, 1) since periastron at the (m,) times `mjd` (TDB)."""
+        return (mjd - self.periastron[:, None]) / self.period[:, None] % 1.0
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class Bundle:
+    """An orbit, its spread, and what it was measured from."""
+
+    name: str
+    best: Orbits
+    """One row."""
+    draws: Orbits
+    """Equally likely orbits; no rows where nothing is known of the errors."""
+    spread: str = ""
+    """Where `draws` come from, in words; "" where there are none."""
+    ascending: bool = False
+    """The node is known to be the ascending one; else it and the argument may be off by 180."""
+    positions: "Positions | None" = None
+    velocities: "Velocities | None" = None
+
+    @classmethod
+    def of_elements(cls, name: str, elements: Elements, **more: object) -> Self:
+        """A bundle of one orbit with nothing known of its errors."""
+        best = orbits_of_elements(elements)
+        return cls(name=name, best=best, draws=best.select(np.zeros(1, dtype=bool)), **more)
+
+    def thin(self, n: int) -> Orbits:
+        """At most `n` of the draws, evenly picked."""
+        if len(self.draws) <= n:
+            return self.draws
+        return self.draws.select(np.linspace(0, len(self.draws) - 1, n).astype(int))
+
+
+def orbits_of_elements(elements: Elements) -> Orbits:
+    """One row of plain numbers from elements with units."""
+    return Orbits.of(
+        {
+            "period": [elements.period.to_value("d")],
+            "periastron": [elements.periastron.tdb.mjd],
+            "eccentricity": [elements.eccentricity],
+            "semimajor_axis": [elements.semimajor_axis.to_value("mas")],
+            "inclination": [elements.inclination.to_value("deg")],
+            "node": [elements.node.to_value("deg")],
+            "argument": [elements.argument.to_value("deg")],
+        }
+    )
+
+
+def draw_orbits(
+    best: Mapping[str, float], errors: Mapping[str, float], n: int, rng: np.random.Generator
+) -> Orbits:
+    """`n` orbits around `best` with independent normal `errors`; none where no error is known.
+
+    Quantities without an error keep their value. The normal laws are cut where an orbit would
+    cease to be one: the period at 0, the eccentricity at 0 and 1, the semimajor axis at 0. What a
+    catalogue leaves out, the correlations, is not invented; near a circle, where the time and the
+    argument of periastron balance each other, the spread is then wider than the truth.
+    """
+    known = {name: value for name, value in errors.items() if np.isfinite(value) and value > 0}
+    if not known:
+        n = 0
+    limits = {"period": (0.0, np.inf), "eccentricity": (0.0, 1.0), "semimajor_axis": (0.0, np.inf)}
+    return Orbits.of(
+        {
+            name: _cut_normal(
+                value, known.get(name, 0.0), limits.get(name, (-np.inf, np.inf)), n, rng
+            )
+            for name, value in best.items()
+        }
+    )
+
+
+def _cut_normal(
+    value: float, error: float, limits: tuple[float, float], n: int, rng: np.random.Generator
+) -> np.ndarray:
+    """(n,) normal numbers within `limits`, by inverting the cut distribution function."""
+    if error == 0.0 or n == 0:
+        return np.full(n, value)
+    from scipy.special import ndtr, ndtri
+
+    low, high = ((limit - value) / error for limit in limits)
+    below, above = ndtr(low), ndtr(high)
+    fraction = below + (above - below) * (1 - rng.random(n))  # in (0, 1]
+    numbers = value + error * ndtri(np.clip(fraction, 1e-16, 1 - 1e-16))
+    # Rounding may put a number on the upper limit, where an eccentricity would be 1.
+    return np.clip(numbers, limits[0], np.nextafter(limits[1], -np.inf))

@@ -1,0 +1,171 @@
+"""Where the companion is in time: separation and position angle against date, and residuals."""
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from ..bundle import Bundle
+from ..positions import Positions, position_angle
+from . import style
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+_BAND = (15.865, 84.135)
+"""Percentiles of the one-sigma band."""
+_MOST_DRAWS = 300
+_LONG = 1500.0
+"""d; a longer stretch of time is labelled in years, a shorter one in days."""
+
+
+@style.styled
+def draw_motion(
+    bundle: Bundle, *, start: float | None = None, end: float | None = None, columns: int = 1
+) -> "Figure":
+    """Draw separation and position angle against date, with the one-sigma band of the draws.
+
+    `start` and `end` are MJD TDB; without them the stretch holds the positions and one period
+    after the first of them, or one period from periastron where there are no positions.
+    """
+    mjd = np.linspace(*_stretch(bundle, start, end), 1001)
+    x, y = bundle.best.offsets(mjd)
+    drawing = style.figure(columns, height_mm=84)
+    upper, lower = drawing.subplots(2, 1, sharex=True)
+    dates, label = _dates(mjd, mjd)
+    angle = np.unwrap(position_angle(x[0], y[0]), period=360)
+    many_turns = np.ptp(angle) > 800
+    draws = bundle.thin(_MOST_DRAWS)
+    if len(draws):
+        cloud_x, cloud_y = draws.offsets(mjd)
+        low, high = np.percentile(np.hypot(cloud_x, cloud_y), _BAND, axis=0)
+        upper.fill_between(dates, low, high, color=style.CLOUD, alpha=0.6, lw=0)
+        # The angle of each draw on the turn nearest to that of the best orbit.
+        off = (position_angle(cloud_x, cloud_y) - angle + 180) % 360 - 180
+        low, high = angle + np.percentile(off, _BAND, axis=0)
+        if not many_turns:
+            lower.fill_between(dates, low, high, color=style.CLOUD, alpha=0.6, lw=0)
+    upper.plot(dates, np.hypot(x[0], y[0]), color=style.CURVE)
+    shown = np.where(
+        np.diff(angle % 360, prepend=angle[0] % 360) ** 2 > 180**2, np.nan, angle % 360
+    )
+    lower.plot(dates, shown if many_turns else angle, color=style.CURVE)
+    if bundle.positions is not None:
+        _measured(upper, lower, bundle.positions, mjd, angle, wrapped=many_turns)
+    for axes in (upper, lower):
+        axes.grid(True)
+    upper.set_title(bundle.name)
+    upper.set_ylabel("separation (mas)")
+    lower.set_ylabel("position angle (deg)")
+    if np.ptp(angle) > 60:
+        from matplotlib.ticker import MultipleLocator
+
+        range_shown = min(np.ptp(angle), 800.0)
+        step = next(step for step in (15, 30, 45, 90, 180) if range_shown < 6.5 * step)
+        lower.yaxis.set_major_locator(MultipleLocator(step))
+    lower.yaxis.set_major_formatter(lambda value, _: f"{value % 360:g}")
+    lower.set_xlabel(label)
+    lower.set_xlim(dates[0], dates[-1])
+    drawing.align_ylabels()
+    return drawing
+
+
+@style.styled
+def draw_residuals(bundle: Bundle, *, columns: int = 1) -> "Figure":
+    """Draw what is left of the positions when the best orbit is taken away, against date.
+
+    Raises
+    ------
+    ValueError
+        If the bundle has no positions.
+    """
+    positions = bundle.positions
+    if positions is None:
+        raise ValueError(f"{bundle.name}: there are no positions to take residuals of")
+    x, y = bundle.best.offsets(positions.mjd)
+    rest = positions.xy - np.stack([x[0], y[0]], axis=-1)
+    errors = np.sqrt(np.diagonal(positions.covariance, axis1=1, axis2=2))
+    dates, label = _dates(positions.mjd, positions.mjd)
+    drawing = style.figure(columns, height_mm=70)
+    panels = drawing.subplots(2, 1, sharex=True)
+    for axes, column, name in zip(panels, (0, 1), ("East", "North"), strict=True):
+        axes.grid(True)
+        axes.axhline(0, color=style.QUIET, lw=0.6)
+        _points(axes, dates, rest[:, column], errors[:, column], positions.weight)
+        axes.set_ylabel(f"{name} O − C (mas)")
+    panels[0].set_title(bundle.name)
+    panels[1].set_xlabel(label)
+    drawing.align_ylabels()
+    return drawing
+
+
+def _stretch(bundle: Bundle, start: float | None, end: float | None) -> tuple[float, float]:
+    period, periastron = bundle.best.period[0], bundle.best.periastron[0]
+    seen = bundle.positions.mjd if bundle.positions is not None else np.array([periastron])
+    margin = 0.02 * period
+    first = seen.min() - margin if start is None else start
+    last = max(seen.max(), seen.min() + period) + margin if end is None else end
+    if not last > first:
+        raise ValueError(f"the end must come after the start, got MJD {first} and {last}")
+    return first, last
+
+
+def _dates(mjd: np.ndarray, whole: np.ndarray) -> tuple[np.ndarray, str]:
+    """Times in years where `whole` is long, else in days from a round day; and their label."""
+    if np.ptp(whole) > _LONG:
+        return 2000.0 + (mjd - 51544.5) / 365.25, "date (year)"
+    origin = 100 * np.floor(whole.min() / 100)
+    return mjd - origin, f"MJD − {origin:.0f}"
+
+
+def _broken(angle: np.ndarray) -> np.ndarray:
+    """The angle with a gap wherever it leaps from 360 to 0 or back."""
+    return np.where(np.abs(np.diff(angle, prepend=angle[0])) > 180, np.nan, angle)
+
+
+def _measured(
+    upper: "Axes",
+    lower: "Axes",
+    positions: Positions,
+    mjd: np.ndarray,
+    angle: np.ndarray,
+    *,
+    wrapped: bool,
+) -> None:
+    inside = (positions.mjd >= mjd[0]) & (positions.mjd <= mjd[-1])
+    if not inside.any():
+        return
+    seen = positions.select(inside)
+    dates, _ = _dates(seen.mjd, mjd)
+    radial = seen.xy / seen.separation[:, None]
+    tangential = np.stack([radial[:, 1], -radial[:, 0]], axis=-1)
+    along, across = (
+        np.sqrt(np.einsum("ni,nij,nj->n", unit, seen.covariance, unit))
+        for unit in (radial, tangential)
+    )
+    # The turn nearest to the curve; errors in angle beyond a turn say nothing more.
+    near = np.interp(seen.mjd, mjd, angle)
+    turned = near + (seen.position_angle - near + 180) % 360 - 180
+    turned = turned % 360 if wrapped else turned
+    error = np.minimum(np.degrees(across / seen.separation), 180)
+    _points(upper, dates, seen.separation, along, seen.weight)
+    _points(lower, dates, turned, error, seen.weight)
+
+
+def _points(axes: "Axes", x, y, error, weight: np.ndarray) -> None:
+    """Points with error bars; the alternatives of a night are paler."""
+    for probable in (True, False):
+        which = (weight >= 0.5) == probable
+        axes.errorbar(
+            x[which],
+            y[which],
+            yerr=error[which],
+            ls="",
+            marker="o",
+            ms=3.2,
+            color=style.DATUM,
+            mec="white",
+            mew=0.4,
+            elinewidth=0.7,
+            alpha=1.0 if probable else 0.35,
+        )

@@ -1,0 +1,128 @@
+"""Velocity curves: both stars against phase from periastron, with the residuals beneath."""
+
+from dataclasses import replace
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from ..bundle import Bundle, Orbits
+from ..velocities import Velocities
+from . import style
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+_STARS = (("primary", style.PRIMARY, "o"), ("companion", style.COMPANION, "s"))
+_BAND = (15.865, 84.135)
+"""Percentiles of the one-sigma band."""
+_MOST_DRAWS = 300
+
+
+@style.styled
+def draw_velocities(bundle: Bundle, *, columns: int = 1) -> "Figure":
+    """Draw the velocity curve against phase from periastron, with the residuals beneath.
+
+    Raises
+    ------
+    ValueError
+        If neither k1 nor k2 of the bundle is known.
+    """
+    best = bundle.best
+    stars = [star for star, k in enumerate((best.k1[0], best.k2[0])) if np.isfinite(k)]
+    if not stars:
+        raise ValueError(f"{bundle.name}: no velocity amplitude is known")
+    measured = bundle.velocities
+    drawing = style.figure(columns, height_mm=76 if measured is not None else 58)
+    if measured is None:
+        curve = drawing.add_subplot()
+    else:
+        curve, rest = drawing.subplots(2, 1, sharex=True, height_ratios=(3, 1.2))
+        _velocity_residuals(rest, best, measured)
+    _velocity_curves(curve, bundle, stars)
+    if measured is not None:
+        _measured_velocities(curve, best, measured)
+    curve.set_title(bundle.name)
+    curve.set_ylabel("velocity (km/s)")
+    curve.set_xlim(-0.02, 1.02)
+    drawing.axes[-1 if measured is not None else 0].set_xlabel("phase from periastron")
+    drawing.align_ylabels()
+    style.legend_below(drawing, _velocity_key(bundle, stars), columns=3)
+    return drawing
+
+
+def _velocity_curves(axes: "Axes", bundle: Bundle, stars: list[int]) -> None:
+    phase = np.linspace(-0.02, 1.02, 801)
+    axes.grid(True)
+    if np.isfinite(bundle.best.gamma[0]):
+        axes.axhline(bundle.best.gamma[0], color=style.QUIET, lw=0.6, ls=(0, (4, 2)))
+    draws = bundle.thin(_MOST_DRAWS)
+    for star in stars:
+        _, colour, _ = _STARS[star]
+        if len(draws):
+            low, high = np.percentile(_at_phase(draws, phase)[star], _BAND, axis=0)
+            axes.fill_between(phase, low, high, color=colour, alpha=0.25, lw=0)
+        axes.plot(phase, _at_phase(bundle.best, phase)[star][0], color=colour, lw=1.1)
+
+
+def _at_phase(orbits: Orbits, phase: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Velocities at the same phase of each orbit; an unknown gamma counts as 0."""
+    mjd = orbits.periastron[:, None] + orbits.period[:, None] * phase
+    return replace(orbits, gamma=np.nan_to_num(orbits.gamma)).velocities(mjd)
+
+
+def _measured_velocities(axes: "Axes", best: Orbits, measured: Velocities) -> None:
+    phase = best.phase(measured.mjd)[0]
+    for star, (_, colour, marker) in enumerate(_STARS):
+        of_star = measured.star == star
+        _points(
+            axes,
+            phase[of_star],
+            measured.velocity[of_star],
+            measured.error[of_star],
+            colour,
+            marker,
+        )
+
+
+def _velocity_residuals(axes: "Axes", best: Orbits, measured: Velocities) -> None:
+    phase = best.phase(measured.mjd)[0]
+    model = np.stack([v[0] for v in best.velocities(measured.mjd)])
+    rest = measured.velocity - model[measured.star, np.arange(len(measured))]
+    axes.grid(True)
+    axes.axhline(0, color=style.QUIET, lw=0.6)
+    for star, (_, colour, marker) in enumerate(_STARS):
+        of_star = measured.star == star
+        _points(axes, phase[of_star], rest[of_star], measured.error[of_star], colour, marker)
+    axes.set_ylabel("O − C (km/s)")
+
+
+def _points(axes: "Axes", x, y, error, colour: str, marker: str) -> None:
+    axes.errorbar(
+        x,
+        y,
+        yerr=error,
+        ls="",
+        marker=marker,
+        ms=3.2,
+        color=colour,
+        mec="white",
+        mew=0.4,
+        elinewidth=0.7,
+    )
+
+
+def _velocity_key(bundle: Bundle, stars: list[int]) -> list:
+    from matplotlib.lines import Line2D
+
+    marked = bundle.velocities is not None
+    handles = [
+        Line2D([], [], color=colour, marker=marker if marked else "", ms=3.2, lw=1.1, label=name)
+        for star, (name, colour, marker) in enumerate(_STARS)
+        if star in stars
+    ]
+    if np.isfinite(bundle.best.gamma[0]):
+        handles.append(
+            Line2D([], [], color=style.QUIET, lw=0.6, ls=(0, (4, 2)), label="centre of mass")
+        )
+    return handles
