@@ -11,7 +11,7 @@ from ..observation import Observable, Observation
 from .joining import join
 from .links import plain
 from .loading import load
-from .model import T3, DataTable, OIFile, Vis2, attribute
+from .model import T3, DataTable, OIFile, Vis2
 
 GAP = 8 * u.hour
 """A pause longer than this starts a new night: no night is without data for so long."""
@@ -171,8 +171,8 @@ class _Stations:
 def _flatten(table: DataTable, file: OIFile, stations: _Stations) -> Observable:
     """The usable data of a table, one row and one channel each."""
     value_name, error_name, _ = table.quantities[-1]  # T3PHI of T3AMP, T3PHI
-    value = getattr(table, attribute(value_name))
-    error = getattr(table, attribute(error_name))
+    value = table[value_name]
+    error = table[error_name]
     keep = ~table.flag & np.isfinite(value) & np.isfinite(error) & (error > 0)
     keep &= np.isfinite(table.mjd)[:, None]
     row, channel = np.nonzero(keep)

@@ -6,7 +6,8 @@ from dataclasses import replace
 import numpy as np
 
 from .links import plain, same_content
-from .model import Array, OIFile, Table, Target, Wavelength, attribute, columns
+from .model import Array, OIFile, Target, Wavelength
+from .schema import Table, attribute, columns
 
 
 def join(files: Sequence[OIFile]) -> OIFile:
@@ -80,7 +81,7 @@ def _targets(files: Sequence[OIFile]) -> tuple[Target, list[dict[int, int]]]:
         parts.append(file.target.select(np.array(fresh, dtype=bool)))
     joined: dict[str, np.ndarray | None] = {}
     for column in columns(Target):
-        values = [getattr(part, attribute(column.name)) for part in parts]
+        values = [part[column.name] for part in parts]
         known = [value for value in values if value is not None]
         if len(known) < len(values):  # CATEGORY, given by some files only
             values = [np.full(len(p), "") if v is None else v for p, v in zip(parts, values)]

@@ -15,13 +15,11 @@ from .model import (
     Inspol,
     OIFile,
     OtherHDU,
-    Table,
     Target,
     Wavelength,
-    attribute,
-    columns,
 )
 from .problems import Log
+from .schema import Table, columns
 
 T = TypeVar("T", bound=Table)
 
@@ -129,7 +127,7 @@ def _unique(tables: list[T], key: str, log: Log) -> list[T]:
 def same_content(a: Table, b: Table) -> bool:
     """Whether two tables of one kind have equal columns."""
     for column in columns(type(a)):
-        x, y = getattr(a, attribute(column.name)), getattr(b, attribute(column.name))
+        x, y = a[column.name], b[column.name]
         if (x is None) != (y is None):
             return False
         if x is not None and not np.array_equal(x, y, equal_nan=column.code in "EDC"):

@@ -8,21 +8,20 @@ from ..errors import InputError
 from . import links
 from .bintable import BinTable, Field, Malformed
 from .blocks import HDU, card, read_hdus, text
-from .model import (
+from .model import KINDS, OIFile, OtherHDU
+from .problems import Log
+from .schema import (
     DTYPES,
-    KINDS,
     NWAVE,
+    OPEN,
     Column,
     ExtraColumn,
     Keyword,
-    OIFile,
-    OtherHDU,
     Table,
     attribute,
     columns,
     keywords,
 )
-from .problems import Log
 from .units import factor
 
 STRUCTURAL = {
@@ -98,7 +97,7 @@ def _table(kind: type[Table], hdu: HDU, log: Log) -> Table:
                 raise
             log.unusable(label, str(fault), "the column is left out")
             continue
-        if column.unit == "free":
+        if column.unit == OPEN:
             units[column.name] = field.unit
     values |= _keywords(kind, hdu, label, log)
     try:
@@ -131,7 +130,7 @@ def _values(content: BinTable, field: Field, column: Column, label: str, log: Lo
             raise Malformed(f"column {name} has numbers beyond 32 bits")
     values = _shaped(values, field, column)
     values = values.astype(DTYPES[column.code])
-    if column.unit not in ("free", ""):
+    if column.unit not in (OPEN, ""):
         scale = factor(column.unit, field.unit)
         if scale is None:
             log.suspicious(

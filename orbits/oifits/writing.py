@@ -6,11 +6,16 @@ from pathlib import Path
 import numpy as np
 from astropy.io import fits
 
+from ..errors import InputError
 from ..files import whole_file
 from .blocks import BLOCK
-from .model import Column, OIFile, Table, attribute, columns, keywords
+from .checksum import encode, ones_sum
+from .model import OIFile
+from .schema import OPEN, Column, Table, keywords
 
 _NUMPY = {"L": "S1", "I": ">i2", "J": ">i4", "E": ">f4", "D": ">f8", "C": ">c8"}
+_OPEN_WIDTH = {"INSNAME", "TARGET", "SPECTYP"}
+"""Text columns for which a checker takes another width, at most with a warning."""
 
 
 def write(file: OIFile, path: str | Path, *, force: bool = False) -> None:
@@ -23,18 +28,21 @@ def write(file: OIFile, path: str | Path, *, force: bool = False) -> None:
     Raises
     ------
     InputError
-        If `path` exists and `force` is false.
-    ValueError
-        If an id does not fit the 16 bits of its column, or a text its width.
+        If `path` exists and `force` is false, if `file` has no OI_ARRAY, if an id does not fit
+        the 16 bits of its column, or a text its width.
     """
+    if not file.arrays:
+        raise InputError(f"{path}: a version 2 file must have an OI_ARRAY, and there is none")
     versions: dict[str, int] = {}
     with whole_file(Path(path), force=force) as temporary, open(temporary, "wb") as handle:
         handle.write(_sealed(primary_header(file), b""))
         for table in file.tables:
             versions[table.extname] = versions.get(table.extname, 0) + 1
-            header, data = _encode(table, versions[table.extname])
+            header, records = _encode(table, versions[table.extname])
+            data = records.view(np.uint8) if records.size else np.empty(0, np.uint8)
             handle.write(_sealed(header, data))
-            handle.write(data + b"\0" * (-len(data) % BLOCK))
+            handle.write(data)
+            handle.write(b"\0" * (-data.size % BLOCK))
         for other in file.others:
             handle.write(other.raw)
 
@@ -43,8 +51,7 @@ def primary_header(file: OIFile) -> fits.Header:
     """The primary header: what `file.primary` says, and what version 2 demands beside it."""
     header = fits.Header()
     header["SIMPLE"], header["BITPIX"], header["NAXIS"], header["EXTEND"] = True, 8, 0, True
-    demanded = _demanded(file)
-    for name, value in (demanded | _given(file.primary)).items():
+    for name, value in (_demanded(file) | _given(file.primary)).items():
         header[name] = value
     header["CONTENT"] = "OIFITS2"
     header["DATE"] = datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%S")
@@ -64,101 +71,111 @@ def _demanded(file: OIFile) -> dict[str, object]:
     times = np.concatenate([table.mjd for table in file.data])
     times = times[np.isfinite(times) & (times > 0)]
     start = Time(times.min(), format="mjd").isot if times.size else "1858-11-17T00:00:00"
-    arrays = sorted({a.arrname for a in file.arrays})
-    instruments = sorted({w.insname for w in file.wavelengths})
+    instruments = [w.insname for w in file.wavelengths]
     return {
         "ORIGIN": "UNKNOWN",
         "DATE-OBS": start,
-        "TELESCOP": _one(arrays),
+        "TELESCOP": _one(a.arrname for a in file.arrays),
         "INSTRUME": _one(instruments),
         "OBSERVER": "UNKNOWN",
-        "OBJECT": _one(sorted(set(file.target.target.tolist()))),
+        "OBJECT": _one(file.target.target.tolist()),
         "INSMODE": _one(instruments),
     }
 
 
-def _one(names: list[str]) -> str:
-    names = [name for name in names if name]
-    return names[0] if len(names) == 1 else "MULTI" if names else "UNKNOWN"
+def _one(names) -> str:
+    """The one name, or the standard's word for several."""
+    distinct = {name for name in names if name}
+    return distinct.pop() if len(distinct) == 1 else "MULTI" if distinct else "UNKNOWN"
 
 
-def _encode(table: Table, version: int) -> tuple[fits.Header, bytes]:
-    """Header and data of a table."""
-    known = [c for c in columns(type(table)) if getattr(table, attribute(c.name)) is not None]
-    forms: list[tuple[str, object]] = []
+def _encode(table: Table, version: int) -> tuple[fits.Header, np.ndarray]:
+    """Header and rows of a table."""
+    present, extra = table.present, list(table.extra.values())
+    forms = [(f"c{n}", *_form(c, table[c.name])) for n, c in enumerate(present)]
+    forms += [(f"x{n}", "u1", e.raw.shape[1:]) for n, e in enumerate(extra)]
+    records = np.zeros(len(table), dtype=forms)
+    for number, known in enumerate(present):
+        records[f"c{number}"] = _stored(table, known)
+    for number, foreign in enumerate(extra):
+        records[f"x{number}"] = foreign.raw
+
     header = fits.Header()
-    header["XTENSION"] = "BINTABLE"
-    header["BITPIX"], header["NAXIS"], header["NAXIS1"] = 8, 2, 0
-    header["NAXIS2"], header["PCOUNT"], header["GCOUNT"] = len(table), 0, 1
-    header["TFIELDS"] = len(known) + len(table.extra)
+    header["XTENSION"], header["BITPIX"], header["NAXIS"] = "BINTABLE", 8, 2
+    header["NAXIS1"], header["NAXIS2"] = records.dtype.itemsize, len(table)
+    header["PCOUNT"], header["GCOUNT"], header["TFIELDS"] = 0, 1, len(forms)
     header["EXTNAME"], header["EXTVER"] = table.extname, version
     header["OI_REVN"] = table.revision
     for keyword in keywords(type(table)):
-        value = getattr(table, attribute(keyword.name))
-        if value is not None:
-            header[keyword.name] = value
-    for number, column in enumerate(known, start=1):
-        values = getattr(table, attribute(column.name))
-        forms.append((f"c{number}", *_form(column, values)))
-        header[f"TTYPE{number}"] = column.name
-        header[f"TFORM{number}"] = _tform(column, values)
-        unit = table.units.get(column.name, "") if column.unit == "free" else column.unit
-        if unit:
-            header[f"TUNIT{number}"] = unit
-        if len(column.shape) == 2:
-            header[f"TDIM{number}"] = f"({values.shape[2]},{values.shape[1]})"
-    for number, extra in enumerate(table.extra.values(), start=len(known) + 1):
-        forms.append((f"c{number}", "u1", (extra.raw.shape[1],)))
-        for stem, value in extra.cards.items():
+        if table[keyword.name] is not None:
+            header[keyword.name] = table[keyword.name]
+    for number, known in enumerate(present, start=1):
+        for stem, value in _description(table, known).items():
             header[f"{stem}{number}"] = value
-    records = np.zeros(len(table), dtype=forms)
-    header["NAXIS1"] = records.dtype.itemsize
-    for number, column in enumerate(known, start=1):
-        records[f"c{number}"] = _stored(table, column)
-    for number, extra in enumerate(table.extra.values(), start=len(known) + 1):
-        records[f"c{number}"] = extra.raw
-    for name, value, comment in table.cards:
-        header.append((name, value, comment), end=True)
-    return header, records.tobytes()
+    for number, foreign in enumerate(extra, start=len(present) + 1):
+        for stem, value in foreign.cards.items():
+            header[f"{stem}{number}"] = value
+    for card in table.cards:
+        header.append(card, end=True)
+    return header, records
 
 
-def _form(column: Column, values: np.ndarray) -> tuple[object, ...]:
-    if column.code == "A":
-        return (f"S{_width(column, values)}",)
-    return _NUMPY[column.code], values.shape[1:]
+def _form(known: Column, values: np.ndarray) -> tuple[object, ...]:
+    if known.code == "A":
+        return (f"S{_width(known, values)}",)
+    return _NUMPY[known.code], values.shape[1:]
 
 
-def _tform(column: Column, values: np.ndarray) -> str:
-    if column.code == "A":
-        return f"{_width(column, values)}A"
-    repeat = int(np.prod(values.shape[1:], dtype=int))
-    return column.code if not column.shape else f"{repeat}{column.code}"
+def _description(table: Table, known: Column) -> dict[str, object]:
+    """The cards that describe a column, without their number."""
+    values = table[known.name]
+    repeat = _width(known, values) if known.code == "A" else int(np.prod(values.shape[1:]))
+    cards: dict[str, object] = {"TTYPE": known.name, "TFORM": f"{repeat}{known.code}"}
+    unit = table.units.get(known.name, "") if known.unit == OPEN else known.unit
+    if unit:
+        cards["TUNIT"] = unit
+    if len(known.shape) == 2:
+        cards["TDIM"] = f"({values.shape[2]},{values.shape[1]})"
+    return cards
 
 
-def _width(column: Column, values: np.ndarray) -> int:
-    longest = max((len(v.encode("latin-1", "replace")) for v in values.tolist()), default=0)
-    if longest > column.width and column.name != "INSNAME":  # whose width the standard leaves open
-        value = max(values.tolist(), key=len)
-        raise ValueError(f"column {column.name}: {value!r} is longer than {column.width} letters")
-    return max(longest, column.width)
+def _width(known: Column, values: np.ndarray) -> int:
+    longest = max(values.tolist(), key=len, default="")
+    if len(longest) > known.width and known.name not in _OPEN_WIDTH:
+        raise InputError(
+            f"column {known.name}: {longest!r} has more than the {known.width} letters that "
+            "OIFITS allows; shorten it"
+        )
+    return max(len(longest), known.width)
 
 
-def _stored(table: Table, column: Column) -> np.ndarray:
+def _stored(table: Table, known: Column) -> np.ndarray:
     """The values as they go into the file."""
-    values = getattr(table, attribute(column.name))
-    if column.name == "TIME":
+    values = table[known.name]
+    if known.name == "TIME":
         return np.zeros_like(values)
-    if column.code == "A":
+    if known.code == "A":
         return np.array([v.encode("ascii", "replace") for v in values.tolist()], dtype="S")
-    if column.code == "L":
+    if known.code == "L":
         return np.where(values, b"T", b"F")
-    if column.code == "I" and values.size and np.abs(values).max() > np.iinfo(np.int16).max:
-        raise ValueError(
-            f"{table.extname}: column {column.name} has ids beyond 32767, which do not fit the file"
+    limits = np.iinfo(np.int16)
+    if (
+        known.code == "I"
+        and values.size
+        and not (limits.min <= values.min() and values.max() <= limits.max)
+    ):
+        raise InputError(
+            f"{table.label}: column {known.name} has numbers beyond {limits.max}, the largest that "
+            "OIFITS allows; renumber them"
         )
     return values
 
 
-def _sealed(header: fits.Header, data: bytes) -> bytes:
-    """The bytes of a header."""
-    return header.tostring().encode("ascii", "replace")
+def _sealed(header: fits.Header, data: bytes | np.ndarray) -> bytes:
+    """The bytes of a header, with the checksums of the HDU as its last cards."""
+    datasum = ones_sum(data)
+    header["DATASUM"] = str(datasum)
+    header["CHECKSUM"] = "0" * 16
+    blank = header.tostring().encode("ascii", "replace")
+    letters = encode(ones_sum(blank, datasum))
+    return blank.replace(b"'0000000000000000'", f"'{letters}'".encode(), 1)
