@@ -1,18 +1,35 @@
 """The command line: parse, call the library, print. One module per command."""
 
 import sys
+from typing import Annotated
 
 import typer
 
+from . import simulate
 from .frame import run
 
 app = typer.Typer(
     name="nodeline",
-    help="Calibrated OIFITS nights of close binary stars: companions, orbits, masses.",
     no_args_is_help=True,
+    invoke_without_command=True,
     add_completion=False,
     pretty_exceptions_enable=False,
 )
+
+
+@app.callback()
+def nodeline(
+    version: Annotated[bool, typer.Option("--version", help="Print the version and stop.")] = False,
+) -> None:
+    """Calibrated OIFITS nights of close binary stars: companions, orbits, masses."""
+    if version:
+        from importlib.metadata import version as installed
+
+        print(f"nodeline {installed('nodeline')}")
+        raise typer.Exit
+
+
+app.command()(simulate.simulate)
 
 
 def main() -> None:
