@@ -5,12 +5,16 @@ as stored in OIFITS, and V(u, v) = integral I(x, y) exp(-2 pi i (u x + v y)) dx 
 The bispectrum is V(u1, v1) V(u2, v2) conj(V(u1 + u2, v1 + v2)).
 """
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
+from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy import sparse
 
+from .problems import Problem
 from .rows import Rows
+
+if TYPE_CHECKING:
+    from scipy.sparse import csr_array
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -76,6 +80,10 @@ class Observable(Rows):
         )
 
 
+OBSERVABLES = ("v2", "t3", "t3amp", "visamp", "visphi")
+"""The observables that an `Observation` may hold, in the order of its correlation matrix."""
+
+
 @dataclass(frozen=True, eq=False, kw_only=True)
 class Observation:
     """What was measured of one target in one epoch."""
@@ -89,16 +97,44 @@ class Observation:
     """Squared visibilities."""
     t3: Observable = field(default_factory=lambda: Observable.empty(2))
     """Closure phases, rad."""
-    correlation: sparse.csr_array | None = None
-    """Correlation matrix of the data kept, `v2` before `t3`; None where they are independent."""
+    t3amp: Observable = field(default_factory=lambda: Observable.empty(2))
+    """Triple amplitudes; empty unless asked for."""
+    visamp: Observable = field(default_factory=lambda: Observable.empty(1))
+    """Visibility amplitudes; empty unless asked for."""
+    visphi: Observable = field(default_factory=lambda: Observable.empty(1))
+    """Visibility phases, rad, differential or absolute as the instrument makes them; empty unless
+    asked for."""
+    correlation: "csr_array | None" = None
+    """Correlation matrix of all data, stacked in the order of `OBSERVABLES` (V2, closure phases,
+    then whatever else was asked for); None if the data are independent."""
     files: tuple[str, ...] = ()
+    problems: tuple[Problem, ...] = ()
+    """What is wrong with the files or their data, and what was done about it."""
 
     @property
     def mjd(self) -> float:
         """Mean time of the data, MJD UTC."""
-        return float(np.concatenate([self.v2.mjd, self.t3.mjd]).mean())
+        return float(np.concatenate([getattr(self, name).mjd for name in OBSERVABLES]).mean())
 
     @property
     def instrument(self) -> str:
         """The names of the instruments, joined for people and tables."""
         return "+".join(self.instruments)
+
+    def select(self, **keep: np.ndarray) -> "Observation":
+        """The observation with only some of its data.
+
+        Parameters
+        ----------
+        **keep : ndarray of bool
+            For each observable named (`v2`, `t3` ...), which data stay; all of the others do.
+        """
+        sizes = {name: len(getattr(self, name)) for name in OBSERVABLES}
+        masks = {name: np.ones(size, dtype=bool) for name, size in sizes.items()} | keep
+        changes: dict[str, object] = {
+            name: getattr(self, name).select(mask) for name, mask in keep.items()
+        }
+        if self.correlation is not None:
+            stay = np.flatnonzero(np.concatenate([masks[name] for name in OBSERVABLES]))
+            changes["correlation"] = self.correlation[stay][:, stay]
+        return replace(self, **changes)

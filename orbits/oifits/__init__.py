@@ -1,10 +1,10 @@
 """OIFITS, the open exchange format of optical interferometry: reading, checking, writing."""
 
+from ..problems import Problem, Severity
 from .epochs import observations, read, read_epochs
 from .joining import join
 from .loading import load
 from .model import T3, Array, Corr, Flux, Inspol, OIFile, Target, Vis, Vis2, Wavelength
-from .problems import Problem, Severity
 
 __all__ = [
     "T3",

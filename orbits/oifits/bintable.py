@@ -7,7 +7,20 @@ import numpy as np
 
 from .blocks import HDU, card, text
 
-_SIZES = {"L": 1, "B": 1, "I": 2, "J": 4, "K": 8, "E": 4, "D": 8, "C": 8, "M": 16, "P": 8, "Q": 16}
+_SIZES = {
+    "A": 1,
+    "L": 1,
+    "B": 1,
+    "I": 2,
+    "J": 4,
+    "K": 8,
+    "E": 4,
+    "D": 8,
+    "C": 8,
+    "M": 16,
+    "P": 8,
+    "Q": 16,
+}
 _NUMPY = {
     "L": "u1", "B": "u1", "I": ">i2", "J": ">i4", "K": ">i8",
     "E": ">f4", "D": ">f8", "C": ">c8", "M": ">c16",
@@ -103,9 +116,6 @@ def _field(header, number: int, offset: int) -> Field:
         if not isinstance(cards.get(stem, 0), int | float):
             raise Malformed(f"column {name or number} has {stem} {cards[stem]!r}")
     repeat, code = int(match[1] or 1), match[2]
-    if code == "X":
-        width = (repeat + 7) // 8
-    else:
-        width = repeat * (1 if code == "A" else _SIZES[code])
+    width = (repeat + 7) // 8 if code == "X" else repeat * _SIZES[code]
     unit = str(cards.get("TUNIT", "")).strip()
     return Field(name, code, repeat, unit, offset, width, cards)

@@ -84,7 +84,9 @@ def _targets(files: Sequence[OIFile]) -> tuple[Target, list[dict[int, int]]]:
         values = [part[column.name] for part in parts]
         known = [value for value in values if value is not None]
         if len(known) < len(values):  # CATEGORY, given by some files only
-            values = [np.full(len(p), "") if v is None else v for p, v in zip(parts, values)]
+            values = [
+                np.full(len(p), "") if v is None else v for p, v in zip(parts, values, strict=True)
+            ]
         joined[attribute(column.name)] = np.concatenate(values) if known else None
     joined["target_id"] = np.arange(1, len(numbers) + 1)
     return Target(**joined, cards=parts[0].cards), maps

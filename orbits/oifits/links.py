@@ -7,6 +7,7 @@ import numpy as np
 from astropy.io import fits
 
 from ..errors import InputError
+from ..problems import Log
 from .blocks import card, text
 from .model import (
     Array,
@@ -18,7 +19,6 @@ from .model import (
     Target,
     Wavelength,
 )
-from .problems import Log
 from .schema import Table, columns
 
 T = TypeVar("T", bound=Table)

@@ -5,11 +5,11 @@ from pathlib import Path
 import numpy as np
 
 from ..errors import InputError
-from . import links
+from ..problems import Log
+from . import amending, checksum, links
 from .bintable import BinTable, Field, Malformed
 from .blocks import HDU, card, read_hdus, text
 from .model import KINDS, OIFile, OtherHDU
-from .problems import Log
 from .schema import (
     DTYPES,
     NWAVE,
@@ -52,8 +52,17 @@ def load(path: str | Path) -> OIFile:
     primary: HDU | None = None
     foreign = True
     for hdu in read_hdus(path):
+        contradicted = checksum.verify(hdu)
+        if contradicted:
+            log.suspicious(
+                f"{hdu.name} (HDU {hdu.number})" if hdu.number else "",
+                f"keyword {contradicted} does not agree with the contents",
+                "read all the same; the file was changed by hand or damaged",
+            )
         if hdu.number == 0:
             primary = hdu
+            if hdu.data:
+                log.note("", "the primary HDU has data of its own", "they are ignored")
             continue
         kind = KINDS.get(hdu.name)
         if kind is None:
@@ -66,7 +75,9 @@ def load(path: str | Path) -> OIFile:
             log.unusable(f"{hdu.name} (HDU {hdu.number})", str(fault), "the table is left out")
     if primary is None or foreign:
         raise InputError(f"{path}: FITS, but not OIFITS: it has no OI_ table")
-    return links.assemble(path, primary.header, tables, others, log)
+    file = links.assemble(path, primary.header, tables, others, log)
+    amending.amend(file, log)
+    return file
 
 
 def _table(kind: type[Table], hdu: HDU, log: Log) -> Table:
@@ -123,6 +134,9 @@ def _values(content: BinTable, field: Field, column: Column, label: str, log: Lo
         return _texts(values)
     if column.code == "L":
         # Neither T nor F: undefined. In the one place where it matters, FLAG, that means bad.
+        undefined = np.count_nonzero((values != ord("F")) & (values != ord("T")))
+        if undefined:
+            log.note(label, f"column {name}: {undefined} values are undefined", "taken as true")
         values = values != ord("F")
     elif column.code == "I" and field.code == "K" and values.size:
         limit = np.iinfo(np.int32)

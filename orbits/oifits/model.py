@@ -15,7 +15,7 @@ from typing import Any, ClassVar
 
 import numpy as np
 
-from .problems import Problem
+from ..problems import Problem
 from .schema import NWAVE, OPEN, Table, column, keyword
 
 
@@ -94,7 +94,25 @@ class DataTable(Table):
 
 
 @dataclass(kw_only=True, eq=False)
-class Vis(DataTable):
+class BaselineTable(DataTable):
+    """What the tables of interferometric data have in common: each row has its baselines."""
+
+    @property
+    def legs(self) -> np.ndarray:
+        """(nrow, k, 2): u and v of the independent baselines, m; k is 2 for triangles, else 1."""
+        return np.stack([self.ucoord, self.vcoord], axis=-1)[:, None, :]
+
+    @property
+    def sides(self) -> np.ndarray:
+        """(nrow, 1 or 3): lengths of all the projected baselines, m."""
+        legs = self.legs
+        if legs.shape[1] == 2:
+            legs = np.concatenate([legs, legs.sum(axis=1, keepdims=True)], axis=1)
+        return np.hypot(legs[..., 0], legs[..., 1])
+
+
+@dataclass(kw_only=True, eq=False)
+class Vis(BaselineTable):
     """OI_VIS: amplitude and phase of the visibility of a baseline."""
 
     extname: ClassVar[str] = "OI_VIS"
@@ -140,7 +158,7 @@ class Vis(DataTable):
 
 
 @dataclass(kw_only=True, eq=False)
-class Vis2(DataTable):
+class Vis2(BaselineTable):
     """OI_VIS2: squared visibility of a baseline."""
 
     extname: ClassVar[str] = "OI_VIS2"
@@ -167,7 +185,7 @@ class Vis2(DataTable):
 
 
 @dataclass(kw_only=True, eq=False)
-class T3(DataTable):
+class T3(BaselineTable):
     """OI_T3: amplitude and phase of the bispectrum of a triangle of stations A, B, C."""
 
     extname: ClassVar[str] = "OI_T3"
@@ -200,6 +218,12 @@ class T3(DataTable):
     """Side B to C."""
     sta_index: np.ndarray = column("I", 3)
     flag: np.ndarray = column("L", NWAVE, fill=False)
+
+    @property
+    def legs(self) -> np.ndarray:
+        """(nrow, 2, 2): u and v of the sides A to B and B to C, m."""
+        first = np.stack([self.u1coord, self.v1coord], axis=-1)
+        return np.stack([first, np.stack([self.u2coord, self.v2coord], axis=-1)], axis=1)
 
 
 @dataclass(kw_only=True, eq=False)

@@ -178,4 +178,5 @@ def _sealed(header: fits.Header, data: bytes | np.ndarray) -> bytes:
     header["CHECKSUM"] = "0" * 16
     blank = header.tostring().encode("ascii", "replace")
     letters = encode(ones_sum(blank, datasum))
-    return blank.replace(b"'0000000000000000'", f"'{letters}'".encode(), 1)
+    head, _, tail = blank.rpartition(b"'0000000000000000'")
+    return head + f"'{letters}'".encode() + tail

@@ -1,7 +1,10 @@
-"""Problems: what is wrong with a file, how badly, and what was done about it."""
+"""Problems: what is wrong with an input, how badly, and what was done about it."""
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from enum import IntEnum
+
+from .errors import InputError
 
 
 class Severity(IntEnum):
@@ -57,3 +60,19 @@ class Log:
 
     def _add(self, severity: Severity, table: str, what: str, done: str) -> None:
         self.problems.append(Problem(severity, self.file, table, what, done))
+
+
+def refuse_suspicious(problems: Sequence[Problem]) -> None:
+    """Take what is suspicious as unusable.
+
+    Raises
+    ------
+    InputError
+        If any of `problems` is more than a note; it tells the worst and how many there are.
+    """
+    serious = [problem for problem in problems if problem.severity > Severity.NOTE]
+    if serious:
+        worst = max(serious, key=lambda problem: problem.severity)
+        more = f" (and {len(serious) - 1} more)" if len(serious) > 1 else ""
+        where = f"{worst.table}: " if worst.table else ""
+        raise InputError(f"{worst.file}: refused as strictly asked: {where}{worst.what}{more}")

@@ -1,0 +1,193 @@
+"""Checks of the numbers measured, and of their errors."""
+
+from collections.abc import Iterator
+
+import numpy as np
+
+from ...problems import Log
+from ..model import T3, BaselineTable, OIFile
+from ..observables import KINDS, Kind, sound, unnormalised, usable
+
+TOO_SMALL = 30.0
+"""Scatter over error beyond which errors are called far too small: one and a half decades."""
+BEST_V2, BEST_PHASE = 1e-6, 1e-4
+"""Errors (of V2; of closure phase, deg) that no interferometer has come near."""
+SHORT_TIME = 15 / 1440
+"""Two measurements of a baseline within this time, d, are repetitions of each other."""
+
+
+def errors(file: OIFile, log: Log) -> None:
+    """Errors are positive and finite."""
+    for table in file.data:
+        for value, error, _ in table.quantities:
+            if table[error] is None or not len(table):
+                continue
+            counted = ~table.flag & ~np.isnan(table[value])
+            for what, bad in (
+                ("negative", table[error] < 0),
+                ("0", table[error] == 0),
+                ("infinite", np.isinf(table[error])),
+            ):
+                bad &= counted
+                if bad.any():
+                    log.unusable(
+                        table.label, f"column {error} is {what} in {_where(bad)}", "left out"
+                    )
+
+
+def missing_values(file: OIFile, log: Log) -> None:
+    """Data and errors that are not flagged are numbers."""
+    for table in file.data:
+        for value, error, _ in table.quantities:
+            if table[value] is None or not len(table):
+                continue
+            nan = np.isnan(table[value]) | np.isnan(table[error])
+            nan &= ~table.flag
+            if not nan.any():
+                pass
+            elif nan.sum() == np.count_nonzero(~table.flag):
+                log.note(table.label, f"column {value} holds no number", "taken as not measured")
+            else:
+                log.note(
+                    table.label, f"column {value} or {error} is NaN in {_where(nan)}", "left out"
+                )
+            infinite = np.isinf(table[value]) & ~table.flag
+            if infinite.any():
+                log.unusable(
+                    table.label, f"column {value} is infinite in {_where(infinite)}", "left out"
+                )
+
+
+def range_of_v2(file: OIFile, log: Log) -> None:
+    """Squared visibilities lie between -0.1 and 1.1, but for three times their error."""
+    for table, kind, keep in _usable(file, "v2"):
+        margin = 3 * table[kind.error]
+        value = table[kind.value]
+        far = keep & ((value - margin > 1.1) | (value + margin < -0.1))
+        if far.any():
+            log.suspicious(
+                table.label,
+                f"column {kind.value} is far outside 0 to 1 in {_where(far)}, "
+                f"such as {value[far][0]:.3g} +- {table[kind.error][far][0]:.2g}",
+                "used; is it calibrated?",
+            )
+
+
+def amplitudes(file: OIFile, log: Log) -> None:
+    """Triple amplitudes and amplitudes are normalised."""
+    for table in file.of(T3):
+        keep = ~table.flag & (table.t3amperr > 0) & np.isfinite(table.t3amp)
+        if unnormalised(table, keep):
+            log.suspicious(
+                table.label,
+                f"column T3AMP is not normalised (median {np.median(table.t3amp[keep]):.3g})",
+                "amplitudes left out, closure phases used",
+            )
+        elif keep.any() and not table.t3amp[keep].any():
+            log.note(table.label, "column T3AMP is 0 throughout", "do not ask for it")
+    for table, kind, keep in _usable(file, "visamp"):
+        typical = float(np.median(table.visamp[keep])) if keep.any() else 0.0
+        if typical > 2 and (table.amptyp or "absolute").lower() == "absolute":
+            log.suspicious(
+                table.label,
+                f"column {kind.value} is no normalised visibility (median {typical:.3g})",
+                "do not ask for it as one",
+            )
+
+
+def phases_in_radians(file: OIFile, log: Log) -> None:
+    """Closure phases that fill the circle fill it to 180, not to pi.
+
+    A hundred phases with a spread of 1.3 or more that all stay below pi are drawn from the
+    circle in radians: of as many normal deviates of that spread one or two would lie beyond.
+    """
+    for table, kind, keep in _usable(file, "t3"):
+        phase = table[kind.value][keep]
+        if phase.size < 100:
+            continue
+        spread = np.sqrt(np.mean(phase**2))
+        if np.abs(phase).max() <= np.pi * (1 + 1e-6) and spread > 1.3:
+            log.suspicious(
+                table.label,
+                "column T3PHI fills -3.14 to 3.14: it looks like radians",
+                "used as degrees; if it is in radians, state that in TUNIT",
+            )
+
+
+def useless_phases(file: OIFile, log: Log) -> None:
+    """Closure phases are known to better than a radian or so."""
+    for table, kind, keep in _usable(file, "t3"):
+        vague = keep & (table[kind.error] > 60)
+        if vague.any():
+            log.note(
+                table.label,
+                f"column {kind.error} exceeds 60 deg in {_where(vague)}",
+                "used; such phases tell next to nothing",
+            )
+
+
+def tiny_errors(file: OIFile, log: Log) -> None:
+    """Errors are not better than any instrument's, nor than the scatter of the data."""
+    for name, best in (("v2", BEST_V2), ("t3", BEST_PHASE)):
+        for table, kind, keep in _usable(file, name):
+            if not keep.any():
+                continue
+            typical = float(np.median(table[kind.error][keep]))
+            if typical < best:
+                log.suspicious(
+                    table.label,
+                    f"column {kind.error} is typically {typical:.1g}: no instrument is so precise",
+                    "used as it is; scale it, or set a floor",
+                )
+                continue
+            ratio = _scatter(table, kind, keep)
+            if ratio > TOO_SMALL:
+                log.suspicious(
+                    table.label,
+                    f"column {kind.error} is {ratio:.0f} times smaller than the scatter between "
+                    "repeated measurements",
+                    "used as it is; scale it, or set a floor",
+                )
+
+
+def _scatter(table: BaselineTable, kind: Kind, keep: np.ndarray) -> float:
+    """Median ratio of difference and its error, for pairs of rows that repeat each other."""
+    key = np.column_stack([table.target_id, table.sta_index])
+    order = np.lexsort((table.mjd, *key.T))
+    now, then = order[1:], order[:-1]
+    repeats = (key[now] == key[then]).all(axis=1) & (table.mjd[now] - table.mjd[then] < SHORT_TIME)
+    now, then = now[repeats], then[repeats]
+    both = keep[now] & keep[then]
+    if np.count_nonzero(both) < 20:
+        return 0.0
+    difference = table[kind.value][now][both] - table[kind.value][then][both]
+    if kind.phase:
+        difference = np.remainder(difference + 180, 360) - 180
+    sigma = np.hypot(table[kind.error][now][both], table[kind.error][then][both])
+    return float(np.median(np.abs(difference) / sigma)) / 0.6745  # median of |normal deviate|
+
+
+def _usable(file: OIFile, name: str) -> Iterator[tuple[BaselineTable, Kind, np.ndarray]]:
+    """Each table with an observable, and which of its data are used."""
+    kind = KINDS[name]
+    for table in file.of(kind.table):
+        yield table, kind, usable(table, kind) & sound(file.wavelength(table.insname))
+
+
+def _where(bad: np.ndarray) -> str:
+    """How many data, and which is the first."""
+    row, channel = np.unravel_index(int(np.argmax(bad)), bad.shape)
+    first = f"row {row + 1}, channel {channel + 1}"
+    count = np.count_nonzero(bad)
+    return first if count == 1 else f"{count} data (first: {first})"
+
+
+CHECKS = (
+    errors,
+    missing_values,
+    range_of_v2,
+    amplitudes,
+    phases_in_radians,
+    useless_phases,
+    tiny_errors,
+)

@@ -1,0 +1,114 @@
+"""The observables of a binary: where OIFITS keeps each, and which of its data can be used."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+import astropy.units as u
+import numpy as np
+
+from .model import T3, BaselineTable, Vis, Vis2, Wavelength
+
+LONGEST = 1e4
+"""No optical interferometer has a baseline of 10 km; longer ones are in other units than m."""
+SHORTEST_WAVE, LONGEST_WAVE = 1e-7, 1e-3
+"""Wavelengths that OIFITS is used for, m; 1.65 (micron) and 1650 (nm) lie far outside."""
+
+
+@dataclass(frozen=True)
+class Kind:
+    """Where an observable of an `Observation` is found in the tables."""
+
+    name: str
+    """The attribute of `Observation`."""
+    table: type[BaselineTable]
+    value: str
+    error: str
+    index: str
+    """The column with the number of its first channel in OI_CORR."""
+    phase: bool
+    words: str
+    """What people call it."""
+
+    @property
+    def legs(self) -> int:
+        """Independent baselines of a datum."""
+        return 2 if self.table is T3 else 1
+
+
+KINDS = {
+    kind.name: kind
+    for kind in (
+        Kind("v2", Vis2, "VIS2DATA", "VIS2ERR", "CORRINDX_VIS2DATA", False, "squared visibility"),
+        Kind("t3", T3, "T3PHI", "T3PHIERR", "CORRINDX_T3PHI", True, "closure phase"),
+        Kind("t3amp", T3, "T3AMP", "T3AMPERR", "CORRINDX_T3AMP", False, "triple amplitude"),
+        Kind("visamp", Vis, "VISAMP", "VISAMPERR", "CORRINDX_VISAMP", False, "amplitude"),
+        Kind("visphi", Vis, "VISPHI", "VISPHIERR", "CORRINDX_VISPHI", True, "phase"),
+    )
+}
+
+
+@dataclass(frozen=True, kw_only=True)
+class ErrorBars:
+    """Changes to the errors of a file: first scaled, then raised to the floor.
+
+    Raises
+    ------
+    ValueError
+        If a name is not an observable, a scale is not positive, or a floor is negative.
+    """
+
+    scale: Mapping[str, float] = field(default_factory=dict)
+    """Factor, by observable: v2, t3, t3amp, visamp, visphi."""
+    floor: Mapping[str, float | u.Quantity] = field(default_factory=dict)
+    """Smallest error, by observable; for phases an angle."""
+
+    def __post_init__(self) -> None:
+        for name in (*self.scale, *self.floor):
+            if name not in KINDS:
+                raise ValueError(f"unknown observable {name!r}; there are {', '.join(KINDS)}")
+        for name, factor in self.scale.items():
+            if not factor > 0:
+                raise ValueError(f"scale of {name} must be positive, got {factor!r}")
+        for name in self.floor:
+            if not self._floor(name) >= 0:
+                raise ValueError(f"floor of {name} must not be negative, got {self.floor[name]!r}")
+
+    def apply(self, name: str, error: np.ndarray) -> np.ndarray:
+        """The errors (rad for phases) of the observable `name` after these changes."""
+        return np.maximum(error * self.scale.get(name, 1.0), self._floor(name))
+
+    def _floor(self, name: str) -> float:
+        unit = u.rad if KINDS[name].phase else u.dimensionless_unscaled
+        return float(u.Quantity(self.floor.get(name, 0.0 * unit)).to_value(unit))
+
+
+def usable(table: BaselineTable, kind: Kind) -> np.ndarray:
+    """(nrow, nwave) bool: the data of an observable that can be used.
+
+    A datum counts unless it is flagged, it or its error is not finite, its error is not positive,
+    or its row has no time or no believable baseline. Triple amplitudes of a table in which they
+    are not normalised do not count at all.
+    """
+    value, error = table[kind.value], table[kind.error]
+    keep = ~table.flag
+    keep &= error > 0  # false for NaN
+    keep &= error < np.inf
+    keep &= np.isfinite(value)
+    keep &= (np.isfinite(table.mjd) & (table.sides < LONGEST).all(axis=1))[:, None]
+    if kind.name == "t3amp" and unnormalised(table, keep):
+        keep[:] = False
+    return keep
+
+
+def sound(spectrum: Wavelength) -> np.ndarray:
+    """(nwave,) bool: the channels whose wavelength can be one in metres."""
+    return (spectrum.eff_wave >= SHORTEST_WAVE) & (spectrum.eff_wave <= LONGEST_WAVE)
+
+
+def unnormalised(table: T3, keep: np.ndarray) -> bool:
+    """Whether triple amplitudes are in other units than those of a visibility.
+
+    Noise lifts few data above 1 by three times their error; a wrong scale lifts many.
+    """
+    above = table.t3amp[keep] > 1 + 3 * table.t3amperr[keep]
+    return bool(above.mean() > 0.1) if above.size else False
