@@ -6,11 +6,13 @@ tables of events are functions of it. Plain numbers: d, MJD TDB, mas, deg, km/s.
 
 from collections.abc import Mapping
 from dataclasses import dataclass, fields
+from pathlib import Path
 from typing import TYPE_CHECKING, Self
 
 import numpy as np
 
 from .elements import Elements, thiele_innes
+from .errors import InputError
 from .kepler import eccentric_anomaly, mean_anomaly, true_anomaly
 from .rows import Rows
 
@@ -45,13 +47,18 @@ class Orbits(Rows):
     """(n,) km/s, of the centre of mass."""
 
     @classmethod
+    def names(cls) -> tuple[str, ...]:
+        """The names of the columns, in order."""
+        return tuple(f.name for f in fields(cls))
+
+    @classmethod
     def of(cls, columns: Mapping[str, np.ndarray]) -> Self:
         """Orbits from a mapping of names to (n,) arrays; k1, k2 and gamma may be missing."""
         n = len(columns["period"])
         return cls(
             **{
-                f.name: np.array(columns.get(f.name, np.full(n, np.nan)), dtype=np.float64)
-                for f in fields(cls)
+                name: np.array(columns.get(name, np.full(n, np.nan)), dtype=np.float64)
+                for name in cls.names()
             }
         )
 
@@ -135,6 +142,50 @@ def orbits_of_elements(elements: Elements) -> Orbits:
             "argument": [elements.argument.to_value("deg")],
         }
     )
+
+
+SAMPLE_COLUMNS = {
+    "period": "period_d",
+    "periastron": "periastron_mjd",
+    "eccentricity": "eccentricity",
+    "semimajor_axis": "semimajor_axis_mas",
+    "inclination": "inclination_deg",
+    "node": "node_deg",
+    "argument": "argument_deg",
+    "k1": "k1_kms",
+    "k2": "k2_kms",
+    "gamma": "gamma_kms",
+}
+"""How the columns of `Orbits` are called among posterior samples."""
+
+
+def orbits_of_samples(samples: Mapping[str, np.ndarray]) -> Orbits:
+    """Orbits from posterior samples, a table or data frame with the columns of a `Solution`."""
+    return Orbits.of(
+        {name: samples[column] for name, column in SAMPLE_COLUMNS.items() if column in samples}
+    )
+
+
+def read_samples(path: Path) -> Orbits:
+    """Orbits from the file of posterior samples that a fit has written (ECSV).
+
+    Raises
+    ------
+    InputError
+        If the file is missing, is no table or lacks one of the seven elements.
+    """
+    from astropy.table import Table
+
+    if not path.is_file():
+        raise InputError(f"{path}: no such file; it should hold the posterior samples of an orbit")
+    try:
+        table = Table.read(path, format="ascii.ecsv")
+    except (ValueError, TypeError, KeyError, IndexError) as error:
+        raise InputError(f"{path}: not a readable ECSV table: {error}") from error
+    for column in tuple(SAMPLE_COLUMNS.values())[:7]:
+        if column not in table.colnames:
+            raise InputError(f"{path}: no column {column}; it is needed")
+    return orbits_of_samples({name: np.asarray(table[name]) for name in table.colnames})
 
 
 def draw_orbits(

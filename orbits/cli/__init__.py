@@ -5,7 +5,7 @@ from typing import Annotated
 
 import typer
 
-from . import simulate
+from . import catalogue, predict, search, simulate
 from .frame import run
 
 app = typer.Typer(
@@ -29,6 +29,9 @@ def nodeline(
         raise typer.Exit
 
 
+app.add_typer(catalogue.app)
+app.command()(predict.predict)
+app.command()(search.search)
 app.command()(simulate.simulate)
 
 

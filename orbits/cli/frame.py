@@ -13,6 +13,10 @@ INTERRUPTED = 130
 
 Json = Annotated[bool, typer.Option("--json", help="Print one JSON object and nothing else.")]
 Force = Annotated[bool, typer.Option("--force", help="Replace outputs that exist.")]
+CatalogueName = Annotated[
+    str | None,
+    typer.Option("--catalogue", help="A file, or one that comes along: published, invented."),
+]
 Seed = Annotated[int, typer.Option("--seed", help="Seed of the random numbers.")]
 
 

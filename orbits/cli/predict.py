@@ -1,0 +1,253 @@
+"""nodeline predict: where the companion will be, and when what happens."""
+
+from dataclasses import fields
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from ..errors import InputError
+from .frame import CatalogueName, Force, Json, Seed, emit, say
+
+if TYPE_CHECKING:
+    import numpy as np
+
+    from ..bundle import Bundle
+    from ..ephemeris import Ephemeris, Event
+
+_UNITS = {"mjd": "d", "separation": "mas", "position_angle": "deg", "east": "mas", "north": "mas"}
+
+All = Annotated[bool, typer.Option("--all", help="Every entry of the catalogue.")]
+
+
+def predict(
+    name: Annotated[
+        str | None,
+        typer.Argument(help="Entry of a catalogue (SYSTEM or SYSTEM/SOLUTION), or a system file."),
+    ] = None,
+    at: Annotated[list[str] | None, typer.Option("--at", help="Date; may be repeated.")] = None,
+    start: Annotated[str | None, typer.Option("--from", help="First date of a range.")] = None,
+    end: Annotated[str | None, typer.Option("--to", help="Last date of the range.")] = None,
+    every: Annotated[str, typer.Option(help="Step of the range, such as '6 h' or '1 yr'.")] = "1 d",
+    catalogue: CatalogueName = None,
+    all_entries: All = False,
+    equinox: Annotated[
+        str, typer.Option(help="Of the position angles: a year, or date for that of each date.")
+    ] = "2000",
+    output: Annotated[
+        Path | None, typer.Option(help="Also write the table, to a file .ecsv or .csv.")
+    ] = None,
+    force: Force = False,
+    json: Json = False,
+    seed: Seed = 1,
+) -> None:
+    """Separation, position angle, offsets and velocities at dates, with their errors.
+
+    Dates are like 2026-12-01, 2026-12-01T22:30, 2026.92, B1980.0, MJD 61375.5 or JD 2461376.0. For
+    a single orbit the events of the period that follows the first date are listed as well.
+    """
+    import numpy as np
+
+    from ..ephemeris import events
+    from ..files import refuse_existing
+
+    if (name is None) != all_entries:
+        raise typer.BadParameter("give the name of an entry or system, or --all, not both")
+    if output is not None:
+        if output.suffix not in (".ecsv", ".csv"):
+            raise InputError(f"{output}: a table is written as .ecsv or .csv")
+        refuse_existing(output, force=force)
+    mjd = _dates(at or [], start, end, every)
+    rng = np.random.default_rng(seed)
+    if all_entries:
+        tables = _of_all(catalogue, mjd, equinox, rng)
+        happenings: list[Event] = []
+    else:
+        bundle, table = _of_one(name, catalogue, mjd, equinox, rng)
+        tables = {bundle.name: table}
+        happenings = events(bundle, mjd[0], mjd[0] + bundle.best.period[0])
+        if not json:
+            _say_one(bundle, table, happenings, equinox)
+    if all_entries and not json:
+        _say_all(tables)
+    if output is not None:
+        _write(output, tables, force=force)
+        say(f"\nwritten to {output}", json=json)
+    if json:
+        emit(_json(tables, happenings, equinox))
+
+
+def _dates(at: list[str], start: str | None, end: str | None, every: str) -> "np.ndarray":
+    import numpy as np
+
+    from ..dates import dates_between, read_date
+
+    if (start is None) != (end is None) or bool(at) == (start is not None):
+        raise typer.BadParameter("give --at DATE, or --from DATE and --to DATE")
+    if at:
+        return np.array([read_date(text) for text in at])
+    return dates_between(read_date(start), read_date(end), every)
+
+
+def _equinoxes(equinox: str, mjd: "np.ndarray") -> "np.ndarray | float":
+    if equinox == "date":
+        return 2000.0 + (mjd - 51544.5) / 365.25
+    try:
+        return float(equinox)
+    except ValueError:
+        raise InputError(f"--equinox {equinox!r} is neither a year nor the word date") from None
+
+
+def _of_one(name, catalogue, mjd, equinox, rng) -> "tuple[Bundle, Ephemeris]":
+    from ..ephemeris import predict as predict_bundle
+
+    years = _equinoxes(equinox, mjd)
+    if name.endswith(".toml"):
+        if equinox != "2000":
+            raise InputError(f"{name}: a system file has no place on the sky; use --equinox 2000")
+        from ..fitting.solution import Solution
+        from ..system import read_system
+
+        bundle, turn = Solution.read(read_system(Path(name)).results).bundle(), 0.0
+    else:
+        from ..catalogue import find_entry
+
+        entry = find_entry(name, catalogue)
+        bundle, turn = entry.bundle(rng), entry.turn(years)
+    return bundle, predict_bundle(bundle, mjd, turn=turn)
+
+
+def _of_all(catalogue, mjd, equinox, rng) -> "dict[str, Ephemeris]":
+    from ..catalogue import Catalogue, catalogue_file
+    from ..ephemeris import predict as predict_bundle
+    from ..progress import Bar
+
+    years = _equinoxes(equinox, mjd)
+    entries = [entry for file in catalogue_file(catalogue) for entry in Catalogue.read(file)]
+    tables = {}
+    with Bar().task("predicting", total=len(entries)) as step:
+        for entry in entries:
+            tables[entry.key] = predict_bundle(entry.bundle(rng), mjd, turn=entry.turn(years))
+            step()
+    return tables
+
+
+def _say_one(bundle: "Bundle", table: "Ephemeris", happenings: "list[Event]", equinox: str) -> None:
+    import numpy as np
+
+    from ..dates import show_date
+
+    north = "of date" if equinox == "date" else f"of {equinox}"
+    print(f"{bundle.name}: companion seen from the primary, position angles {north}")
+    spread = f"errors: {bundle.spread}" if bundle.spread else "nothing is known of the errors"
+    print(f"{spread}{'' if bundle.ascending else '; the node may be either one'}\n")
+    names = ("separation", "position_angle", "east", "north")
+    titles = ("separation/mas", "angle/deg", "East/mas", "North/mas")
+    velocities = ("primary_velocity", "companion_velocity")
+    if any(np.isfinite(getattr(table, name)).any() for name in velocities):
+        names, titles = names + velocities, (*titles, "V1/(km/s)", "V2/(km/s)")
+    print(f"{'date (UTC)':<17}" + "".join(f"{title:>20}" for title in titles))
+    for row in range(len(table)):
+        cells = (_cell(table, name, row) for name in names)
+        when = show_date(table.mjd[row], minutes=True)
+        print(f"{when:<17}" + "".join(f"{cell:>20}" for cell in cells))
+    print("\nin the period that follows")
+    for event in happenings:
+        when = show_date(event.mjd, minutes=bundle.best.period[0] < 1000)
+        error = "" if np.isnan(event.error) else f" ± {float(f'{event.error:.2g}'):g} d"
+        print(
+            f"{event.kind:<20} {when:<17}{error:<12} at {event.separation:.5g} mas, "
+            f"{event.position_angle:.2f} deg"
+        )
+
+
+def _cell(table: "Ephemeris", name: str, row: int) -> str:
+    """A value with its error, or to six digits where nothing is known of that."""
+    from ..rounding import plain
+
+    value, error = getattr(table, name)[row], getattr(table, f"{name}_error")[row]
+    return plain(value, error) if error > 0 else f"{value:.6g}"
+
+
+def _say_all(tables: "dict[str, Ephemeris]") -> None:
+    from ..dates import show_date
+
+    print(f"{'entry':<40} {'date (UTC)':<17}{'separation/mas':>20}{'angle/deg':>18}")
+    lines = []
+    for key, table in tables.items():
+        for row in range(len(table)):
+            separation, angle = _cell(table, "separation", row), _cell(table, "position_angle", row)
+            when = show_date(table.mjd[row], minutes=True)
+            lines.append(f"{key:<40} {when:<17}{separation:>20}{angle:>18}")
+    print("\n".join(lines))
+
+
+def _write(path: Path, tables: "dict[str, Ephemeris]", *, force: bool) -> None:
+    """ECSV with units, or CSV with the units in the names of the columns."""
+    import numpy as np
+    from astropy.table import Table
+
+    from ..files import whole_file
+    from ..times import utc_of_tdb
+
+    table = Table()
+    if len(tables) > 1:
+        table["entry"] = [key for key, rows in tables.items() for _ in range(len(rows))]
+    for name in _columns(tables):
+        values = np.concatenate([getattr(rows, name) for rows in tables.values()])
+        table[name] = utc_of_tdb(values) if name == "mjd" else values
+        table[name].unit = _UNITS.get(name.removesuffix("_error"), "km/s")
+    if path.suffix == ".csv":
+        for name in table.colnames:
+            unit = {"km/s": "kms"}.get(str(table[name].unit), str(table[name].unit))
+            if name not in ("entry", "mjd"):
+                table.rename_column(name, f"{name}_{unit.replace(' / s', 's')}")
+    form = "ascii.ecsv" if path.suffix == ".ecsv" else "ascii.csv"
+    with whole_file(path, force=force) as temporary:
+        table.write(temporary, format=form, overwrite=True)
+
+
+def _columns(tables: "dict[str, Ephemeris]") -> list[str]:
+    """The columns in which something is known."""
+    import numpy as np
+
+    from ..ephemeris import Ephemeris
+
+    names = [field.name for field in fields(Ephemeris)]
+    return [n for n in names if any(np.isfinite(getattr(t, n)).any() for t in tables.values())]
+
+
+def _json(tables, happenings, equinox: str) -> dict:
+    import numpy as np
+
+    from ..dates import show_date
+
+    endings = {**_UNITS, "mjd": "", "primary_velocity": "kms", "companion_velocity": "kms"}
+
+    def row_of(table, row: int) -> dict:
+        line = {"mjd_tdb": table.mjd[row], "date": show_date(table.mjd[row], minutes=True)}
+        for name in _columns({"": table}):
+            if name != "mjd" and np.isfinite(getattr(table, name)[row]):
+                stem = name.removesuffix("_error")
+                error = "_err" if name != stem else ""
+                line[f"{stem}{error}_{endings[stem]}"] = getattr(table, name)[row]
+        return line
+
+    return {
+        "equinox": equinox,
+        "entries": [
+            {"name": key, "ephemeris": [row_of(table, row) for row in range(len(table))]}
+            for key, table in tables.items()
+        ],
+        "events": [
+            {
+                "kind": event.kind,
+                "mjd_tdb": event.mjd,
+                "date": show_date(event.mjd, minutes=True),
+                **({"err_d": event.error} if np.isfinite(event.error) else {}),
+                "separation_mas": event.separation,
+                "position_angle_deg": event.position_angle,
+            }
+            for event in happenings
+        ],
+    }
