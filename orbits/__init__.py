@@ -3,13 +3,17 @@
 from importlib import import_module
 
 _HOMES = {
+    "Candidate": ".companion.result",
     "Elements": ".elements",
+    "ErrorModel": ".companion.covariance",
     "InputError": ".errors",
     "NodelineError": ".errors",
     "NothingFound": ".errors",
     "Observable": ".observation",
     "Observation": ".observation",
     "Positions": ".positions",
+    "SearchResult": ".companion.result",
+    "Stars": ".companion.search",
     "System": ".system",
     "Velocities": ".velocities",
     "read": ".oifits",
@@ -17,6 +21,7 @@ _HOMES = {
     "read_positions": ".positions",
     "read_system": ".system",
     "read_velocities": ".velocities",
+    "search": ".companion.search",
     "write_positions": ".positions",
     "write_velocities": ".velocities",
 }

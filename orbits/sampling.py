@@ -18,7 +18,6 @@ from .observation import Observable, Observation
 _SAME_BASELINE = 1e-6
 """m; sides that agree to this are one: 1e-5 of a turn at 1 arcsec and 0.5 um."""
 _MOST_NODES = 40
-_SMEARING_ERROR = 1e-8
 _WORTH_SMEARING = 0.1
 """rad; a phase that runs by less than this during an integration changes V2 by under 2e-4."""
 
@@ -55,11 +54,19 @@ class Sampling:
         return np.hypot(self.u, self.v)
 
     @classmethod
-    def of(cls, observation: Observation, *, radius: float, smearing: bool = True) -> "Sampling":
+    def of(
+        cls,
+        observation: Observation,
+        *,
+        radius: float,
+        smearing: bool = True,
+        precision: float = 1e-8,
+    ) -> "Sampling":
         """The samples of `observation`, for sources within `radius` mas of the centre.
 
         The number of nodes follows from the largest turn of the phase across a channel, or
-        during an integration, that such a source can cause; without `smearing` it is one.
+        during an integration, that such a source can cause, so that its smeared visibility is
+        right to `precision`; without `smearing` it is one.
         """
         v2, t3 = observation.v2, observation.t3
         legs, rates = zip(*(_sides(table) for table in (v2, t3)), strict=True)
@@ -87,9 +94,9 @@ class Sampling:
         first, which = _distinct(key)
         channel = both["wavelength"][first], both["bandwidth"][first] * smearing
         turn = np.pi * radius * MAS * _turns(leg[first], *channel)
-        band_nodes, band_weights = _legendre(turn)
+        band_nodes, band_weights = _legendre(turn, precision)
         time_nodes, time_weights = _legendre(
-            np.pi * radius * MAS * _largest(drift[first], {"wavelength": channel[0]})
+            np.pi * radius * MAS * _largest(drift[first], {"wavelength": channel[0]}), precision
         )
         wavelength = channel[0][:, None] + channel[1][:, None] * band_nodes / 2
         moving = leg[first][:, None, :] + drift[first][:, None, :] * time_nodes[:, None] / 2
@@ -166,11 +173,11 @@ def _largest(drift: np.ndarray, both: dict[str, np.ndarray]) -> float:
     return float((np.hypot(*drift.T) / both["wavelength"]).max()) if len(drift) else 0.0
 
 
-def _legendre(half_turn: float) -> tuple[np.ndarray, np.ndarray]:
-    """Nodes t in (-1, 1) and weights that average exp(i t half_turn) to `_SMEARING_ERROR`."""
+def _legendre(half_turn: float, precision: float) -> tuple[np.ndarray, np.ndarray]:
+    """Nodes t in (-1, 1) and weights that average exp(i t half_turn) to `precision`."""
     exact = np.sinc(half_turn / np.pi)
     for count in range(1, _MOST_NODES + 1):
         nodes, weights = np.polynomial.legendre.leggauss(count)
-        if abs((weights / 2 * np.cos(half_turn * nodes)).sum() - exact) < _SMEARING_ERROR:
+        if abs((weights / 2 * np.cos(half_turn * nodes)).sum() - exact) < precision:
             break
     return nodes, weights / 2

@@ -1,8 +1,13 @@
 """Small epochs made by hand: baselines and triangles as a test wants them."""
 
+from dataclasses import replace
+
 import numpy as np
 
+from orbits.binary import predict
+from orbits.companion.covariance import Covariance
 from orbits.observation import Observable, Observation
+from orbits.sampling import Sampling
 
 
 def table(legs, wavelength, *, bandwidth=0.0, value=0.0, error=1.0, integration=0.0, mjd=0.0):
@@ -40,3 +45,48 @@ def epoch(v2_legs=(), t3_legs=(), wavelength=1.6e-6, **common):
 def wrapped(angle):
     """`angle` (rad) brought into (-pi, pi]."""
     return np.angle(np.exp(1j * np.asarray(angle)))
+
+
+def four_stations(*, exposures=1, channels=1, stations=4, wavelength=(1.5e-6, 1.8e-6), size=90.0):
+    """An epoch without values: an irregular array under which the sky turns between exposures.
+
+    Errors are 0.01 in V2 and 0.5 deg in closure phase.
+    """
+    ground = np.random.default_rng(5).uniform(-size / 2, size / 2, (stations, 2))
+    waves = np.linspace(*wavelength, channels) if channels > 1 else np.mean(wavelength)
+    pairs = [(i, j) for i in range(stations) for j in range(i + 1, stations)]
+    triangles = [(i, j, k) for i, j in pairs for k in range(j + 1, stations)]
+    v2, t3 = [], []
+    for exposure in range(exposures):
+        angle = 0.35 * exposure
+        turn = np.array([[np.cos(angle), -np.sin(angle)], [np.sin(angle), np.cos(angle)]])
+        at = ground @ turn.T
+        mjd = 60000.0 + exposure / 24
+        v2.append(table([[at[j] - at[i]] for i, j in pairs], waves, error=0.01, mjd=mjd))
+        sides = [[at[j] - at[i], at[k] - at[j]] for i, j, k in triangles]
+        t3.append(table(sides, waves, error=np.radians(0.5), mjd=mjd))
+        for part, members in ((v2[-1], pairs), (t3[-1], triangles)):
+            part.stations[:] = np.repeat(members, np.size(waves), axis=0)
+            part.row[:] += exposure * 1000 + (500 if part is t3[-1] else 0)
+    return Observation(
+        target="test",
+        instruments=("TEST",),
+        stations=tuple("ABCDEFGH"[:stations]),
+        v2=Observable.concatenate(v2),
+        t3=Observable.concatenate(t3),
+    )
+
+
+def fill(blank, rng=None, scene=None, *, errors=None, **values):
+    """`blank` with the values of a scene, and noise from `rng` unless it is None."""
+    v2, t3 = predict(blank, scene, **values)
+    noise = np.zeros(len(v2) + len(t3))
+    if rng is not None:
+        covariance = Covariance.of(blank, Sampling.of(blank, radius=0.0), errors)
+        noise = covariance.draw(rng)
+    n = len(v2)
+    return replace(
+        blank,
+        v2=replace(blank.v2, value=v2 + noise[:n]),
+        t3=replace(blank.t3, value=wrapped(t3 + noise[n:])),
+    )

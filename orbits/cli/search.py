@@ -1,0 +1,154 @@
+"""nodeline search: is there a companion in this epoch, where, how bright, how sure."""
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from ..errors import NothingFound
+from .frame import Json, Seed, emit, say
+
+if TYPE_CHECKING:
+    from ..companion.result import Candidate, SearchResult
+
+CLAIM = 0.01
+"""Largest false-alarm probability of a claim, unless told otherwise."""
+
+
+def search(
+    files: Annotated[
+        list[Path], typer.Argument(help="OIFITS files of one night.", metavar="FILE...")
+    ],
+    target: Annotated[str | None, typer.Option(help="Name, where the files hold several.")] = None,
+    night: Annotated[str | None, typer.Option(help="Date, where the files hold several.")] = None,
+    field: Annotated[float | None, typer.Option(help="Half the side of the field, mas.")] = None,
+    step: Annotated[float | None, typer.Option(help="Of the grid, mas.")] = None,
+    diameter: Annotated[
+        float | None, typer.Option(help="Of the primary, mas; else fitted.")
+    ] = None,
+    companion_diameter: Annotated[
+        float | None, typer.Option(help="Of the companion, mas; else fitted where it shows.")
+    ] = None,
+    companions: Annotated[int, typer.Option(min=1, max=2, help="How many to look for.")] = 1,
+    fibre: Annotated[
+        float | None, typer.Option(help="Full width at half maximum of the field of view, mas.")
+    ] = None,
+    shared_baselines: Annotated[
+        bool,
+        typer.Option("--shared-baselines", help="Closure phases share their baselines' noise."),
+    ] = False,
+    v2_calibration: Annotated[
+        float, typer.Option(min=0, help="Error of V2 common to all channels, as a part of V2.")
+    ] = 0.0,
+    t3_calibration: Annotated[
+        float, typer.Option(min=0, help="Closure-phase error common to all channels, deg.")
+    ] = 0.0,
+    ignore_correlations: Annotated[
+        bool, typer.Option("--ignore-correlations", help="Take all data for independent.")
+    ] = False,
+    flip_phase: Annotated[
+        bool, typer.Option("--flip-phase", help="The files have phases of the opposite sign.")
+    ] = False,
+    false_alarm: Annotated[
+        float, typer.Option(min=0, max=1, help="Claim what noise imitates less often than this.")
+    ] = CLAIM,
+    noise_searches: Annotated[int, typer.Option(min=100, help="At most.")] = 1000,
+    seed: Seed = 0,
+    json: Json = False,
+) -> None:
+    """Search one night for a companion, everywhere in a field and without a start value."""
+    import astropy.units as u
+    import numpy as np
+
+    from ..companion.covariance import ErrorModel
+    from ..companion.search import Stars
+    from ..companion.search import search as look
+    from ..oifits import read
+    from ..progress import Bar
+
+    def mas(value: float | None) -> u.Quantity | None:
+        return None if value is None else value * u.mas
+
+    for name, value in (("--field", field), ("--step", step), ("--fibre", fibre)):
+        if value is not None and not value > 0:
+            raise typer.BadParameter(f"{name} must be positive, got {value}")
+    result = look(
+        read(files, target=target, night=night, flip_phase=flip_phase),
+        field=mas(field),
+        step=mas(step),
+        diameter=mas(diameter),
+        companion_diameter=mas(companion_diameter),
+        stars=Stars(fibre_fwhm=fibre),
+        errors=ErrorModel(
+            correlated=not ignore_correlations,
+            shared_baselines=shared_baselines,
+            v2_calibration=v2_calibration,
+            t3_calibration=np.radians(t3_calibration),
+        ),
+        companions=companions,
+        noise_searches=noise_searches,
+        rng=np.random.default_rng(seed),
+        progress=Bar(),
+    )
+    say(describe(result), json=json)
+    if json:
+        emit(result.to_json())
+    if not result.best.false_alarm_probability < false_alarm:
+        raise NothingFound(
+            f"{result.target}: no companion can be claimed: noise alone looks as good in "
+            f"{result.best.false_alarm_probability:.2g} of its searches (limit {false_alarm:g})"
+        )
+
+
+def describe(result: "SearchResult") -> str:
+    """The result in lines for people."""
+    grid = result.maps.grid
+    lines = [
+        f"{result.target}, {result.instrument}, MJD {result.mjd:.4f}: "
+        f"{result.n_v2} V2 and {result.n_t3} closure phases, "
+        f"{grid.side} x {grid.side} positions within {grid.half * grid.step:.4g} mas"
+    ]
+    if result.previous is not None:
+        lines.append(f"  the first companion: {_place(result.previous.best)}")
+    best = result.best
+    lines += [
+        f"  best       {_place(best)}",
+        f"  primary    {_diameter(best.primary_diameter_mas, best.primary_diameter_error_mas)}",
+        f"  companion  {_diameter(best.companion_diameter_mas, best.companion_diameter_error_mas)}",
+        f"  chi-square {best.chi2:.1f} for {best.dof} degrees of freedom, "
+        f"{best.delta_chi2:.1f} less than without it",
+    ]
+    if best.error_scale > 1:
+        lines.append(
+            f"  errors are scaled by {best.error_scale:.3f}, for a reduced chi-square of 1; "
+            "divide by it for errors as stated"
+        )
+    lines.append(f"  local significance {best.significance_sigma:.1f} sigma; {_chance(result)}")
+    lines += [
+        f"  or         {_place(one)}  (weight {one.weight:.3g})" for one in result.alternatives
+    ]
+    return "\n".join(lines)
+
+
+def _place(one: "Candidate") -> str:
+    return (
+        f"{one.separation_mas:.3f} +- {one.separation_error_mas:.3f} mas, "
+        f"PA {one.position_angle_deg:.3f} +- {one.position_angle_error_deg:.3f} deg, "
+        f"contrast {one.contrast:.4g} +- {one.contrast_error:.2g}"
+    )
+
+
+def _diameter(value: float, error: float) -> str:
+    if value == 0:
+        return "a point"
+    return f"{value:.3f} +- {error:.3f} mas" if error else f"{value:.3f} mas (fixed)"
+
+
+def _chance(result: "SearchResult") -> str:
+    chance = result.best.false_alarm_probability
+    count = len(result.false_alarms.maxima)
+    words = "below 1e-9" if chance < 1e-9 else f"{chance:.2g}"
+    how = (
+        "extrapolated by the law of maxima of a random field from" if result.extrapolated else "of"
+    )
+    return f"false alarm {words} over the field, {how} {count} noise searches"

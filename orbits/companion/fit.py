@@ -1,0 +1,156 @@
+"""Least squares with the exact model: from a start value to the nearest solution."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+
+from ..binary import Scene, model
+from ..observation import Observation
+from ..sampling import Sampling
+from .covariance import Covariance
+
+_STEPS = 60
+_SETTLED = 1e-7
+"""Of chi-square, or absolute where chi-square is below 1: a change that no error bar notices."""
+
+
+@dataclass(frozen=True, eq=False)
+class Problem:
+    """Data with their covariance and samples: all that a fit of any scene needs."""
+
+    data: np.ndarray
+    """(n,) squared visibilities, then closure phases in rad."""
+    n_v2: int
+    sampling: Sampling
+    covariance: Covariance
+
+    @classmethod
+    def of(cls, observation: Observation, sampling: Sampling, covariance: Covariance) -> "Problem":
+        """The data of `observation`."""
+        data = np.concatenate([observation.v2.value, observation.t3.value])
+        return cls(data, len(observation.v2), sampling, covariance)
+
+    def residual(self, predicted: np.ndarray) -> np.ndarray:
+        """(n,) data minus `predicted`, closure phases wrapped into [-pi, pi)."""
+        difference = self.data - predicted
+        phase = difference[self.n_v2 :]
+        difference[self.n_v2 :] = (phase + np.pi) % (2 * np.pi) - np.pi
+        return difference
+
+
+@dataclass(frozen=True, eq=False)
+class Fit:
+    """A scene fitted to data."""
+
+    scene: Scene
+    values: np.ndarray
+    """(p,) all parameters of the scene."""
+    free: tuple[int, ...]
+    """Indices of those fitted."""
+    chi2: float
+    dof: int
+    covariance: np.ndarray
+    """(len(free), len(free)) of the free parameters, from the errors as stated."""
+    settled: bool
+    priors: Mapping[int, tuple[float, float]] = field(default_factory=dict)
+    """Index of a parameter: mean and standard deviation of its Gaussian prior."""
+
+    def value(self, name: str) -> float:
+        """The value of a parameter by its name."""
+        return float(self.values[self.scene.names.index(name)])
+
+    def error(self, name: str) -> float:
+        """Its standard error from the errors as stated; 0 where it is fixed."""
+        index = self.scene.names.index(name)
+        if index not in self.free:
+            return 0.0
+        place = self.free.index(index)
+        return float(np.sqrt(self.covariance[place, place]))
+
+    @property
+    def reduced(self) -> float:
+        """chi-square per degree of freedom (1 where there is none)."""
+        return self.chi2 / self.dof if self.dof > 0 else 1.0
+
+
+def fit(
+    problem: Problem,
+    scene: Scene,
+    start: np.ndarray,
+    free: tuple[int, ...],
+    priors: Mapping[int, tuple[float, float]] | None = None,
+    *,
+    steps: int = _STEPS,
+) -> Fit:
+    """Minimise chi-square over the `free` parameters by damped Gauss-Newton steps.
+
+    The damping is that of Marquardt (1963, J. SIAM 11, 431): along the diagonal of the normal
+    matrix. Gaussian `priors` count as further data.
+    """
+    priors = {} if priors is None else dict(priors)
+    values = np.array(start, dtype=float)
+    index = list(free)
+    white, jacobian = _linear(problem, scene, values, index, priors)
+    chi2 = float(white @ white)
+    damping, settled = 1e-3, not index
+    for _ in range(steps if index else 0):
+        normal, gradient = jacobian.T @ jacobian, jacobian.T @ white
+        diagonal = np.diag(normal).copy()
+        diagonal[diagonal == 0] = 1.0
+        step = np.linalg.solve(normal + damping * np.diag(diagonal), gradient)
+        trial = values.copy()
+        trial[index] += step
+        new_white, new_jacobian = _linear(problem, scene, trial, index, priors)
+        new = float(new_white @ new_white)
+        if new <= chi2:
+            settled = chi2 - new < _SETTLED * max(1.0, new) and damping < 1
+            values, white, jacobian, chi2 = trial, new_white, new_jacobian, new
+            damping = max(damping / 10, 1e-12)
+        else:
+            # A step that gains nothing at heavy damping is rounding: this is the minimum.
+            settled = damping > 1e8
+            damping *= 10
+        if settled:
+            break
+    dof = problem.covariance.rank + len(priors) - len(index)
+    return Fit(
+        scene, values, tuple(index), chi2, dof, _inverse(jacobian.T @ jacobian), settled, priors
+    )
+
+
+def polish(problem: Problem, rough: Fit) -> Fit:
+    """Go on from `rough` until the fit settles."""
+    return fit(problem, rough.scene, rough.values, rough.free, rough.priors)
+
+
+def with_values(rough: Fit, values: np.ndarray) -> Fit:
+    """`rough` with other values of the parameters, everything else unchanged."""
+    return replace(rough, values=values)
+
+
+def _linear(problem, scene, values, index, priors) -> tuple[np.ndarray, np.ndarray]:
+    """Whitened residuals (rank + priors,) and the whitened Jacobian of the model."""
+    predicted, jacobian = model(scene, values, problem.sampling, index)
+    both = np.column_stack([problem.residual(predicted), jacobian])
+    white = problem.covariance.whiten(both)
+    if priors:
+        rows = np.zeros((len(priors), both.shape[1]))
+        for row, (parameter, (mean, sigma)) in enumerate(priors.items()):
+            rows[row, 0] = (mean - values[parameter]) / sigma
+            if parameter in index:
+                rows[row, 1 + index.index(parameter)] = 1 / sigma
+        white = np.concatenate([white, rows])
+    return white[:, 0], white[:, 1:]
+
+
+def _inverse(normal: np.ndarray) -> np.ndarray:
+    """Inverse of a normal matrix, scaled first; directions without information get huge errors."""
+    if not len(normal):
+        return normal
+    scale = np.sqrt(np.diag(normal))
+    scale[scale == 0] = 1.0
+    unit = normal / np.outer(scale, scale)
+    values, vectors = np.linalg.eigh(unit)
+    values = np.maximum(values, 1e-14)
+    return (vectors / values) @ vectors.T / np.outer(scale, scale)

@@ -1,0 +1,500 @@
+"""Search one epoch for a companion: maps of the field, exact fits at the peaks, significance."""
+
+import time
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+
+import astropy.units as u
+import numpy as np
+
+from ..binary import PRIMARY, Scene, companion_name
+from ..constants import MAS
+from ..errors import InputError, NothingFound
+from ..observation import Observation
+from ..progress import SILENT, Silent
+from ..sampling import Sampling
+from .covariance import Covariance, ErrorModel
+from .fit import Fit, Problem, fit, polish
+from .grid import Grid
+from .maps import Field, Maps, single_star
+from .result import Candidate, SearchResult
+from .significance import FalseAlarms, noise_maxima, scaled
+
+FALSE_ALARM = 0.01
+"""A companion is claimed when noise alone would look as good less often than this."""
+NOISE_SEARCHES = 1000
+RESOLVED = 16.0
+"""Chi-square, scaled as the errors are, that the diameter of a companion must gain to be fitted."""
+KEPT = 25.0
+"""Solutions within this chi-square of the best, scaled as the errors are, are kept."""
+_STEPS_PER_FRINGE = 4.0
+_LARGEST_HALF = 256
+"""Most steps from the centre to the edge that a default field has."""
+_PEAKS = 24
+_BEYOND_LINEAR = 1.5
+"""Ratio of the exact to the linear gain that shows that the companion is not faint."""
+_ROUGH_STEPS = 4
+
+
+@dataclass(frozen=True, kw_only=True)
+class Stars:
+    """What the stars may look like, and which of their parameters are fitted.
+
+    Parameters are named as in `orbits.binary.Scene`. The position and contrast of a companion are
+    always fitted; everything else is fixed at 0 unless it is named here.
+    """
+
+    primary: str = "disc"
+    """Shape; see `orbits.visibility.SHAPES`."""
+    companion: str = "disc"
+    fixed: Mapping[str, float] = field(default_factory=dict)
+    free: tuple[str, ...] = ()
+    priors: Mapping[str, tuple[float, float]] = field(default_factory=dict)
+    """Mean and standard deviation of the Gaussian prior of a parameter, which is then fitted."""
+    may_resolve: bool = False
+    """Fit the companion's diameter where the data tell it from a point."""
+    contrast_per_instrument: bool = False
+    fibre_fwhm: float | None = None
+    """mas; see `Scene`."""
+
+
+def search(
+    observation: Observation,
+    *,
+    field: u.Quantity | None = None,
+    step: u.Quantity | None = None,
+    diameter: u.Quantity | None = None,
+    companion_diameter: u.Quantity | None = None,
+    stars: Stars | None = None,
+    errors: ErrorModel | None = None,
+    companions: int = 1,
+    smearing: bool = True,
+    noise_searches: int = NOISE_SEARCHES,
+    rng: np.random.Generator | None = None,
+    progress: Silent = SILENT,
+) -> SearchResult:
+    """Look for a companion everywhere in a field, without a start value.
+
+    Parameters
+    ----------
+    field : Quantity, optional
+        Half the side of the square field; by default the interferometric field
+        wavelength^2 / (longest baseline x bandwidth), at most 256 steps.
+    step : Quantity, optional
+        Of the grid; by default, and at most, the shortest wavelength over four times the longest
+        baseline.
+    diameter : Quantity, optional
+        Of the primary; by default it is fitted where there are squared visibilities and 0
+        elsewhere.
+    companion_diameter : Quantity, optional
+        Of the companion; by default it is fitted where that gains a chi-square of 16 (4 sigma),
+        and the companion is a point elsewhere.
+    stars : Stars, optional
+        Other shapes and parameters.
+    errors : ErrorModel, optional
+        How the errors are correlated, beyond what the files say.
+    companions : int
+        1, or 2 to look for a second one around the best solution for the first, which is fitted
+        again together with it.
+    smearing : bool
+        Whether wide channels and long integrations blur distant companions.
+    noise_searches : int
+        How many noise realisations measure the false-alarm probability; fewer are used where the
+        answer is beyond doubt, and with 0 it is not measured.
+    rng : Generator, optional
+        Of the noise realisations; by default one with seed 0, so that an epoch has one answer.
+
+    Raises
+    ------
+    InputError
+        If the observation has no data that can show a companion.
+    NothingFound
+        If no position in the field fits better than a single star.
+    """
+    began = time.perf_counter()
+    if companions not in (1, 2):
+        raise ValueError(f"companions must be 1 or 2, got {companions}")
+    rng = np.random.default_rng(0) if rng is None else rng
+    stars = _settled_stars(observation, stars or Stars(), diameter, companion_diameter)
+    grid = choose_grid(observation, field, step)
+    result = None
+    for count in range(1, companions + 1):
+        epoch = Epoch(observation, stars, grid, errors, count, smearing)
+        result = epoch.search(result, noise_searches, rng, progress)
+        result = replace(result, seconds=time.perf_counter() - began)
+    return result
+
+
+def choose_grid(
+    observation: Observation, field: u.Quantity | None = None, step: u.Quantity | None = None
+) -> Grid:
+    """The positions to search: see `search` for `field` and `step`.
+
+    Raises
+    ------
+    InputError
+        If there are no data.
+    ValueError
+        If `field` or `step` is not positive.
+    """
+    tables = [t for t in (observation.v2, observation.t3) if len(t)]
+    if not tables:
+        raise InputError(f"{observation.target}: no usable squared visibility or closure phase")
+    finest = min((t.wavelength / t.baselines).min() for t in tables) / MAS
+    size = finest / _STEPS_PER_FRINGE
+    for name, value in (("field", field), ("step", step)):
+        if value is not None and not value.to_value(u.mas) > 0:
+            raise ValueError(f"{name} must be positive, got {value}")
+    if step is not None:
+        size = min(size, step.to_value(u.mas))
+    if field is not None:
+        half = int(np.ceil(field.to_value(u.mas) / size * (1 - 1e-12)))
+        return Grid(half, field.to_value(u.mas) / half)
+    with np.errstate(divide="ignore"):  # no field where a file does not state its bandwidth
+        coherent = min((t.wavelength**2 / t.baselines / t.bandwidth).min() for t in tables) / MAS
+    return Grid(int(min(np.ceil(coherent / size), _LARGEST_HALF)), size)
+
+
+class Epoch:
+    """One observation, prepared for the search of its companion number `count`."""
+
+    def __init__(
+        self,
+        observation: Observation,
+        stars: Stars,
+        grid: Grid,
+        errors: ErrorModel | None,
+        count: int,
+        smearing: bool,
+    ):
+        self.observation, self.stars, self.grid, self.smearing = observation, stars, grid, smearing
+        self.scene = _scene(observation, stars, count)
+        self.before = _scene(observation, stars, count - 1)
+        self.last = count - 1
+        self.values = self.scene.vector(_known(self.scene, stars))
+        self.free = _free(self.scene, stars)
+        self.priors = {
+            self.scene.names.index(name): prior
+            for name, prior in stars.priors.items()
+            if name in self.scene.names
+        }
+        sampling = Sampling.of(observation, radius=0.0, smearing=smearing)
+        self.covariance = Covariance.of(observation, sampling, errors)
+        self._problems: dict[float, Problem] = {}
+
+    def problem(self, radius: float) -> Problem:
+        """The data, sampled finely enough for companions within `radius` mas."""
+        reach = self.grid.step
+        while reach < radius:
+            reach *= 2
+        if reach not in self._problems:
+            sampling = Sampling.of(self.observation, radius=reach, smearing=self.smearing)
+            self._problems[reach] = Problem.of(self.observation, sampling, self.covariance)
+        return self._problems[reach]
+
+    def null(self, previous: SearchResult | None) -> Fit:
+        """The scene without the companion to be found: a star, or the best solution so far."""
+        if previous is not None:
+            return previous.best.fit
+        free = tuple(i for i in self.free if i < len(PRIMARY))
+        start = self.before.vector(_known(self.before, self.stars))
+        priors = {i: prior for i, prior in self.priors.items() if i < len(PRIMARY)}
+        problem = self.problem(0.0)
+        if 0 in free:
+            start = single_star(problem, self.before, diameter=None, values=start).values
+        return fit(problem, self.before, start, free, priors)
+
+    def search(
+        self,
+        previous: SearchResult | None,
+        noise_searches: int,
+        rng: np.random.Generator,
+        progress: Silent = SILENT,
+    ) -> SearchResult:
+        """Maps, fits at their peaks, and what noise would do."""
+        null = self.null(previous)
+        # What the search for the first companion found worth fitting is fitted again.
+        self.free = tuple(sorted({*self.free, *null.free}))
+        companion = (self.stars.companion, self.stars.fixed.get("diameter", 0.0))
+        field = Field(
+            self.observation, self.covariance, null, self.grid, companion, smearing=self.smearing
+        )
+        faint = field.faint()
+        maps = field.all_contrasts(faint) if self.last == 0 else faint
+        fits = self.resolved(self.solutions(maps, null))
+        if not fits:
+            raise NothingFound(
+                f"{self.observation.target}: no companion within "
+                f"{self.grid.half * self.grid.step:.4g} mas fits better than none"
+            )
+        white = field.project(field.residual)
+        top = scaled(field, faint.gain, white @ white)
+        looks = 1
+        exact = (null.chi2 - fits[0].chi2) / max(1.0, fits[0].reduced)
+        if exact > _BEYOND_LINEAR * top:
+            # A bright companion, for which the linear statistic is too modest: a second look.
+            top, looks = exact, 2
+        alarms, chance, extrapolated = None, None, False
+        if noise_searches:
+            maxima = noise_maxima(field, noise_searches, rng, enough=top, progress=progress)
+            alarms = FalseAlarms.fitted(maxima)
+            chance, extrapolated = alarms.probability(top)
+            chance = min(1.0, looks * chance)
+        kept = _candidates(fits, null, self.last, chance)
+        return SearchResult(
+            target=self.observation.target,
+            instrument=self.observation.instrument,
+            mjd=self.observation.mjd,
+            n_v2=len(self.observation.v2),
+            n_t3=len(self.observation.t3),
+            best=kept[0],
+            alternatives=kept[1:],
+            null=null,
+            maps=maps,
+            statistic=top,
+            false_alarms=alarms,
+            extrapolated=extrapolated,
+            seconds=0.0,
+            previous=previous,
+        )
+
+    def solutions(self, maps: Maps, null: Fit) -> list[Fit]:
+        """Distinct exact solutions from every peak that could be the answer, the best first."""
+        starts = [self._start(null, maps, *place) for place in _peaks(maps.gain)]
+        rough = [self._fit(start, steps=_ROUGH_STEPS) for start in starts]
+        rough = [one for one in rough if self._inside(one)]
+        if not rough:
+            return []
+        best = min(one.chi2 for one in rough)
+        hopeful = max(4 * KEPT * min(one.reduced for one in rough), 0.3 * (null.chi2 - best))
+        found: list[Fit] = []
+        for one in sorted(rough, key=lambda one: one.chi2):
+            if one.chi2 < best + hopeful:
+                self._keep(found, one)
+        for one in list(found):
+            self._keep(found, self._fit(self._opposite(one.values), steps=_ROUGH_STEPS))
+        worse = KEPT * max(1.0, min(one.reduced for one in found)) if found else 0.0
+        lowest = min((one.chi2 for one in found), default=0.0)
+        found = [one for one in found if one.chi2 <= lowest + worse and one.chi2 < null.chi2]
+        return sorted(found, key=lambda one: one.chi2)
+
+    def resolved(self, fits: list[Fit]) -> list[Fit]:
+        """`fits` with the companion's diameter fitted too, where the data tell it from a point."""
+        (own,) = self._indices("diameter")
+        if not fits or own in self.free or not self.stars.may_resolve:
+            return fits
+        self.free = tuple(sorted((*self.free, own)))
+        larger = [self._resolve(one) for one in fits]
+        best = min(larger, key=lambda one: one.chi2)
+        if fits[0].chi2 - best.chi2 > RESOLVED * max(1.0, best.reduced):
+            return sorted(filter(self._inside, larger), key=lambda one: one.chi2)
+        self.free = tuple(i for i in self.free if i != own)
+        return fits
+
+    def _resolve(self, one: Fit) -> Fit:
+        bright = self._fit(one.values)
+        (contrast,) = self._indices("contrast")
+        return bright if bright.values[contrast] <= 1 else self._no_brighter(bright)[0]
+
+    def _start(self, null: Fit, maps: Maps, row: int, column: int) -> np.ndarray:
+        """Start values at a position of the map."""
+        values = self.values.copy()
+        values[: len(null.values)] = null.values
+        if 0 in self.free:
+            values[0] = maps.diameter[row, column]
+        axis = maps.grid.axis
+        x, y, contrast = self._indices("x", "y", "contrast")
+        values[[x, y]] = axis[column], axis[row]
+        values[contrast] = max(maps.contrast[row, column], 1e-6)
+        return values
+
+    def _fit(self, start: np.ndarray, *, steps: int | None = None) -> Fit:
+        x, y, own = self._indices("x", "y", "diameter")
+        start = start.copy()
+        for diameter in {0, own} & set(self.free):
+            # A fit cannot leave a diameter of 0, where the visibility has no slope.
+            start[diameter] = max(abs(start[diameter]), 2 * self.grid.step)
+        problem = self.problem(1.2 * np.hypot(start[x], start[y]))
+        options = {} if steps is None else {"steps": steps}
+        return fit(problem, self.scene, start, self.free, self.priors, **options)
+
+    def _keep(self, found: list[Fit], rough: Fit) -> None:
+        """Polish a fit and add it to those `found`, once, as a companion fainter than its star."""
+        if not self._inside(rough):
+            return
+        one = polish(self.problem(self._reach(rough)), rough)
+        for fair in self._no_brighter(one):
+            if self._inside(fair) and not any(self._same(fair, other) for other in found):
+                found.append(fair)
+
+    def _no_brighter(self, one: Fit) -> list[Fit]:
+        """`one`, or where its companion outshines the primary what comes nearest to it."""
+        (contrast,) = self._indices("contrast")
+        if one.values[contrast] <= 1:
+            return [one]
+        turned = self._fit(self._opposite(one.values))
+        fair = [turned] if turned.values[contrast] <= 1 else []
+        values = one.values.copy()
+        values[contrast] = 1.0
+        free = tuple(i for i in self.free if i != contrast)
+        bound = fit(self.problem(self._reach(one)), self.scene, values, free, self.priors)
+        return [*fair, bound]
+
+    def _opposite(self, values: np.ndarray) -> np.ndarray:
+        """The two stars exchanged, where their parameters can be; else the companion opposite."""
+        x, y, contrast, own = self._indices("x", "y", "contrast", "diameter")
+        turned = values.copy()
+        turned[[x, y]] *= -1
+        if values[contrast] > 0.5 and self.last == 0:
+            turned[contrast] = min(1 / values[contrast], 1.5)
+            if 0 in self.free and own in self.free:
+                turned[[0, own]] = values[[own, 0]]
+        return turned
+
+    def _inside(self, one: Fit) -> bool:
+        x, y, contrast = self._indices("x", "y", "contrast")
+        edge = (self.grid.half + 1) * self.grid.step
+        return (
+            one.values[contrast] > 0
+            and abs(one.values[x]) <= edge
+            and abs(one.values[y]) <= edge
+            and np.isfinite(one.chi2)
+        )
+
+    def _same(self, one: Fit, other: Fit) -> bool:
+        x, y = self._indices("x", "y")
+        apart = np.hypot(*(one.values[[x, y]] - other.values[[x, y]]))
+        return apart < self.grid.step / 2
+
+    def _reach(self, one: Fit) -> float:
+        x, y = self._indices("x", "y")
+        return 1.2 * float(np.hypot(one.values[x], one.values[y]))
+
+    def _indices(self, *names: str) -> list[int]:
+        return [self.scene.names.index(companion_name(name, self.last)) for name in names]
+
+
+def _settled_stars(
+    observation: Observation,
+    stars: Stars,
+    diameter: u.Quantity | None,
+    companion_diameter: u.Quantity | None,
+) -> Stars:
+    """`stars` with the two diameters decided: fixed, or among the free parameters."""
+    fixed, free = dict(stars.fixed), set(stars.free) | set(stars.priors)
+    names = ("primary_diameter", "diameter")
+    shapes = (stars.primary, stars.companion)
+    resolve = False
+    for name, shape, value in zip(names, shapes, (diameter, companion_diameter), strict=True):
+        if value is not None and name not in free:
+            fixed.setdefault(name, float(value.to_value(u.mas)))
+        elif name == "diameter":
+            resolve = shape != "point" and name not in (*fixed, *free)
+        elif shape != "point" and name not in fixed and len(observation.v2):
+            free.add(name)
+    twice = sorted(free & set(fixed))
+    if twice:
+        raise ValueError(f"parameter {', '.join(twice)} is both fixed and free")
+    return replace(stars, fixed=fixed, free=tuple(sorted(free)), may_resolve=resolve)
+
+
+def _scene(observation: Observation, stars: Stars, companions: int) -> Scene:
+    wavelengths = [t.wavelength for t in (observation.v2, observation.t3)]
+    return Scene(
+        primary_shape=stars.primary,
+        companion_shape=stars.companion,
+        companions=companions,
+        instruments=len(observation.instruments) if stars.contrast_per_instrument else 1,
+        reference=float(np.median(np.concatenate(wavelengths))),
+        fibre_fwhm=stars.fibre_fwhm,
+    )
+
+
+def _known(scene: Scene, stars: Stars) -> dict[str, float]:
+    """Values fixed or expected beforehand, for all companions of `scene`."""
+    given = {**{name: mean for name, (mean, _) in stars.priors.items()}, **stars.fixed}
+    known = {}
+    for name, value in given.items():
+        for i in range(max(scene.companions, 1)):
+            each = name if name in PRIMARY else companion_name(name, i)
+            if each in scene.names:
+                known[each] = value
+    return known
+
+
+def _free(scene: Scene, stars: Stars) -> tuple[int, ...]:
+    """Indices of the fitted parameters of `scene`."""
+    wanted = {name for name in stars.free if name in PRIMARY}
+    every = [name for name in stars.free if name not in PRIMARY]
+    if stars.contrast_per_instrument:
+        every += [f"ratio_{k}" for k in range(1, scene.instruments)]
+    for i in range(scene.companions):
+        wanted |= {companion_name(name, i) for name in ("x", "y", "contrast", *every)}
+    unknown = sorted(wanted - set(scene.names))
+    if unknown:
+        raise ValueError(f"no parameter {', '.join(unknown)} to fit; there are {scene.names}")
+    return tuple(i for i, name in enumerate(scene.names) if name in wanted)
+
+
+def _peaks(gain: np.ndarray) -> list[tuple[int, int]]:
+    """Local maxima of a map that could become the best once the exact model judges them."""
+    from scipy.ndimage import maximum_filter
+
+    rows, columns = np.nonzero((gain == maximum_filter(gain, size=3)) & (gain > 0))
+    height = gain[rows, columns]
+    order = np.argsort(height)[::-1]
+    top = height[order[0]] if len(order) else 0.0
+    order = order[height[order] > min(0.4 * top, top - KEPT)][:_PEAKS]
+    return list(zip(rows[order].tolist(), columns[order].tolist(), strict=True))
+
+
+def _candidates(
+    fits: list[Fit], null: Fit, companion: int, chance: float | None
+) -> tuple[Candidate, ...]:
+    """Candidates for solutions, the best first, with their posterior weights."""
+    scale2 = max(1.0, fits[0].reduced)
+    log_weight = np.array([-0.5 * one.chi2 / scale2 + _log_volume(one) for one in fits])
+    weight = np.exp(log_weight - log_weight.max())
+    weight /= weight.sum()
+    return tuple(
+        _candidate(one, null, companion, chance, float(w), scale2)
+        for one, w in zip(fits, weight, strict=True)
+    )
+
+
+def _log_volume(one: Fit) -> float:
+    """Log of the posterior's volume about a solution (Laplace's approximation)."""
+    sign, size = np.linalg.slogdet(one.covariance)
+    return 0.5 * size if sign > 0 else 0.0
+
+
+def _candidate(
+    one: Fit, null: Fit, companion: int, chance: float | None, weight: float, scale2: float
+) -> Candidate:
+    scale = float(np.sqrt(scale2))
+
+    def name(what: str) -> str:
+        return companion_name(what, companion)
+
+    places = [one.free.index(one.scene.names.index(name(axis))) for axis in ("x", "y")]
+    gain = null.chi2 - one.chi2
+    return Candidate(
+        x_mas=one.value(name("x")),
+        y_mas=one.value(name("y")),
+        covariance_xy_mas2=one.covariance[np.ix_(places, places)] * scale2,
+        contrast=one.value(name("contrast")),
+        contrast_error=one.error(name("contrast")) * scale,
+        primary_diameter_mas=abs(one.value("primary_diameter")),
+        primary_diameter_error_mas=one.error("primary_diameter") * scale,
+        companion_diameter_mas=abs(one.value(name("diameter"))),
+        companion_diameter_error_mas=one.error(name("diameter")) * scale,
+        error_scale=scale,
+        chi2=one.chi2,
+        dof=one.dof,
+        delta_chi2=gain,
+        significance_sigma=float(np.sqrt(max(gain, 0.0) / scale2)),
+        false_alarm_probability=chance,
+        weight=weight,
+        companion=companion,
+        fit=one,
+    )

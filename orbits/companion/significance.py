@@ -1,0 +1,159 @@
+"""How often noise alone, searched over the whole field in the same way, looks as good.
+
+The statistic of an epoch is the largest chi-square gain of a faint companion over the field,
+between the positions of the grid too, divided by the reduced chi-square of the data where that
+exceeds 1 (errors stated too small then make no discoveries). Its law under "no companion" is
+measured: noise is drawn from the data's own covariance about the fitted single star, and searched.
+
+Beyond the simulated ranks a law for maxima of a smooth random field of two dimensions goes on:
+
+    P(T > t) = 1 - exp(-m(t)),   m(t) = (n_1 + n_2 sqrt t) exp(-t / 2),
+
+the expected number of separate regions above t for a field that is a squared standard normal
+variable at every point (Adler & Taylor 2007, Random Fields and Geometry; Vitells & Gross 2011,
+Astropart. Phys. 35, 230), with n_1 and n_2 fitted to the simulated maxima.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..progress import SILENT, Silent
+from .maps import Field, estimate
+
+_BATCH = 4
+"""Transforms at a time; each carries two noise searches."""
+_LEAST = 100
+"""Noise searches before the first look whether more of them are needed."""
+_BEYOND_DOUBT = 1e-9
+_COMPANION = 3
+"""Parameters of a companion: x, y, contrast."""
+_TRUSTED_RANK = 10
+"""A probability is counted, not extrapolated, while at least so many noise searches exceed it."""
+
+
+@dataclass(frozen=True, eq=False)
+class FalseAlarms:
+    """The law of the largest gain that noise alone reaches over a field."""
+
+    maxima: np.ndarray
+    """(n,) of the noise searches, ascending."""
+    amplitudes: tuple[float, float]
+    """(n_1, n_2) of the law of the tail."""
+
+    @classmethod
+    def fitted(cls, maxima: np.ndarray) -> "FalseAlarms":
+        """From simulated maxima, by maximum likelihood for the upper half of them."""
+        maxima = np.sort(maxima)
+        return cls(maxima, _fit_tail(maxima))
+
+    def probability(self, statistic: float) -> tuple[float, bool]:
+        """P(noise reaches `statistic`), and whether it is extrapolated beyond the counts."""
+        n = len(self.maxima)
+        above = n - int(np.searchsorted(self.maxima, statistic, side="left"))
+        if above >= _TRUSTED_RANK:
+            return (above + 1) / (n + 1), False
+        return float(-np.expm1(-_expected(self.amplitudes, statistic))), True
+
+    def threshold(self, probability: float) -> float:
+        """The statistic that noise reaches with `probability` (0 to 1)."""
+        from scipy.optimize import brentq
+
+        rank = int(np.ceil(probability * (len(self.maxima) + 1)))
+        if rank > _TRUSTED_RANK:
+            return float(self.maxima[-(rank - 1)])
+        wanted = -np.log1p(-probability)
+        return float(brentq(lambda t: _expected(self.amplitudes, t) - wanted, 1.0, 1e4))
+
+
+def noise_maxima(
+    field: Field,
+    count: int,
+    rng: np.random.Generator,
+    *,
+    enough: float | None = None,
+    progress: Silent = SILENT,
+) -> np.ndarray:
+    """Statistics of up to `count` noise searches of `field`.
+
+    With a statistic `enough` it stops early where the law of the tail puts that one beyond 1e-9:
+    no further search could change what is said about it.
+    """
+    transform = field.grid.transform(field.response.u, field.response.v, _BATCH)
+    maxima = np.empty(0)
+    with progress.task("searching noise", count) as tick:
+        while len(maxima) < count:
+            k = min(2 * _BATCH, count - len(maxima))
+            white = field.project(rng.standard_normal((field.covariance.rank, k)))
+            n = transform(field.waves(white))
+            chi2 = (white**2).sum(axis=0)
+            found = [
+                scaled(field, estimate(n[i] * field.beam, field.sensitivity)[1], chi2[i])
+                for i in range(k)
+            ]
+            maxima = np.concatenate([maxima, found])
+            tick(k)
+            early = enough is not None and _LEAST <= len(maxima) < _LEAST + k
+            if early and FalseAlarms.fitted(maxima).probability(enough)[0] < _BEYOND_DOUBT:
+                break
+    return maxima
+
+
+def scaled(field: Field, gain: np.ndarray, chi2: float) -> float:
+    """Largest gain over the field, divided by the reduced chi-square where that exceeds 1.
+
+    `gain` is a map, and `chi2` that of the projected residuals it was made from.
+    """
+    top = highest(gain)
+    dof = field.covariance.rank - field.nuisance.shape[1] - _COMPANION
+    reduced = (chi2 - top) / dof if dof > 0 else 1.0
+    return top / max(1.0, reduced)
+
+
+def highest(gain: np.ndarray) -> float:
+    """Largest value of a map, between its positions too, by a parabola along either axis."""
+    row, column = np.unravel_index(np.argmax(gain), gain.shape)
+    top = gain[row, column]
+    if not (0 < row < gain.shape[0] - 1 and 0 < column < gain.shape[1] - 1):
+        return float(top)
+    rise = 0.0
+    for before, after in (
+        (gain[row - 1, column], gain[row + 1, column]),
+        (gain[row, column - 1], gain[row, column + 1]),
+    ):
+        curvature = 2 * top - before - after
+        if curvature > 0:
+            rise += (after - before) ** 2 / (8 * curvature)
+    return float(top + rise)
+
+
+def _expected(amplitudes: tuple[float, float], t: np.ndarray) -> np.ndarray:
+    """m(t): expected number of separate regions above t."""
+    first, second = amplitudes
+    return (first + second * np.sqrt(t)) * np.exp(-t / 2)
+
+
+def _fit_tail(maxima: np.ndarray) -> tuple[float, float]:
+    """(n_1, n_2) >= 0 that make the maxima above their median most likely, given how many."""
+    from scipy.optimize import minimize
+
+    cut = max(float(np.median(maxima)), 1.0)
+    above = maxima[maxima > cut]
+    below = len(maxima) - len(above)
+    if not len(above):
+        return 0.0, 0.0
+
+    def cost(logarithms: np.ndarray) -> float:
+        first, second = np.exp(logarithms)
+        root = np.sqrt(above)
+        m = (first + second * root) * np.exp(-above / 2)
+        slope = m / 2 - second / (2 * root) * np.exp(-above / 2)  # -dm/dt
+        if (slope <= 0).any():
+            return np.inf
+        at_cut = float(_expected((first, second), cut))
+        return float(below * at_cut + m.sum() - np.log(slope).sum())
+
+    scale = np.log(2) * np.exp(cut / 2)
+    starts = [np.log([scale, scale * 1e-3]), np.log([scale * 1e-3, scale / np.sqrt(cut)])]
+    fits = [minimize(cost, start, method="Nelder-Mead") for start in starts]
+    return tuple(float(value) for value in np.exp(min(fits, key=lambda one: one.fun).x))
