@@ -5,7 +5,7 @@ from typing import Annotated
 
 import typer
 
-from . import catalogue, predict, search, simulate
+from . import catalogue, draw, inspect, predict, search, simulate
 from .frame import run
 
 app = typer.Typer(
@@ -30,6 +30,8 @@ def nodeline(
 
 
 app.add_typer(catalogue.app)
+app.command()(draw.draw)
+app.command()(inspect.inspect)
 app.command()(predict.predict)
 app.command()(search.search)
 app.command()(simulate.simulate)

@@ -82,8 +82,8 @@ def draw_sky_on(
     marks: Sequence[Mark] = (),
     field: Field | None = None,
     small: bool = False,
-) -> None:
-    """Draw on `axes` without title or key.
+) -> str:
+    """Draw on `axes` without title or key; returns the width of the field with its unit.
 
     `field` is the part of the sky that is shown, all of the orbit by default; `small` leaves out
     what a thumbnail cannot show.
@@ -121,17 +121,13 @@ def draw_sky_on(
         _scale_bar(axes, corners[1], np.ptp(limits[0]) * scale, unit)
         axes.set_xlabel(f"East offset ({unit})")
         axes.set_ylabel(f"North offset ({unit})")
+    return f"{np.ptp(limits[0]) * scale:.4g} {unit}"
 
 
 def _common_name(bundles: Sequence[Bundle]) -> str:
-    """What the names of the bundles have in common at their beginning."""
-    words = [bundle.name.split() for bundle in bundles]
-    common = []
-    for same in zip(*words, strict=False):
-        if len(set(same)) > 1:
-            break
-        common.append(same[0])
-    return " ".join(common).rstrip(",") or "Compared orbits"
+    """The system, if all solutions are of the same; solutions are called system/solution."""
+    systems = {bundle.name.partition("/")[0] for bundle in bundles}
+    return systems.pop() if len(systems) == 1 else "Compared orbits"
 
 
 def _extent(bundle: Bundle) -> tuple[np.ndarray, np.ndarray]:
@@ -182,7 +178,7 @@ def _limits(bundles: Sequence[Bundle]) -> Field:
             # The cloud may widen the field by half, lest it shrink the orbit to a speck.
             low = np.maximum(np.minimum(low, lows), low - half)
             high = np.minimum(np.maximum(high, highs), high + half)
-    centre, half = (low + high) / 2, 0.55 * (high - low).max() or 1.0
+    centre, half = (low + high) / 2, 0.58 * (high - low).max() or 1.0
     return np.array([centre[0] - half, centre[0] + half]), np.array(
         [centre[1] - half, centre[1] + half]
     )
