@@ -32,6 +32,7 @@ def nodeline(
 app.add_typer(catalogue.app)
 app.command()(draw.draw)
 app.command()(inspect.inspect)
+app.command()(measure.measure)
 app.command()(predict.predict)
 app.command()(search.search)
 app.command()(simulate.simulate)

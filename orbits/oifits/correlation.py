@@ -14,7 +14,7 @@ import numpy as np
 from .model import Corr, DataTable, OIFile
 
 if TYPE_CHECKING:
-    from scipy.sparse import csr_array
+    from scipy.sparse import coo_array, csr_array
 
 RIDGE = 0.01
 """Smallest eigenvalue that a repaired matrix has: no combination of data may count for more than
@@ -96,37 +96,52 @@ def positive_definite(matrix: "csr_array") -> tuple["csr_array", Repair | None]:
     Data that correlate with each other, directly or through others, form a group. All correlations
     of such a group are multiplied by the factor that lifts its smallest eigenvalue to `RIDGE`.
     """
-    from scipy.sparse import coo_array
     from scipy.sparse.csgraph import connected_components
 
     _, group = connected_components(matrix, directed=False)
-    order = np.argsort(group, kind="stable")
-    starts = np.flatnonzero(np.diff(group[order], prepend=-1))
-    factor = np.ones(matrix.shape[0])
+    entries = matrix.tocoo()
+    factor = np.ones(len(group))
     smallest, changed = np.inf, 0
-    for members in np.split(order, starts[1:]):
-        if members.size < 2:
-            continue
-        lowest = float(np.linalg.eigvalsh(matrix[members][:, members].toarray())[0])
-        if lowest < 1e-10 * members.size:
-            factor[members] = (1 - RIDGE) / (1 - lowest)
-            smallest, changed = min(smallest, lowest), changed + 1
+    sizes = np.bincount(group)
+    for size in np.unique(sizes[sizes > 1]):
+        lowest = _lowest_eigenvalues(entries, group, np.flatnonzero(sizes == size), int(size))
+        for which, value in lowest.items():
+            if value < 1e-10 * size:
+                factor[group == which] = (1 - RIDGE) / (1 - value)
+                smallest, changed = min(smallest, value), changed + 1
     if not changed:
         return matrix, None
-    entries = coo_array(matrix)
     values = np.where(entries.row == entries.col, 1.0, entries.data * factor[entries.row])
-    shrunk = coo_array((values, (entries.row, entries.col)), shape=matrix.shape).tocsr()
+    shrunk = matrix.copy()
+    shrunk.data = values  # the entries of a csr matrix and of its coo twin are in the same order
     return shrunk, Repair(changed, smallest)
+
+
+def _lowest_eigenvalues(
+    entries: "coo_array", group: np.ndarray, chosen: np.ndarray, size: int
+) -> dict[int, float]:
+    """The smallest eigenvalue of each of the groups `chosen`, all of `size` data."""
+    members = np.flatnonzero(np.isin(group, chosen))
+    members = members[np.argsort(group[members], kind="stable")].reshape(-1, size)
+    place = np.full(len(group), -1)
+    place[members] = np.arange(size)
+    block = np.full(len(group), -1)
+    block[members] = np.arange(len(members))[:, None]
+    inside = block[entries.row] >= 0
+    row, col = entries.row[inside], entries.col[inside]
+    dense = np.zeros((len(members), size, size))
+    dense[block[row], place[row], place[col]] = entries.data[inside]
+    lowest = np.linalg.eigvalsh(dense)[:, 0]
+    return dict(zip(group[members[:, 0]].tolist(), lowest.tolist(), strict=True))
 
 
 @dataclass(frozen=True)
 class Cut:
-    """What remained of a table of data: the rows and channels that were kept."""
+    """What remained of a table of data, with CORRINDX still as they were before."""
 
-    before: DataTable
     after: DataTable
-    rows: np.ndarray
     channels: np.ndarray
+    """Which channels they were, in the order they have now."""
 
 
 def renumbered(
@@ -142,7 +157,7 @@ def renumbered(
         for _, _, index in table.quantities if name in lookup else ():
             if table[index] is None:
                 continue
-            old = table[index].astype(np.int64)[:, None] + np.flatnonzero(cut.channels)
+            old = table[index].astype(np.int64)[:, None] + cut.channels
             new = count[name] + 1 + np.arange(old.size).reshape(old.shape)
             count[name] += old.size
             valid = (old >= 1) & (old < lookup[name].size)

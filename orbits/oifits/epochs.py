@@ -139,7 +139,7 @@ def observations(
     if not times.size:
         words = " or ".join(KINDS[key].words for key in parts)
         raise InputError(f"{file.source}: no usable {words} of {name}")
-    starts = _night_starts(times, gap.to_value(u.day))
+    starts = night_starts(times, gap.to_value(u.day))
     epochs = []
     for number in range(len(starts)):
         chosen = {
@@ -186,7 +186,7 @@ def _target(file: OIFile, wanted: str | None) -> tuple[str, list[int]]:
     return next(iter(names.values())), ids
 
 
-def _night_starts(times: np.ndarray, gap: float) -> np.ndarray:
+def night_starts(times: np.ndarray, gap: float) -> np.ndarray:
     """The first time of each night."""
     ordered = np.unique(times)
     return ordered[np.concatenate([[True], np.diff(ordered) > gap])]

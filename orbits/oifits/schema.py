@@ -153,14 +153,14 @@ class Table:
     def select(self, rows: np.ndarray, channels: np.ndarray | None = None) -> Self:
         """The table with only these rows and, in its spectral columns, these channels.
 
-        Both are boolean arrays; `channels` None keeps all of them.
+        Both are boolean or index arrays; `channels` None keeps all of them.
         """
         changes: dict[str, object] = {}
         for known in self.present:
             value = self[known.name][rows]
             for axis, size in enumerate(known.shape, start=1):
                 if size == NWAVE and channels is not None:
-                    value = np.compress(channels, value, axis=axis)
+                    value = value[(slice(None),) * axis + (channels,)]
             changes[attribute(known.name)] = value
         extra = {n: replace(e, raw=e.raw[rows]) for n, e in self.extra.items()}
         return replace(self, **changes, extra=extra)

@@ -68,7 +68,8 @@ def select(file: OIFile, selection: Selection = EVERYTHING, *, target: str | Non
         chosen = channels[table.insname]
         if rows.any() and chosen.any():
             whole = rows.all() and chosen.all()
-            cuts.append(Cut(table, table if whole else table.select(rows, chosen), rows, chosen))
+            after = table if whole else table.select(rows, chosen)
+            cuts.append(Cut(after, np.flatnonzero(chosen)))
     if not cuts:
         raise InputError(f"{file.source}: nothing remains of it after the selection ({selection})")
     correlations, data = renumbered(file.correlations, cuts)

@@ -1,0 +1,122 @@
+"""nodeline inspect: what an OIFITS file holds, what is wrong with it, and a copy put right."""
+
+from pathlib import Path
+from typing import Annotated, Any
+
+import typer
+
+from .frame import Force, Json, emit, say
+
+Between = tuple[float, float]
+
+
+def inspect(
+    files: Annotated[list[Path], typer.Argument(help="OIFITS files.", metavar="FILE...")],
+    target: Annotated[str | None, typer.Option(help="Only this target.")] = None,
+    instrument: Annotated[str | None, typer.Option(help="Only this INSNAME.")] = None,
+    dates: Annotated[
+        tuple[str, str] | None, typer.Option(help="Only from one date to another, UTC.")
+    ] = None,
+    wavelengths: Annotated[Between | None, typer.Option(help="Only between these, um.")] = None,
+    baselines: Annotated[Between | None, typer.Option(help="Only between these, m.")] = None,
+    station: Annotated[
+        list[str] | None, typer.Option(help="Only between the stations named; repeat.")
+    ] = None,
+    flip_phase: Annotated[
+        bool, typer.Option("--flip-phase", help="Reverse the sign of all phases.")
+    ] = False,
+    strict: Annotated[
+        bool, typer.Option("--strict", help="Take what is suspicious as unusable.")
+    ] = False,
+    plot: Annotated[
+        Path | None, typer.Option(help="Draw coverage, V2 and closure phases to this file.")
+    ] = None,
+    convert: Annotated[
+        Path | None, typer.Option(help="Write what is selected to this file, as OIFITS 2.")
+    ] = None,
+    force: Force = False,
+    json: Json = False,
+) -> None:
+    """Tell what OIFITS files hold and what is wrong with them.
+
+    Several files are told one by one; --plot and --convert take them together.
+    """
+    from ..files import refuse_existing
+    from ..oifits import load
+    from ..oifits.checking import check
+    from ..oifits.converting import convert as write_copy
+    from ..oifits.flipping import flipped
+    from ..oifits.inspection import in_words
+    from ..oifits.inspection import inspect as describe
+    from ..oifits.joining import join
+    from ..oifits.selecting import select
+    from ..problems import refuse_suspicious
+
+    if plot and plot.suffix.lower() not in (".png", ".pdf", ".svg"):
+        raise typer.BadParameter("the name of a picture ends in .png, .pdf or .svg")
+    refuse_existing(*(path for path in (plot, convert) if path), force=force)
+    selection = _selection(instrument, dates, wavelengths, baselines, tuple(station or ()))
+    parts, results = [], []
+    for path in files:
+        file = load(path)
+        file.problems += check(file)
+        if flip_phase:
+            file = flipped(file)
+        parts.append(select(file, selection, target=target))
+        results.append(describe(parts[-1]))
+        say(in_words(results[-1]), json=json)
+    whole = join(parts)
+    outcome: dict[str, Any] = {"files": results}
+    if plot:
+        _draw(whole, plot, force=force)
+        outcome["plot"] = str(plot)
+        say(f"drawn: {plot}", json=json)
+    if convert:
+        notes = [f"only {selection}"] if str(selection) else []
+        notes += [f"only target {target}"] if target is not None else []
+        notes += ["sign of all phases reversed"] if flip_phase else []
+        copy, breaches = write_copy(whole, convert, notes=notes, force=force)
+        outcome["convert"] = {
+            "file": str(convert),
+            "history": copy.history,
+            "breaches": [str(breach) for breach in breaches],
+        }
+        say(f"written: {convert}, {_verdict(breaches)}", json=json)
+    if json:
+        emit(outcome)
+    if strict:
+        refuse_suspicious([problem for part in parts for problem in part.problems])
+
+
+def _selection(instrument, dates, wavelengths, baselines, stations):
+    import astropy.units as u
+    from astropy.time import Time
+
+    from ..errors import InputError
+    from ..oifits.selecting import Selection
+
+    try:
+        times = None if dates is None else tuple(Time(date, scale="utc") for date in dates)
+    except ValueError:
+        raise InputError(f"{' '.join(dates)}: dates are written like 2026-03-14T22:30") from None
+    return Selection(
+        instrument=instrument,
+        dates=times,
+        wavelengths=None if wavelengths is None else wavelengths * u.um,
+        baselines=None if baselines is None else baselines * u.m,
+        stations=stations,
+    )
+
+
+def _draw(file, path: Path, *, force: bool) -> None:
+    from ..oifits.epochs import observations
+    from ..plots.coverage import draw_coverage
+    from ..plots.style import save
+
+    save(draw_coverage(observations(file)), path, force=force)
+
+
+def _verdict(breaches: list) -> str:
+    if not breaches:
+        return "valid OIFITS 2"
+    return "but it breaks the standard still:\n" + "\n".join(f"  {b}" for b in breaches)
