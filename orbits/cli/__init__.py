@@ -5,7 +5,7 @@ from typing import Annotated
 
 import typer
 
-from . import catalogue, draw, inspect, predict, search, simulate
+from . import catalogue, draw, inspect, measure, predict, search, simulate
 from .frame import run
 
 app = typer.Typer(

@@ -1,0 +1,110 @@
+"""From all nights of a system to one position a night, each with its alternatives."""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from .companion.result import Candidate, SearchResult
+from .companion.search import FALSE_ALARM, search
+from .errors import InputError, NothingFound
+from .observation import Observation
+from .oifits import read_epochs
+from .oifits.epochs import night_label
+from .positions import Positions
+from .progress import SILENT, Silent
+from .system import System
+from .times import tdb_of_utc
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class Night:
+    """One epoch, and what the search found in it."""
+
+    observation: Observation
+    result: SearchResult | None
+    """None where no position fits better than a single star."""
+
+    @property
+    def label(self) -> str:
+        """A name that is the same however often the night is measured."""
+        return f"{night_label(self.observation.mjd)} {self.observation.instrument}"
+
+    @property
+    def candidates(self) -> tuple[Candidate, ...]:
+        """The solutions that exclude each other, the best first; none where nothing was found."""
+        if self.result is None:
+            return ()
+        return (self.result.best, *self.result.alternatives)
+
+    @property
+    def detected(self) -> bool:
+        """Whether noise alone would look as good less often than one claims a companion for."""
+        best = next(iter(self.candidates), None)
+        return best is not None and best.false_alarm_probability < FALSE_ALARM
+
+
+def measure(
+    system: System, *, rng: np.random.Generator, progress: Silent = SILENT
+) -> tuple[Night, ...]:
+    """Search every night of `system`, in order of time.
+
+    Raises
+    ------
+    InputError
+        If the system names no OIFITS files, or one of them cannot be used.
+    """
+    if not system.nights:
+        raise InputError(f"{system.path}: no nights; name OIFITS files under [nights]")
+    epochs = read_epochs(system.nights, target=system.target, flip_phase=system.flip_phase)
+    nights = []
+    with progress.task("searching nights", total=len(epochs)) as step:
+        for observation in epochs:
+            nights.append(_measure_night(system, observation, rng))
+            step()
+    return tuple(nights)
+
+
+def positions(nights: Sequence[Night]) -> Positions:
+    """One row for each solution of each night with a detection.
+
+    Raises
+    ------
+    NothingFound
+        If no night has one.
+    """
+    rows = [(night, one) for night in nights if night.detected for one in night.candidates]
+    if not rows:
+        raise NothingFound(
+            f"none of {len(nights)} nights shows a companion at a false-alarm probability "
+            f"below {FALSE_ALARM:g}"
+        )
+    text = {
+        "night": [night.label for night, _ in rows],
+        "instrument": [night.observation.instrument for night, _ in rows],
+        "source": [" ".join(night.observation.files) for night, _ in rows],
+    }
+    return Positions(
+        mjd=tdb_of_utc([night.observation.mjd for night, _ in rows]),
+        xy=np.array([(one.x_mas, one.y_mas) for _, one in rows]),
+        covariance=np.array([one.covariance_xy_mas2 for _, one in rows]),
+        weight=np.array([one.weight for _, one in rows]),
+        contrast=np.array([one.contrast for _, one in rows]),
+        contrast_error=np.array([one.contrast_error for _, one in rows]),
+        **{name: np.array(values, dtype=object) for name, values in text.items()},
+    )
+
+
+def _measure_night(system: System, observation: Observation, rng: np.random.Generator) -> Night:
+    from astropy import units as u
+
+    lengths = {
+        name: value * u.mas
+        for name, value in (("field", system.field), ("diameter", system.diameter))
+        if value is not None
+    }
+    try:
+        result = search(observation, rng=rng, **lengths)
+    except NothingFound:
+        result = None
+    return Night(observation=observation, result=result)
