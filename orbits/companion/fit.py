@@ -14,6 +14,9 @@ _STEPS = 60
 _SETTLED = 1e-7
 """Of chi-square, or absolute where chi-square is below 1: a change that no error bar notices."""
 
+_LEAP = 1e5
+"""A step longer than this (mas, or whatever the unit) follows a direction without information."""
+
 
 @dataclass(frozen=True, eq=False)
 class Problem:
@@ -99,6 +102,9 @@ def fit(
         diagonal = np.diag(normal).copy()
         diagonal[diagonal == 0] = 1.0
         step = np.linalg.solve(normal + damping * np.diag(diagonal), gradient)
+        if not np.abs(step).max() < _LEAP:
+            damping *= 10
+            continue
         trial = values.copy()
         trial[index] += step
         new_white, new_jacobian = _linear(problem, scene, trial, index, priors)

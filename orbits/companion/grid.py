@@ -11,7 +11,7 @@ import numpy as np
 
 from ..constants import MAS
 
-_SETTINGS = {"eps": 1e-9, "isign": -1, "upsampfac": 1.25, "nthreads": 1}
+_SETTINGS = {"eps": 1e-7, "isign": -1, "upsampfac": 1.25, "nthreads": 1}
 """Precision far below the 1e-5 that is asked of a map; a finer inner grid would take three times as
 long for it, and one thread gives the same digits on every machine."""
 _CHUNK = 1_000_000

@@ -28,7 +28,7 @@ CONTRASTS = (0.02, 0.04, 0.08, 0.15, 0.25, 0.4, 0.6, 0.8, 1.0)
 """The ladder for bright companions: closer than the width of a peak in log contrast."""
 _DIAMETERS = (1.0, 0.7, 0.0)
 """Of the diameter that fits a single star: a companion takes part of the blame for low V2."""
-_MAP_PRECISION = 1e-3
+_MAP_PRECISION = 5e-3
 """Of smeared waves in maps; the exact model has the last word."""
 
 

@@ -34,7 +34,7 @@ def prepared(observation, errors=None, *, half=20, step=1.7, bandwidth=None):
 
 
 def test_sum_of_waves_is_the_sum(rng):
-    """Precision asked of the transform is 1e-9 of the sum of moduli, here about 40 * 1.3."""
+    """Precision asked of the transform is 1e-7 of the sum of moduli, here about 40 * 1.3."""
     u, v = rng.uniform(-1, 1, (2, 40)) / (8 * MAS)
     c = rng.standard_normal((40, 2)) @ [1, 1j]
     grid = Grid(6, 1.3)
@@ -42,11 +42,11 @@ def test_sum_of_waves_is_the_sum(rng):
     for row, y in enumerate(grid.axis):
         for column, x in enumerate(grid.axis):
             slow = (c * np.exp(-2j * np.pi * MAS * (u * x + v * y))).sum().real
-            assert abs(fast[row, column] - slow) < 1e-6
+            assert abs(fast[row, column] - slow) < 1e-5
     both = grid.transform(u, v, 2)(np.stack([c, 2j * c, -c]))
-    assert_allclose(both[0], fast, atol=1e-6)
-    assert_allclose(both[1], grid.sum(u, v, 2j * c), atol=1e-6)
-    assert_allclose(both[2], -fast, atol=1e-6)
+    assert_allclose(both[0], fast, atol=1e-5)
+    assert_allclose(both[1], grid.sum(u, v, 2j * c), atol=1e-5)
+    assert_allclose(both[2], -fast, atol=1e-5)
 
 
 def direct(field, x, y):
