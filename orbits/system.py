@@ -12,9 +12,16 @@ value = 12.3                   # mas
 error = 0.2
 [fit]
 live_points = 500
+outliers = true                # a share of the positions may be wrong
+[priors]
+period = [50, 5000]            # d
+[priors.normal]
+inclination_deg = [90, 0.5]    # mean and standard deviation
 """
 
+from collections.abc import Mapping
 from dataclasses import dataclass
+from dataclasses import field as made
 from pathlib import Path
 from typing import Any
 
@@ -48,6 +55,10 @@ class System:
     velocities: tuple[Path, ...] = ()
     parallax: Parallax | None = None
     live_points: int = 500
+    model: Mapping[str, Any] = made(default_factory=dict)
+    """What besides the orbit may explain the data: arguments of `fitting.model.Model`."""
+    priors: Mapping[str, Any] = made(default_factory=dict)
+    """Prior densities that replace the default ones: arguments of `fitting.priors.Priors`."""
 
     @property
     def results(self) -> Path:
@@ -74,7 +85,7 @@ def read_system(path: Path) -> System:
         velocities=_files(path, values, "velocities", "tables"),
         parallax=_parallax(path, values),
         **{key: values["nights"][key] for key in _NIGHTS if key in values.get("nights", {})},
-        **{key: value for key, value in values.get("fit", {}).items()},
+        **_fit(path, values),
     )
 
 
@@ -86,7 +97,31 @@ SCHEMA: dict[str, Any] = {
     "positions": {"tables": list},
     "velocities": {"tables": list},
     "parallax": {"value": float, "error": float},
-    "fit": {"live_points": int},
+    "fit": {
+        "live_points": int,
+        "circular": bool,
+        "drift": bool,
+        "position_jitter": bool,
+        "velocity_jitter": bool,
+        "outliers": bool,
+        "scale": list,
+        "position_angle_zero": list,
+    },
+    "priors": {
+        "period": list,
+        "semimajor_axis": list,
+        "eccentricity": list,
+        "amplitude": list,
+        "position_jitter": list,
+        "velocity_jitter": list,
+        "systemic": float,
+        "zero_point": float,
+        "drift": float,
+        "outlier_fraction": float,
+        "scale": float,
+        "position_angle_zero": float,
+        "normal": {"*": list},
+    },
 }
 
 
@@ -106,6 +141,36 @@ def _files(path: Path, values: dict, section: str, key: str) -> tuple[Path, ...]
             raise InputError(f"{path}: {section}.{key}: no file matches {pattern!r}")
         found += [match for match in matches if match not in found]
     return tuple(found)
+
+
+def _fit(path: Path, values: dict) -> dict[str, Any]:
+    """Live points, model and priors, with lists made pairs or names."""
+    model = dict(values.get("fit", {}))
+    live_points = model.pop("live_points", 500)
+    if live_points < 50:
+        raise InputError(f"{path}: fit.live_points must be at least 50, got {live_points}")
+    for key in ("scale", "position_angle_zero"):
+        if key in model:
+            if not all(isinstance(name, str) for name in model[key]):
+                raise InputError(f"{path}: fit.{key} must list names of instruments")
+            model[key] = tuple(model[key])
+    priors = dict(values.get("priors", {}))
+    for key, value in priors.items():
+        if isinstance(value, list):
+            priors[key] = _pair(path, f"priors.{key}", value)
+    normal = {
+        key: _pair(path, f"priors.normal.{key}", value)
+        for key, value in priors.get("normal", {}).items()
+    }
+    if normal:
+        priors["normal"] = normal
+    return {"live_points": live_points, "model": model, "priors": priors}
+
+
+def _pair(path: Path, name: str, value: list) -> tuple[float, float]:
+    if len(value) != 2 or not all(type(number) in (int, float) for number in value):
+        raise InputError(f"{path}: {name} must be two numbers, got {value!r}")
+    return float(value[0]), float(value[1])
 
 
 def _parallax(path: Path, values: dict) -> Parallax | None:

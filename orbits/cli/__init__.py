@@ -5,7 +5,7 @@ from typing import Annotated
 
 import typer
 
-from . import catalogue, draw, inspect, measure, predict, search, simulate
+from . import catalogue, draw, inspect, measure, orbit, predict, search, simulate
 from .frame import run
 
 app = typer.Typer(
@@ -33,6 +33,7 @@ app.add_typer(catalogue.app)
 app.command()(draw.draw)
 app.command()(inspect.inspect)
 app.command()(measure.measure)
+app.command()(orbit.orbit)
 app.command()(predict.predict)
 app.command()(search.search)
 app.command()(simulate.simulate)

@@ -1,0 +1,154 @@
+"""nodeline orbit: elements and masses of a system."""
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from ..errors import InputError
+from .frame import Force, Json, Seed, emit, say
+
+if TYPE_CHECKING:
+    from ..fitting.solution import Solution
+    from ..positions import Positions
+    from ..system import System
+    from ..velocities import Velocities
+
+
+def orbit(
+    system: Annotated[Path, typer.Argument(help="System file (TOML).", metavar="SYSTEM")],
+    cores: Annotated[int, typer.Option(min=1, help="Threads; the result is the same.")] = 1,
+    seed: Seed = 0,
+    force: Force = False,
+    json: Json = False,
+) -> None:
+    """Fit the orbit of a system to its positions, velocities and parallax."""
+    import numpy as np
+
+    from ..files import refuse_existing
+    from ..fitting.engine import fit
+    from ..fitting.solution import outputs
+    from ..progress import Bar
+    from ..system import read_system
+
+    given = read_system(system)
+    refuse_existing(*outputs(given.results), force=force)
+    positions, velocities = read_data(given)
+    model, priors = read_settings(given, positions, velocities)
+    solution = fit(
+        positions,
+        velocities=velocities,
+        parallax=given.parallax,
+        model=model,
+        priors=priors,
+        live_points=given.live_points,
+        name=given.name,
+        cores=cores,
+        rng=np.random.default_rng(seed),
+        progress=Bar(),
+    )
+    solution.write(given.results, force=force)
+    say(table(solution), json=json)
+    say(f"Written to {given.results}", json=json)
+    if json:
+        emit(solution.to_json())
+
+
+def read_data(system: "System") -> tuple["Positions | None", "Velocities | None"]:
+    """The positions and velocities that a system file names, and those measured of its nights.
+
+    Raises
+    ------
+    InputError
+        If there are none, or the nights were not measured yet.
+    """
+    from ..positions import Positions, read_positions
+    from ..velocities import Velocities, read_velocities
+
+    paths = list(system.positions)
+    if system.nights:
+        measured = system.results / "positions.ecsv"
+        if not measured.is_file():
+            raise InputError(
+                f"{system.path}: its nights are not measured yet; "
+                f"run `nodeline measure {system.path.name}` first"
+            )
+        paths.append(measured)
+    if not paths and not system.velocities:
+        raise InputError(f"{system.path}: names no nights, positions or velocities to fit")
+    positions = [read_positions(path) for path in paths]
+    velocities = [read_velocities(path) for path in system.velocities]
+    return (
+        Positions.concatenate(positions) if positions else None,
+        Velocities.concatenate(velocities) if velocities else None,
+    )
+
+
+def read_settings(system: "System", positions, velocities):
+    """The model and the priors that a system file asks for."""
+    from ..fitting.model import Model
+    from ..fitting.priors import Priors
+
+    try:
+        return Model(**system.model), Priors.for_data(positions, velocities, **system.priors)
+    except ValueError as error:
+        raise InputError(f"{system.path}: {error}") from error
+
+
+def table(solution: "Solution") -> str:
+    """Median and 68.3 per cent interval of every quantity, for a terminal."""
+    account = solution.account
+    lines = [f"{solution.name}: median and 68.3 per cent interval"]
+    unknown = set(account["undetermined"])
+    for name, (median, plus, minus) in solution.summary.items():
+        digits = _digits(plus, minus)
+        mark = "   only bounded" if name in unknown else ""
+        lines.append(
+            f"  {name:<28} {median:>16.{digits}f}  +{plus:.{digits}f}  -{minus:.{digits}f}{mark}"
+        )
+    lines.append(
+        f"chi2 {account['chi2']:.1f} for {account['dof']} degrees of freedom; "
+        f"ln evidence {account['log_evidence']:.2f} +- {account['log_evidence_err']:.2f}; "
+        f"{account['effective_samples']:.0f} effective samples; {account['seconds']:.1f} s"
+    )
+    lines += _solutions(account["solutions"])
+    lines += _nights(account["nights"])
+    return "\n".join(lines + list(account["notes"]))
+
+
+def _digits(plus: float, minus: float) -> int:
+    """Decimals that show two digits of the smaller error."""
+    from math import floor, log10
+
+    smaller = min(plus, minus)
+    return 3 if smaller <= 0 else min(max(1 - floor(log10(smaller)), 0), 9)
+
+
+def _solutions(solutions: list[dict]) -> list[str]:
+    if len(solutions) == 1:
+        return []
+    lines = [f"{len(solutions)} solutions fit; the table shows the first:"]
+    for solution in solutions:
+        elements = solution["elements"]
+        lines.append(
+            f"  probability {solution['weight']:.3f}: period {elements['period_d']['median']:.6g} d"
+            f", eccentricity {elements['eccentricity']['median']:.3f}"
+        )
+    return lines
+
+
+def _nights(nights: list[dict]) -> list[str]:
+    """The nights whose place in the orbit was in question."""
+    lines = []
+    for night in nights:
+        suspicion = night.get("outlier_probability", 0.0)
+        if suspicion > 0.5:
+            lines.append(f"  night {night['night']}: an outlier with probability {suspicion:.3f}")
+            continue
+        if "alternatives" in night:
+            best = max(night["alternatives"], key=lambda a: a["probability"])
+            lines.append(
+                f"  night {night['night']}: {best['separation_mas']:.3f} mas at "
+                f"{best['position_angle_deg']:.2f} deg with probability {best['probability']:.3f}"
+            )
+    return lines

@@ -1,0 +1,243 @@
+"""The proposal: a mixture of the prior and of normal densities around the solutions.
+
+Posterior repartitioning (Chen, Hobson, Das & Gelderblom 2019, Stat. Comput. 29, 835) samples from
+a proposal q and multiplies the likelihood by prior / q: evidence and posterior stay exactly those
+of the prior, whatever q is, and the closer q comes to the posterior the shorter the run. Since q
+holds a share of the prior itself, the product is bounded wherever the likelihood is. Each normal
+density also comes with twice its width, for the tails.
+
+All densities here are relative to the prior: ln rho = ln(q / prior).
+"""
+
+import math
+from dataclasses import dataclass
+from typing import NamedTuple
+
+import numpy as np
+
+from ..compiled import compiled
+from .data import Data
+from .laplace import Normal
+from .likelihood import log_likelihood
+from .space import allowed, from_chart, from_prior, to_chart
+
+PRIOR_SHARE = 0.1
+"""Weight of the prior in the mixture."""
+WIDTHS = np.array([1.0, 2.0])
+WIDTH_SHARES = np.array([0.8, 0.2])
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class Proposal:
+    """Weights, centres and shapes of the normal densities; the prior has the remaining weight."""
+
+    weight: np.ndarray
+    """(J,) summing to 1 - PRIOR_SHARE, or empty where the prior is all."""
+    chart: np.ndarray
+    """(J,) int"""
+    mean: np.ndarray
+    """(J, d)"""
+    covariance: np.ndarray
+    """(J, d, d)"""
+    solution: np.ndarray
+    """(J,) int: the solution each belongs to."""
+
+    @property
+    def prior_weight(self) -> float:
+        """Weight of the prior."""
+        return 1.0 - float(self.weight.sum())
+
+    @classmethod
+    def around(cls, solutions: list[Normal], dimensions: int) -> "Proposal":
+        """The mixture of `solutions`, weighted by their evidence but none below a thousandth."""
+        log_weight = np.array([s.log_weight for s in solutions])
+        weight = np.maximum(np.exp(log_weight - log_weight.max(initial=-np.inf)), 1e-3)
+        return cls(
+            weight=(1 - PRIOR_SHARE) * weight / weight.sum(),
+            chart=np.array([s.chart for s in solutions], dtype=np.int64),
+            mean=np.array([s.mean for s in solutions]).reshape(-1, dimensions),
+            covariance=np.array([s.covariance for s in solutions]).reshape(
+                -1, dimensions, dimensions
+            ),
+            solution=np.arange(len(solutions)),
+        )
+
+
+class Mixture(NamedTuple):
+    """A proposal as the compiled functions read it."""
+
+    prior_weight: float
+    edges: np.ndarray
+    """(J,) cumulative weights."""
+    offsets: np.ndarray
+    """(J,) ln(weight * density at the centre / prior)."""
+    charts: np.ndarray
+    means: np.ndarray
+    roots: np.ndarray
+    """(J, d, d) lower triangular roots of the covariances, and their inverses."""
+    inverses: np.ndarray
+    periodic: np.ndarray
+    """(charts, d) bool."""
+
+
+class Target:
+    """The problem as seen from a proposal: where to draw, and what each draw weighs."""
+
+    def __init__(self, data: Data, proposal: Proposal) -> None:
+        space = data.space
+        self.data, self.proposal = data, proposal
+        self.region, self.tables = space.region, data.tables
+        roots = np.linalg.cholesky(proposal.covariance)
+        log_determinants = 2 * np.log(np.einsum("jii->ji", roots)).sum(axis=1)
+        self.mixture = Mixture(
+            prior_weight=proposal.prior_weight,
+            edges=np.cumsum(proposal.weight),
+            offsets=np.log(proposal.weight)
+            - 0.5 * (log_determinants + space.dimensions * math.log(2 * math.pi))
+            - np.array([space.log_density(int(chart)) for chart in proposal.chart]),
+            charts=proposal.chart,
+            means=proposal.mean,
+            roots=roots,
+            inverses=np.linalg.inv(roots),
+            periodic=np.array([space.periodic(chart) for chart in range(3)]),
+        )
+
+    def draw(self, count: int, rng: np.random.Generator) -> np.ndarray:
+        """(count, d) points drawn from the proposal; NaN for draws off the chart."""
+        return self.place(rng.uniform(size=(count, self.data.space.dimensions + 1)))
+
+    def place(self, cube: np.ndarray) -> np.ndarray:
+        """(S, d) points from (S, d + 1) uniform numbers, the first choosing the component."""
+        from scipy.special import ndtri
+
+        points = np.empty((cube.shape[0], cube.shape[1] - 1))
+        _place_all(cube, ndtri(cube), self.mixture, self.region, points)
+        return points
+
+    def log_weight(self, points: np.ndarray) -> np.ndarray:
+        """(S,) ln(likelihood * prior / proposal); -inf where the prior is 0."""
+        out = np.empty(len(points))
+        _log_weights(points, self.tables, self.mixture, self.region, out)
+        return out
+
+    def log_likelihood(self, points: np.ndarray) -> np.ndarray:
+        """(S,) ln of the likelihood; -inf where the prior is 0."""
+        out = np.empty(len(points))
+        _log_likelihoods(points, self.tables, self.region, out)
+        return out
+
+
+def responsibilities(target: Target, points: np.ndarray):
+    """Each component's share (S, J) of the proposal at allowed points; see `_responsibilities`.
+
+    Returns the shares, the mean 1 / width^2 (S, J) of each component, and the points (S, J, d) in
+    the component's chart, less its mean.
+    """
+    count, size = target.proposal.mean.shape
+    share, inverse_square = np.empty((len(points), count)), np.empty((len(points), count))
+    offsets = np.empty((len(points), count, size))
+    _responsibilities(points, target.mixture, target.region, share, inverse_square, offsets)
+    return share, inverse_square, offsets
+
+
+@compiled
+def _place_all(cube, deviates, mixture, region, points):
+    """Draws from the prior, and from the normal densities where the first number falls to one."""
+    size = points.shape[1]
+    coordinates = np.empty(size)
+    for s in range(points.shape[0]):
+        first = cube[s, 0]
+        j = np.searchsorted(mixture.edges, first, side="right")
+        if j >= mixture.edges.size:
+            from_prior(cube[s, 1:], deviates[s, 1:], region, points[s])
+            continue
+        # The place within the component's interval chooses between its two widths.
+        start = mixture.edges[j - 1] if j else 0.0
+        part = (first - start) / (mixture.edges[j] - start)
+        width = WIDTHS[0] if part < WIDTH_SHARES[0] else WIDTHS[1]
+        chart = mixture.charts[j]
+        good = True
+        for a in range(size):
+            offset = 0.0
+            for b in range(a + 1):
+                offset += mixture.roots[j, a, b] * deviates[s, b + 1]
+            offset *= width
+            if mixture.periodic[chart, a] and abs(offset) > math.pi:
+                good = False
+            coordinates[a] = mixture.means[j, a] + offset
+        if good:
+            from_chart(coordinates, chart, region.columns, points[s])
+        else:
+            points[s] = math.nan
+
+
+@compiled
+def _log_terms(point, mixture, region, places, terms):
+    """Write ln(weight * density / prior) of each component and width (J, 2) at a point.
+
+    `places` (J, d) takes the coordinates of the point in each component's chart, less its mean.
+    """
+    size = point.size
+    prior = 0.0
+    for a in range(size):
+        if region.normal[a]:
+            prior -= 0.5 * point[a] * point[a]
+    for j in range(mixture.means.shape[0]):
+        chart = mixture.charts[j]
+        to_chart(point, chart, region.columns, places[j])
+        square = 0.0
+        for a in range(size):
+            places[j, a] -= mixture.means[j, a]
+            if mixture.periodic[chart, a]:
+                places[j, a] -= 2 * math.pi * np.rint(places[j, a] / (2 * math.pi))
+            value = 0.0
+            for b in range(a + 1):
+                value += mixture.inverses[j, a, b] * places[j, b]
+            square += value * value
+        for k in range(2):
+            terms[j, k] = (
+                mixture.offsets[j] - 0.5 * square / WIDTHS[k] ** 2 - size * math.log(WIDTHS[k])
+                + math.log(WIDTH_SHARES[k]) - prior
+            )  # fmt: skip
+
+
+@compiled
+def _log_total(prior_weight, terms):
+    most = math.log(prior_weight)
+    for j in range(terms.shape[0]):
+        most = max(most, terms[j, 0], terms[j, 1])
+    total = math.exp(math.log(prior_weight) - most)
+    for j in range(terms.shape[0]):
+        total += math.exp(terms[j, 0] - most) + math.exp(terms[j, 1] - most)
+    return most + math.log(total)
+
+
+@compiled
+def _log_weights(points, tables, mixture, region, out):
+    places, terms = np.empty_like(mixture.means), np.empty((mixture.means.shape[0], 2))
+    for s in range(points.shape[0]):
+        if allowed(points[s], region):
+            _log_terms(points[s], mixture, region, places, terms)
+            out[s] = log_likelihood(points[s], tables) - _log_total(mixture.prior_weight, terms)
+        else:
+            out[s] = -math.inf
+
+
+@compiled
+def _log_likelihoods(points, tables, region, out):
+    for s in range(points.shape[0]):
+        out[s] = log_likelihood(points[s], tables) if allowed(points[s], region) else -math.inf
+
+
+@compiled
+def _responsibilities(points, mixture, region, share, inverse_square, places):
+    """Each component's share (S, J) of the proposal's density, and its mean 1 / width^2."""
+    terms = np.empty((mixture.means.shape[0], 2))
+    for s in range(points.shape[0]):
+        _log_terms(points[s], mixture, region, places[s], terms)
+        total = _log_total(mixture.prior_weight, terms)
+        for j in range(mixture.means.shape[0]):
+            narrow, wide = math.exp(terms[j, 0] - total), math.exp(terms[j, 1] - total)
+            share[s, j] = narrow + wide
+            both = max(narrow + wide, 1e-300)
+            inverse_square[s, j] = (narrow / WIDTHS[0] ** 2 + wide / WIDTHS[1] ** 2) / both

@@ -1,0 +1,427 @@
+"""Least squares from many starts at once: Levenberg (1944) and Marquardt (1963), batched.
+
+The unknowns are ln P, k = e exp(i m) (see `orbit_jacobian`), the geometry, ln K of each star, and
+in units of their priors' standard deviations the zero points, drift and calibration errors. The
+geometry is the two complex Thiele-Innes constants for positions alone, so that orbits seen
+face-on are no special place; ln a, i, longitude and node with velocities, which fix the latter
+two; the longitude for velocities alone.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..elements import campbell
+from .data import Data
+from .likelihood import DERIVED
+from .orbit_jacobian import constants_of, sky, sky_by_constants, turned_motion
+from .scan import Scan, linear_solution
+
+STEPS = 60
+LARGEST_K = 0.9995
+ASSUMED_OUTLIERS = 0.1
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class Unknowns:
+    """Where the unknowns of a problem stand in a row of numbers."""
+
+    names: tuple[str, ...]
+
+    def __getitem__(self, name: str) -> int:
+        return self.names.index(name)
+
+    def __contains__(self, name: str) -> bool:
+        return name in self.names
+
+    @classmethod
+    def of(cls, data: Data) -> "Unknowns":
+        """The unknowns that the data and the model call for."""
+        names = ["log_period"]
+        if not data.model.circular:
+            names += ["k_re", "k_im"]
+        if len(data.tables.places) and len(data.tables.speeds):
+            names += ["log_axis", "inclination", "longitude", "node"]
+        elif len(data.tables.places):
+            names += ["p_re", "p_im", "n_re", "n_im"]
+        else:
+            names += ["longitude"]
+        further = ("log_k1", "log_k2", "scale_", "angle_")
+        names += [name for name in data.space.names if name.startswith(further)]
+        return cls(names=(*names, *data.design_names))
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class Fits:
+    """Converged least-squares solutions, best first."""
+
+    unknowns: Unknowns
+    values: np.ndarray
+    """(S, p)"""
+    cost: np.ndarray
+    """(S,) -2 ln likelihood, but for a constant."""
+    information: np.ndarray
+    """(S, p, p) J^T J at the solution."""
+    position_jitter: np.ndarray
+    """(rows,) extra error of each position that was allowed for, mas."""
+    velocity_jitter: np.ndarray
+    """(rows,) km/s."""
+
+
+def refine(data: Data, found: Scan, *, most: int, rng: np.random.Generator) -> Fits:
+    """Refine the lowest minima of a scan and keep the distinct ones.
+
+    Where the model has jitters, they are estimated from the residuals of the best solution and
+    the refinement is repeated with them.
+    """
+    unknowns = Unknowns.of(data)
+    starts = [
+        start
+        for node in zip(*found.starts(most), strict=True)
+        for start in _start(data, unknowns, *node, rng)
+    ]
+    values = np.array(starts)
+    jitters = (np.zeros(len(data.tables.places)), np.zeros(len(data.tables.speeds)))
+    for _ in range(3 if data.model.position_jitter or data.model.velocity_jitter else 1):
+        values, cost, information = _least_squares(data, unknowns, values, jitters)
+        keep = _distinct(values, cost, information)
+        values, cost, information = values[keep], cost[keep], information[keep]
+        used, jitters = jitters, _jitters(data, unknowns, values[0], jitters)
+    return Fits(
+        unknowns=unknowns,
+        values=values,
+        cost=cost,
+        information=information,
+        position_jitter=used[0],
+        velocity_jitter=used[1],
+    )
+
+
+def _start(data, unknowns, period, e, phase, rng) -> list[np.ndarray]:
+    """Unknowns at a node of the scan; both signs of the velocity vector where they disagree."""
+    (A, F, B, G), amplitude = linear_solution(data, period, e, phase, rng)
+    row = np.zeros(len(unknowns.names))
+    row[0] = np.log(period)
+    if "k_re" in unknowns:
+        k = max(e, 0.02) * np.exp(1j * phase)
+        row[unknowns["k_re"]], row[unknowns["k_im"]] = k.real, k.imag
+    along = complex(amplitude[0], amplitude[1]) + complex(amplitude[2], amplitude[3])
+    for name, part in (("log_k1", amplitude[:2]), ("log_k2", amplitude[2:])):
+        if name in unknowns:
+            low, high = data.priors.amplitude
+            row[unknowns[name]] = np.log(np.clip(np.hypot(*part), low, high))
+    if "p_re" in unknowns:
+        p, n = (A + G) + 1j * (B - F), (A - G) - 1j * (B + F)
+        p, n = p * np.exp(1j * phase), n * np.exp(1j * phase)
+        for name, value in (("p_re", p.real), ("p_im", p.imag), ("n_re", n.real), ("n_im", n.imag)):
+            row[unknowns[name]] = value
+    elif "log_axis" in unknowns:
+        a, inclination, node, argument = campbell(A, B, F, G)
+        if np.cos(argument - np.angle(along)) < 0:
+            node, argument = node + np.pi, argument + np.pi
+        inclination = np.clip(inclination, 0.05, np.pi - 0.05)
+        geometry = (np.log(max(a, 1e-12)), inclination, argument + phase, node)
+        for name, value in zip(
+            ("log_axis", "inclination", "longitude", "node"), geometry, strict=True
+        ):
+            row[unknowns[name]] = value
+        if abs(np.cos(argument - np.angle(along))) < 0.7:  # the sky and the velocities disagree
+            other = row.copy()
+            other[unknowns["longitude"]] = np.angle(along) + phase
+            return [row, other]
+    else:
+        row[unknowns["longitude"]] = np.angle(along) + phase
+    return [row]
+
+
+def _least_squares(data, unknowns, values, jitters):
+    """Minimise all rows of `values` together; returns them with cost and information."""
+    values = values.copy()
+    damping = np.full(len(values), 1e-2)
+    cost, residual, jacobian = evaluate(data, unknowns, values, jitters)
+    active = np.ones(len(values), dtype=bool)
+    gradient, information = _normal(residual, jacobian)
+    for _ in range(STEPS):
+        rows = np.flatnonzero(active)
+        if rows.size == 0:
+            break
+        scale = np.einsum("sii->si", information[rows])
+        scale = np.maximum(scale, 1e-12 * scale.max(axis=1, keepdims=True) + 1e-300)
+        matrix = information[rows].copy()
+        np.einsum("sii->si", matrix)[:] += damping[rows, None] * scale + 1e-14 * scale
+        step = np.linalg.solve(matrix, -gradient[rows][..., None])[..., 0]
+        trial = _confine(data, unknowns, values[rows] + step)
+        new_cost, residual, jacobian = evaluate(data, unknowns, trial, jitters)
+        better = new_cost < cost[rows]
+        gain = cost[rows] - new_cost
+        good = rows[better]
+        values[good], cost[good] = trial[better], new_cost[better]
+        gradient[good], information[good] = _normal(residual[better], jacobian[better])
+        damping[rows] = np.where(better, damping[rows] / 5, damping[rows] * 4)
+        done = (better & (gain < 1e-6)) | (damping[rows] > 1e8)
+        active[rows[done]] = False
+    return values, cost, information
+
+
+def _normal(residual, jacobian):
+    transposed = np.swapaxes(jacobian, 1, 2)
+    return (transposed @ residual[..., None])[..., 0], transposed @ jacobian
+
+
+def _confine(data, unknowns, values):
+    """Keep the period in its prior's range and the orbit an ellipse."""
+    values[:, 0] = np.clip(values[:, 0], *np.log(data.priors.period))
+    if "k_re" in unknowns:
+        i, j = unknowns["k_re"], unknowns["k_im"]
+        k = np.hypot(values[:, i], values[:, j])
+        factor = np.minimum(1.0, min(LARGEST_K, data.space.eccentricity[1]) / np.maximum(k, 1e-9))
+        values[:, i] *= factor
+        values[:, j] *= factor
+    for name in ("log_k1", "log_k2"):
+        if name in unknowns:
+            column = unknowns[name]
+            values[:, column] = np.clip(values[:, column], *np.log(data.priors.amplitude))
+    return values
+
+
+def evaluate(data, unknowns, values, jitters):
+    """Cost (S,), residuals (S, N) and Jacobian (S, N, p) of all rows of unknowns."""
+    parts = []
+    cost = np.zeros(len(values))
+    if len(data.tables.places):
+        extra, residual, jacobian = _position_residuals(data, unknowns, values, jitters[0])
+        cost += extra
+        parts.append((residual, jacobian))
+    further = []
+    if len(data.tables.speeds):
+        further.append(_velocity_residuals(data, unknowns, values, jitters[1]))
+    further.append(_prior_residuals(data, unknowns, values))
+    if data.tables.parallax[0] == DERIVED:
+        further.append(_parallax_residuals(data, unknowns, values))
+    cost += sum(np.square(residual).sum(axis=1) for residual, _ in further)
+    residuals, jacobians = zip(*parts, *further, strict=True)
+    return cost, np.concatenate(residuals, axis=1), np.concatenate(jacobians, axis=1)
+
+
+def _k(unknowns, values):
+    if "k_re" not in unknowns:
+        return np.zeros(len(values), dtype=complex)
+    return values[:, unknowns["k_re"]] + 1j * values[:, unknowns["k_im"]]
+
+
+def model_sky(data, unknowns, values, *, derivatives: bool = True):
+    """North + i East (S, n) at the times of the positions, and its derivatives (S, n, p)."""
+    time = data.tables.places[:, 0]
+    R, *by_motion = turned_motion(time, values[:, 0], _k(unknowns, values), velocity=False)
+    if "p_re" in unknowns:
+        p = values[:, unknowns["p_re"]] + 1j * values[:, unknowns["p_im"]]
+        n = values[:, unknowns["n_re"]] + 1j * values[:, unknowns["n_im"]]
+        by_geometry = sky_by_constants(R)
+        names = ("p_re", "p_im", "n_re", "n_im")
+    else:
+        names = ("log_axis", "inclination", "longitude", "node")
+        p, n, dp, dn = constants_of(*(values[:, unknowns[name]] for name in names))
+        by_geometry = [sky(R, one, two) for one, two in zip(dp, dn, strict=True)]
+    place = sky(R, p, n)
+    jacobian = np.zeros((*place.shape, values.shape[1]), dtype=complex)
+    jacobian[..., 0] = sky(by_motion[0], p, n)
+    if "k_re" in unknowns:
+        jacobian[..., unknowns["k_re"]] = sky(by_motion[1], p, n)
+        jacobian[..., unknowns["k_im"]] = sky(by_motion[2], p, n)
+    for name, column in zip(names, by_geometry, strict=True):
+        jacobian[..., unknowns[name]] = column
+    return _calibrate(data, unknowns, values, place, jacobian)
+
+
+def _calibrate(data, unknowns, values, place, jacobian):
+    """Apply each instrument's errors of scale and orientation."""
+    for axis in range(data.space.dimensions):
+        name = data.space.names[axis]
+        if not name.startswith(("scale_", "angle_")):
+            continue
+        rows = (data.tables.place_labels[:, 2] == axis) | (data.tables.place_labels[:, 3] == axis)
+        value = values[:, unknowns[name], None]
+        if name.startswith("scale_"):
+            sigma = data.tables.calibration[0]
+            factor, slope = 1 + sigma * value, sigma / (1 + sigma * value)
+        else:
+            sigma = data.tables.calibration[1]
+            factor, slope = np.exp(1j * sigma * value), 1j * sigma
+        place[:, rows] *= factor
+        jacobian[:, rows] *= factor[..., None]
+        jacobian[:, rows, unknowns[name]] = place[:, rows] * slope
+    return place, jacobian
+
+
+def _position_residuals(data, unknowns, values, jitter):
+    """Cost of the positions, and whitened residuals (S, 2n): only chosen rows count."""
+    place, jacobian = model_sky(data, unknowns, values)
+    places = data.tables.places
+    cxx, cxy, cyy = places[:, 3] + jitter**2, places[:, 4], places[:, 5] + jitter**2
+    # C^-1 = L L^T with L lower triangular; L^T takes (x, y) to two numbers of unit variance.
+    determinant = cxx * cyy - cxy**2
+    l11 = np.sqrt(cyy / determinant)
+    l21 = -cxy / np.sqrt(cyy * determinant)
+    l22 = 1 / np.sqrt(cyy)
+
+    def whiten(x, y):
+        return l11 * x + l21 * y, l22 * y
+
+    first, second = whiten(place.imag - places[:, 1], place.real - places[:, 2])
+    square = first**2 + second**2 + np.log(determinant) - 2 * places[:, 6]
+    cost, weight = _choose(data, square, determinant)
+    root = np.sqrt(weight)
+    jx, jy = np.moveaxis(jacobian.imag, 2, 0), np.moveaxis(jacobian.real, 2, 0)
+    one, two = whiten(jx, jy)
+    return (
+        cost,
+        np.concatenate([root * first, root * second], axis=1),
+        np.concatenate([np.moveaxis(root * one, 0, 2), np.moveaxis(root * two, 0, 2)], axis=1),
+    )
+
+
+def _choose(data, square, determinant):
+    """Cost (S,) and weight of each row (S, n): the best alternative, less the outliers."""
+    nights = data.tables.place_labels[:, 0]
+    starts = np.flatnonzero(np.diff(nights, prepend=-1))
+    least = np.minimum.reduceat(square, starts, axis=1)
+    chosen = square == least[:, nights]
+    if not data.model.outliers:
+        return least.sum(axis=1), chosen.astype(float)
+    share = min(ASSUMED_OUTLIERS, data.priors.outlier_fraction / 2)
+    wide = data.tables.places[:, 1:3] ** 2
+    wide = wide.sum(axis=1) / data.tables.field_variance + 2 * np.log(data.tables.field_variance)
+    wide = np.minimum.reduceat(wide, starts)
+    inside = np.log1p(-share) - least / 2
+    outside = np.log(share) - wide / 2
+    cost = -2 * np.logaddexp(inside, outside).sum(axis=1)
+    weight = 1 / (1 + np.exp(np.clip(outside - inside, -700, 700)))
+    return cost, chosen * weight[:, nights]
+
+
+def model_velocity(data, unknowns, values):
+    """Velocities (S, m) and their derivatives (S, m, p)."""
+    speeds = data.tables.speeds
+    S, *by_motion = turned_motion(speeds[:, 0], values[:, 0], _k(unknowns, values), velocity=True)
+    turn = np.exp(1j * values[:, unknowns["longitude"]])[:, None]
+    shape = (turn * S).real
+    k1, k2 = (
+        np.exp(values[:, unknowns[name], None]) * share if name in unknowns else 0.0
+        for name, share in (("log_k1", speeds[:, 3]), ("log_k2", speeds[:, 4]))
+    )
+    amplitude = k1 + k2
+    jacobian = np.zeros((*shape.shape, values.shape[1]))
+    jacobian[..., 0] = amplitude * (turn * by_motion[0]).real
+    if "k_re" in unknowns:
+        jacobian[..., unknowns["k_re"]] = amplitude * (turn * by_motion[1]).real
+        jacobian[..., unknowns["k_im"]] = amplitude * (turn * by_motion[2]).real
+    jacobian[..., unknowns["longitude"]] = amplitude * (1j * turn * S).real
+    for name, part in (("log_k1", k1), ("log_k2", k2)):
+        if name in unknowns:
+            jacobian[..., unknowns[name]] = part * shape
+    zero = [unknowns[name] for name in data.design_names]
+    jacobian[..., zero] = data.tables.design
+    return amplitude * shape + values[:, zero] @ data.tables.design.T, jacobian
+
+
+def _velocity_residuals(data, unknowns, values, jitter):
+    velocity, jacobian = model_velocity(data, unknowns, values)
+    error = np.sqrt(data.tables.speeds[:, 2] + jitter**2)
+    return (velocity - data.tables.speeds[:, 1]) / error, jacobian / error[:, None]
+
+
+def _prior_residuals(data, unknowns, values):
+    """The normal priors of zero points and calibration errors, as if measured to be 0 +- 1."""
+    names = [n for n in unknowns.names if n.startswith(("scale_", "angle_"))]
+    columns = [unknowns[name] for name in (*names, *data.design_names)]
+    jacobian = np.zeros((len(values), len(columns), values.shape[1]))
+    jacobian[:, np.arange(len(columns)), columns] = 1.0
+    return values[:, columns], jacobian
+
+
+def orbital_parallax(data, unknowns, values):
+    """The parallax (S,) that both velocity curves and the sky imply, and d ln of it (S, p)."""
+    from ..masses import orbital_parallax as parallax_of
+
+    k = _k(unknowns, values)
+    e = np.abs(k)
+    inclination = values[:, unknowns["inclination"]]
+    parts = [
+        np.exp(values[:, unknowns[name]]) if name in unknowns else np.zeros(len(values))
+        for name in ("log_k1", "log_k2")
+    ]
+    total = parts[0] + parts[1]
+    axis = np.exp(values[:, unknowns["log_axis"]])
+    folded = np.arccos(np.cos(inclination))
+    found = parallax_of(np.exp(values[:, 0]), e, folded, 0.0, total, axis)
+    slope = np.zeros(values.shape)
+    slope[:, 0] = -1.0
+    slope[:, unknowns["log_axis"]] = 1.0
+    slope[:, unknowns["inclination"]] = np.cos(inclination) / np.sin(inclination)
+    for name, part in zip(("log_k1", "log_k2"), parts, strict=True):
+        if name in unknowns:
+            slope[:, unknowns[name]] = -part / total
+    if "k_re" in unknowns:
+        slope[:, unknowns["k_re"]] = k.real / ((1 - e) * (1 + e))
+        slope[:, unknowns["k_im"]] = k.imag / ((1 - e) * (1 + e))
+    return found, slope
+
+
+def _parallax_residuals(data, unknowns, values):
+    found, slope = orbital_parallax(data, unknowns, values)
+    error = data.parallax.error
+    return (
+        ((found - data.parallax.value) / error)[:, None],
+        (slope * (found / error)[:, None])[:, None, :],
+    )
+
+
+def _distinct(values, cost, information) -> np.ndarray:
+    """Indices of solutions, best first, that lie apart by more than half their own errors."""
+    kept: list[int] = []
+    for i in np.argsort(cost):
+        if not np.isfinite(cost[i]):
+            continue
+        difference = values[kept] - values[i]
+        distance = np.einsum("si,ij,sj->s", difference, information[i], difference)
+        if not kept or distance.min() > 0.25:
+            kept.append(int(i))
+    return np.array(kept, dtype=int)
+
+
+def _jitters(data, unknowns, best, used):
+    """Extra errors by instrument that bring the residuals of the best solution to their size."""
+    values = best[None, :]
+    position, velocity = (np.zeros_like(part) for part in used)
+    if data.model.position_jitter and len(data.tables.places):
+        place, _ = model_sky(data, unknowns, values)
+        difference = np.column_stack(
+            [place[0].imag - data.tables.places[:, 1], place[0].real - data.tables.places[:, 2]]
+        )
+        _, weight = _chosen_rows(data, unknowns, values, used[0])
+        errors = (data.tables.places[:, 3] + data.tables.places[:, 5]) / 2
+        square = (difference**2).mean(axis=1)
+        position = _by_instrument(data.tables.place_labels[:, 1], square, errors, weight)
+    if data.model.velocity_jitter and len(data.tables.speeds):
+        model, _ = model_velocity(data, unknowns, values)
+        square = (model[0] - data.tables.speeds[:, 1]) ** 2
+        velocity = _by_instrument(
+            data.tables.speed_labels, square, data.tables.speeds[:, 2], np.ones(len(square))
+        )
+    return position, velocity
+
+
+def _chosen_rows(data, unknowns, values, jitter):
+    cost, residual, _ = _position_residuals(data, unknowns, values, jitter)
+    return cost, (residual[0, : len(data.tables.places)] != 0).astype(float)
+
+
+def _by_instrument(labels, square, errors, weight):
+    """sqrt of the mean excess of squared residuals over squared errors, for each label."""
+    jitter = np.zeros(len(labels))
+    for label in np.unique(labels):
+        rows = labels == label
+        excess = np.average(square[rows] - errors[rows], weights=weight[rows] + 1e-12)
+        floor = 0.01 * errors[rows].mean()
+        jitter[rows] = np.sqrt(max(excess, floor))
+    return jitter
