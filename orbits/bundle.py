@@ -5,18 +5,20 @@ tables of events are functions of it. Plain numbers: d, MJD TDB, mas, deg, km/s.
 """
 
 from collections.abc import Mapping
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, fields, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Self
 
 import numpy as np
 
+from .constants import JULIAN_YEAR
 from .elements import Elements, thiele_innes
 from .errors import InputError
 from .kepler import eccentric_anomaly, mean_anomaly, true_anomaly
 from .rows import Rows
 
 if TYPE_CHECKING:
+    from .fitting.solution import Solution
     from .positions import Positions
     from .velocities import Velocities
 
@@ -116,11 +118,38 @@ class Bundle:
     positions: "Positions | None" = None
     velocities: "Velocities | None" = None
 
+    @property
+    def on_the_sky(self) -> bool:
+        """Whether size and inclination are known; velocities alone do not give them."""
+        best = self.best
+        return bool(np.isfinite(best.semimajor_axis[0] + best.inclination[0] + best.node[0]))
+
     @classmethod
     def of_elements(cls, name: str, elements: Elements, **more: object) -> Self:
         """A bundle of one orbit with nothing known of its errors."""
         best = orbits_of_elements(elements)
         return cls(name=name, best=best, draws=best.select(np.zeros(1, dtype=bool)), **more)
+
+    @classmethod
+    def of_solution(cls, solution: "Solution") -> Self:
+        """The bundle of a fit: its best sample, its posterior, and the data that were fitted.
+
+        Velocities come without the zero points of their instruments and without the drift, so that
+        they can be held against the orbit alone. Elements that the data cannot give are NaN.
+        """
+        best = {name: np.array([value]) for name, value in solution.best.items()}
+        velocities = solution.velocities
+        if velocities is not None:
+            velocities = replace(velocities, velocity=velocities.velocity - _shifts(solution))
+        return cls(
+            name=solution.name,
+            best=orbits_of_samples(best),
+            draws=orbits_of_samples(solution.samples),
+            spread="posterior",
+            ascending=velocities is not None and solution.positions is not None,
+            positions=solution.positions,
+            velocities=velocities,
+        )
 
     def thin(self, n: int) -> Orbits:
         """At most `n` of the draws, evenly picked."""
@@ -142,6 +171,17 @@ def orbits_of_elements(elements: Elements) -> Orbits:
             "argument": [elements.argument.to_value("deg")],
         }
     )
+
+
+def _shifts(solution: "Solution") -> np.ndarray:
+    """What instruments and a drift add to each velocity in the best sample, km/s."""
+    velocities, best = solution.velocities, solution.best
+    shifts = np.array([best.get(f"zero_point_{name}_kms", 0.0) for name in velocities.instrument])
+    times = [data.mjd for data in (solution.positions, velocities) if data is not None]
+    middle = (min(t.min() for t in times) + max(t.max() for t in times)) / 2
+    drift = best.get("drift_kms_per_year", 0.0) / JULIAN_YEAR
+    # The difference of both stars' velocities knows neither.
+    return np.where(velocities.star == 2, 0.0, shifts + drift * (velocities.mjd - middle))
 
 
 SAMPLE_COLUMNS = {

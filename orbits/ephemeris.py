@@ -74,10 +74,13 @@ def events(bundle: Bundle, start: float, end: float) -> list[Event]:
 
     Periastron, the passages of the nodes and of the line of sight (conjunctions), and the extremes
     of the separation on the sky. Which node and which conjunction it is, is said only where the
-    node is known to be the ascending one. A circular orbit has no periastron.
+    node is known to be the ascending one. A circular orbit has no periastron. Nothing is found
+    for an orbit known from velocities alone.
     """
     best = bundle.best
-    found = []
+    found: list[Event] = []
+    if not bundle.on_the_sky:
+        return found
     for kind, anomaly in _happenings(best, ascending=bundle.ascending):
         period, moment = best.period[0], _moment(best, anomaly, 0.0)[0]
         first = np.ceil((start - moment) / period)

@@ -136,8 +136,17 @@ class Entry:
         """The entry of a `Solution` of a fit: its best orbit, and half of the 68% intervals.
 
         The best orbit is one that fits; the medians of correlated elements together need not.
+
+        Raises
+        ------
+        InputError
+            If positions had no part in the fit.
         """
-        orbit = Bundle.of_elements(fitted.name, fitted.elements).best
+        if fitted.positions is None:
+            raise InputError(
+                f"{fitted.name}: without positions there is no orbit on the sky to keep"
+            )
+        orbit = Bundle.of_solution(fitted).best
         numbers = {name: float(getattr(orbit, name)[0]) for name in Orbits.names()}
         for name in WITH_ERRORS:
             if full_name(name) in fitted.summary:

@@ -95,11 +95,12 @@ def _bundles(names, catalogue, positions, rng) -> "tuple[list[Bundle], Path]":
     bundles, folder = [], Path()
     for name in names:
         if name.endswith(".toml"):
+            from ..bundle import Bundle
             from ..fitting.solution import Solution
             from ..system import read_system
 
             results = read_system(Path(name)).results
-            bundles.append(Solution.read(results).bundle())
+            bundles.append(Bundle.of_solution(Solution.read(results)))
             folder = results if len(names) == 1 else folder
         else:
             from ..catalogue import find_entry
@@ -121,7 +122,7 @@ def _possible(bundles: "list[Bundle]", names: list[str]) -> list[Kind]:
     if len(bundles) > 1 or not names[0].endswith(".toml"):
         return [Kind.sky]
     first = bundles[0]
-    kinds = [Kind.sky, Kind.motion]
+    kinds = [Kind.sky, Kind.motion] if first.on_the_sky else []
     if first.positions is not None:
         kinds.append(Kind.residuals)
     if np.isfinite([first.best.k1[0], first.best.k2[0]]).any():
@@ -139,6 +140,8 @@ def _pictures(bundles, kinds, columns, marks, stretch) -> "dict[str, Callable[[]
     first = bundles[0]
     if len(bundles) > 1 and kinds != [Kind.sky]:
         raise InputError("several orbits can be compared on the sky only: --kind sky")
+    if set(kinds) - {Kind.velocity} and not all(bundle.on_the_sky for bundle in bundles):
+        raise InputError(f"{first.name}: without positions only --kind velocity can be drawn")
     if Kind.velocity in kinds and not (first.best.k1[0] > 0 or first.best.k2[0] > 0):
         raise InputError(f"{first.name}: no velocity amplitude is known, so no curve can be drawn")
     if Kind.residuals in kinds and first.positions is None:

@@ -105,10 +105,12 @@ def _of_one(name, catalogue, mjd, equinox, rng) -> "tuple[Bundle, Ephemeris]":
     if name.endswith(".toml"):
         if equinox != "2000":
             raise InputError(f"{name}: a system file has no place on the sky; use --equinox 2000")
+        from ..bundle import Bundle
         from ..fitting.solution import Solution
         from ..system import read_system
 
-        bundle, turn = Solution.read(read_system(Path(name)).results).bundle(), 0.0
+        results = read_system(Path(name)).results
+        bundle, turn = Bundle.of_solution(Solution.read(results)), 0.0
     else:
         from ..catalogue import find_entry
 
@@ -166,6 +168,8 @@ def _cell(table: "Ephemeris", name: str, row: int) -> str:
     from ..rounding import plain
 
     value, error = getattr(table, name)[row], getattr(table, f"{name}_error")[row]
+    if value != value:
+        return "unknown"
     return plain(value, error) if error > 0 else f"{value:.6g}"
 
 

@@ -54,8 +54,16 @@ def draw_sky(
         Width of the picture in columns of a journal.
     marks : sequence of Mark
         Dates at which the place of the companion (of the first solution) is marked.
+
+    Raises
+    ------
+    ValueError
+        If the elements of a bundle do not make an orbit on the sky, as without positions.
     """
     bundles = [bundles] if isinstance(bundles, Bundle) else list(bundles)
+    for bundle in bundles:
+        if not bundle.on_the_sky:
+            raise ValueError(f"{bundle.name}: its size or inclination is not known")
     detail = _detail(bundles)
     handles = _key(bundles, bool(marks))
     per_row = 2 * columns

@@ -13,7 +13,12 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-_STARS = (("primary", style.PRIMARY, "o"), ("companion", style.COMPANION, "s"))
+_STARS = (
+    ("primary", style.PRIMARY, "o"),
+    ("companion", style.COMPANION, "s"),
+    ("companion − primary", style.MARK, "^"),
+)
+_DIFFERENCE = 2
 _BAND = (15.865, 84.135)
 """Percentiles of the one-sigma band."""
 _MOST_DRAWS = 300
@@ -33,6 +38,8 @@ def draw_velocities(bundle: Bundle, *, columns: int = 1) -> "Figure":
     if not stars:
         raise ValueError(f"{bundle.name}: no velocity amplitude is known")
     measured = bundle.velocities
+    if measured is not None and (measured.star == _DIFFERENCE).any():
+        stars.append(_DIFFERENCE)
     drawing = style.figure(columns, height_mm=76 if measured is not None else 58)
     if measured is None:
         curve = drawing.add_subplot()
@@ -65,51 +72,38 @@ def _velocity_curves(axes: "Axes", bundle: Bundle, stars: list[int]) -> None:
         axes.plot(phase, _at_phase(bundle.best, phase)[star][0], color=colour, lw=1.1)
 
 
-def _at_phase(orbits: Orbits, phase: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Velocities at the same phase of each orbit; an unknown gamma counts as 0."""
+def _curves(orbits: Orbits, mjd: np.ndarray) -> np.ndarray:
+    """(3, n, m) velocities of primary and companion, and their difference."""
+    primary, companion = orbits.velocities(mjd)
+    return np.stack([primary, companion, companion - primary])
+
+
+def _at_phase(orbits: Orbits, phase: np.ndarray) -> np.ndarray:
+    """The curves at the same phase of each orbit; an unknown gamma counts as 0."""
     mjd = orbits.periastron[:, None] + orbits.period[:, None] * phase
-    return replace(orbits, gamma=np.nan_to_num(orbits.gamma)).velocities(mjd)
+    return _curves(replace(orbits, gamma=np.nan_to_num(orbits.gamma)), mjd)
 
 
 def _measured_velocities(axes: "Axes", best: Orbits, measured: Velocities) -> None:
-    phase = best.phase(measured.mjd)[0]
-    for star, (_, colour, marker) in enumerate(_STARS):
-        of_star = measured.star == star
-        _points(
-            axes,
-            phase[of_star],
-            measured.velocity[of_star],
-            measured.error[of_star],
-            colour,
-            marker,
-        )
+    _points(axes, best.phase(measured.mjd)[0], measured.velocity, measured)
 
 
 def _velocity_residuals(axes: "Axes", best: Orbits, measured: Velocities) -> None:
-    phase = best.phase(measured.mjd)[0]
-    model = np.stack([v[0] for v in best.velocities(measured.mjd)])
+    model = _curves(best, measured.mjd)[:, 0]
     rest = measured.velocity - model[measured.star, np.arange(len(measured))]
     axes.grid(True)
     axes.axhline(0, color=style.QUIET, lw=0.6)
-    for star, (_, colour, marker) in enumerate(_STARS):
-        of_star = measured.star == star
-        _points(axes, phase[of_star], rest[of_star], measured.error[of_star], colour, marker)
+    _points(axes, best.phase(measured.mjd)[0], rest, measured)
     axes.set_ylabel("O − C (km/s)")
 
 
-def _points(axes: "Axes", x, y, error, colour: str, marker: str) -> None:
-    axes.errorbar(
-        x,
-        y,
-        yerr=error,
-        ls="",
-        marker=marker,
-        ms=3.2,
-        color=colour,
-        mec="white",
-        mew=0.4,
-        elinewidth=0.7,
-    )
+def _points(axes: "Axes", phase: np.ndarray, values: np.ndarray, measured: Velocities) -> None:
+    """Points with error bars, in the colour and shape of their star."""
+    look = {"ls": "", "ms": 3.2, "mec": "white", "mew": 0.4, "elinewidth": 0.7}
+    for star, (_, colour, marker) in enumerate(_STARS):
+        mine = measured.star == star
+        bars = measured.error[mine]
+        axes.errorbar(phase[mine], values[mine], bars, color=colour, marker=marker, **look)
 
 
 def _velocity_key(bundle: Bundle, stars: list[int]) -> list:

@@ -1,0 +1,285 @@
+"""Drawings of orbits: what can be checked without eyes. Nothing overlaps and nothing is cut."""
+
+from dataclasses import replace
+from itertools import combinations
+
+import numpy as np
+import pytest
+from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.text import Annotation, Text
+from numpy.testing import assert_allclose
+from plots import six
+
+from orbits.bundle import Orbits
+from orbits.errors import InputError
+from orbits.plots import style
+from orbits.plots.motion import draw_motion, draw_residuals
+from orbits.plots.plane import draw_plane
+from orbits.plots.sheet import PAGE, draw_sheet
+from orbits.plots.sky import Mark, draw_sky
+from orbits.plots.velocity import draw_velocities
+from orbits.velocities import Velocities
+
+
+def rendered(figure):
+    canvas = FigureCanvasAgg(figure)
+    canvas.draw()
+    return canvas.get_renderer()
+
+
+def words(figure):
+    """Each text that is seen, with its box in pixels."""
+    renderer = rendered(figure)
+    idle = {id(text) for axes in figure.axes for text in _idle_labels(axes)}
+    return [
+        # The box of an annotation contains its arrow; the words are what must be legible.
+        (text.get_text(), Text.get_window_extent(text, renderer))
+        for text in figure.findobj(Text)
+        if text.get_text().strip() and text.get_visible() and id(text) not in idle
+    ]
+
+
+def _idle_labels(axes):
+    """Labels of ticks that are kept in store, or lie beyond the ends of their axis: not drawn."""
+    for axis, limits in ((axes.xaxis, axes.get_xlim()), (axes.yaxis, axes.get_ylim())):
+        low, high = sorted(limits)
+        margin = 1e-9 * (high - low)
+        shown = {
+            id(label)
+            for tick in axis.get_major_ticks()
+            if low - margin <= tick.get_loc() <= high + margin
+            for label in (tick.label1, tick.label2)
+        }
+        shown |= {id(axis.label), id(axis.get_offset_text())}
+        yield from (text for text in axis.findobj(Text) if id(text) not in shown)
+
+
+def assert_legible(figure):
+    """Every text is inside the figure, none lies on another, none is below 5.5 points."""
+    found = words(figure)
+    width, height = figure.bbox.width, figure.bbox.height
+    for text, box in found:
+        assert box.x0 >= -0.5 and box.y0 >= -0.5, f"{text!r} is cut"  # half a pixel of rounding
+        assert box.x1 <= width + 0.5 and box.y1 <= height + 0.5, f"{text!r} is cut"
+    for (one, first), (two, second) in combinations(found, 2):
+        assert not first.overlaps(second), f"{one!r} lies on {two!r}"
+    assert min(text.get_fontsize() for text in figure.findobj(Text) if text.get_text()) >= 5.5
+
+
+@pytest.mark.parametrize("columns", [1, 2])
+@pytest.mark.parametrize("name", six.NAMES)
+def test_the_sky_is_legible(name, columns):
+    figure = draw_sky(six.orbit(name), columns=columns)
+    assert_legible(figure)
+    assert_allclose(figure.get_figwidth() * 25.4, {1: 84, 2: 174}[columns])
+
+
+@pytest.mark.parametrize("name", six.NAMES)
+def test_compass_and_scale_bar_lie_on_nothing(name):
+    bundle = six.orbit(name)
+    figure = draw_sky(bundle)
+    places = dict(words(figure))
+    axes = figure.axes[0]
+    (scale,) = (line.get_xydata() for line in axes.lines if line.get_linewidth() == 1.2)
+    curve = axes.transData.transform(scale)
+    bar = next(text for text in places if text.endswith((" mas", " arcsec")))
+    for label in ("N", "E", bar):
+        box = places[label]
+        assert not any(box.contains(*point) for point in curve), f"{label} lies on the orbit"
+
+
+@pytest.mark.parametrize("name", six.NAMES)
+def test_north_is_up_east_is_left_and_the_scale_is_one(name):
+    figure = draw_sky(six.orbit(name))
+    rendered(figure)
+    axes = figure.axes[0]
+    origin, east, north = axes.transData.transform([(0, 0), (1, 0), (0, 1)])
+    assert east[0] < origin[0] and north[1] > origin[1]
+    assert_allclose(origin[0] - east[0], north[1] - origin[1], rtol=1e-6)
+    for x, y in (axes.get_xlim(), axes.get_ylim()):
+        assert min(x, y) < 0 < max(x, y)  # the primary is inside
+
+
+@pytest.mark.parametrize("name", six.NAMES)
+def test_arrows_follow_the_motion(name):
+    """A moment after the place nearest to an arrow's tail, the companion is nearer to its head."""
+    bundle = six.orbit(name)
+    figure = draw_sky(bundle)
+    (_, scale) = ("arcsec", 1e-3) if name == "eccentric" else ("mas", 1.0)
+    arrows = [
+        note
+        for note in figure.axes[0].findobj(Annotation)
+        if note.arrow_patch is not None and note.xycoords == "data"
+    ]
+    assert len(arrows) == 2
+    mjd = bundle.best.periastron[0] + bundle.best.period[0] * np.linspace(0, 1, 4001)
+    x, y = (v[0] * scale for v in bundle.best.offsets(mjd))
+    speed = np.stack([np.gradient(x), np.gradient(y)], axis=-1)
+    for arrow in arrows:
+        tail, head = np.array(arrow.xyann), np.array(arrow.xy)
+        middle = (tail + head) / 2
+        distance = np.hypot(x - middle[0], y - middle[1])
+        # Edge-on the companion passes twice, going opposite ways: the arrow lies to that side of
+        # the line that the near half takes; at least one passage goes its way.
+        near = distance < distance.min() * 1.05 + 1e-9
+        assert (speed[near] @ (head - tail) > 0).any()
+    one, two = (np.array(arrow.xy) - arrow.xyann for arrow in arrows)
+    if name != "eccentric":
+        assert one @ two < 0  # on opposite sides of the orbit
+
+
+@pytest.mark.parametrize("name", six.NAMES)
+def test_the_periastron_is_marked_where_the_true_distance_is_least(name):
+    bundle = six.orbit(name)
+    scale = 1e-3 if name == "eccentric" else 1.0
+    axes = draw_sky(bundle).axes[0]
+    (mark,) = (line.get_xydata()[0] for line in axes.lines if line.get_marker() == "D")
+    x, y = bundle.best.offsets(np.array([bundle.best.periastron[0]]))
+    assert_allclose(mark, [x[0, 0] * scale, y[0, 0] * scale], atol=1e-9)
+    (node,) = (line.get_xydata()[0] for line in axes.lines if line.get_marker() == "^")
+    assert_allclose(np.degrees(np.arctan2(*node)) % 360, 63.0, atol=1e-9)
+
+
+def test_ellipses_have_the_directions_and_sizes_of_the_covariances():
+    from matplotlib.collections import EllipseCollection
+
+    bundle = six.orbit("face-on")
+    figure = draw_sky(bundle)
+    rendered(figure)
+    (collection,) = figure.axes[0].findobj(EllipseCollection)
+    # In data coordinates x is the East offset, so the covariance itself must come out.
+    width, height = collection._widths, collection._heights  # half-axes, as matplotlib keeps them
+    angle = collection._angles
+    for n, expected in enumerate(bundle.positions.covariance):
+        along = np.array([np.cos(angle[n]), np.sin(angle[n])])
+        across = np.array([-along[1], along[0]])
+        made = width[n] ** 2 * np.outer(along, along) + height[n] ** 2 * np.outer(across, across)
+        assert_allclose(made, expected, rtol=1e-9, atol=1e-12)
+
+
+def test_marks_and_comparisons_are_legible():
+    one = six.orbit("face-on")
+    marks = [Mark(mjd=60020.0, label="2023-03-17"), Mark(mjd=60070.0, label="2023-05-06")]
+    assert_legible(draw_sky(one, marks=marks))
+    names = ("Harrow 7/first", "Harrow 7/second")
+    pair = [replace(one, name=names[0]), replace(six.orbit("period to 20%"), name=names[1])]
+    figure = draw_sky(pair)
+    assert_legible(figure)
+    seen = [text for text, _ in words(figure)]
+    assert figure.axes[0].get_title(loc="left") == "Harrow 7"
+    assert set(names) <= set(seen)
+
+
+def test_an_orbit_known_from_velocities_only_has_no_place_on_the_sky():
+    bundle = six.orbit("face-on")
+    flat = replace(bundle, best=replace(bundle.best, inclination=np.array([np.nan])))
+    with pytest.raises(ValueError, match="its size or inclination is not known"):
+        draw_sky(flat)
+
+
+@pytest.fixture
+def spectroscopic(rng):
+    bundle = six.orbit("period to 20%")
+    speeds = {"k1": np.array([23.5]), "k2": np.array([29.06]), "gamma": np.array([-14.2])}
+    best = replace(bundle.best, **speeds)
+    mjd, star = 60000 + rng.uniform(0, 300, 24), np.arange(24) % 2
+    exact = np.stack(best.velocities(mjd))[:, 0][star, np.arange(24)]
+    texts = np.full(24, "", dtype=object)
+    measured = Velocities(
+        mjd=mjd,
+        velocity=exact + rng.normal(0, 0.5, 24),
+        error=np.full(24, 0.5),
+        star=star,
+        instrument=texts,
+        source=texts,
+    )
+    values = {name: getattr(best, name)[0] for name in Orbits.names()}
+    from orbits.bundle import draw_orbits
+
+    draws = draw_orbits(values, {"k1": 0.3, "argument": 2.0}, 100, rng)
+    return replace(bundle, best=best, draws=draws, velocities=measured)
+
+
+@pytest.mark.parametrize("columns", [1, 2])
+def test_the_other_drawings_are_legible(spectroscopic, columns):
+    for draw in (draw_velocities, draw_motion, draw_residuals, draw_plane):
+        assert_legible(draw(spectroscopic, columns=columns))
+    assert_legible(draw_velocities(replace(spectroscopic, velocities=None), columns=columns))
+
+
+@pytest.mark.parametrize("name", six.NAMES)
+def test_motion_and_plane_of_all_six_are_legible(name):
+    assert_legible(draw_motion(six.orbit(name)))
+    assert_legible(draw_plane(six.orbit(name)))
+    assert_legible(draw_residuals(six.orbit(name)))
+
+
+def test_motion_over_many_turns_is_legible(spectroscopic):
+    assert_legible(draw_motion(spectroscopic, start=60000.0, end=61000.0))
+    with pytest.raises(ValueError, match="end must come after the start"):
+        draw_motion(spectroscopic, start=60000.0, end=59000.0)
+
+
+def test_residuals_are_what_was_measured_less_the_orbit(spectroscopic):
+    figure = draw_residuals(spectroscopic)
+    mjd, xy = spectroscopic.positions.mjd, spectroscopic.positions.xy
+    expected = xy - np.stack(spectroscopic.best.offsets(mjd), axis=-1)[0]
+    for axes, column in zip(figure.axes, (0, 1), strict=True):
+        points = max((line.get_ydata() for line in axes.lines), key=len)
+        assert_allclose(points, expected[:, column], atol=1e-12)
+
+
+def test_what_cannot_be_drawn_is_refused(spectroscopic):
+    with pytest.raises(ValueError, match="no positions to take residuals"):
+        draw_residuals(replace(spectroscopic, positions=None))
+    with pytest.raises(ValueError, match="no velocity amplitude"):
+        draw_velocities(six.orbit("face-on"))
+    with pytest.raises(ValueError, match="columns must be 1 or 2"):
+        draw_sky(six.orbit("face-on"), columns=3)
+
+
+def test_contact_sheets_are_legible():
+    figure = draw_sheet([six.orbit(name) for name in six.NAMES])
+    assert_legible(figure)
+    with pytest.raises(ValueError, match=f"1 to {PAGE} orbits"):
+        draw_sheet([])
+
+
+@pytest.mark.parametrize("form", style.FORMATS)
+def test_the_same_picture_is_the_same_file(form, tmp_path):
+    for name in ("one", "two"):
+        style.save(draw_sky(six.orbit("edge-on")), tmp_path / f"{name}.{form}")
+    assert (tmp_path / f"one.{form}").read_bytes() == (tmp_path / f"two.{form}").read_bytes()
+    with pytest.raises(InputError, match="exists already"):
+        style.save(draw_sky(six.orbit("edge-on")), tmp_path / f"one.{form}")
+
+
+def test_unknown_formats_and_settings_of_the_caller(tmp_path):
+    import matplotlib
+
+    before = dict(matplotlib.rcParams)
+    figure = draw_sky(six.orbit("edge-on"))
+    with pytest.raises(ValueError, match=r"ends in .png, .pdf or .svg"):
+        style.save(figure, tmp_path / "orbit.jpg")
+    assert dict(matplotlib.rcParams) == before
+
+
+def lightness(colour: str) -> float:
+    """CIE L* of an sRGB colour (IEC 61966-2-1)."""
+    levels = [int(colour[n : n + 2], 16) / 255 for n in (1, 3, 5)]
+    linear = [v / 12.92 if v <= 0.04045 else ((v + 0.055) / 1.055) ** 2.4 for v in levels]
+    luminance = np.dot([0.2126, 0.7152, 0.0722], linear)
+    return 116 * np.cbrt(luminance) - 16
+
+
+def test_colours_differ_in_grey():
+    """Things drawn over each other differ by 15 or more in lightness, of 100."""
+    for one, two in (
+        (style.PRIMARY, style.COMPANION),
+        (style.CURVE, style.CLOUD),
+        (style.CURVE, style.DATUM),
+        (style.SERIES[0][0], style.SERIES[1][0]),
+        (style.SERIES[1][0], style.SERIES[3][0]),
+    ):
+        assert abs(lightness(one) - lightness(two)) >= 15
+    assert len({str(dashes) for _, dashes in style.SERIES}) == len(style.SERIES)
