@@ -10,7 +10,7 @@ from .companion.search import FALSE_ALARM, search
 from .errors import InputError, NothingFound
 from .observation import Observation
 from .oifits import read_epochs
-from .oifits.epochs import night_label
+from .oifits.utc import night_label
 from .positions import Positions
 from .progress import SILENT, Silent
 from .system import System

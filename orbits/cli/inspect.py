@@ -15,7 +15,7 @@ def inspect(
     target: Annotated[str | None, typer.Option(help="Only this target.")] = None,
     instrument: Annotated[str | None, typer.Option(help="Only this INSNAME.")] = None,
     dates: Annotated[
-        tuple[str, str] | None, typer.Option(help="Only from one date to another, UTC.")
+        tuple[str, str] | None, typer.Option(help="Only from one date to another.")
     ] = None,
     wavelengths: Annotated[Between | None, typer.Option(help="Only between these, um.")] = None,
     baselines: Annotated[Between | None, typer.Option(help="Only between these, m.")] = None,
@@ -92,16 +92,12 @@ def _selection(instrument, dates, wavelengths, baselines, stations):
     import astropy.units as u
     from astropy.time import Time
 
-    from ..errors import InputError
+    from ..dates import read_date
     from ..oifits.selecting import Selection
 
-    try:
-        times = None if dates is None else tuple(Time(date, scale="utc") for date in dates)
-    except ValueError:
-        raise InputError(f"{' '.join(dates)}: dates are written like 2026-03-14T22:30") from None
     return Selection(
         instrument=instrument,
-        dates=times,
+        dates=dates and tuple(Time(read_date(date), format="mjd", scale="tdb") for date in dates),
         wavelengths=None if wavelengths is None else wavelengths * u.um,
         baselines=None if baselines is None else baselines * u.m,
         stations=stations,

@@ -1,16 +1,13 @@
 """Amendments: faults of a file that are mended when it is read, or that make a table useless."""
 
-from datetime import datetime
-
 import numpy as np
 
 from ..errors import InputError
 from ..problems import Log
 from .model import BaselineTable, OIFile
-from .observables import LONGEST, sound
+from .observables import LONGEST, OLDEST_MJD, YOUNGEST_MJD, sound, timed
+from .utc import day_of
 
-OLDEST_MJD = 10_000.0
-"""1886; the first star was measured by interferometry in 1920."""
 JULIAN_DATE_OF_MJD_0 = 2_400_000.5
 
 
@@ -35,7 +32,8 @@ def amend(file: OIFile, log: Log) -> None:
 
 
 def _julian_dates(table, log: Log) -> None:
-    late = table.mjd > JULIAN_DATE_OF_MJD_0 + OLDEST_MJD
+    day = table.mjd - JULIAN_DATE_OF_MJD_0
+    late = (day > OLDEST_MJD) & (day < YOUNGEST_MJD)
     if late.any():
         log.suspicious(
             table.label,
@@ -43,33 +41,23 @@ def _julian_dates(table, log: Log) -> None:
             f"({table.mjd[late][0]:.3f})",
             "2400000.5 is subtracted",
         )
-        table.mjd = np.where(late, table.mjd - JULIAN_DATE_OF_MJD_0, table.mjd)
+        table.mjd = np.where(late, day, table.mjd)
 
 
 def _missing_dates(table, version: int, log: Log) -> None:
-    with np.errstate(invalid="ignore"):
-        bad = ~(table.mjd >= OLDEST_MJD)
+    bad = ~((table.mjd >= OLDEST_MJD) & (table.mjd < YOUNGEST_MJD))
     if not bad.any():
         return
     what = f"column MJD: {np.count_nonzero(bad)} rows have no time ({table.mjd[bad][0]:g})"
-    start = _mjd(table.date_obs)
+    start = day_of(table.date_obs)
     first_version = (table.revn or version) == 1 and isinstance(table, BaselineTable)
     if first_version and start is not None and np.isfinite(table.time[bad]).all():
         log.suspicious(table.label, what, "DATE-OBS + TIME is used")
         table.mjd = np.where(bad, start + table.time / 86400, table.mjd)
-    elif np.isnan(table.mjd).any():
+    elif not timed(table).all():
         log.unusable(table.label, what, "these rows are left out")
     else:
         log.suspicious(table.label, what, "used as it is; its time means nothing")
-
-
-def _mjd(date: str) -> float | None:
-    """MJD at 0 h of an ISO date; None if it is none."""
-    try:
-        day = datetime.fromisoformat(date[:10])
-    except ValueError:
-        return None
-    return float((day - datetime(1858, 11, 17)).days)
 
 
 def _wavelengths_in_other_units(file: OIFile, log: Log) -> None:

@@ -64,6 +64,8 @@ class BinTable:
             offset += self.fields[-1].width
         if offset != self.row_bytes:
             raise Malformed(f"its columns take {offset} bytes a row, NAXIS1 says {self.row_bytes}")
+        if len(hdu.data) < self.nrow * self.row_bytes:
+            raise Malformed(f"it has {len(hdu.data)} bytes, too few for {self.nrow} rows")
         self._bytes = np.frombuffer(hdu.data, dtype=np.uint8)[: self.nrow * self.row_bytes]
         self._bytes = self._bytes.reshape(self.nrow, self.row_bytes)
 

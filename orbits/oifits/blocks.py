@@ -6,6 +6,8 @@ become `astropy.io.fits.Header`, data stay bytes. A size is believed only as far
 
 import gzip
 import math
+import os
+import re
 from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
@@ -17,6 +19,8 @@ from ..errors import InputError
 BLOCK = 2880
 MAX_HEADER_BLOCKS = 2000  # 72 000 cards; a header without END must not swallow the whole file
 MAX_HDUS = 20_000
+PIECE = 2**26
+"""Bytes that are decompressed at a time."""
 
 
 @dataclass(frozen=True)
@@ -67,7 +71,7 @@ def read_hdus(path: Path) -> Iterator[HDU]:
 def text(header: fits.Header, keyword: str, default: str = "") -> str:
     """The value of `keyword` as text without padding; `default` where it is absent or garbled."""
     value = card(header, keyword)
-    return default if value is None else str(value).strip().strip("\0")
+    return default if value is None else str(value).strip()
 
 
 def card(header: fits.Header, keyword: str) -> object | None:
@@ -76,7 +80,28 @@ def card(header: fits.Header, keyword: str) -> object | None:
         value = header.get(keyword)
     except (fits.VerifyError, ValueError, KeyError, TypeError):
         return None
-    return None if isinstance(value, fits.card.Undefined) else value
+    if isinstance(value, fits.card.Undefined):
+        return None
+    return _printable(value) if isinstance(value, str) else value
+
+
+def cards(header: fits.Header) -> Iterator[tuple[str, object, str]]:
+    """Keyword, value and comment of every card that is legible and has a value."""
+    for entry in header.cards:
+        try:
+            name, value, comment = entry.keyword, entry.value, entry.comment
+        except (fits.VerifyError, ValueError, KeyError, TypeError):
+            continue
+        if isinstance(value, fits.card.Undefined) or not re.fullmatch(r"[A-Z0-9_ -]+", name):
+            continue
+        if len(name) > 8 or " " in name:
+            name = f"HIERARCH {name}"  # the way to write longer names, in use at several places
+        yield name, _printable(value) if isinstance(value, str) else value, _printable(comment)
+
+
+def _printable(value: str) -> str:
+    """`value` with a question mark for what FITS does not allow in a header."""
+    return re.sub(r"[^ -~]", "?", value)
 
 
 def _hdus(path: Path, handle) -> Iterator[HDU]:
@@ -86,15 +111,30 @@ def _hdus(path: Path, handle) -> Iterator[HDU]:
             return
         header = _parse(path, raw, number)
         size = _data_size(path, header, number)
-        data = handle.read(size)
-        if len(data) < size:
+        data = _read(handle, size)
+        if data is None:
             raise InputError(
-                f"{path}: cut short in HDU {number}: {size} bytes of data announced, "
-                f"{len(data)} there; get a fresh copy"
+                f"{path}: cut short in HDU {number}, whose header announces {size} bytes of data; "
+                "get a fresh copy"
             )
         handle.read(-size % BLOCK)
         yield HDU(number, header, raw, data)
     raise InputError(f"{path}: more than {MAX_HDUS} HDUs")
+
+
+def _read(handle, size: int) -> bytes | None:
+    """`size` bytes; None if there are fewer, found out without asking for memory beyond them."""
+    if isinstance(handle, gzip.GzipFile):
+        pieces, left = [], size
+        while left:
+            pieces.append(handle.read(min(left, PIECE)))
+            if not pieces[-1]:
+                return None
+            left -= len(pieces[-1])
+        return b"".join(pieces)
+    if size > os.fstat(handle.fileno()).st_size - handle.tell():
+        return None
+    return handle.read(size)
 
 
 def _read_header(path: Path, handle, number: int) -> bytes | None:

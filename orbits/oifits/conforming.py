@@ -12,6 +12,8 @@ import numpy as np
 from .correlation import Cut, renumbered
 from .links import plain
 from .model import T3, Array, BaselineTable, DataTable, Flux, OIFile, Vis
+from .observables import timed
+from .utc import iso
 
 UNKNOWN_ARRAY = "UNKNOWN"
 
@@ -36,13 +38,11 @@ Say = Callable[[str], None]
 
 def dates(file: OIFile, say: Say) -> OIFile:
     """Every table of data has its DATE-OBS."""
-    from astropy.time import Time
-
     data = []
     for table in file.data:
-        times = table.mjd[table.mjd > 0]
+        times = table.mjd[timed(table)]
         if not table.date_obs and times.size:
-            table = replace(table, date_obs=Time(times.min(), format="mjd").isot[:10])
+            table = replace(table, date_obs=iso(times.min())[:10])
             say(f"{table.extname}: DATE-OBS taken from MJD")
         data.append(table)
     return replace(file, data=data)

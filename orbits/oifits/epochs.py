@@ -19,6 +19,7 @@ from .loading import load
 from .model import DataTable, OIFile
 from .observables import KINDS, ErrorBars, Kind, sound, usable
 from .selecting import EVERYTHING, Selection, select, target_ids
+from .utc import night_label
 
 GAP = 8 * u.hour
 """A pause longer than this starts a new night: within a night data follow each other sooner."""
@@ -150,13 +151,6 @@ def observations(
         numbers = np.concatenate([part[1][chosen[key]] for key, part in parts.items()])
         epochs.append(builder.observation(name, night, numbers))
     return epochs
-
-
-def night_label(mjd: float) -> str:
-    """What a night is called: its mean time, UTC, to the minute."""
-    from astropy.time import Time
-
-    return Time(mjd, format="mjd", scale="utc").isot[:16]
 
 
 def _listed(paths: Paths) -> list[str | Path]:

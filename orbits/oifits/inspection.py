@@ -7,10 +7,11 @@ import numpy as np
 
 from ..constants import MAS
 from ..problems import Problem, Severity
-from .epochs import DEFAULT, GAP, night_label, night_starts
+from .epochs import DEFAULT, GAP, night_starts
 from .links import plain
 from .model import BaselineTable, Flux, OIFile
-from .observables import KINDS, sound, usable
+from .observables import KINDS, sound, timed, usable
+from .utc import night_label
 
 LARGEST_CLOSURE_PHASE = 1.5 * 3**0.5
 """Largest closure phase, rad, of a companion of contrast 1, to first order in the contrast: when
@@ -58,7 +59,7 @@ def _targets(file: OIFile) -> Iterator[dict[str, Any]]:
 def _nights(file: OIFile, ids: np.ndarray) -> Iterator[dict[str, Any]]:
     """Each night of a target, with the numbers of usable data."""
     tables = [table for table in file.data if isinstance(table, BaselineTable)]
-    mine = [np.isin(table.target_id, ids) & np.isfinite(table.mjd) for table in tables]
+    mine = [np.isin(table.target_id, ids) & timed(table) for table in tables]
     times = np.concatenate([t.mjd[rows] for t, rows in zip(tables, mine, strict=True)] or [[]])
     if not times.size:
         return

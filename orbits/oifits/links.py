@@ -8,7 +8,7 @@ from astropy.io import fits
 
 from ..errors import InputError
 from ..problems import Log
-from .blocks import card, text
+from .blocks import cards, text
 from .model import (
     Array,
     Corr,
@@ -202,12 +202,10 @@ def _rows_of_known_targets(table: DataTable, target: Target, log: Log) -> DataTa
 def _primary(header: fits.Header) -> tuple[dict[str, object], list[str]]:
     """The keywords of the primary header that say something, and its history."""
     skip = {"SIMPLE", "BITPIX", "EXTEND", "CHECKSUM", "DATASUM", "COMMENT", "HISTORY", ""}
-    keywords: dict[str, object] = {}
-    for entry in header.cards:
-        name = entry.keyword
-        if name in skip or name.startswith("NAXIS"):
-            continue
-        value = card(header, name)
-        if value is not None:
-            keywords[name] = value
-    return keywords, [str(line) for line in header["HISTORY"]] if "HISTORY" in header else []
+    entries = list(cards(header))
+    keywords = {
+        name: value
+        for name, value, _ in entries
+        if name not in skip and not name.startswith("NAXIS")
+    }
+    return keywords, [str(value) for name, value, _ in entries if name == "HISTORY"]

@@ -7,8 +7,8 @@ import numpy as np
 from ..errors import InputError
 from ..problems import Log
 from . import amending, checksum, links
-from .bintable import BinTable, Field, Malformed
-from .blocks import HDU, card, read_hdus, text
+from .bintable import CARDS, BinTable, Field, Malformed
+from .blocks import HDU, card, cards, read_hdus, text
 from .model import KINDS, OIFile, OtherHDU
 from .schema import (
     DTYPES,
@@ -222,14 +222,8 @@ def _revision(hdu: HDU) -> int | None:
 def _cards(kind: type[Table], hdu: HDU) -> list[tuple[str, object, str]]:
     """Header cards that neither FITS nor the standard gives a meaning here."""
     skip = STRUCTURAL | {keyword.name for keyword in keywords(kind)}
-    kept = []
-    for entry in hdu.header.cards:
-        name = entry.keyword
-        column_card = name.startswith(("TTYPE", "TFORM", "TUNIT", "TNULL", "TSCAL", "TZERO",
-                                       "TDISP", "TDIM")) and name[-1:].isdigit()  # fmt: skip
-        if name in skip or column_card:
-            continue
-        value = card(hdu.header, name) if name not in ("COMMENT", "HISTORY") else entry.value
-        if value is not None:
-            kept.append((name, value, entry.comment))
-    return kept
+    return [
+        entry
+        for entry in cards(hdu.header)
+        if entry[0] not in skip and entry[0].rstrip("0123456789") not in CARDS
+    ]

@@ -6,12 +6,14 @@ from dataclasses import dataclass, field
 import astropy.units as u
 import numpy as np
 
-from .model import T3, BaselineTable, Vis, Vis2, Wavelength
+from .model import T3, BaselineTable, DataTable, Vis, Vis2, Wavelength
 
 LONGEST = 1e4
 """No optical interferometer has a baseline of 10 km; longer ones are in other units than m."""
 SHORTEST_WAVE, LONGEST_WAVE = 1e-7, 1e-3
 """Wavelengths that OIFITS is used for, m; 1.65 (micron) and 1650 (nm) lie far outside."""
+OLDEST_MJD, YOUNGEST_MJD = 10_000.0, 100_000.0
+"""1886 and 2132: no star was measured by interferometry before, and this is not for ever."""
 
 
 @dataclass(frozen=True)
@@ -94,10 +96,15 @@ def usable(table: BaselineTable, kind: Kind) -> np.ndarray:
     keep &= error > 0  # false for NaN
     keep &= error < np.inf
     keep &= np.isfinite(value)
-    keep &= (np.isfinite(table.mjd) & (table.sides < LONGEST).all(axis=1))[:, None]
+    keep &= (timed(table) & (table.sides < LONGEST).all(axis=1))[:, None]
     if kind.name == "t3amp" and unnormalised(table, keep):
         keep[:] = False
     return keep
+
+
+def timed(table: DataTable) -> np.ndarray:
+    """(nrow,) bool: the rows whose MJD can be a time, if only that of a test (0)."""
+    return (table.mjd >= 0) & (table.mjd < YOUNGEST_MJD)
 
 
 def sound(spectrum: Wavelength) -> np.ndarray:

@@ -11,7 +11,9 @@ from ..files import whole_file
 from .blocks import BLOCK
 from .checksum import encode, ones_sum
 from .model import OIFile
+from .observables import timed
 from .schema import OPEN, Column, Table, keywords
+from .utc import iso
 
 _NUMPY = {"L": "S1", "I": ">i2", "J": ">i4", "E": ">f4", "D": ">f8", "C": ">c8"}
 _OPEN_WIDTH = {"INSNAME", "TARGET", "SPECTYP"}
@@ -66,11 +68,8 @@ def _given(primary: dict[str, object]) -> dict[str, object]:
 
 def _demanded(file: OIFile) -> dict[str, object]:
     """The compulsory keywords, from the tables themselves."""
-    from astropy.time import Time
-
-    times = np.concatenate([table.mjd for table in file.data])
-    times = times[np.isfinite(times) & (times > 0)]
-    start = Time(times.min(), format="mjd").isot if times.size else "1858-11-17T00:00:00"
+    times = np.concatenate([table.mjd[timed(table)] for table in file.data])
+    start = iso(times.min() if times.size else 0.0)
     instruments = [w.insname for w in file.wavelengths]
     return {
         "ORIGIN": "UNKNOWN",

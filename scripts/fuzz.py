@@ -1,0 +1,266 @@
+"""Damage valid OIFITS files at random and inspect them: python scripts/fuzz.py [--cases N].
+
+Every case runs `nodeline inspect` in a child process. It must end within 10 s and 1 GiB, with the
+exit code 0 or 3, and without a traceback. Prints what went wrong, with the seed to repeat it.
+"""
+
+import argparse
+import os
+import resource
+import signal
+import sys
+import tempfile
+import time
+from collections import Counter
+from collections.abc import Callable
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+
+ROOT = Path(__file__).resolve().parents[1]
+sys.path.insert(0, str(ROOT / "tests" / "oifits"))
+
+BLOCK = 2880
+MAX_SECONDS = 10
+MAX_BYTES = 2**30
+ODD_VALUES = (
+    "-1", "0", "1", "255", "1000000000000", "9223372036854775808", "1E308", "-0.5", "T", "'x'",
+    "''", "", "'OI_VIS2'", "'1D'", "'999999999D'", "'PD(3)'", "'um'", "(1,2)", "NaN", "'\xe9'",
+)  # fmt: skip
+SIZES = ("NAXIS", "NAXIS1", "NAXIS2", "BITPIX", "PCOUNT", "GCOUNT", "TFIELDS", "NDATA")
+ODD_NUMBERS = (np.nan, np.inf, -np.inf, 0.0, -1.0, 1e300, 5e-324, 1e10, 2.45e6)
+
+
+def hdus(data: bytes) -> list[bytes]:
+    """The HDUs of a valid file."""
+    from io import BytesIO
+
+    from astropy.io import fits
+
+    with fits.open(BytesIO(data)) as opened:
+        places = [hdu.fileinfo() for hdu in opened]
+    return [data[p["hdrLoc"] : p["datLoc"] + p["datSpan"]] for p in places]
+
+
+def truncated(data: bytes, rng: np.random.Generator) -> bytes:
+    """Cut short anywhere."""
+    return data[: rng.integers(0, len(data))]
+
+
+def bits_flipped(data: bytes, rng: np.random.Generator) -> bytes:
+    """Up to 100 bits turned over."""
+    damaged = bytearray(data)
+    for place in rng.integers(0, len(data), rng.integers(1, 100)):
+        damaged[place] ^= 1 << int(rng.integers(8))
+    return bytes(damaged)
+
+
+def card_changed(data: bytes, rng: np.random.Generator) -> bytes:
+    """Some header cards with an odd value."""
+    return _with_cards(data, rng, lambda name: True)
+
+
+def size_changed(data: bytes, rng: np.random.Generator) -> bytes:
+    """Absurd numbers of rows, columns, axes."""
+    return _with_cards(data, rng, lambda name: name in SIZES)
+
+
+def description_changed(data: bytes, rng: np.random.Generator) -> bytes:
+    """Odd names, forms and units of columns, and odd links between tables."""
+    heads = ("TTYPE", "TFORM", "TUNIT", "TDIM", "INSNAME", "ARRNAME", "CORRNAME", "EXTNAME")
+    return _with_cards(data, rng, lambda name: name.startswith(heads))
+
+
+def _with_cards(data: bytes, rng, wanted: Callable[[str], bool]) -> bytes:
+    damaged = bytearray(data)
+    places = [
+        place
+        for place in range(0, len(data) - 80, 80)
+        if data[place + 8 : place + 10] == b"= "
+        and wanted(data[place : place + 8].decode("latin-1").strip())
+    ]
+    for place in rng.choice(places, min(len(places), int(rng.integers(1, 4))), replace=False):
+        value = ODD_VALUES[rng.integers(len(ODD_VALUES))]
+        damaged[place + 10 : place + 80] = value.rjust(20).ljust(70)[:70].encode("latin-1")
+    return bytes(damaged)
+
+
+def table_dropped(data: bytes, rng: np.random.Generator) -> bytes:
+    """Without one of its HDUs."""
+    parts = hdus(data)
+    del parts[rng.integers(len(parts))]
+    return b"".join(parts)
+
+
+def table_doubled(data: bytes, rng: np.random.Generator) -> bytes:
+    """With one HDU twice, the second perhaps damaged."""
+    parts = hdus(data)
+    copy = parts[rng.integers(1, len(parts))]
+    return b"".join([*parts, bits_flipped(copy, rng) if rng.random() < 0.5 else copy])
+
+
+def tables_shuffled(data: bytes, rng: np.random.Generator) -> bytes:
+    """Extensions in another order, some of them missing."""
+    first, *rest = hdus(data)
+    order = rng.permutation(len(rest))[: rng.integers(1, len(rest) + 1)]
+    return b"".join([first, *(rest[k] for k in order)])
+
+
+def block_overwritten(data: bytes, rng: np.random.Generator) -> bytes:
+    """A stretch of zeros, ones or noise."""
+    damaged = bytearray(data)
+    start = int(rng.integers(len(data)))
+    size = min(int(rng.integers(1, 3 * BLOCK)), len(data) - start)
+    filling = (bytes(size), b"\xff" * size, rng.bytes(size))[rng.integers(3)]
+    damaged[start : start + size] = filling
+    return bytes(damaged)
+
+
+def numbers_changed(data: bytes, rng: np.random.Generator) -> bytes:
+    """Odd numbers in the data of the tables."""
+    parts = [bytearray(part) for part in hdus(data)]
+    for part in parts[1:]:
+        start = (bytes(part).index(b"END     ") // BLOCK + 1) * BLOCK
+        room = len(part) - start - 8
+        for _ in range(int(rng.integers(0, 6)) if room > 0 else 0):
+            place = start + int(rng.integers(room))
+            odd = np.array(ODD_NUMBERS[rng.integers(len(ODD_NUMBERS))], dtype=">f8")
+            part[place : place + 8] = odd.tobytes()
+    return b"".join(map(bytes, parts))
+
+
+def garbage_appended(data: bytes, rng: np.random.Generator) -> bytes:
+    """Something behind the end."""
+    return data + rng.bytes(int(rng.integers(1, 2 * BLOCK)))
+
+
+MUTATIONS = (
+    truncated, bits_flipped, card_changed, size_changed, description_changed, table_dropped,
+    table_doubled, tables_shuffled, block_overwritten, numbers_changed, garbage_appended,
+)  # fmt: skip
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """How a case ended."""
+
+    seed: int
+    mutation: str
+    code: int
+    seconds: float
+    megabytes: float
+    words: str
+
+    @property
+    def fault(self) -> str:
+        """What was wrong with it; "" if nothing."""
+        if self.seconds > MAX_SECONDS:
+            return f"took {self.seconds:.1f} s"
+        if self.megabytes * 2**20 > MAX_BYTES:
+            return f"took {self.megabytes:.0f} MB"
+        if "Traceback" in self.words or self.code not in (0, 3):
+            return f"exit code {self.code}: {self.words[-2000:]}"
+        warnings = [line for line in self.words.splitlines() if "Warning" in line]
+        if warnings:
+            return warnings[0]
+        return ""
+
+
+def run_case(seed: int, bases: list[bytes], folder: Path) -> Outcome:
+    """Damage one of `bases` as `seed` has it, and inspect it in a child process."""
+    rng = np.random.default_rng(seed)
+    mutation = MUTATIONS[rng.integers(len(MUTATIONS))]
+    path, words = folder / "case.fits", folder / "words.txt"
+    path.write_bytes(mutation(bases[rng.integers(len(bases))], rng))
+    options = ([], ["--json"], ["--convert", str(folder / "copy.fits"), "--force"])[rng.integers(3)]
+    start = time.perf_counter()
+    child = os.fork()
+    if child == 0:
+        _inspect([str(path), *options], words)
+    _, status, usage = os.wait4(child, 0)
+    seconds = time.perf_counter() - start
+    code = os.waitstatus_to_exitcode(status)
+    text = words.read_text(errors="replace")
+    return Outcome(seed, mutation.__name__, code, seconds, usage.ru_maxrss / 1024, text)
+
+
+def _inspect(arguments: list[str], words: Path) -> None:
+    """In the child: run the command with its output in a file, then leave for good."""
+    code = 1
+    try:
+        signal.alarm(MAX_SECONDS + 1)
+        resource.setrlimit(resource.RLIMIT_AS, (4 * MAX_BYTES, 4 * MAX_BYTES))
+        with open(words, "w") as out:
+            os.dup2(out.fileno(), 1)
+            os.dup2(out.fileno(), 2)
+        sys.argv = ["nodeline", "inspect", *arguments]
+        from orbits.cli import app
+        from orbits.cli.frame import run
+
+        code = run(app)
+        sys.stdout.flush()
+        sys.stderr.flush()
+    finally:
+        os._exit(code)
+
+
+def _inspect_here(path: Path, folder: Path) -> None:
+    from contextlib import redirect_stdout
+    from io import StringIO
+
+    from orbits.cli import app
+    from orbits.cli.frame import run
+
+    sys.argv = ["nodeline", "inspect", str(path), "--convert", str(folder / "first.fits")]
+    with redirect_stdout(StringIO()):
+        run(app)
+
+
+def valid_files(folder: Path) -> list[bytes]:
+    """Files to damage: small and full ones of ours, and those of other people where they are."""
+    import oifits_files
+
+    rng = np.random.default_rng(1)
+    bases = []
+    for make in (oifits_files.small, oifits_files.full):
+        path = folder / "base.fits"
+        make(rng).write(path, force=True)
+        bases.append(path.read_bytes())
+    outside = Path(os.environ.get("NODELINE_DATA", ROOT.parent / "shared" / "data"))
+    bases += [path.read_bytes() for path in sorted(outside.glob("*fits"))]
+    return bases
+
+
+def fuzz(cases: int, first: int = 0) -> list[Outcome]:
+    """Run seeds `first` to `first + cases`, in order."""
+    with tempfile.TemporaryDirectory() as name:
+        folder = Path(name)
+        bases = valid_files(folder)
+        # Everything that a child needs is imported by a first case in the parent.
+        _inspect_here(folder / "base.fits", folder)
+        return [run_case(seed, bases, folder) for seed in range(first, first + cases)]
+
+
+def main() -> int:
+    """Run the cases and print a summary; returns 1 if any went wrong."""
+    parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
+    parser.add_argument("--cases", type=int, default=2000)
+    parser.add_argument("--first", type=int, default=0, help="seed of the first case")
+    options = parser.parse_args()
+    outcomes = fuzz(options.cases, options.first)
+    for outcome in outcomes:
+        if outcome.fault:
+            print(f"seed {outcome.seed}, {outcome.mutation}: {outcome.fault}\n")
+    faults = sum(bool(outcome.fault) for outcome in outcomes)
+    codes = Counter(outcome.code for outcome in outcomes)
+    print(
+        f"{len(outcomes)} cases, {faults} faults; exit codes {dict(sorted(codes.items()))}; "
+        f"slowest {max(o.seconds for o in outcomes):.2f} s, "
+        f"largest {max(o.megabytes for o in outcomes):.0f} MB"
+    )
+    return 1 if faults else 0
+
+
+if __name__ == "__main__":
+    sys.exit(main())
