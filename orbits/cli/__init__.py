@@ -5,7 +5,7 @@ from typing import Annotated
 
 import typer
 
-from . import catalogue, draw, inspect, measure, orbit, predict, search, simulate
+from . import catalogue, demo, draw, inspect, measure, orbit, predict, search, simulate
 from .frame import run
 
 app = typer.Typer(
@@ -30,6 +30,7 @@ def nodeline(
 
 
 app.add_typer(catalogue.app)
+app.command()(demo.demo)
 app.command()(draw.draw)
 app.command()(inspect.inspect)
 app.command()(measure.measure)
