@@ -24,3 +24,17 @@ def outside() -> Path:
     if not folder.is_dir():
         pytest.skip(f"the folder of outside data is missing: {folder}")
     return folder
+
+
+@pytest.fixture
+def nodeline(monkeypatch, capsys):
+    """The command line in this process: ``nodeline("predict", ...)`` -> exit code, out, err."""
+    from orbits.cli import app
+    from orbits.cli.frame import run
+
+    def call(*arguments: object) -> tuple[int, str, str]:
+        monkeypatch.setattr("sys.argv", ["nodeline", *map(str, arguments)])
+        code = run(app)
+        return code, *capsys.readouterr()
+
+    return call

@@ -57,13 +57,7 @@ def draw_motion(
     upper.set_title(bundle.name)
     upper.set_ylabel("separation (mas)")
     lower.set_ylabel("position angle (deg)")
-    if np.ptp(angle) > 60:
-        from matplotlib.ticker import MultipleLocator
-
-        range_shown = min(np.ptp(angle), 800.0)
-        step = next(step for step in (15, 30, 45, 90, 180) if range_shown < 6.5 * step)
-        lower.yaxis.set_major_locator(MultipleLocator(step))
-    lower.yaxis.set_major_formatter(lambda value, _: f"{value % 360:g}")
+    _mark_angles(lower, np.ptp(angle), wrapped=many_turns)
     lower.set_xlabel(label)
     lower.set_xlim(dates[0], dates[-1])
     drawing.align_ylabels()
@@ -116,6 +110,18 @@ def _dates(mjd: np.ndarray, whole: np.ndarray) -> tuple[np.ndarray, str]:
         return 2000.0 + (mjd - 51544.5) / 365.25, "date (year)"
     origin = 100 * np.floor(whole.min() / 100)
     return mjd - origin, f"MJD − {origin:.0f}"
+
+
+def _mark_angles(axes: "Axes", extent: float, *, wrapped: bool) -> None:
+    """Ticks at round parts of a turn, labelled from 0 to 360 deg."""
+    if extent > 60:
+        from matplotlib.ticker import MultipleLocator
+
+        steps = (15, 30, 45, 90, 180)
+        step = 90 if wrapped else next(step for step in steps if extent < 6.5 * step)
+        axes.yaxis.set_major_locator(MultipleLocator(step))
+    if not wrapped:
+        axes.yaxis.set_major_formatter(lambda value, _: f"{value % 360:g}")
 
 
 def _broken(angle: np.ndarray) -> np.ndarray:
