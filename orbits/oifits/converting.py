@@ -33,7 +33,7 @@ def convert(
     InputError
         If `path` exists and `force` is false, or an id or a text is too long for the standard.
     """
-    names = ", ".join(Path(name).name for name in file.source.split(", "))
+    names = ", ".join(Path(name).name for name in file.files)
     origin = f"Version 2 copy by nodeline {version('nodeline')} of {names}"
     copy = conform(replace(file, history=[*file.history, origin, *notes]))
     write(copy, path, force=force)

@@ -251,7 +251,7 @@ class _Builder:
             instruments=tuple(self.instruments[i] for i in instruments),
             stations=tuple(self.stations[i] for i in stations),
             correlation=correlation,
-            files=tuple(self.file.source.split(", ")),
+            files=self.file.files,
             problems=(*self.file.problems, *log.problems),
             **night,
         )
@@ -264,7 +264,7 @@ class _Builder:
         row, channel = (index.astype(np.int32) for index in np.nonzero(keep))
         value, error = table[kind.value][keep], table[kind.error][keep]
         if kind.phase:
-            value = np.radians(np.remainder(value + 180.0, 360.0) - 180.0)
+            value = np.radians(value - 360.0 * np.round(value / 360.0))
             error = np.radians(error)
         wave, band = (a.astype(np.float64) for a in (spectrum.eff_wave, spectrum.eff_band))
         band = np.where((band > 0) & (band < wave), band, 0.0)

@@ -62,7 +62,7 @@ def join(files: Sequence[OIFile]) -> OIFile:
         history=history,
         others=others,
         version=max(file.version for file in files),
-        source=", ".join(file.source for file in files),
+        files=tuple(name for file in files for name in file.files),
         problems=[problem for file in files for problem in file.problems],
     )
 

@@ -64,7 +64,7 @@ def assemble(
         history=history,
         others=others,
         version=2 if text(header, "CONTENT").upper() == "OIFITS2" else 1,
-        source=str(path),
+        files=(str(path),),
         problems=log.problems,
     )
 

@@ -338,10 +338,15 @@ class OIFile:
     history: list[str] = field(default_factory=list)
     others: list[OtherHDU] = field(default_factory=list)
     version: int = 2
-    source: str = ""
-    """The file it was read from."""
+    files: tuple[str, ...] = ()
+    """The files it was read from."""
     problems: list[Problem] = field(default_factory=list)
     """What departed from the standard when it was read."""
+
+    @property
+    def source(self) -> str:
+        """How messages call it: the names of its files."""
+        return ", ".join(self.files)
 
     @property
     def tables(self) -> list[Table]:

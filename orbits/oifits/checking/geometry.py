@@ -23,7 +23,10 @@ def longer_than_array(file: OIFile, log: Log) -> None:
         known = (array.sta_index[row] == table.sta_index).all(axis=1)
         position = array.staxyz[row]
         ends = [(0, 1)] if position.shape[1] == 2 else [(0, 1), (1, 2), (0, 2)]
-        real = np.stack([np.linalg.norm(position[:, b] - position[:, a], axis=1) for a, b in ends])
+        with np.errstate(over="ignore"):  # a position can be any number
+            real = np.stack(
+                [np.linalg.norm(position[:, b] - position[:, a], axis=1) for a, b in ends]
+            )
         # Stations at one place, or nowhere (NaN), stand for unknown positions.
         long = (real * (1 + ALIKE) + SLACK < table.sides.T) & (real > 0) & known
         if long.any():

@@ -105,8 +105,7 @@ def phases_in_radians(file: OIFile, log: Log) -> None:
         phase = table[kind.value][keep]
         if phase.size < 100:
             continue
-        spread = np.sqrt(np.mean(phase**2))
-        if np.abs(phase).max() <= np.pi * (1 + 1e-6) and spread > 1.3:
+        if np.abs(phase).max() <= np.pi * (1 + 1e-6) and np.sqrt(np.mean(phase**2)) > 1.3:
             log.suspicious(
                 table.label,
                 "column T3PHI fills -3.14 to 3.14: it looks like radians",

@@ -1,0 +1,214 @@
+"""From tables to observations: targets, nights, instruments, errors."""
+
+import astropy.units as u
+import numpy as np
+import oifits_files as make
+import pytest
+from astropy.time import Time
+
+from orbits import InputError, read, read_epochs
+from orbits.oifits import ErrorBars, Selection, observations, select
+from orbits.oifits.joining import join
+
+
+@pytest.fixture
+def full(rng, tmp_path):
+    """The path of a file with two targets, two instruments and two nights."""
+    make.full(rng).write(tmp_path / "full.fits")
+    return tmp_path / "full.fits"
+
+
+def test_several_targets_must_be_chosen_from(full):
+    with pytest.raises(InputError, match=r"several targets; choose one of 'Harrow 7', 'Calib"):
+        read(full)
+    with pytest.raises(InputError, match=r"no target 'Harrow 8'; there is 'Harrow 7', 'Calib"):
+        read(full, target="Harrow 8")
+    observation = read(full, target="harrow  7")
+    assert observation.target == "Harrow 7"
+    assert (len(observation.v2), len(observation.t3)) == (16, 12)  # one flagged, one NaN
+    assert observation.instruments == ("SIM_H",)
+    assert observation.stations == ("S1", "S2", "S3", "S4")
+    assert read(full, target="Calibrator of it").instrument == "SIM_K"
+
+
+def test_every_datum_is_the_one_of_its_row_and_channel(full, rng):
+    """Against a loop over rows and channels of the table as it was written."""
+    file = make.full(np.random.default_rng(20260314))
+    observation = read(full, target="Harrow 7")
+    table, wave = file.data[1], file.wavelengths[0].eff_wave.astype(float)
+    number = 0
+    for row in range(6):
+        for channel in range(3):
+            if table.flag[row, channel] or np.isnan(table.vis2data[row, channel]):
+                continue
+            v2 = observation.v2
+            assert v2.value[number] == table.vis2data[row, channel]
+            assert v2.error[number] == table.vis2err[row, channel]
+            assert v2.wavelength[number] == wave[channel]
+            assert v2.legs[number].tolist() == [[table.ucoord[row], table.vcoord[row]]]
+            assert (v2.row[number], v2.channel[number]) == (row, channel)
+            assert (v2.stations[number] + 1).tolist() == table.sta_index[row].tolist()
+            number += 1
+    assert number == len(observation.v2)
+
+
+def test_nights_are_told_apart_by_the_gap(rng, tmp_path):
+    file = make.small(rng)
+    times = [0.0, 0.2, 0.45, 1.0, 1.3]  # days: 6 h within a night, 13 h between nights
+    file.data = [make.vis2(rng, night=t) for t in times]
+    file.write(tmp_path / "nights.fits")
+    sizes = [len(epoch.v2) for epoch in read_epochs(tmp_path / "nights.fits")]
+    assert sizes == [3 * 18, 2 * 18]
+    assert len(read_epochs(tmp_path / "nights.fits", gap=5 * u.hour)) == 5 - 1
+    assert len(read_epochs(tmp_path / "nights.fits", gap=20 * u.hour)) == 1
+    with pytest.raises(InputError, match=r"2 nights.*choose one of 2026-03-14T05:12, 2026-03-15"):
+        read(tmp_path / "nights.fits")
+    assert len(read(tmp_path / "nights.fits", night="2026-03-15").v2) == 36
+
+
+def test_phases_come_in_radians_within_half_a_turn(rng):
+    file = make.small(rng)
+    file.data[1].t3phi[0] = [190.0, -180.37, 540.0]
+    (observation,) = observations(file)
+    expected = np.radians([-170.0, 179.63, -180.0])
+    np.testing.assert_allclose(observation.t3.value[:3], expected, rtol=1e-14)
+
+
+def test_flipping_reverses_closure_phases_only(rng, tmp_path):
+    make.small(rng).write(tmp_path / "night.fits")
+    plain, other = (read(tmp_path / "night.fits", flip_phase=f) for f in (False, True))
+    np.testing.assert_array_equal(other.t3.value, -plain.t3.value)
+    np.testing.assert_array_equal(other.v2.value, plain.v2.value)
+
+
+def test_scales_and_floors_of_errors(rng):
+    file = make.small(rng)
+    errors = ErrorBars(scale={"v2": 2.0}, floor={"v2": 0.03, "t3": 1.5 * u.deg})
+    file.data[0].vis2err[0] = [0.01, 0.02, 0.03]
+    (observation,) = observations(file, errors=errors)
+    np.testing.assert_array_equal(observation.v2.error[:3], [0.03, 0.04, 0.06])
+    np.testing.assert_allclose(observation.t3.error, np.radians(1.5), rtol=1e-15)
+
+
+@pytest.mark.parametrize(
+    ("arguments", "words"),
+    [
+        ({"scale": {"v3": 2.0}}, "unknown observable 'v3'"),
+        ({"scale": {"v2": 0.0}}, "scale of v2 must be positive, got 0.0"),
+        ({"floor": {"v2": -1.0}}, "floor of v2 must not be negative"),
+    ],
+)
+def test_senseless_changes_of_errors_are_refused(arguments, words):
+    with pytest.raises(ValueError, match=words):
+        ErrorBars(**arguments)
+
+
+def test_other_observables_are_there_when_asked_for(rng):
+    file = make.full(rng)
+    wanted = ("v2", "t3", "t3amp", "visamp", "visphi")
+    (plain,) = observations(file, target="Harrow 7")
+    (more,) = observations(file, target="Harrow 7", observables=wanted)
+    assert len(plain.visamp) == len(plain.visphi) == 0
+    assert (len(more.visamp), len(more.visphi), len(more.t3amp)) == (18, 18, 0)
+    np.testing.assert_array_equal(more.visamp.value, file.data[0].visamp.ravel())
+    np.testing.assert_array_equal(more.visphi.value, np.radians(file.data[0].visphi.ravel()))
+    assert more.correlation.shape == (16 + 12 + 36, 16 + 12 + 36)
+    (calibrator,) = observations(file, target="Calibrator of it", observables=wanted)
+    np.testing.assert_array_equal(calibrator.t3amp.value, 0.5)
+    with pytest.raises(ValueError, match="unknown observables"):
+        read_epochs("nowhere.fits", observables=("v4",))
+
+
+SELECTIONS = {
+    "instrument": (Selection(instrument="sim_k"), lambda d: d["ins"] == "SIM_K"),
+    "dates": (
+        Selection(dates=(Time(61113.5, format="mjd"), Time(61115.0, format="mjd"))),
+        lambda d: d["mjd"] > 61113.5,
+    ),
+    "wavelengths": (Selection(wavelengths=[1.52, 1.7] * u.um), lambda d: 1.52 < d["wave"] < 1.7),
+    "baselines": (Selection(baselines=[50, 100] * u.m), lambda d: 50 < d["baseline"] < 100),
+    "stations": (Selection(stations=("s1", "S3")), lambda d: set(d["stations"]) <= {1, 3}),
+}
+
+
+@pytest.mark.parametrize(("selection", "wanted"), SELECTIONS.values(), ids=SELECTIONS)
+def test_selection_keeps_exactly_what_is_asked_for(rng, selection, wanted):
+    """Against a loop over all squared visibilities of the file."""
+    file = make.full(rng)
+
+    def data(source):
+        for table in source.data:
+            if table.extname != "OI_VIS2":
+                continue
+            waves = source.wavelength(table.insname).eff_wave
+            for row in range(len(table)):
+                for channel, wave in enumerate(waves):
+                    yield {
+                        "ins": table.insname,
+                        "mjd": table.mjd[row],
+                        "wave": wave * 1e6,
+                        "baseline": np.hypot(table.ucoord[row], table.vcoord[row]),
+                        "stations": tuple(table.sta_index[row].tolist()),
+                        "value": str(table.vis2data[row, channel]),  # NaN equals itself as text
+                    }
+
+    kept = list(data(select(file, selection)))
+    assert kept == [datum for datum in data(file) if wanted(datum)]
+    assert 0 < len(kept) < len(list(data(file)))
+
+
+@pytest.mark.parametrize(
+    ("selection", "words"),
+    [
+        (Selection(instrument="SIM_X"), r"no instrument 'SIM_X'; there is 'SIM_H'"),
+        (Selection(stations=("S9",)), r"no station 'S9'; there is 'S1'"),
+        (Selection(baselines=[900, 901] * u.m), r"nothing remains.*baselines 900 to 901 m"),
+    ],
+)
+def test_a_selection_of_nothing_says_so(rng, selection, words):
+    with pytest.raises(InputError, match=words):
+        select(make.small(rng), selection)
+
+
+def test_files_join_by_content_not_by_number(rng, tmp_path):
+    """The same names with other contents, and the same contents under other numbers."""
+    one, two, three = (make.small(rng) for _ in range(3))
+    two.target.target_id[:] = 7  # the same star under another number
+    two.target.target = np.array(["HARROW  7"])
+    for table in two.data:
+        table.target_id[:] = 7
+        table.mjd[:] += 1
+    three.target.target[:] = "Other"  # another star under the same number
+    three.wavelengths[0].eff_wave[:] += np.float32(1e-7)  # another set-up under the same name
+    three.arrays[0].staxyz[:] += 5.0
+    for number, file in enumerate((one, two, three)):
+        file.write(tmp_path / f"{number}.fits")
+    paths = [tmp_path / f"{number}.fits" for number in range(3)]
+    first, second = read_epochs(paths, target="Harrow 7")
+    assert (len(first.v2), len(second.v2)) == (18, 18)
+    assert first.instruments == second.instruments == ("SIM_H",)
+    other = read(paths, target="Other")
+    assert other.instruments == ("SIM_H_2",)
+    np.testing.assert_array_equal(np.unique(other.v2.wavelength), three.wavelengths[0].eff_wave)
+    assert first.files == tuple(map(str, paths))
+
+
+def test_joined_correlations_stay_with_their_file(rng):
+    """Two files with the same CORRNAME: a datum correlates within its own file only."""
+    files = [make.full(rng), make.full(rng)]
+    for table in files[1].data:
+        table.mjd[:] += 10
+    parts = [observations(file, target="Harrow 7")[0] for file in files]
+    both = observations(join(files), target="Harrow 7")
+    assert len(both) == 2
+    for part, night in zip(parts, both, strict=True):
+        np.testing.assert_array_equal(night.correlation.toarray(), part.correlation.toarray())
+
+
+def test_a_target_under_two_numbers_is_one(rng):
+    file = make.small(rng)
+    file.target = file.target.select(np.array([0, 0]))
+    file.target.target_id[:] = [1, 2]
+    file.data[1].target_id[:] = 2
+    (observation,) = observations(file)
+    assert (len(observation.v2), len(observation.t3)) == (18, 12)

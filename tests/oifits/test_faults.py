@@ -1,0 +1,376 @@
+"""Faulty files: each fault is named, with what was done, and what was done is true."""
+
+import numpy as np
+import oifits_files as make
+import pytest
+from astropy.io import fits
+
+from orbits import InputError, read
+from orbits.oifits import load
+from orbits.oifits.checking import check
+from orbits.problems import Severity
+
+NOTE, SUSPICIOUS, UNUSABLE = Severity.NOTE, Severity.SUSPICIOUS, Severity.UNUSABLE
+KEPT = (18, 12)
+"""Squared visibilities and closure phases of `make.small` when nothing is left out."""
+
+
+def damaged(rng, tmp_path, edit, *, make_file=make.small):
+    """The path of a valid file after `edit`, a function of the opened file."""
+    path = tmp_path / "night.fits"
+    make_file(rng).write(tmp_path / "sound.fits")
+    with fits.open(tmp_path / "sound.fits") as opened:
+        edit(opened)
+        for hdu in opened:
+            hdu.header.pop("CHECKSUM", None)
+            hdu.header.pop("DATASUM", None)
+        opened.writeto(path)
+    return path
+
+
+def values(name, column, value, where=(0, 0)):
+    """An edit that sets one value."""
+
+    def edit(opened):
+        opened[name].data[column][where] = value
+
+    return edit
+
+
+def every(name, column, change):
+    """An edit that changes a whole column."""
+
+    def edit(opened):
+        opened[name].data[column][:] = change(opened[name].data[column])
+
+    return edit
+
+
+def keyword(name, key, value):
+    """An edit that sets a keyword, or removes it."""
+
+    def edit(opened):
+        if value is None:
+            del opened[name].header[key]
+        else:
+            opened[name].header[key] = value
+
+    return edit
+
+
+def unit(name, column, value):
+    """An edit that sets the unit of a column."""
+
+    def edit(opened):
+        opened[name].columns[column].unit = value
+
+    return edit
+
+
+FAULTS = {
+    "negative error": (
+        values("OI_VIS2", "VIS2ERR", -0.02, (1, 2)),
+        UNUSABLE, r"VIS2ERR is negative in row 2, channel 3", (17, 12),
+    ),
+    "error 0": (
+        values("OI_T3", "T3PHIERR", 0.0), UNUSABLE, r"T3PHIERR is 0 in row 1, channel 1", (18, 11),
+    ),
+    "infinite error": (
+        values("OI_VIS2", "VIS2ERR", np.inf), UNUSABLE, r"VIS2ERR is infinite", (17, 12),
+    ),
+    "NaN": (values("OI_VIS2", "VIS2DATA", np.nan), NOTE, r"VIS2DATA or VIS2ERR is NaN", (17, 12)),
+    "infinite datum": (
+        values("OI_VIS2", "VIS2DATA", np.inf), UNUSABLE, r"VIS2DATA is infinite", (17, 12),
+    ),
+    "errors beyond belief": (
+        every("OI_VIS2", "VIS2ERR", lambda e: e * 1e-6),
+        SUSPICIOUS, r"VIS2ERR is typically 2e-08", KEPT,
+    ),
+    "V2 far above 1": (
+        values("OI_VIS2", "VIS2DATA", 1.9), SUSPICIOUS, r"far outside 0 to 1 in row 1", KEPT,
+    ),
+    "V2 far below 0": (
+        values("OI_VIS2", "VIS2DATA", -0.9), SUSPICIOUS, r"far outside 0 to 1 in row 1", KEPT,
+    ),
+    "useless phase": (
+        values("OI_T3", "T3PHIERR", 100.0), NOTE, r"T3PHIERR exceeds 60 deg", KEPT,
+    ),
+    "wavelengths reversed": (
+        every("OI_WAVELENGTH", "EFF_WAVE", lambda w: w[::-1].copy()),
+        NOTE, r"EFF_WAVE descends", KEPT,
+    ),
+    "wavelengths in disorder": (
+        every("OI_WAVELENGTH", "EFF_WAVE", lambda w: w[[1, 0, 2]]),
+        SUSPICIOUS, r"EFF_WAVE is not in order", KEPT,
+    ),
+    "two equal channels": (
+        every("OI_WAVELENGTH", "EFF_WAVE", lambda w: w[[0, 0, 2]]),
+        SUSPICIOUS, r"two channels have the same EFF_WAVE", KEPT,
+    ),
+    "band wider than wavelength": (
+        values("OI_WAVELENGTH", "EFF_BAND", 2e-6, 1),
+        SUSPICIOUS, r"EFF_BAND of channel 2 .* is not less", KEPT,
+    ),
+    "no width": (
+        values("OI_WAVELENGTH", "EFF_BAND", 0.0, 1), NOTE, r"EFF_BAND of 1 channels", KEPT,
+    ),
+    "one channel without wavelength": (
+        values("OI_WAVELENGTH", "EFF_WAVE", 0.0, 1),
+        UNUSABLE, r"is 0 m in 1 channels: no optical wavelength", (12, 8),
+    ),
+    "time is 0": (
+        values("OI_VIS2", "MJD", 0.0, slice(None)), SUSPICIOUS, r"6 rows have no time", None,
+    ),
+    "time is NaN": (
+        values("OI_VIS2", "MJD", np.nan, 0), UNUSABLE, r"1 rows have no time", (15, 12),
+    ),
+    "Julian date": (
+        every("OI_VIS2", "MJD", lambda t: t + 2400000.5),
+        SUSPICIOUS, r"6 rows hold a Julian date \(2461113\.500\)", KEPT,
+    ),
+    "(u, v) of one row": (
+        values("OI_VIS2", "UCOORD", 4e7, 0), UNUSABLE, r"1 rows have a baseline of 4e", (15, 12),
+    ),
+    "baseline longer than the array": (
+        values("OI_VIS2", "UCOORD", 400.0, 0), SUSPICIOUS, r"longer than the distance", KEPT,
+    ),
+    "sides of a triangle": (
+        values("OI_T3", "U1COORD", 3.0, 2), SUSPICIOUS, r"of 1 rows \(first: row 3\)", KEPT,
+    ),
+    "unknown station": (
+        values("OI_VIS2", "STA_INDEX", 9, (0, 1)), SUSPICIOUS, r"1 entries, such as 9", KEPT,
+    ),
+    "the same station twice": (
+        values("OI_VIS2", "STA_INDEX", 1, (0, 1)), SUSPICIOUS, r"row 1 has the same station", KEPT,
+    ),
+    "unknown target": (
+        values("OI_VIS2", "TARGET_ID", 7, 0), UNUSABLE, r"1 rows have TARGET_ID 7", (15, 12),
+    ),
+    "unknown INSNAME": (
+        keyword("OI_VIS2", "INSNAME", "GONE"), UNUSABLE, r"INSNAME 'GONE' has no OI_W", (0, 12),
+    ),
+    "INSNAME in other letters": (
+        keyword("OI_VIS2", "INSNAME", "sim_h"), NOTE, r"INSNAME is 'sim_h', not 'SIM_H'", KEPT,
+    ),
+    "unknown ARRNAME": (
+        keyword("OI_VIS2", "ARRNAME", "GONE"), SUSPICIOUS, r"ARRNAME 'GONE' has no table", KEPT,
+    ),
+    "unknown CORRNAME": (
+        keyword("OI_VIS2", "CORRNAME", "GONE"), SUSPICIOUS, r"CORRNAME 'GONE' has no", KEPT,
+    ),
+    "no OI_REVN": (keyword("OI_VIS2", "OI_REVN", None), NOTE, r"OI_REVN is missing", KEPT),
+    "OI_REVN of version 1": (
+        keyword("OI_VIS2", "OI_REVN", 1), SUSPICIOUS, r"OI_REVN is 1, not 2", KEPT,
+    ),
+    "no OI_ARRAY": (
+        lambda opened: opened.pop("OI_ARRAY"), SUSPICIOUS, r"there is no OI_ARRAY", KEPT,
+    ),
+    "no DATE-OBS": (keyword("OI_VIS2", "DATE-OBS", None), NOTE, r"DATE-OBS is missing", KEPT),
+    "ids of 0": (values("OI_ARRAY", "STA_INDEX", 0, 3), NOTE, r"STA_INDEX has numbers below", KEPT),
+    "TIME in version 2": (values("OI_VIS2", "TIME", 5.0, 0), NOTE, r"TIME is not 0", KEPT),
+    "odd unit": (unit("OI_T3", "T3PHI", "furlong"), SUSPICIOUS, r"the unit 'furlong'", KEPT),
+    "odd FRAME": (keyword("OI_ARRAY", "FRAME", "LOCAL"), NOTE, r"FRAME is 'LOCAL'", KEPT),
+    "OI_T3 without phases": (
+        lambda opened: opened["OI_T3"].columns.change_name("T3PHI", "PHASE"),
+        UNUSABLE, r"column T3PHI is missing", (18, 0),
+    ),
+}  # fmt: skip
+
+
+@pytest.mark.parametrize(("edit", "severity", "words", "kept"), FAULTS.values(), ids=FAULTS)
+def test_a_fault_is_named_with_its_severity_and_consequence(
+    rng, tmp_path, edit, severity, words, kept
+):
+    import re
+
+    path = damaged(rng, tmp_path, edit)
+    file = load(path)
+    found = [p for p in file.problems + check(file) if re.search(words, p.what)]
+    assert [p.severity for p in found] == [severity], file.problems + check(file)
+    assert found[0].file == str(path)
+    assert found[0].done
+    if kept is not None:
+        observation = read(path)
+        assert (len(observation.v2), len(observation.t3)) == kept
+
+
+def test_a_sound_file_has_no_fault(rng, tmp_path):
+    """Without this, a check that always complains would pass the tests of faults."""
+    path = damaged(rng, tmp_path, lambda opened: None)
+    file = load(path)
+    problems = [p.what for p in file.problems + check(file)]
+    assert problems == ["column T3AMP holds no number"]
+
+
+def test_strict_refuses_what_is_suspicious_but_not_a_note(rng, tmp_path):
+    path = damaged(rng, tmp_path, lambda opened: None)
+    assert len(read(path, strict=True).v2) == 18
+    path = tmp_path / "odd"
+    path.mkdir()
+    odd = damaged(rng, path, values("OI_VIS2", "VIS2DATA", 1.9))
+    with pytest.raises(InputError, match=r"OI_VIS2 \(HDU 4\): column VIS2DATA is far outside"):
+        read(odd, strict=True)
+
+
+def test_damaged_data_are_told_by_the_checksum(rng, tmp_path):
+    path = tmp_path / "night.fits"
+    make.small(rng).write(path)
+    content = bytearray(path.read_bytes())
+    content[-2500] ^= 1  # before the padding
+    path.write_bytes(content)
+    assert [p.what for p in load(path).problems] == [
+        "keyword DATASUM does not agree with the contents"
+    ]
+
+
+def test_stated_units_are_converted(rng, tmp_path):
+    """Micron, radian and centimetre come out as metre, degree and metre."""
+
+    def edit(opened):
+        wave, phase, array = opened["OI_WAVELENGTH"], opened["OI_T3"], opened["OI_ARRAY"]
+        wave.data["EFF_WAVE"] *= 1e6
+        wave.columns["EFF_WAVE"].unit = "um"
+        phase.data["T3PHI"] = np.radians(phase.data["T3PHI"])
+        phase.columns["T3PHI"].unit = "rad"
+        array.data["STAXYZ"] *= 100
+        array.columns["STAXYZ"].unit = "cm"
+
+    plain = make.small(np.random.default_rng(3))
+    file = load(damaged(np.random.default_rng(3), tmp_path, edit))
+    # A float32 is good to 6e-8; the others to a few rounding errors of float64.
+    np.testing.assert_allclose(file.wavelengths[0].eff_wave, plain.wavelengths[0].eff_wave, 2e-7)
+    np.testing.assert_allclose(file.data[1].t3phi, plain.data[1].t3phi, rtol=1e-14)
+    np.testing.assert_allclose(file.arrays[0].staxyz, make.STATIONS, rtol=1e-14)
+
+
+@pytest.mark.parametrize("scale", [1e6, 1e9], ids=["micron", "nanometre"])
+def test_wavelengths_in_an_unstated_unit_are_never_guessed(rng, tmp_path, scale):
+    path = damaged(rng, tmp_path, every("OI_WAVELENGTH", "EFF_WAVE", lambda w: w * scale))
+    with pytest.raises(InputError, match="no optical wavelength in m: state its unit in TUNIT"):
+        load(path)
+
+
+def test_baselines_in_wavelengths_are_refused(rng, tmp_path):
+    def edit(opened):
+        for name in ("UCOORD", "VCOORD"):
+            opened["OI_VIS2"].data[name] /= 1.6e-6
+        for name in ("U1COORD", "V1COORD", "U2COORD", "V2COORD"):
+            opened["OI_T3"].data[name] /= 1.6e-6
+
+    with pytest.raises(InputError, match="perhaps in wavelengths: convert them to m"):
+        load(damaged(rng, tmp_path, edit))
+
+
+def test_missing_times_of_version_1_come_from_date_and_time(rng, tmp_path):
+    def edit(opened):
+        del opened[0].header["CONTENT"]
+        for hdu in opened[1:]:
+            hdu.header["OI_REVN"] = 1
+        opened["OI_VIS2"].data["MJD"] = 0.0
+        opened["OI_VIS2"].data["TIME"] = 43200.0
+
+    file = load(damaged(rng, tmp_path, edit))
+    np.testing.assert_array_equal(file.data[0].mjd, make.MJD + 0.5)  # 2026-03-14, noon
+    assert any("DATE-OBS + TIME is used" in p.done for p in file.problems)
+
+
+def test_phases_that_fill_the_circle_in_radians_are_noticed(rng):
+    file = make.small(rng)
+    file.data[1] = make.t3(rng, nwave=40)
+    file.data[0] = make.vis2(rng, nwave=40)
+    file.wavelengths[0] = make.spectrum(nwave=40)
+    file.data[1].t3phi[:] = rng.uniform(-np.pi, np.pi, (4, 40))
+    assert any("looks like radians" in p.what for p in check(file))
+    file.data[1].t3phi[:] = rng.uniform(-180, 180, (4, 40))
+    assert not any("radians" in p.what for p in check(file))
+    file.data[1].t3phi[:] = rng.normal(0, 1, (4, 40))  # small phases in degrees
+    assert not any("radians" in p.what for p in check(file))
+
+
+def test_errors_far_below_the_scatter_of_repetitions_are_noticed(rng):
+    """Two runs of a night a minute apart, scattered 100 times more than their errors say."""
+    file = make.small(rng)
+    nights = [make.vis2(rng, nwave=20, night=t) for t in (0.0, 0.0007)]
+    file.wavelengths[0] = make.spectrum(nwave=20)
+    for table in nights:
+        table.vis2data[:] = 0.8 + rng.normal(0, 0.02, (6, 20))
+        table.vis2err[:] = 0.0002
+    joined = {
+        c.name.lower(): np.concatenate([t[c.name] for t in nights]) for c in nights[0].present
+    }
+    file.data = [type(nights[0])(insname="SIM_H", arrname="SIM", date_obs="", **joined)]
+    problem = next(p for p in check(file) if "smaller than the scatter" in p.what)
+    ratio = float(problem.what.split(" is ")[1].split()[0])
+    # Median of 120 ratios around 100: its standard error is 1.17 * 100 / sqrt(120) = 11.
+    assert abs(ratio - 100) < 45
+
+
+def test_triple_amplitudes_in_other_units_are_dropped_and_the_phases_kept(rng, tmp_path):
+    def edit(opened):
+        opened["OI_T3"].data["T3AMP"] = 3000.0
+        opened["OI_T3"].data["T3AMPERR"] = 100.0
+
+    path = damaged(rng, tmp_path, edit)
+    observation = read(path, observables=("v2", "t3", "t3amp"))
+    assert (len(observation.t3), len(observation.t3amp)) == (12, 0)
+    assert any("T3AMP is not normalised" in p.what for p in observation.problems)
+
+
+def test_undefined_flags_count_as_set(rng, tmp_path):
+    """Zero bytes in a logical column are FITS for "undefined"."""
+    path = tmp_path / "night.fits"
+    file = make.small(rng)
+    file.write(path)
+    content = path.read_bytes()
+    place = content.index(b"F" * 3, content.index(b"OI_VIS2") + 2880)
+    path.write_bytes(content[:place] + b"\0F\0" + content[place + 3 :])
+    read_back = load(path)
+    np.testing.assert_array_equal(read_back.data[0].flag[0], [True, False, True])
+    assert any("FLAG: 2 values are undefined" in p.what for p in read_back.problems)
+
+
+REFUSED = {
+    "no such file": (lambda path: path.unlink(), "no such file"),
+    "empty": (lambda path: path.write_bytes(b""), "not a FITS file"),
+    "text": (lambda path: path.write_text("SIMPLE soup"), "not a FITS file"),
+    "cut short": (
+        lambda path: path.write_bytes(path.read_bytes()[:-2500]), "cut short in HDU 5",
+    ),
+    "an image": (
+        lambda path: fits.PrimaryHDU(np.ones((3, 3))).writeto(path, overwrite=True),
+        "FITS, but not OIFITS",
+    ),
+}  # fmt: skip
+
+
+@pytest.mark.parametrize(("edit", "words"), REFUSED.values(), ids=REFUSED)
+def test_what_is_no_oifits_is_refused_in_one_sentence(rng, tmp_path, edit, words):
+    path = tmp_path / "night.fits"
+    make.small(rng).write(path)
+    edit(path)
+    with pytest.raises(InputError, match=words) as caught:
+        load(path)
+    assert str(path) in str(caught.value)
+    assert "\n" not in str(caught.value)
+
+
+@pytest.mark.parametrize(
+    ("gone", "words"),
+    [
+        ("OI_TARGET", "no usable OI_TARGET table"),
+        ("OI_WAVELENGTH", "no usable OI_WAVELENGTH table"),
+    ],
+)
+def test_a_table_that_is_needed_is_missed_by_name(rng, tmp_path, gone, words):
+    path = damaged(rng, tmp_path, lambda opened: opened.pop(gone))
+    with pytest.raises(InputError, match=words):
+        load(path)
+
+
+def test_a_file_with_everything_flagged_has_nothing_to_offer(rng, tmp_path):
+    file = make.small(rng)
+    for table in file.data:
+        table.flag[:] = True
+    file.write(tmp_path / "night.fits")
+    with pytest.raises(InputError, match="no usable squared visibility or closure phase of Harrow"):
+        read(tmp_path / "night.fits")
