@@ -101,9 +101,11 @@ class _Light:
         self.scene, self.values, self.sampling, self.free = scene, values, sampling, free
         self.coherent_by: dict[int, np.ndarray] = {}
         self.total_by: dict[int, np.ndarray] = {}
-        primary, by_diameter, by_darkening = self._shape(scene.primary_shape, values[0], values[1])
+        primary, by_diameter, by_darkening = self._shape(
+            scene.primary_shape, values[0], values[1], wanted=bool({0, 1} & free)
+        )
         self.coherent = primary.astype(complex)
-        self.total = np.full(np.broadcast_shapes(primary.shape), 1.0 + values[2])
+        self.total = np.full(primary.shape, 1.0 + values[2])
         self._note(0, by_diameter, None)
         self._note(1, by_darkening, None)
         self._note(2, None, np.ones_like(self.total))
@@ -118,7 +120,10 @@ class _Light:
         seen, by_x, by_y = self._attenuation(x, y)
         s = self.sampling
         shape, by_diameter, by_darkening = self._shape(
-            self.scene.companion_shape, diameter, darkening
+            self.scene.companion_shape,
+            diameter,
+            darkening,
+            wanted=bool({start + 4, start + 5} & self.free),
         )
         turn = np.exp((-2j * np.pi * MAS) * (s.u * x + s.v * y))
         beam = tilt * seen  # flux per unit of contrast
@@ -138,8 +143,12 @@ class _Light:
         for k, change in by_ratio.items():
             self._note(k, contrast * change * seen * wave, contrast * change * seen)
 
-    def _shape(self, shape: str, diameter: float, darkening: float) -> tuple[np.ndarray, ...]:
-        """Visibility of a shape and its derivatives by diameter (per mas) and darkening."""
+    def _shape(
+        self, shape: str, diameter: float, darkening: float, *, wanted: bool
+    ) -> tuple[np.ndarray, ...]:
+        """Visibility of a shape, and if `wanted` its derivatives by diameter (mas) and darkening."""
+        if diameter == 0 and not wanted:
+            return np.ones(self.sampling.u.shape), 0.0, 0.0
         scale = np.pi * MAS * self.sampling.modulus
         value, slope = shape_visibility(shape, scale * diameter, darkening)
         return value, slope * scale, darkening_derivative(shape, scale * diameter, darkening)

@@ -1,16 +1,20 @@
 """nodeline search: is there a companion in this epoch, where, how bright, how sure."""
 
+from collections.abc import Callable
+from functools import partial
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
 from ..errors import NothingFound
-from .frame import Json, Seed, emit, say
+from ..files import refuse_existing
+from .frame import Force, Json, Seed, emit, say
 
 if TYPE_CHECKING:
     from ..companion.result import Candidate, SearchResult
 
+SHAPES = "point, disc, linear, power, gaussian or ring."
 CLAIM = 0.01
 """Largest false-alarm probability of a claim, unless told otherwise."""
 
@@ -49,14 +53,40 @@ def search(
     flip_phase: Annotated[
         bool, typer.Option("--flip-phase", help="The files have phases of the opposite sign.")
     ] = False,
+    primary_shape: Annotated[str, typer.Option(help=SHAPES)] = "disc",
+    companion_shape: Annotated[str, typer.Option(help=SHAPES)] = "disc",
+    fix: Annotated[
+        list[str] | None, typer.Option(metavar="NAME=VALUE", help="Fix a parameter; repeatable.")
+    ] = None,
+    fit: Annotated[
+        list[str] | None, typer.Option(metavar="NAME", help="Fit a parameter; repeatable.")
+    ] = None,
+    prior: Annotated[
+        list[str] | None,
+        typer.Option(metavar="NAME=MEAN,SIGMA", help="Fit one with a prior; repeatable."),
+    ] = None,
+    contrast_per_instrument: Annotated[
+        bool, typer.Option("--contrast-per-instrument", help="Each has its own contrast.")
+    ] = False,
     false_alarm: Annotated[
         float, typer.Option(min=0, max=1, help="Claim what noise imitates less often than this.")
     ] = CLAIM,
     noise_searches: Annotated[int, typer.Option(min=100, help="At most.")] = 1000,
+    bootstrap: Annotated[
+        int, typer.Option(min=0, help="Resamplings of the data for errors from their scatter.")
+    ] = 0,
+    pictures: Annotated[
+        Path | None, typer.Option(help="Folder for the map and the data against the model.")
+    ] = None,
     seed: Seed = 0,
+    force: Force = False,
     json: Json = False,
 ) -> None:
-    """Search one night for a companion, everywhere in a field and without a start value."""
+    """Search one night for a companion, everywhere in a field and without a start value.
+
+    Parameters to fix or fit: primary_diameter, primary_darkening, background, and of the companion
+    slope (the power of the wavelength that its contrast follows), diameter, darkening; mas.
+    """
     import astropy.units as u
     import numpy as np
 
@@ -72,13 +102,25 @@ def search(
     for name, value in (("--field", field), ("--step", step), ("--fibre", fibre)):
         if value is not None and not value > 0:
             raise typer.BadParameter(f"{name} must be positive, got {value}")
-    result = look(
-        read(files, target=target, night=night, flip_phase=flip_phase),
+    stars = Stars(
+        primary=primary_shape,
+        companion=companion_shape,
+        fixed={name: values[0] for name, values in map(partial(_named, count=1), fix or ())},
+        free=tuple(fit or ()),
+        priors={name: tuple(v) for name, v in map(partial(_named, count=2), prior or ())},
+        contrast_per_instrument=contrast_per_instrument,
+        fibre_fwhm=fibre,
+    )
+    observation = read(files, target=target, night=night, flip_phase=flip_phase)
+    paths = _picture_paths(pictures, observation.target, observation.mjd, force=force)
+    result = _checked(
+        look,
+        observation,
         field=mas(field),
         step=mas(step),
         diameter=mas(diameter),
         companion_diameter=mas(companion_diameter),
-        stars=Stars(fibre_fwhm=fibre),
+        stars=stars,
         errors=ErrorModel(
             correlated=not ignore_correlations,
             shared_baselines=shared_baselines,
@@ -87,10 +129,19 @@ def search(
         ),
         companions=companions,
         noise_searches=noise_searches,
+        resamplings=bootstrap,
         rng=np.random.default_rng(seed),
         progress=Bar(),
     )
     say(describe(result), json=json)
+    if paths:
+        from ..plots import style
+        from ..plots.epoch import draw_epoch
+        from ..plots.field import draw_field
+
+        style.save(draw_field(result, columns=2), paths[0], force=force)
+        style.save(draw_epoch(observation, result), paths[1], force=force)
+        say(f"  pictures   {paths[0]}, {paths[1]}", json=json)
     if json:
         emit(result.to_json())
     if not result.best.false_alarm_probability < false_alarm:
@@ -98,6 +149,37 @@ def search(
             f"{result.target}: no companion can be claimed: noise alone looks as good in "
             f"{result.best.false_alarm_probability:.2g} of its searches (limit {false_alarm:g})"
         )
+
+
+def _named(text: str, *, count: int) -> tuple[str, list[float]]:
+    """NAME=NUMBER,... as a name and `count` numbers."""
+    name, _, numbers = text.partition("=")
+    try:
+        values = [float(number) for number in numbers.split(",")]
+    except ValueError:
+        values = []
+    if len(values) != count:
+        form = "NAME=VALUE" if count == 1 else "NAME=MEAN,SIGMA"
+        raise typer.BadParameter(f"expected {form}, got {text!r}")
+    return name, values
+
+
+def _checked(look: Callable, *arguments: Any, **options: Any) -> "SearchResult":
+    """Call `look`; a wrong argument is wrong usage here, since all of them come from options."""
+    try:
+        return look(*arguments, **options)
+    except ValueError as error:
+        raise typer.BadParameter(str(error)) from error
+
+
+def _picture_paths(folder: Path | None, target: str, mjd: float, *, force: bool) -> list[Path]:
+    """Where the pictures go, refused before the work where they exist."""
+    if folder is None:
+        return []
+    stem = f"{'-'.join(target.lower().split())}-{mjd:.3f}"
+    paths = [folder / f"{stem}-{what}.png" for what in ("field", "data")]
+    refuse_existing(*paths, force=force)
+    return paths
 
 
 def describe(result: "SearchResult") -> str:
@@ -122,6 +204,12 @@ def describe(result: "SearchResult") -> str:
         lines.append(
             f"  errors are scaled by {best.error_scale:.3f}, for a reduced chi-square of 1; "
             "divide by it for errors as stated"
+        )
+    if result.bootstrap is not None:
+        errors = result.bootstrap.to_json()
+        lines.append(
+            f"  errors by resampling {errors['blocks']} blocks: {errors['separation_err_mas']:.3f} "
+            f"mas, {errors['position_angle_err_deg']:.3f} deg, {errors['contrast_err']:.2g}"
         )
     lines.append(f"  local significance {best.significance_sigma:.1f} sigma; {_chance(result)}")
     lines += [

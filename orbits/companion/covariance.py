@@ -61,9 +61,17 @@ class Covariance:
 
     @classmethod
     def of(
-        cls, observation: Observation, sampling: Sampling, errors: ErrorModel | None = None
+        cls,
+        observation: Observation,
+        sampling: Sampling,
+        errors: ErrorModel | None = None,
+        v2: np.ndarray | None = None,
     ) -> "Covariance":
         """Covariance of the squared visibilities and closure phases of `observation`, stacked.
+
+        `v2` (n_v2,) are the squared visibilities of which a calibration error is a part: those of
+        a model, since noisy ones draw a fit to the low side (Peelle's puzzle; D'Agostini 1994,
+        Nucl. Instrum. Methods A 346, 306). By default they are the data.
 
         Raises
         ------
@@ -75,7 +83,7 @@ class Covariance:
         return cls.build(
             sigma,
             _correlation(observation, sampling, errors),
-            _common(observation, errors),
+            _common(observation, errors, observation.v2.value if v2 is None else v2),
             name=observation.target,
         )
 
@@ -212,12 +220,12 @@ def _shared_baselines(t3: Observable, sampling: Sampling) -> sparse.csr_array:
     return sparse.csr_array(through @ through.T) / 3
 
 
-def _common(observation: Observation, errors: ErrorModel) -> np.ndarray:
+def _common(observation: Observation, errors: ErrorModel, v2: np.ndarray) -> np.ndarray:
     """(n, k) one column for each baseline, and each triangle, of a night."""
     n2, n = len(observation.v2), len(observation.v2) + len(observation.t3)
     columns = []
     for table, first, scale in (
-        (observation.v2, 0, errors.v2_calibration * np.abs(observation.v2.value)),
+        (observation.v2, 0, errors.v2_calibration * np.abs(v2)),
         (observation.t3, n2, np.full(len(observation.t3), errors.t3_calibration)),
     ):
         if not scale.any():

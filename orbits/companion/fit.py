@@ -27,6 +27,8 @@ class Problem:
     n_v2: int
     sampling: Sampling
     covariance: Covariance
+    weights: np.ndarray | None = None
+    """(rank,) how often each whitened datum counts; once where None."""
 
     @classmethod
     def of(cls, observation: Observation, sampling: Sampling, covariance: Covariance) -> "Problem":
@@ -140,6 +142,8 @@ def _linear(problem, scene, values, index, priors) -> tuple[np.ndarray, np.ndarr
     predicted, jacobian = model(scene, values, problem.sampling, index)
     both = np.column_stack([problem.residual(predicted), jacobian])
     white = problem.covariance.whiten(both)
+    if problem.weights is not None:
+        white = white * np.sqrt(problem.weights)[:, None]
     if priors:
         rows = np.zeros((len(priors), both.shape[1]))
         for row, (parameter, (mean, sigma)) in enumerate(priors.items()):

@@ -10,7 +10,7 @@ and N and D over the whole field are one non-uniform Fourier transform each. D d
 the data. For bright companions the chi-square of a ladder of fixed contrasts is mapped likewise.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
@@ -99,6 +99,12 @@ class Field:
         # What is left of complete cancellation (a companion upon the primary) is rounding.
         return np.where(d > 1e-7 * d.max(), d, 0.0) * self.beam**2
 
+    @property
+    def chi2(self) -> float:
+        """Of the data about the null, at the best values of its parameters to first order."""
+        white = self.project(self.residual)
+        return float(white @ white)
+
     @cached_property
     def _precision(self):
         return self.covariance.whitener.T @ self.covariance.whitener
@@ -125,19 +131,20 @@ class Field:
         diameter = np.full_like(gain, self.null.values[0])
         return Maps(self.grid, contrast, error, gain, diameter)
 
-    def all_contrasts(self, best: Maps) -> Maps:
-        """The maps `best` of a faint companion, improved wherever a bright one fits better."""
+    def all_contrasts(self, faint: Maps) -> Maps:
+        """The maps `faint`, improved wherever a bright companion fits better."""
+        gain, contrast, diameter = faint.gain.copy(), faint.contrast.copy(), faint.diameter.copy()
+        beam = np.broadcast_to(self.beam, gain.shape)
         reference = self.residual @ self.residual
-        fitted = 0 in self.null.free
-        for part in _DIAMETERS if fitted and self.null.values[0] else (1.0,):
-            for contrast in CONTRASTS:
-                diameter = part * self.null.values[0]
-                gain = reference - self._chi2(contrast, diameter)
-                better = (gain > best.gain) & (contrast <= np.asarray(self.beam))
-                best.gain[better] = gain[better]
-                best.contrast[better] = np.broadcast_to(contrast / self.beam, gain.shape)[better]
-                best.diameter[better] = diameter
-        return best
+        fitted = 0 in self.null.free and self.null.values[0] > 0
+        for part in _DIAMETERS if fitted else (1.0,):
+            for flux in CONTRASTS:
+                trial = reference - self._chi2(flux, part * self.null.values[0])
+                better = (trial > gain) & (flux <= beam)
+                gain[better] = trial[better]
+                contrast[better] = flux / beam[better]
+                diameter[better] = part * self.null.values[0]
+        return replace(faint, gain=gain, contrast=contrast, diameter=diameter)
 
     def _chi2(self, contrast: float, diameter: float) -> np.ndarray:
         """(side, side) chi-square of a binary of fixed contrast, its nuisance linearised."""

@@ -7,6 +7,7 @@ import astropy.units as u
 import numpy as np
 
 from ..positions import position_angle
+from .bootstrap import Bootstrap
 from .fit import Fit
 from .maps import Maps
 from .significance import FalseAlarms
@@ -128,6 +129,8 @@ class SearchResult:
     extrapolated: bool
     """True where the false-alarm probability goes beyond the counts of the noise searches."""
     seconds: float
+    bootstrap: Bootstrap | None = None
+    """Refits of the best solution to resampled data, where asked for."""
     previous: "SearchResult | None" = None
     """The search for the first companion, where this is the one for the second."""
 
@@ -152,6 +155,8 @@ class SearchResult:
             "step_mas": self.maps.grid.step,
             "seconds": self.seconds,
         }
+        if self.bootstrap is not None:
+            result["best"]["bootstrap"] = self.bootstrap.to_json()
         if self.previous is not None:
             result["first_companion"] = self.previous.to_json()
         return result

@@ -7,12 +7,13 @@ from dataclasses import dataclass, field, replace
 import astropy.units as u
 import numpy as np
 
-from ..binary import PRIMARY, Scene, companion_name
+from ..binary import PRIMARY, Scene, companion_name, model
 from ..constants import MAS
 from ..errors import InputError, NothingFound
 from ..observation import Observation
 from ..progress import SILENT, Silent
 from ..sampling import Sampling
+from .bootstrap import Bootstrap, bootstrap
 from .covariance import Covariance, ErrorModel
 from .fit import Fit, Problem, fit, polish
 from .grid import Grid
@@ -70,6 +71,7 @@ def search(
     companions: int = 1,
     smearing: bool = True,
     noise_searches: int = NOISE_SEARCHES,
+    resamplings: int = 0,
     rng: np.random.Generator | None = None,
     progress: Silent = SILENT,
 ) -> SearchResult:
@@ -101,6 +103,9 @@ def search(
     noise_searches : int
         How many noise realisations measure the false-alarm probability; fewer are used where the
         answer is beyond doubt, and with 0 it is not measured.
+    resamplings : int
+        How many resamplings of the data's independent blocks the best solution is fitted to, for
+        errors that do not rest on the stated ones.
     rng : Generator, optional
         Of the noise realisations; by default one with seed 0, so that an epoch has one answer.
 
@@ -121,8 +126,10 @@ def search(
     for count in range(1, companions + 1):
         epoch = Epoch(observation, stars, grid, errors, count, smearing)
         result = epoch.search(result, noise_searches, rng, progress)
-        result = replace(result, seconds=time.perf_counter() - began)
-    return result
+    if resamplings:
+        resampled = epoch.bootstrap(result.best, resamplings, rng, progress)
+        result = replace(result, bootstrap=resampled)
+    return replace(result, seconds=time.perf_counter() - began)
 
 
 def choose_grid(
@@ -178,22 +185,42 @@ class Epoch:
             for name, prior in stars.priors.items()
             if name in self.scene.names
         }
-        sampling = Sampling.of(observation, radius=0.0, smearing=smearing)
-        self.covariance = Covariance.of(observation, sampling, errors)
-        self._problems: dict[float, Problem] = {}
+        self.errors = errors or ErrorModel()
+        self._samplings: dict[float, Sampling] = {}
+        self.calibrate(None)
 
     def problem(self, radius: float) -> Problem:
         """The data, sampled finely enough for companions within `radius` mas."""
         reach = self.grid.step
         while reach < radius:
             reach *= 2
-        if reach not in self._problems:
-            sampling = Sampling.of(self.observation, radius=reach, smearing=self.smearing)
-            self._problems[reach] = Problem.of(self.observation, sampling, self.covariance)
-        return self._problems[reach]
+        return Problem.of(self.observation, self._sampled(reach), self.covariance)
+
+    def _sampled(self, reach: float) -> Sampling:
+        if reach not in self._samplings:
+            self._samplings[reach] = Sampling.of(
+                self.observation, radius=reach, smearing=self.smearing
+            )
+        return self._samplings[reach]
+
+    def calibrate(self, by: Fit | None) -> None:
+        """Make calibration errors a part of the V2 of the fit `by`, or of the data without one."""
+        v2 = None
+        if by is not None:
+            v2 = model(by.scene, by.values, self.problem(_extent(by)).sampling)[0]
+            v2 = v2[: len(self.observation.v2)]
+        still = self._sampled(0.0)
+        self.covariance = Covariance.of(self.observation, still, self.errors, v2)
 
     def null(self, previous: SearchResult | None) -> Fit:
         """The scene without the companion to be found: a star, or the best solution so far."""
+        null = self._null(previous)
+        if self.errors.v2_calibration:
+            self.calibrate(null)
+            null = self._again(null)
+        return null
+
+    def _null(self, previous: SearchResult | None) -> Fit:
         if previous is not None:
             return previous.best.fit
         free = tuple(i for i in self.free if i < len(PRIMARY))
@@ -203,6 +230,17 @@ class Epoch:
         if 0 in free:
             start = single_star(problem, self.before, diameter=None, values=start).values
         return fit(problem, self.before, start, free, priors)
+
+    def _again(self, one: Fit) -> Fit:
+        """Fit anew from `one`, as the covariance is now."""
+        return polish(self.problem(_extent(one)), one)
+
+    def field(self, null: Fit) -> Field:
+        """The maps' side of the search, about the scene `null`."""
+        companion = (self.stars.companion, self.stars.fixed.get("diameter", 0.0))
+        return Field(
+            self.observation, self.covariance, null, self.grid, companion, smearing=self.smearing
+        )
 
     def search(
         self,
@@ -215,10 +253,7 @@ class Epoch:
         null = self.null(previous)
         # What the search for the first companion found worth fitting is fitted again.
         self.free = tuple(sorted({*self.free, *null.free}))
-        companion = (self.stars.companion, self.stars.fixed.get("diameter", 0.0))
-        field = Field(
-            self.observation, self.covariance, null, self.grid, companion, smearing=self.smearing
-        )
+        field = self.field(null)
         faint = field.faint()
         maps = field.all_contrasts(faint) if self.last == 0 else faint
         fits = self.resolved(self.solutions(maps, null))
@@ -227,8 +262,11 @@ class Epoch:
                 f"{self.observation.target}: no companion within "
                 f"{self.grid.half * self.grid.step:.4g} mas fits better than none"
             )
-        white = field.project(field.residual)
-        top = scaled(field, faint.gain, white @ white)
+        if self.errors.v2_calibration:
+            self.calibrate(fits[0])
+            null = self._again(null)
+            fits = sorted((self._again(one) for one in fits), key=lambda one: one.chi2)
+        top = scaled(field, faint.gain, field.chi2)
         looks = 1
         exact = (null.chi2 - fits[0].chi2) / max(1.0, fits[0].reduced)
         if exact > _BEYOND_LINEAR * top:
@@ -258,6 +296,16 @@ class Epoch:
             previous=previous,
         )
 
+    def bootstrap(
+        self, best: Candidate, count: int, rng: np.random.Generator, progress: Silent = SILENT
+    ) -> Bootstrap:
+        """Refit a solution to `count` resamplings of the data."""
+        problem = self.problem(_extent(best.fit))
+        return bootstrap(
+            self.observation, problem, best.fit,
+            companion=self.last, count=count, rng=rng, progress=progress,
+        )  # fmt: skip
+
     def solutions(self, maps: Maps, null: Fit) -> list[Fit]:
         """Distinct exact solutions from every peak that could be the answer, the best first."""
         starts = [self._start(null, maps, *place) for place in _peaks(maps.gain)]
@@ -284,9 +332,9 @@ class Epoch:
         if not fits or own in self.free or not self.stars.may_resolve:
             return fits
         self.free = tuple(sorted((*self.free, own)))
-        larger = [self._resolve(one) for one in fits]
-        best = min(larger, key=lambda one: one.chi2)
+        best = self._resolve(fits[0])
         if fits[0].chi2 - best.chi2 > RESOLVED * max(1.0, best.reduced):
+            larger = [best, *(self._resolve(one) for one in fits[1:])]
             return sorted(filter(self._inside, larger), key=lambda one: one.chi2)
         self.free = tuple(i for i in self.free if i != own)
         return fits
@@ -322,7 +370,7 @@ class Epoch:
         """Polish a fit and add it to those `found`, once, as a companion fainter than its star."""
         if not self._inside(rough):
             return
-        one = polish(self.problem(self._reach(rough)), rough)
+        one = polish(self.problem(_extent(rough)), rough)
         for fair in self._no_brighter(one):
             if self._inside(fair) and not any(self._same(fair, other) for other in found):
                 found.append(fair)
@@ -337,7 +385,7 @@ class Epoch:
         values = one.values.copy()
         values[contrast] = 1.0
         free = tuple(i for i in self.free if i != contrast)
-        bound = fit(self.problem(self._reach(one)), self.scene, values, free, self.priors)
+        bound = fit(self.problem(_extent(one)), self.scene, values, free, self.priors)
         return [*fair, bound]
 
     def _opposite(self, values: np.ndarray) -> np.ndarray:
@@ -366,12 +414,17 @@ class Epoch:
         apart = np.hypot(*(one.values[[x, y]] - other.values[[x, y]]))
         return apart < self.grid.step / 2
 
-    def _reach(self, one: Fit) -> float:
-        x, y = self._indices("x", "y")
-        return 1.2 * float(np.hypot(one.values[x], one.values[y]))
-
     def _indices(self, *names: str) -> list[int]:
         return [self.scene.names.index(companion_name(name, self.last)) for name in names]
+
+
+def _extent(one: Fit) -> float:
+    """Distance within which all stars of a scene lie, with room for a fit to move, mas."""
+    places = (
+        np.hypot(one.value(companion_name("x", i)), one.value(companion_name("y", i)))
+        for i in range(one.scene.companions)
+    )
+    return 1.2 * float(max(places, default=0.0))
 
 
 def _settled_stars(
