@@ -146,7 +146,7 @@ class _Light:
     def _shape(
         self, shape: str, diameter: float, darkening: float, *, wanted: bool
     ) -> tuple[np.ndarray, ...]:
-        """Visibility of a shape, and if `wanted` its derivatives by diameter (mas) and darkening."""
+        """Visibility of a shape, and if `wanted` its slopes by diameter (mas) and darkening."""
         if diameter == 0 and not wanted:
             return np.ones(self.sampling.u.shape), 0.0, 0.0
         scale = np.pi * MAS * self.sampling.modulus
@@ -188,23 +188,32 @@ def companion_name(name: str, companion: int) -> str:
 
 
 def bispectrum(visibility: np.ndarray, sampling: Sampling) -> np.ndarray:
-    """Bispectra V(A->B) V(B->C) conj V(A->C), averaged over time.
+    """Bispectra V(A->B) V(B->C) conj V(A->C) of the closure phases, averaged over time.
 
     `visibility` has the shape (m, T) of the samples; the result (n_t3,).
     """
-    a, b, c = np.moveaxis(_sides(visibility, sampling), 1, 0)
-    return (a * b * c) @ sampling.time_weights
+    return sides(visibility, sampling.t3, sampling.turned).prod(axis=1) @ sampling.time_weights
+
+
+def sides(visibility: np.ndarray, samples: np.ndarray, turned: np.ndarray) -> np.ndarray:
+    """(..., n, 3, T) visibilities (..., m, T) of the sides of triangles as they enter a product.
+
+    `samples` (n, 3) are their samples; those `turned` (n, 3) enter conjugated.
+    """
+    chosen = visibility[..., samples, :]
+    return np.where(turned[:, :, None], np.conj(chosen), chosen)
 
 
 def model(
     scene: Scene, values: np.ndarray, sampling: Sampling, free: Sequence[int] = ()
 ) -> tuple[np.ndarray, np.ndarray]:
-    """Squared visibilities and closure phases (rad), stacked, and their Jacobian.
+    """All data of a scene, stacked in the order of `sampling.SAMPLED`, and their Jacobian.
 
     Returns
     -------
-    data : ndarray of shape (n_v2 + n_t3,)
-    jacobian : ndarray of shape (n_v2 + n_t3, len(free))
+    data : ndarray of shape (n,)
+        Squared visibilities, closure phases (rad), triple amplitudes, visibility amplitudes.
+    jacobian : ndarray of shape (n, len(free))
         Derivatives by the parameters whose indices are `free`.
     """
     seen, by = scene.visibility(values, sampling, free)
@@ -212,17 +221,30 @@ def model(
     own, own_by = seen[sampling.v2], by[:, sampling.v2]
     v2 = (np.abs(own) ** 2) @ weights
     v2_by = 2 * (np.conj(own) * own_by).real @ weights
-    a, b, c = np.moveaxis(_sides(seen, sampling), 1, 0)
-    triple = (a * b * c) @ weights
-    a_by, b_by, c_by = np.moveaxis(_sides(by, sampling), 2, 0)
-    triple_by = (a_by * b * c + a * b_by * c + a * b * c_by) @ weights
+    triple, triple_by = _triple(seen, by, sampling.t3, sampling.turned, weights)
     # d arg T = Im(dT / T); at an exact null the phase has no derivative.
     power = np.abs(triple) ** 2
     t3_by = (np.conj(triple) * triple_by).imag / np.where(power > 0, power, 1.0)
+    product, product_by = _triple(seen, by, sampling.t3amp, sampling.t3amp_turned, weights)
+    t3amp, t3amp_by = _modulus(product, product_by)
+    visamp, visamp_by = _modulus(seen[sampling.visamp], by[:, sampling.visamp])
     return (
-        np.concatenate([v2, np.angle(triple)]),
-        np.concatenate([v2_by, t3_by], axis=1).T,
+        np.concatenate([v2, np.angle(triple), t3amp, visamp @ weights]),
+        np.concatenate([v2_by, t3_by, t3amp_by, visamp_by @ weights], axis=1).T,
     )
+
+
+def _triple(seen, by, samples, turned, weights) -> tuple[np.ndarray, np.ndarray]:
+    """(n,) products of the sides of triangles, averaged over time, and derivatives (p, n)."""
+    a, b, c = np.moveaxis(sides(seen, samples, turned), 1, 0)
+    a_by, b_by, c_by = np.moveaxis(sides(by, samples, turned), 2, 0)
+    return (a * b * c) @ weights, (a_by * b * c + a * b_by * c + a * b * c_by) @ weights
+
+
+def _modulus(value: np.ndarray, by: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Modulus of complex `value` and its derivatives; at an exact null it has none."""
+    size = np.abs(value)
+    return size, (np.conj(value) * by).real / np.where(size > 0, size, 1.0)
 
 
 def predict(
@@ -247,10 +269,5 @@ def predict(
     reach = max(*offsets, abs(values.get("primary_diameter", 0)), 0)
     sampling = Sampling.of(observation, radius=reach, smearing=smearing)
     data, _ = model(scene, vector, sampling)
-    return data[: len(observation.v2)], data[len(observation.v2) :]
-
-
-def _sides(visibility: np.ndarray, sampling: Sampling) -> np.ndarray:
-    """(..., n_t3, 3, T) visibilities of the sides as they enter the bispectrum."""
-    sides = visibility[..., sampling.t3, :]
-    return np.where(sampling.turned[:, :, None], np.conj(sides), sides)
+    n2, n3 = len(observation.v2), len(observation.t3)
+    return data[:n2], data[n2 : n2 + n3]

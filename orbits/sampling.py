@@ -15,6 +15,8 @@ import numpy as np
 from .constants import DAY, MAS
 from .observation import Observable, Observation
 
+SAMPLED = ("v2", "t3", "t3amp", "visamp")
+"""The observables of which there is a model, in the order in which data are stacked."""
 _SAME_BASELINE = 1e-6
 """m; sides that agree to this are one: 1e-5 of a turn at 1 arcsec and 0.5 um."""
 _MOST_NODES = 40
@@ -44,6 +46,12 @@ class Sampling:
     """(n_t3, 3) the samples of the sides A->B, B->C, A->C."""
     turned: np.ndarray
     """(n_t3, 3) True where the side enters the bispectrum as the conjugate of its sample."""
+    t3amp: np.ndarray
+    """(n_t3amp, 3) as `t3`, for triple amplitudes."""
+    t3amp_turned: np.ndarray
+    """(n_t3amp, 3) as `turned`."""
+    visamp: np.ndarray
+    """(n_visamp,) the sample of each visibility amplitude."""
 
     def __len__(self) -> int:
         return len(self.u)
@@ -68,13 +76,17 @@ class Sampling:
         during an integration, that such a source can cause, so that its smeared visibility is
         right to `precision`; without `smearing` it is one.
         """
-        v2, t3 = observation.v2, observation.t3
-        legs, rates = zip(*(_sides(table) for table in (v2, t3)), strict=True)
+        tables = [getattr(observation, name) for name in SAMPLED]
+        legs, rates = zip(*(_sides(table) for table in tables), strict=True)
         leg = np.concatenate([part.reshape(-1, 2) for part in legs])
         rate = np.concatenate([part.reshape(-1, 2) for part in rates])
-        repeat = np.concatenate([np.arange(len(v2)), len(v2) + np.repeat(np.arange(len(t3)), 3)])
         both = {
-            name: np.concatenate([getattr(v2, name), getattr(t3, name)])[repeat]
+            name: np.concatenate(
+                [
+                    np.repeat(getattr(table, name), part.shape[1])
+                    for table, part in zip(tables, legs, strict=True)
+                ]
+            )
             for name in ("wavelength", "bandwidth", "integration", "instrument")
         }
         turned = (leg[:, 0] < 0) | ((leg[:, 0] == 0) & (leg[:, 1] < 0))
@@ -101,7 +113,11 @@ class Sampling:
         wavelength = channel[0][:, None] + channel[1][:, None] * band_nodes / 2
         moving = leg[first][:, None, :] + drift[first][:, None, :] * time_nodes[:, None] / 2
         frequency = moving[:, :, None, :] / wavelength[:, None, :, None]
-        n = len(v2)
+        ends = np.cumsum([part.shape[0] * part.shape[1] for part in legs])[:-1]
+        v2, t3, t3amp, visamp = np.split(which, ends)
+        # The third side of a triangle closes it: it enters conjugated.
+        third = np.array([False, False, True])
+        _, t3_turned, t3amp_turned, _ = np.split(turned, ends)
         return cls(
             u=frequency[..., 0],
             v=frequency[..., 1],
@@ -109,10 +125,12 @@ class Sampling:
             time_weights=time_weights,
             band_weights=band_weights,
             instrument=both["instrument"][first].astype(int),
-            v2=which[:n],
-            t3=which[n:].reshape(-1, 3),
-            # The third side closes the triangle: it enters conjugated.
-            turned=turned[n:].reshape(-1, 3) ^ np.array([False, False, True]),
+            v2=v2,
+            t3=t3.reshape(-1, 3),
+            turned=t3_turned.reshape(-1, 3) ^ third,
+            t3amp=t3amp.reshape(-1, 3),
+            t3amp_turned=t3amp_turned.reshape(-1, 3) ^ third,
+            visamp=visamp,
         )
 
 

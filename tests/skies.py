@@ -4,10 +4,10 @@ from dataclasses import replace
 
 import numpy as np
 
-from orbits.binary import predict
+from orbits.binary import Scene, model
 from orbits.companion.covariance import Covariance
 from orbits.observation import Observable, Observation
-from orbits.sampling import Sampling
+from orbits.sampling import SAMPLED, Sampling
 
 
 def table(legs, wavelength, *, bandwidth=0.0, value=0.0, error=1.0, integration=0.0, mjd=0.0):
@@ -77,16 +77,27 @@ def four_stations(*, exposures=1, channels=1, stations=4, wavelength=(1.5e-6, 1.
     )
 
 
-def fill(blank, rng=None, scene=None, *, errors=None, **values):
-    """`blank` with the values of a scene, and noise from `rng` unless it is None."""
-    v2, t3 = predict(blank, scene, **values)
-    noise = np.zeros(len(v2) + len(t3))
-    if rng is not None:
-        covariance = Covariance.of(blank, Sampling.of(blank, radius=0.0), errors)
-        noise = covariance.draw(rng)
-    n = len(v2)
+def with_amplitudes(blank):
+    """`blank` with triple and visibility amplitudes where it has closure phases and V2."""
     return replace(
         blank,
-        v2=replace(blank.v2, value=v2 + noise[:n]),
-        t3=replace(blank.t3, value=wrapped(t3 + noise[n:])),
+        t3amp=replace(blank.t3, error=np.full(len(blank.t3), 0.02)),
+        visamp=replace(blank.v2, error=np.full(len(blank.v2), 0.01)),
     )
+
+
+def fill(blank, rng=None, scene=None, *, errors=None, **values):
+    """`blank` with the values of a scene, and noise from `rng` unless it is None."""
+    scene = Scene() if scene is None else scene
+    sampling = Sampling.of(blank, radius=60.0)
+    data, _ = model(scene, scene.vector(values), sampling)
+    if rng is not None:
+        v2 = data[: len(blank.v2)]
+        data = data + Covariance.of(blank, sampling, errors, v2).draw(rng)
+    tables, first = {}, 0
+    for name in SAMPLED:
+        table = getattr(blank, name)
+        value = data[first : first + len(table)]
+        tables[name] = replace(table, value=wrapped(value) if name == "t3" else value)
+        first += len(table)
+    return replace(blank, **tables)

@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 from numpy.testing import assert_allclose
-from skies import epoch, wrapped
+from skies import epoch, with_amplitudes, wrapped
 
 from orbits.binary import Scene, bispectrum, model, predict
 from orbits.constants import MAS
@@ -121,6 +121,17 @@ def test_exchanging_the_stars_changes_nothing():
     assert_allclose(wrapped(one[1] - two[1]), 0, atol=1e-13)
 
 
+def test_amplitudes_are_moduli_of_what_phases_are_angles_of():
+    observation = with_amplitudes(epoch(v2_legs=BASELINES, t3_legs=TRIANGLES))
+    scene = Scene()
+    values = scene.vector({"x": 2.0, "y": 5.0, "contrast": 0.4, "primary_diameter": 1.0})
+    sampling = Sampling.of(observation, radius=10.0)
+    v2, t3, t3amp, visamp = np.split(model(scene, values, sampling)[0], [5, 8, 11])
+    triple = bispectrum(scene.visibility(values, sampling)[0], sampling)
+    assert_allclose(t3amp * np.exp(1j * t3), triple, atol=1e-15)
+    assert_allclose(visamp**2, v2, atol=1e-15)
+
+
 def test_background_lowers_the_contrast_of_the_fringes():
     observation = epoch(v2_legs=BASELINES, t3_legs=TRIANGLES)
     plain = predict(observation, x=2.0, contrast=0.25)
@@ -194,6 +205,7 @@ def test_jacobian_is_the_slope_of_the_model():
         v2_legs=BASELINES, t3_legs=TRIANGLES, wavelength=[1.5e-6, 1.7e-6], bandwidth=0.05e-6
     )
     observation.v2.instrument[::3] = 1
+    observation = with_amplitudes(observation)
     scene = Scene(
         primary_shape="linear", companion_shape="power", companions=2, instruments=2,
         reference=1.6e-6, fibre_fwhm=80.0,

@@ -15,6 +15,7 @@ from ..binary import companion_name
 from ..errors import InputError
 from ..observation import Observation
 from ..progress import SILENT, Silent
+from ..sampling import SAMPLED
 from .covariance import Covariance
 from .fit import Fit, Problem, fit
 
@@ -106,8 +107,9 @@ def bootstrap(
 
 def independent_blocks(observation: Observation, covariance: Covariance) -> np.ndarray:
     """(n,) number of the independent block that each datum belongs to, from 0."""
-    rows = np.concatenate([observation.v2.row, observation.t3.row])
-    kind = np.concatenate([np.zeros(len(observation.v2)), np.ones(len(observation.t3))])
+    tables = [getattr(observation, name) for name in SAMPLED]
+    rows = np.concatenate([table.row for table in tables])
+    kind = np.repeat(np.arange(len(tables)), [len(table) for table in tables])
     _, row = np.unique(np.column_stack([kind, rows]), axis=0, return_inverse=True)
     n = len(rows)
     members = [

@@ -13,7 +13,7 @@ from scipy import sparse
 
 from ..errors import InputError
 from ..observation import Observable, Observation
-from ..sampling import Sampling
+from ..sampling import SAMPLED, Sampling
 
 _SINGULAR = 1e-8
 """Eigenvalues of a correlation block below this part of the largest are taken for zero: sets of
@@ -67,7 +67,7 @@ class Covariance:
         errors: ErrorModel | None = None,
         v2: np.ndarray | None = None,
     ) -> "Covariance":
-        """Covariance of the squared visibilities and closure phases of `observation`, stacked.
+        """Covariance of the data of `observation`, stacked in the order of `sampling.SAMPLED`.
 
         `v2` (n_v2,) are the squared visibilities of which a calibration error is a part: those of
         a model, since noisy ones draw a fit to the low side (Peelle's puzzle; D'Agostini 1994,
@@ -79,7 +79,7 @@ class Covariance:
             If the correlations that the files list cannot be those of any errors.
         """
         errors = ErrorModel() if errors is None else errors
-        sigma = np.concatenate([observation.v2.error, observation.t3.error])
+        sigma = np.concatenate([getattr(observation, name).error for name in SAMPLED])
         return cls.build(
             sigma,
             _correlation(observation, sampling, errors),
@@ -195,15 +195,16 @@ def _correlation(observation, sampling, errors) -> sparse.sparray | None:
     listed = observation.correlation if errors.correlated else None
     if not errors.shared_baselines or not len(observation.t3):
         return listed
-    n, n2 = len(observation.v2) + len(observation.t3), len(observation.v2)
-    shared = sparse.block_array(
-        [[sparse.eye_array(n2), None], [None, _shared_baselines(observation.t3, sampling)]]
-    ) if n2 else _shared_baselines(observation.t3, sampling)  # fmt: skip
+    sizes = [len(getattr(observation, name)) for name in SAMPLED]
+    n = sum(sizes)
+    blocks = [sparse.eye_array(size) for size in sizes]
+    blocks[1] = _shared_baselines(observation.t3, sampling)
+    shared = sparse.block_diag([b for b in blocks if b.shape[0]], format="csr")
     if listed is None:
-        return sparse.csr_array(shared)
+        return shared
     told = np.diff(sparse.csr_array(listed).indptr) > 1  # data with any listed correlation
     free = sparse.diags_array((~told).astype(float))
-    off = sparse.csr_array(shared) - sparse.eye_array(n)
+    off = shared - sparse.eye_array(n)
     return sparse.csr_array(listed + free @ off @ free)
 
 
@@ -222,7 +223,7 @@ def _shared_baselines(t3: Observable, sampling: Sampling) -> sparse.csr_array:
 
 def _common(observation: Observation, errors: ErrorModel, v2: np.ndarray) -> np.ndarray:
     """(n, k) one column for each baseline, and each triangle, of a night."""
-    n2, n = len(observation.v2), len(observation.v2) + len(observation.t3)
+    n2, n = len(observation.v2), sum(len(getattr(observation, name)) for name in SAMPLED)
     columns = []
     for table, first, scale in (
         (observation.v2, 0, errors.v2_calibration * np.abs(v2)),

@@ -7,7 +7,7 @@ import numpy as np
 
 from ..binary import Scene, model
 from ..observation import Observation
-from ..sampling import Sampling
+from ..sampling import SAMPLED, Sampling
 from .covariance import Covariance
 
 _STEPS = 60
@@ -23,8 +23,9 @@ class Problem:
     """Data with their covariance and samples: all that a fit of any scene needs."""
 
     data: np.ndarray
-    """(n,) squared visibilities, then closure phases in rad."""
-    n_v2: int
+    """(n,) stacked in the order of `sampling.SAMPLED`; closure phases in rad."""
+    phases: slice
+    """Which of them are phases."""
     sampling: Sampling
     covariance: Covariance
     weights: np.ndarray | None = None
@@ -33,14 +34,16 @@ class Problem:
     @classmethod
     def of(cls, observation: Observation, sampling: Sampling, covariance: Covariance) -> "Problem":
         """The data of `observation`."""
-        data = np.concatenate([observation.v2.value, observation.t3.value])
-        return cls(data, len(observation.v2), sampling, covariance)
+        data = np.concatenate([getattr(observation, name).value for name in SAMPLED])
+        first = len(observation.v2)
+        phases = slice(first, first + len(observation.t3))
+        return cls(data, phases, sampling, covariance)
 
     def residual(self, predicted: np.ndarray) -> np.ndarray:
         """(n,) data minus `predicted`, closure phases wrapped into [-pi, pi)."""
         difference = self.data - predicted
-        phase = difference[self.n_v2 :]
-        difference[self.n_v2 :] = (phase + np.pi) % (2 * np.pi) - np.pi
+        phase = difference[self.phases]
+        difference[self.phases] = (phase + np.pi) % (2 * np.pi) - np.pi
         return difference
 
 

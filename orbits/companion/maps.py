@@ -153,8 +153,8 @@ class Field:
         values[0] = diameter
         visibility, _ = null.scene.visibility(values, self.sampling)
         _, jacobian = model(null.scene, values, self.sampling, null.free)
-        # The companion's light dilutes what a change of the primary does.
-        jacobian[: self.problem.n_v2] /= (1 + contrast / self.flux) ** 2
+        # The companion's light dilutes what a change of the primary does to V2.
+        jacobian[: len(self.sampling.v2)] /= (1 + contrast / self.flux) ** 2
         residual = bright_residual(
             self.sampling, visibility, self.flux, self.companion, contrast, self.problem.data
         )

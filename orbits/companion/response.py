@@ -11,8 +11,9 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import sparse
 
+from ..binary import sides
 from ..constants import MAS
-from ..sampling import Sampling
+from ..sampling import SAMPLED, Sampling
 from ..visibility import shape_visibility
 from .grid import Grid
 
@@ -75,7 +76,7 @@ class Response:
 def faint_response(
     sampling: Sampling, visibility: np.ndarray, flux: float, companion: tuple[str, float]
 ) -> Response:
-    """Derivative of V2 and closure phase by the contrast of a companion that is not there yet.
+    """Derivative of the data by the contrast of a companion that is not there yet.
 
     Parameters
     ----------
@@ -91,20 +92,32 @@ def faint_response(
     v2 = _Entries(sampling, shape, first=0)
     v2.constant(-2 * (np.abs(own) ** 2 @ weights) / flux)
     v2.waves(sampling.v2, 2 * np.conj(own) * weights / flux)
-    t3 = _Entries(sampling, shape, first=len(sampling.v2))
-    sides = visibility[sampling.t3]
-    sides = np.where(sampling.turned[:, :, None], np.conj(sides), sides)  # (n_t3, 3, T)
-    others = _others(sides)
-    triple = (sides.prod(axis=1) @ weights)[:, None, None]
-    floor = _NULL**2 * (np.abs(others) ** 2 @ weights).sum(axis=1)[:, None, None]
+    t3 = _Entries(sampling, shape, first=v2.end(len(sampling.v2)))
+    by_side, _ = _logarithmic(visibility, sampling.t3, sampling.turned, weights)
+    # A phase is the imaginary part of a logarithm.
+    t3.triangles(sampling.t3, sampling.turned, -1j * by_side / flux)
+    t3amp = _Entries(sampling, shape, first=t3.end(len(sampling.t3)))
+    by_side, size = _logarithmic(visibility, sampling.t3amp, sampling.t3amp_turned, weights)
+    t3amp.constant(-3 * size / flux)
+    t3amp.triangles(sampling.t3amp, sampling.t3amp_turned, size[:, None, None] * by_side / flux)
+    visamp = _Entries(sampling, shape, first=t3amp.end(len(sampling.t3amp)))
+    own = visibility[sampling.visamp]
+    modulus = np.abs(own)
+    visamp.constant(-(modulus @ weights) / flux)
+    direction = np.conj(own) / np.where(modulus > 0, modulus, 1.0)
+    visamp.waves(sampling.visamp, direction * weights / flux)
+    return _response(sampling, v2, t3, t3amp, visamp)
+
+
+def _logarithmic(visibility, samples, turned, weights) -> tuple[np.ndarray, np.ndarray]:
+    """Derivatives of the log of bispectra by their sides (n, 3, T), and their moduli (n,)."""
+    each = sides(visibility, samples, turned)
+    others = _others(each)
+    triple = each.prod(axis=1) @ weights
+    floor = _NULL**2 * (np.abs(others) ** 2 @ weights).sum(axis=1)
     floor += np.finfo(float).tiny  # where two sides are null the phase says nothing
-    by_side = others * weights * np.conj(triple) / (np.abs(triple) ** 2 + floor) / flux
-    for side in range(3):
-        # Im(c w) = Re(-i c w), and Im(c w*) = Re(i c* w).
-        c = by_side[:, side]
-        turned = sampling.turned[:, side, None]
-        t3.waves(sampling.t3[:, side], np.where(turned, 1j * np.conj(c), -1j * c))
-    return _response(sampling, v2, t3)
+    scale = np.conj(triple) / (np.abs(triple) ** 2 + floor)
+    return others * weights * scale[:, None, None], np.abs(triple)
 
 
 def bright_residual(
@@ -115,39 +128,62 @@ def bright_residual(
     contrast: float,
     data: np.ndarray,
 ) -> Response:
-    """Data minus the model of a binary of fixed contrast, for `data` (n_v2 + n_t3,).
+    """Data minus the model of a binary of fixed contrast, for stacked `data` (n,).
 
-    Exact for V2 where smearing does not matter. A closure phase enters as the part of the
-    bispectrum across the observed phase over its root-mean-square modulus: the residual to first
-    order, which a map needs to point at the peaks; the exact model judges those.
+    Exact for V2 where smearing does not matter. A bispectrum enters as its part across the observed
+    closure phase over its root-mean-square modulus, and amplitudes as their parts along the phase
+    of the scene so far: residuals to first order, which a map needs to point at the peaks; the
+    exact model judges those.
     """
     shape, weights = _companion(sampling, *companion), sampling.time_weights
-    n2 = len(sampling.v2)
     first = (flux * visibility) @ weights  # (m,)
     second = contrast * (shape @ sampling.band_weights) @ weights
     total = flux + contrast
     v2 = _Entries(sampling, shape, first=0)
     own, other = first[sampling.v2], second[sampling.v2]
-    v2.constant(data[:n2] - (np.abs(own) ** 2 + other**2) / total**2)
+    v2.constant(data[: v2.end(len(own))] - (np.abs(own) ** 2 + other**2) / total**2)
     v2.waves(sampling.v2, -2 * contrast * np.conj(own)[:, None] * weights / total**2)
-    t3 = _Entries(sampling, shape, first=n2)
-    a = first[sampling.t3]
-    a = np.where(sampling.turned, np.conj(a), a)
-    b = second[sampling.t3]
-    ahead, behind = b * _others(a), a * _others(b)  # coefficients of w and of its conjugate
-    middle = a.prod(axis=1) + b.prod(axis=1)
-    size = np.sqrt(np.abs(middle) ** 2 + (np.abs(ahead) ** 2 + np.abs(behind) ** 2).sum(axis=1))
-    across = 1j * np.exp(-1j * data[n2:]) / size
-    t3.constant((across * middle).real)
-    for side in range(3):
-        plain, mirrored = across * ahead[:, side], across * behind[:, side]
-        turned = sampling.turned[:, side]
-        c = np.where(turned, mirrored + np.conj(plain), plain + np.conj(mirrored))
-        # The wave carries the companion's shape already: take out its mean, put in the nodes'.
-        mean = b[:, side] / contrast
-        scale = np.divide(c, mean, out=np.zeros_like(c), where=mean != 0)
-        t3.waves(sampling.t3[:, side], scale[:, None] * weights)
-    return _response(sampling, v2, t3)
+    t3 = _Entries(sampling, shape, first=v2.end(len(sampling.v2)))
+    pair = _pair(first, second, sampling.t3, sampling.turned)
+    across = 1j * np.exp(-1j * data[t3.first : t3.end(len(sampling.t3))]) / pair.size
+    t3.constant((across * pair.middle).real)
+    t3.pair(sampling.t3, sampling.turned, pair, across, contrast, weights)
+    t3amp = _Entries(sampling, shape, first=t3.end(len(sampling.t3)))
+    pair = _pair(first, second, sampling.t3amp, sampling.t3amp_turned)
+    along = -np.exp(-1j * np.angle(pair.middle)) / total**3
+    t3amp.constant(data[t3amp.first : t3amp.end(len(along))] + (along * pair.middle).real)
+    t3amp.pair(sampling.t3amp, sampling.t3amp_turned, pair, along, contrast, weights)
+    visamp = _Entries(sampling, shape, first=t3amp.end(len(sampling.t3amp)))
+    own = first[sampling.visamp]
+    visamp.constant(data[visamp.first :] - np.abs(own) / total)
+    direction = np.exp(-1j * np.angle(own))
+    visamp.waves(sampling.visamp, -contrast * direction[:, None] * weights / total)
+    return _response(sampling, v2, t3, t3amp, visamp)
+
+
+@dataclass(frozen=True, eq=False)
+class _Pair:
+    """Bispectra of pairs, times the cube of their flux: middle + sum of ahead w + behind w*."""
+
+    middle: np.ndarray
+    ahead: np.ndarray
+    behind: np.ndarray
+    second: np.ndarray
+    """(n, 3) visibilities of the sides of the companion alone, times its contrast."""
+
+    @property
+    def size(self) -> np.ndarray:
+        """(n,) root-mean-square modulus over all positions."""
+        waves = (np.abs(self.ahead) ** 2 + np.abs(self.behind) ** 2).sum(axis=1)
+        return np.sqrt(np.abs(self.middle) ** 2 + waves)
+
+
+def _pair(first: np.ndarray, second: np.ndarray, samples: np.ndarray, turned: np.ndarray) -> _Pair:
+    """From the visibilities (m,) of the two stars, each times its flux."""
+    a = sides(first[:, None], samples, turned)[..., 0]
+    b = second[samples]
+    # The product of two sides' waves is the conjugate of the third's as it enters.
+    return _Pair(a.prod(axis=1) + b.prod(axis=1), b * _others(a), a * _others(b), b)
 
 
 class _Entries:
@@ -173,6 +209,27 @@ class _Entries:
         columns = 1 + sample[:, None] * self.nodes + np.arange(self.nodes)
         self._add(np.repeat(np.arange(n), self.nodes), columns.ravel(), values.ravel())
 
+    def triangles(self, samples: np.ndarray, turned: np.ndarray, factors: np.ndarray) -> None:
+        """Add the real parts of `factors` (n, 3, T) times the waves as the sides enter."""
+        for side in range(3):
+            c, flip = factors[:, side], turned[:, side, None]
+            self.waves(samples[:, side], np.where(flip, np.conj(c), c))
+
+    def pair(self, samples, turned, pair: _Pair, factor, contrast: float, weights) -> None:
+        """Add the real part of `factor` (n,) times the waves of a pair's bispectra."""
+        for side in range(3):
+            ahead, behind = factor * pair.ahead[:, side], factor * pair.behind[:, side]
+            flip = turned[:, side]
+            c = np.where(flip, behind + np.conj(ahead), ahead + np.conj(behind))
+            # The wave carries the companion's shape already: take out its mean.
+            mean = pair.second[:, side] / contrast
+            scale = np.divide(c, mean, out=np.zeros_like(c), where=mean != 0)
+            self.waves(samples[:, side], scale[:, None] * weights)
+
+    def end(self, count: int) -> int:
+        """Index of the first datum after the `count` of this kind."""
+        return self.first + count
+
     def _add(self, rows, columns, values) -> None:
         self.rows.append(self.first + rows)
         self.columns.append(columns)
@@ -185,7 +242,7 @@ def _response(sampling: Sampling, *entries: _Entries) -> Response:
         np.concatenate([part for entry in entries for part in getattr(entry, name)])
         for name in ("rows", "columns", "values")
     )
-    n = len(sampling.v2) + len(sampling.t3)
+    n = sum(len(getattr(sampling, name)) for name in SAMPLED)
     return Response(u, v, sparse.csr_array((values, (rows, columns)), shape=(n, len(u))))
 
 

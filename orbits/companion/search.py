@@ -12,7 +12,7 @@ from ..constants import MAS
 from ..errors import InputError, NothingFound
 from ..observation import Observation
 from ..progress import SILENT, Silent
-from ..sampling import Sampling
+from ..sampling import SAMPLED, Sampling
 from .bootstrap import Bootstrap, bootstrap
 from .covariance import Covariance, ErrorModel
 from .fit import Fit, Problem, fit, polish
@@ -144,7 +144,7 @@ def choose_grid(
     ValueError
         If `field` or `step` is not positive.
     """
-    tables = [t for t in (observation.v2, observation.t3) if len(t)]
+    tables = [t for t in (getattr(observation, name) for name in SAMPLED) if len(t)]
     if not tables:
         raise InputError(f"{observation.target}: no usable squared visibility or closure phase")
     finest = min((t.wavelength / t.baselines).min() for t in tables) / MAS
@@ -174,6 +174,8 @@ class Epoch:
         count: int,
         smearing: bool,
     ):
+        # There is no model of phases that depend on an instrument's own reference.
+        observation = observation.select(visphi=np.zeros(len(observation.visphi), dtype=bool))
         self.observation, self.stars, self.grid, self.smearing = observation, stars, grid, smearing
         self.scene = _scene(observation, stars, count)
         self.before = _scene(observation, stars, count - 1)
@@ -437,13 +439,14 @@ def _settled_stars(
     fixed, free = dict(stars.fixed), set(stars.free) | set(stars.priors)
     names = ("primary_diameter", "diameter")
     shapes = (stars.primary, stars.companion)
+    sized = any(len(getattr(observation, name)) for name in ("v2", "t3amp", "visamp"))
     resolve = False
     for name, shape, value in zip(names, shapes, (diameter, companion_diameter), strict=True):
         if value is not None and name not in free:
             fixed.setdefault(name, float(value.to_value(u.mas)))
         elif name == "diameter":
             resolve = shape != "point" and name not in (*fixed, *free)
-        elif shape != "point" and name not in fixed and len(observation.v2):
+        elif shape != "point" and name not in fixed and sized:
             free.add(name)
     twice = sorted(free & set(fixed))
     if twice:
@@ -452,7 +455,7 @@ def _settled_stars(
 
 
 def _scene(observation: Observation, stars: Stars, companions: int) -> Scene:
-    wavelengths = [t.wavelength for t in (observation.v2, observation.t3)]
+    wavelengths = [getattr(observation, name).wavelength for name in SAMPLED]
     return Scene(
         primary_shape=stars.primary,
         companion_shape=stars.companion,

@@ -7,7 +7,7 @@ import astropy.units as u
 import numpy as np
 import pytest
 from numpy.testing import assert_allclose
-from skies import epoch, fill, four_stations
+from skies import epoch, fill, four_stations, with_amplitudes
 
 from orbits.binary import Scene
 from orbits.companion.covariance import ErrorModel
@@ -92,7 +92,6 @@ def test_correlated_errors_are_taken_into_account(rng):
     """Chi-square comes out near its degrees of freedom only with the covariance of the noise."""
     errors = ErrorModel(shared_baselines=True, v2_calibration=0.05, t3_calibration=0.02)
     blank = four_stations(exposures=3, channels=6)
-    blank.v2.value[:] = 1.0
     observation = fill(blank, rng, errors=errors, x=-14.3, y=9.1, contrast=0.1)
     known = search(observation, errors=errors, noise_searches=0).best
     spread = np.sqrt(2 * known.dof)
@@ -115,6 +114,20 @@ def test_priors_and_fixed_parameters(rng):
     fixed = search(observation, diameter=1.2 * u.mas, noise_searches=0).best
     assert fixed.primary_diameter_mas == 1.2
     assert fixed.primary_diameter_error_mas == 0
+
+
+def test_amplitudes_add_to_what_is_known(rng):
+    """Four kinds of data: the errors shrink and the solution stays."""
+    truth = {"x": -14.3, "y": 9.1, "contrast": 0.1, "primary_diameter": 1.5}
+    blank = four_stations(exposures=3, channels=6)
+    two = search(fill(blank, rng, **truth), noise_searches=0).best
+    four = search(fill(with_amplitudes(blank), rng, **truth), noise_searches=100)
+    assert four.best.dof == two.dof + len(blank.v2) + len(blank.t3)
+    assert offset_in_sigma(four.best, -14.3, 9.1) < ROUGHLY
+    assert four.best.false_alarm_probability < 1e-9
+    # The visibility amplitude repeats V2 at the same error: sqrt 2 is the best it could do.
+    ratio = four.best.contrast_error / two.contrast_error
+    assert 0.5 < ratio < 0.95
 
 
 def test_field_and_step_follow_from_the_data():

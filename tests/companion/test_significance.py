@@ -94,7 +94,7 @@ def test_rate_of_false_alarms_is_the_stated_one(design, actual, assumed, honest)
     rng = np.random.default_rng(14)
 
     def noise():
-        return fill(fill(design, primary_diameter=1.5), rng, errors=actual, primary_diameter=1.5)
+        return fill(design, rng, errors=actual, primary_diameter=1.5)
 
     alarms = FalseAlarms.fitted(noise_maxima(prepared(noise(), assumed), 1000, rng))
     threshold = alarms.threshold(0.1)
