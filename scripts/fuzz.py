@@ -5,6 +5,7 @@ exit code 0 or 3, and without a traceback. Prints what went wrong, with the seed
 """
 
 import argparse
+import io
 import os
 import resource
 import signal
@@ -13,6 +14,7 @@ import tempfile
 import time
 from collections import Counter
 from collections.abc import Callable
+from contextlib import redirect_stderr, redirect_stdout
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -34,11 +36,9 @@ ODD_NUMBERS = (np.nan, np.inf, -np.inf, 0.0, -1.0, 1e300, 5e-324, 1e10, 2.45e6)
 
 def hdus(data: bytes) -> list[bytes]:
     """The HDUs of a valid file."""
-    from io import BytesIO
-
     from astropy.io import fits
 
-    with fits.open(BytesIO(data)) as opened:
+    with fits.open(io.BytesIO(data)) as opened:
         places = [hdu.fileinfo() for hdu in opened]
     return [data[p["hdrLoc"] : p["datLoc"] + p["datSpan"]] for p in places]
 
@@ -191,30 +191,19 @@ def _inspect(arguments: list[str], words: Path) -> None:
     try:
         signal.alarm(MAX_SECONDS + 1)
         resource.setrlimit(resource.RLIMIT_AS, (4 * MAX_BYTES, 4 * MAX_BYTES))
-        with open(words, "w") as out:
-            os.dup2(out.fileno(), 1)
-            os.dup2(out.fileno(), 2)
-        sys.argv = ["nodeline", "inspect", *arguments]
-        from orbits.cli import app
-        from orbits.cli.frame import run
-
-        code = run(app)
-        sys.stdout.flush()
-        sys.stderr.flush()
+        with open(words, "w") as out, redirect_stdout(out), redirect_stderr(out):
+            code = _command("inspect", *arguments)
     finally:
         os._exit(code)
 
 
-def _inspect_here(path: Path, folder: Path) -> None:
-    from contextlib import redirect_stdout
-    from io import StringIO
-
+def _command(*arguments: str) -> int:
+    """Run nodeline in this process; returns its exit code."""
     from orbits.cli import app
     from orbits.cli.frame import run
 
-    sys.argv = ["nodeline", "inspect", str(path), "--convert", str(folder / "first.fits")]
-    with redirect_stdout(StringIO()):
-        run(app)
+    sys.argv = ["nodeline", *arguments]
+    return run(app)
 
 
 def valid_files(folder: Path) -> list[bytes]:
@@ -238,7 +227,8 @@ def fuzz(cases: int, first: int = 0) -> list[Outcome]:
         folder = Path(name)
         bases = valid_files(folder)
         # Everything that a child needs is imported by a first case in the parent.
-        _inspect_here(folder / "base.fits", folder)
+        with redirect_stdout(io.StringIO()):
+            _command("inspect", str(folder / "base.fits"), "--convert", str(folder / "first.fits"))
         return [run_case(seed, bases, folder) for seed in range(first, first + cases)]
 
 

@@ -8,11 +8,13 @@ import gzip
 import math
 import os
 import re
+import warnings
 from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
 
 from astropy.io import fits
+from astropy.utils.exceptions import AstropyUserWarning
 
 from ..errors import InputError
 
@@ -99,6 +101,17 @@ def cards(header: fits.Header) -> Iterator[tuple[str, object, str]]:
         yield name, _printable(value) if isinstance(value, str) else value, _printable(comment)
 
 
+def illegible(header: fits.Header) -> int:
+    """How many cards cannot be read."""
+    count = 0
+    for entry in header.cards:
+        try:
+            count += not re.fullmatch(r"[A-Z0-9_ -]*", entry.keyword) or entry.value is None
+        except (fits.VerifyError, ValueError, KeyError, TypeError):
+            count += 1
+    return count
+
+
 def _printable(value: str) -> str:
     """`value` with a question mark for what FITS does not allow in a header."""
     return re.sub(r"[^ -~]", "?", value)
@@ -157,7 +170,9 @@ def _read_header(path: Path, handle, number: int) -> bytes | None:
 
 def _parse(path: Path, raw: bytes, number: int) -> fits.Header:
     try:
-        return fits.Header.fromstring(raw.decode("ascii", errors="replace"))
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", AstropyUserWarning)  # said by `illegible`
+            return fits.Header.fromstring(raw.decode("ascii", errors="replace"))
     except (ValueError, fits.VerifyError, KeyError, TypeError) as error:
         raise InputError(f"{path}: the header of HDU {number} cannot be read: {error}") from error
 

@@ -11,7 +11,7 @@ import numpy as np
 
 from .correlation import Cut, renumbered
 from .links import plain
-from .model import T3, Array, BaselineTable, DataTable, Flux, OIFile, Vis
+from .model import T3, Array, DataTable, Flux, OIFile, Vis
 from .observables import timed
 from .utc import iso
 
@@ -91,7 +91,7 @@ def stations(file: OIFile, say: Say) -> OIFile:
     arrays = list(file.arrays)
     data = []
     for table in file.data:
-        if isinstance(table, BaselineTable) and table.arrname is None:
+        if table.sta_index is not None and table.arrname is None:
             table = replace(table, arrname=arrays[0].arrname if len(arrays) == 1 else UNKNOWN_ARRAY)
         data.append(table)
     wanted = {table.arrname for table in data} - {None}

@@ -8,7 +8,7 @@ from ..errors import InputError
 from ..problems import Log
 from . import amending, checksum, links
 from .bintable import CARDS, BinTable, Field, Malformed
-from .blocks import HDU, card, cards, read_hdus, text
+from .blocks import HDU, card, cards, illegible, read_hdus, text
 from .model import KINDS, OIFile, OtherHDU
 from .schema import (
     DTYPES,
@@ -52,13 +52,17 @@ def load(path: str | Path) -> OIFile:
     primary: HDU | None = None
     foreign = True
     for hdu in read_hdus(path):
+        place = f"{hdu.name} (HDU {hdu.number})" if hdu.number else ""
         contradicted = checksum.verify(hdu)
         if contradicted:
             log.suspicious(
-                f"{hdu.name} (HDU {hdu.number})" if hdu.number else "",
+                place,
                 f"keyword {contradicted} does not agree with the contents",
                 "read all the same; the file was changed by hand or damaged",
             )
+        garbled = illegible(hdu.header)
+        if garbled:
+            log.note(place, f"{garbled} cards of the header cannot be read", "ignored")
         if hdu.number == 0:
             primary = hdu
             if hdu.data:

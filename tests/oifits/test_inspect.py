@@ -1,0 +1,157 @@
+"""nodeline inspect: what it tells, in words and in JSON, and the copies and pictures it makes."""
+
+import json
+
+import numpy as np
+import oifits_files as make
+import pytest
+
+from orbits import read
+from orbits.cli import app
+from orbits.cli.frame import run
+from orbits.oifits import load
+from orbits.oifits.inspection import inspect
+
+MAS = np.pi / 180 / 3600 / 1000
+
+
+@pytest.fixture
+def nodeline(capsys, monkeypatch):
+    """Run the command; returns the exit code, stdout and stderr."""
+
+    def call(*arguments):
+        monkeypatch.setattr("sys.argv", ["nodeline", *map(str, arguments)])
+        code = run(app)
+        return code, *capsys.readouterr()
+
+    return call
+
+
+@pytest.fixture
+def full(rng, tmp_path):
+    make.full(rng).write(tmp_path / "full.fits")
+    return tmp_path / "full.fits"
+
+
+def test_the_numbers_are_those_of_the_file(rng):
+    """Baselines, angles and counts against the formulas, evaluated here by loops."""
+    file = make.full(rng)
+    result = inspect(file)
+    pairs = np.concatenate([make.legs(make.PAIRS, night) for night in (0.0, 1.0)])
+    lengths = np.hypot(*pairs.T)
+    assert result["shortest_baseline_m"] == pytest.approx(lengths.min(), rel=1e-12)
+    assert result["longest_baseline_m"] == pytest.approx(lengths.max(), rel=1e-12)
+    # Wavelengths are single precision in the file: 6e-8.
+    assert result["resolution_mas"] == pytest.approx(1.5e-6 / 2 / lengths.max() / MAS, rel=1e-6)
+    assert result["alias_mas"] == pytest.approx(2.2e-6 / 2 / lengths.min() / MAS, rel=1e-6)
+    field = 1.55e-6**2 / 0.05e-6 / lengths.max() / MAS
+    assert result["field_mas"] == pytest.approx(field, rel=1e-6)
+    # 1.4886 deg of closure phase for a contrast of 0.01, so 1 deg is 0.00672.
+    assert result["faintest_contrast"] == pytest.approx(0.01 / 1.4886, rel=1e-4)
+    assert result["data"]["v2"] == {"kept": 22, "flagged": 1, "left_out": 1}
+    assert result["data"]["t3"] == {"kept": 16, "flagged": 0, "left_out": 0}
+    assert [target["name"] for target in result["targets"]] == ["Harrow 7", "Calibrator of it"]
+    assert [(n["night"], n["n_v2"], n["n_t3"]) for n in result["targets"][1]["nights"]] == [
+        ("2026-03-15T00:00", 6, 4)
+    ]
+
+
+def test_json_is_one_object_and_nothing_else(nodeline, full):
+    code, out, err = nodeline("inspect", full, "--json")
+    result = json.loads(out)
+    assert code == 0
+    assert list(result) == ["files"]
+    assert result["files"][0]["file"] == str(full)
+    assert "Harrow 7" in err
+
+
+def test_words_fit_on_a_screen_and_speak_of_the_sign(nodeline, full):
+    code, out, _ = nodeline("inspect", full)
+    assert code == 0
+    lines = out.splitlines()
+    assert len(lines) <= 40
+    assert max(map(len, lines)) <= 120
+    assert "wrong sign of the phases cannot be seen in one file" in out
+    assert "--flip-phase" in out
+    assert "VIS2DATA or VIS2ERR is NaN in row 4, channel 3" in out
+
+
+def test_what_is_not_oifits_ends_with_code_3_and_one_sentence(nodeline, tmp_path):
+    path = tmp_path / "notes.txt"
+    path.write_text("no stars here")
+    code, out, err = nodeline("inspect", path)
+    assert (code, out) == (3, "")
+    assert err == f"nodeline: {path}: not a FITS file\n"
+
+
+def test_strict_makes_the_suspicious_unusable(nodeline, rng, tmp_path):
+    file = make.small(rng)
+    file.data[0].vis2data[0, 0] = 1.9
+    file.write(tmp_path / "night.fits")
+    assert nodeline("inspect", tmp_path / "night.fits")[0] == 0
+    code, out, err = nodeline("inspect", tmp_path / "night.fits", "--strict")
+    assert code == 3
+    assert "suspicious" in out
+    assert "refused as strictly asked: OI_VIS2 (HDU 4): column VIS2DATA is far outside" in err
+
+
+def test_a_copy_has_the_selection_and_the_history(nodeline, full, tmp_path):
+    copy = tmp_path / "copy.fits"
+    code, out, _ = nodeline(
+        "inspect", full, "--target", "Harrow 7", "--station", "S1", "--station", "S2",
+        "--station", "S3", "--flip-phase", "--convert", copy, "--json",
+    )  # fmt: skip
+    assert code == 0
+    assert json.loads(out)["convert"]["breaches"] == []
+    file = load(copy)
+    assert file.history[0] == "made for a test"
+    assert file.history[1].endswith("of full.fits")
+    assert file.history[2:5] == [
+        "only stations S1 S2 S3",
+        "only target Harrow 7",
+        "sign of all phases reversed",
+    ]
+    before, after = read(full, target="Harrow 7"), read(copy)
+    inside = (before.t3.stations < 3).all(axis=1)
+    np.testing.assert_array_equal(after.t3.value, -before.t3.value[inside])
+
+
+def test_several_files_become_one_copy(nodeline, rng, tmp_path):
+    paths = [tmp_path / f"{k}.fits" for k in range(2)]
+    for day, path in enumerate(paths):
+        file = make.small(rng)
+        for table in file.data:
+            table.mjd[:] += day
+        file.write(path)
+    code, out, _ = nodeline("inspect", *paths, "--convert", tmp_path / "both.fits")
+    assert code == 0
+    assert out.count("Harrow 7") == 2
+    assert "valid OIFITS 2" in out
+    assert len(load(tmp_path / "both.fits").data) == 4
+    code, _, err = nodeline("inspect", *paths, "--convert", tmp_path / "both.fits")
+    assert code == 3
+    assert "exists already" in err
+
+
+def test_a_picture_is_drawn_of_the_data(nodeline, full, tmp_path):
+    picture = tmp_path / "night.png"
+    code, _, _ = nodeline("inspect", full, "--target", "Harrow 7", "--plot", picture)
+    assert code == 0
+    assert picture.read_bytes().startswith(b"\x89PNG")
+    assert nodeline("inspect", full, "--plot", tmp_path / "night.gif")[0] == 2
+
+
+def test_the_drawing_shows_every_datum_where_it_was_measured(rng, tmp_path):
+    """Points of the panels against spatial frequencies computed from the table."""
+    from orbits.plots.coverage import draw_coverage
+
+    make.small(rng).write(tmp_path / "night.fits")
+    observation = read(tmp_path / "night.fits")
+    _, visibility, phase = draw_coverage([observation]).axes[:3]
+    drawn = visibility.collections[-1].get_offsets()
+    table = load(tmp_path / "night.fits").data[0]
+    waves = make.spectrum().eff_wave.astype(float)
+    frequency = np.hypot(table.ucoord, table.vcoord)[:, None] / waves
+    np.testing.assert_allclose(drawn[:, 0], frequency.ravel() / 1e6, rtol=1e-12)
+    np.testing.assert_array_equal(drawn[:, 1], table.vis2data.ravel())
+    assert len(phase.collections[-1].get_offsets()) == 12
