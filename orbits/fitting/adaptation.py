@@ -17,7 +17,7 @@ DRAWS = 3000
 ROUNDS = 8
 GOOD = 0.65
 """Efficiency at which there is nothing left to gain; the prior's share alone takes a tenth."""
-POOR = 0.3
+POOR = 0.5
 """Efficiency below which the densities are split."""
 SPLITS = 3
 PIECES = 4

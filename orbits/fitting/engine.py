@@ -12,6 +12,7 @@ from ..velocities import Velocities
 from .account import chi_square, nights, notes, solutions_of, undetermined
 from .adaptation import adapt
 from .data import Data, make_data
+from .knowledge import check_knowledge
 from .laplace import normals
 from .model import Model
 from .nested import sample
@@ -70,6 +71,7 @@ def fit(
     begin = time.monotonic()
     priors = priors or Priors.for_data(positions, velocities)
     data = make_data(positions, velocities, parallax, priors, model or Model())
+    check_knowledge(data)
     _require_enough(data)
     found = scan(data, cores=cores, rng=rng, progress=progress)
     target, efficiency = propose(data, found, rng)

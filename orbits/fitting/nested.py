@@ -11,7 +11,7 @@ IMPOSSIBLE = -1e300
 """ln likelihood where the prior is 0, as dynesty wants it."""
 WALK_BELOW = 4.0
 """Acceptance, per cent, below which a walk within ellipsoids finds new points sooner."""
-REMAINDER = 0.05
+REMAINDER = 0.5
 """The run ends when the live points can add no more than this to ln of the evidence."""
 
 

@@ -17,6 +17,7 @@ import numpy as np
 
 from ..compiled import compiled
 from .data import Data
+from .knowledge import log_knowledge
 from .laplace import Normal
 from .likelihood import log_likelihood
 from .space import allowed, from_chart, from_prior, to_chart
@@ -118,12 +119,18 @@ class Target:
         """(S,) ln(likelihood * prior / proposal); -inf where the prior is 0."""
         out = np.empty(len(points))
         _log_weights(points, self.tables, self.mixture, self.region, out)
-        return out
+        return self._with_knowledge(points, out)
 
     def log_likelihood(self, points: np.ndarray) -> np.ndarray:
-        """(S,) ln of the likelihood; -inf where the prior is 0."""
+        """(S,) ln of the likelihood and further knowledge; -inf where the prior is 0."""
         out = np.empty(len(points))
         _log_likelihoods(points, self.tables, self.region, out)
+        return self._with_knowledge(points, out)
+
+    def _with_knowledge(self, points: np.ndarray, out: np.ndarray) -> np.ndarray:
+        if self.data.priors.normal:
+            ok = np.isfinite(out)
+            out[ok] += log_knowledge(self.data, points[ok])
         return out
 
 

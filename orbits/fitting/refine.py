@@ -169,7 +169,7 @@ def _normal(residual, jacobian):
 
 
 def _confine(data, unknowns, values):
-    """Keep the period in its prior's range and the orbit an ellipse."""
+    """Keep period, axis and amplitudes in their priors' ranges and the orbit an ellipse."""
     values[:, 0] = np.clip(values[:, 0], *np.log(data.priors.period))
     if "k_re" in unknowns:
         i, j = unknowns["k_re"], unknowns["k_im"]
@@ -177,10 +177,14 @@ def _confine(data, unknowns, values):
         factor = np.minimum(1.0, min(LARGEST_K, data.space.eccentricity[1]) / np.maximum(k, 1e-9))
         values[:, i] *= factor
         values[:, j] *= factor
-    for name in ("log_k1", "log_k2"):
+    for name, bounds in (
+        ("log_axis", data.priors.semimajor_axis),
+        ("log_k1", data.priors.amplitude),
+        ("log_k2", data.priors.amplitude),
+    ):
         if name in unknowns:
             column = unknowns[name]
-            values[:, column] = np.clip(values[:, column], *np.log(data.priors.amplitude))
+            values[:, column] = np.clip(values[:, column], *np.log(bounds))
     return values
 
 
