@@ -5,7 +5,7 @@ from typing import Annotated
 
 import typer
 
-from . import catalogue, demo, draw, inspect, measure, orbit, predict, search, simulate
+from . import catalogue, demo, draw, inspect, measure, orbit, predict, report, search, simulate
 from .frame import run
 
 app = typer.Typer(
@@ -36,6 +36,7 @@ app.command()(inspect.inspect)
 app.command()(measure.measure)
 app.command()(orbit.orbit)
 app.command()(predict.predict)
+app.command()(report.report)
 app.command()(search.search)
 app.command()(simulate.simulate)
 

@@ -22,6 +22,7 @@ def measure(
     from ..measuring import positions
     from ..positions import write_positions
     from ..progress import Bar
+    from ..provenance import record
     from ..system import read_system
 
     given = read_system(system)
@@ -31,6 +32,8 @@ def measure(
     say(_table(nights), json=json)
     found = positions(nights)
     write_positions(path, found, force=force)
+    command = f"nodeline measure {given.path.name} --seed {seed}"
+    record(given.results, "measure", command=command, seed=seed, inputs=(given.path, *given.nights))
     say(f"{len(set(found.night))} of {len(nights)} nights measured: {path}", json=json)
     if json:
         emit(

@@ -29,6 +29,7 @@ def orbit(
     from ..fitting.engine import fit
     from ..fitting.solution import outputs
     from ..progress import Bar
+    from ..provenance import record
     from ..system import read_system
 
     given = read_system(system)
@@ -48,6 +49,9 @@ def orbit(
         progress=Bar(),
     )
     solution.write(given.results, force=force)
+    command = f"nodeline orbit {given.path.name} --seed {seed}"
+    inputs = (given.path, *given.positions, *given.velocities)
+    record(given.results, "orbit", command=command, seed=seed, inputs=inputs)
     say(table(solution), json=json)
     say(f"Written to {given.results}", json=json)
     if json:

@@ -260,7 +260,8 @@ def _measurements(
             ),
             autolim=False,
         )
-    axes.scatter(*xy.T, s=3 if small else 6, color=style.DATUM, alpha=shade, lw=0, zorder=6)
+    dots = axes.scatter(*xy.T, s=3 if small else 6, color=style.DATUM, alpha=shade, lw=0, zorder=6)
+    dots.set_gid(f"positions-{len(axes.figure.axes)}")  # by which a page of HTML finds them
 
 
 def _mark(axes: "Axes", best: Orbits, mark: Mark, scale: float) -> None:
