@@ -25,6 +25,9 @@ def search(
     ],
     target: Annotated[str | None, typer.Option(help="Name, where the files hold several.")] = None,
     night: Annotated[str | None, typer.Option(help="Date, where the files hold several.")] = None,
+    use: Annotated[
+        list[str], typer.Option(help="Observable: v2, t3, t3amp or visamp; repeatable.")
+    ] = ["v2", "t3"],  # noqa: B006 - typer copies it
     field: Annotated[float | None, typer.Option(help="Half the side of the field, mas.")] = None,
     step: Annotated[float | None, typer.Option(help="Of the grid, mas.")] = None,
     diameter: Annotated[
@@ -111,7 +114,9 @@ def search(
         contrast_per_instrument=contrast_per_instrument,
         fibre_fwhm=fibre,
     )
-    observation = read(files, target=target, night=night, flip_phase=flip_phase)
+    observation = _checked(
+        read, files, target=target, night=night, flip_phase=flip_phase, observables=use
+    )
     paths = _picture_paths(pictures, observation.target, observation.mjd, force=force)
     result = _checked(
         look,
@@ -164,10 +169,10 @@ def _named(text: str, *, count: int) -> tuple[str, list[float]]:
     return name, values
 
 
-def _checked(look: Callable, *arguments: Any, **options: Any) -> "SearchResult":
-    """Call `look`; a wrong argument is wrong usage here, since all of them come from options."""
+def _checked(call: Callable[..., Any], *arguments: Any, **options: Any) -> Any:
+    """Call `call`; a wrong argument is wrong usage here, since all of them come from options."""
     try:
-        return look(*arguments, **options)
+        return call(*arguments, **options)
     except ValueError as error:
         raise typer.BadParameter(str(error)) from error
 
@@ -187,7 +192,7 @@ def describe(result: "SearchResult") -> str:
     grid = result.maps.grid
     lines = [
         f"{result.target}, {result.instrument}, MJD {result.mjd:.4f}: "
-        f"{result.n_v2} V2 and {result.n_t3} closure phases, "
+        f"{_counts(result)}, "
         f"{grid.side} x {grid.side} positions within {grid.half * grid.step:.4g} mas"
     ]
     if result.previous is not None:
@@ -216,6 +221,16 @@ def describe(result: "SearchResult") -> str:
         f"  or         {_place(one)}  (weight {one.weight:.3g})" for one in result.alternatives
     ]
     return "\n".join(lines)
+
+
+def _counts(result: "SearchResult") -> str:
+    kinds = [
+        (result.n_v2, "V2"),
+        (result.n_t3, "closure phases"),
+        (result.n_t3amp, "triple amplitudes"),
+        (result.n_visamp, "visibility amplitudes"),
+    ]
+    return " and ".join(f"{count} {name}" for count, name in kinds if count)
 
 
 def _place(one: "Candidate") -> str:

@@ -117,6 +117,8 @@ class SearchResult:
     mjd: float
     n_v2: int
     n_t3: int
+    n_t3amp: int
+    n_visamp: int
     best: Candidate
     alternatives: tuple[Candidate, ...]
     """Other solutions that the data allow, the likeliest first."""
@@ -142,6 +144,8 @@ class SearchResult:
             "mjd": self.mjd,
             "n_v2": self.n_v2,
             "n_t3": self.n_t3,
+            "n_t3amp": self.n_t3amp,
+            "n_visamp": self.n_visamp,
             "best": self.best.to_json(),
             "alternatives": [one.to_json() for one in self.alternatives],
             "single_star": {

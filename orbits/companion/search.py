@@ -287,6 +287,8 @@ class Epoch:
             mjd=self.observation.mjd,
             n_v2=len(self.observation.v2),
             n_t3=len(self.observation.t3),
+            n_t3amp=len(self.observation.t3amp),
+            n_visamp=len(self.observation.visamp),
             best=kept[0],
             alternatives=kept[1:],
             null=null,
@@ -310,9 +312,17 @@ class Epoch:
 
     def solutions(self, maps: Maps, null: Fit) -> list[Fit]:
         """Distinct exact solutions from every peak that could be the answer, the best first."""
-        starts = [self._start(null, maps, *place) for place in _peaks(maps.gain)]
-        rough = [self._fit(start, steps=_ROUGH_STEPS) for start in starts]
-        rough = [one for one in rough if self._inside(one)]
+        rough: list[Fit] = []
+        for places in _peaks(maps.gain):
+            # The lower peaks are asked only where the higher ones lead out of the field.
+            starts = (self._start(null, maps, *place) for place in places)
+            rough = [
+                one
+                for one in (self._fit(s, steps=_ROUGH_STEPS) for s in starts)
+                if self._inside(one)
+            ]
+            if rough:
+                break
         if not rough:
             return []
         best = min(one.chi2 for one in rough)
@@ -492,16 +502,17 @@ def _free(scene: Scene, stars: Stars) -> tuple[int, ...]:
     return tuple(i for i, name in enumerate(scene.names) if name in wanted)
 
 
-def _peaks(gain: np.ndarray) -> list[tuple[int, int]]:
-    """Local maxima of a map that could become the best once the exact model judges them."""
+def _peaks(gain: np.ndarray) -> tuple[list[tuple[int, int]], list[tuple[int, int]]]:
+    """Local maxima of a map that could be the best once the exact model judges; then lower ones."""
     from scipy.ndimage import maximum_filter
 
     rows, columns = np.nonzero((gain == maximum_filter(gain, size=3)) & (gain > 0))
     height = gain[rows, columns]
-    order = np.argsort(height)[::-1]
-    top = height[order[0]] if len(order) else 0.0
-    order = order[height[order] > min(0.4 * top, top - KEPT)][:_PEAKS]
-    return list(zip(rows[order].tolist(), columns[order].tolist(), strict=True))
+    order = np.argsort(height)[::-1][:_PEAKS]
+    places = list(zip(rows[order].tolist(), columns[order].tolist(), strict=True))
+    top = height.max(initial=0.0)
+    high = int((height[order] > min(0.4 * top, top - KEPT)).sum())
+    return places[:high], places[high:]
 
 
 def _candidates(
