@@ -3,8 +3,11 @@
 from importlib import import_module
 
 _HOMES = {
+    "Bundle": ".bundle",
     "Candidate": ".companion.result",
+    "Catalogue": ".catalogue",
     "Elements": ".elements",
+    "Entry": ".catalogue",
     "ErrorModel": ".companion.covariance",
     "InputError": ".errors",
     "Model": ".fitting.model",
@@ -20,7 +23,11 @@ _HOMES = {
     "Stars": ".companion.search",
     "System": ".system",
     "Velocities": ".velocities",
+    "add_entries": ".catalogue",
+    "events": ".ephemeris",
+    "find_entry": ".catalogue",
     "fit": ".fitting.engine",
+    "predict": ".ephemeris",
     "read": ".oifits",
     "read_epochs": ".oifits",
     "read_positions": ".positions",

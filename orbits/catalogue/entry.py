@@ -1,9 +1,10 @@
 """One solution of one system, as a catalogue keeps it."""
 
+import os
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import TYPE_CHECKING, Self
+from typing import TYPE_CHECKING
 
 import numpy as np
 
@@ -13,6 +14,7 @@ from .columns import NUMBERS, WITH_ERRORS
 
 if TYPE_CHECKING:
     from ..elements import Elements
+    from ..system import System
 
 DRAWS = 400
 """Orbits drawn from the errors: the edge of a one-sigma band is then known to 0.08 sigma."""
@@ -43,6 +45,21 @@ class Entry:
     def key(self) -> str:
         """``system/solution``, unique in a catalogue."""
         return f"{self.system}/{self.solution}"
+
+    def moved_to(self, folder: Path) -> "Entry":
+        """The entry as it stands in a catalogue in `folder`: its files are sought from there."""
+
+        def seen_from_there(name: str) -> str:
+            if not name:
+                return name
+            return Path(os.path.relpath(self.folder / name, folder)).as_posix()
+
+        return replace(
+            self,
+            folder=folder,
+            positions=seen_from_there(self.positions),
+            samples=seen_from_there(self.samples),
+        )
 
     def number(self, name: str) -> float:
         """The number of that column, NaN where it is missing."""
@@ -131,36 +148,59 @@ class Entry:
                 known[full_name(name, error=True)] = self.number(f"{name}_error")
         return known
 
-    @classmethod
-    def of_solution(cls, fitted, *, solution: str, **texts: str) -> Self:
-        """The entry of a `Solution` of a fit: its best orbit, and half of the 68% intervals.
 
-        The best orbit is one that fits; the medians of correlated elements together need not.
+def entry_of_system(
+    system: "System", *, solution: str, place: tuple[float, float] | None = None, **more: object
+) -> Entry:
+    """The entry of a fitted system: its best orbit, and half of the 68.3% intervals as errors.
 
-        Raises
-        ------
-        InputError
-            If positions had no part in the fit.
-        """
-        if fitted.positions is None:
-            raise InputError(
-                f"{fitted.name}: without positions there is no orbit on the sky to keep"
-            )
-        orbit = Bundle.of_solution(fitted).best
-        numbers = {name: float(getattr(orbit, name)[0]) for name in Orbits.names()}
-        for name in WITH_ERRORS:
-            if full_name(name) in fitted.summary:
-                median, plus, minus = fitted.summary[full_name(name)]
-                numbers[f"{name}_error"] = (plus + minus) / 2
-                if not np.isfinite(numbers.get(name, np.nan)):
-                    numbers[name] = median
-        return cls(
-            system=fitted.name,
-            solution=solution,
-            ascending=fitted.velocities is not None,
-            numbers=numbers,
-            **texts,
-        )
+    The best orbit is one that fits; the medians of correlated elements together need not.
+
+    Parameters
+    ----------
+    system : System
+        With results of ``nodeline orbit``.
+    solution : str
+        What this solution is called.
+    place : (ra, dec)
+        ICRS, deg.
+    **more
+        Further fields of the entry: aliases, preferred, source, remark.
+
+    Raises
+    ------
+    InputError
+        If there are no results, or positions had no part in the fit.
+    """
+    from ..fitting.solution import POSITIONS_FILE, SAMPLES_FILE, Solution
+    from ..provenance import history
+
+    fitted = Solution.read(system.results)
+    if fitted.positions is None:
+        raise InputError(f"{fitted.name}: without positions there is no orbit on the sky")
+    orbit = Bundle.of_solution(fitted).best
+    numbers = {name: float(getattr(orbit, name)[0]) for name in Orbits.names()}
+    for name in WITH_ERRORS:
+        if full_name(name) in fitted.summary:
+            median, plus, minus = fitted.summary[full_name(name)]
+            numbers[f"{name}_error"] = (plus + minus) / 2
+            numbers.setdefault(name, median)
+    if place is not None:
+        numbers |= {"ra": place[0], "dec": place[1]}
+    run = history(system.results).get("orbit")
+    used = [(fitted.positions, "positions"), (fitted.velocities, "velocities")]
+    return Entry(
+        system=fitted.name,
+        solution=solution,
+        ascending=fitted.velocities is not None,
+        date="" if run is None else run.date[:10],
+        data=", ".join(f"{len(data)} {words}" for data, words in used if data is not None),
+        positions=POSITIONS_FILE,
+        samples=SAMPLES_FILE,
+        numbers=numbers,
+        folder=system.results,
+        **more,
+    )
 
 
 def full_name(name: str, *, error: bool = False) -> str:

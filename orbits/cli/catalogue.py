@@ -79,26 +79,26 @@ def add(
     ] = False,
     source: Annotated[str, typer.Option(help="Who made it, or where it is published.")] = "",
     remark: Annotated[str, typer.Option(help="Anything else.")] = "",
+    alias: Annotated[list[str] | None, typer.Option(help="Other name; repeatable.")] = None,
+    place: Annotated[
+        tuple[float, float] | None, typer.Option(help="RA and Dec of the star, deg.")
+    ] = None,
     json: Json = False,
 ) -> None:
     """Add the result of nodeline orbit; the samples and positions stay where they are."""
-    import os
-    from dataclasses import replace
-
-    from ..catalogue import Entry, add_entries
-    from ..fitting.solution import Solution
+    from ..catalogue import add_entries, entry_of_system
     from ..system import read_system
 
-    results = read_system(system).results
-    fitted = Solution.read(results)
-    entry = Entry.of_solution(fitted, solution=solution, source=source, remark=remark)
-    folder = Path(os.path.relpath(results, catalogue.absolute().parent))
-    files = {
-        field: str(folder / file)
-        for field, file in (("samples", "samples.ecsv"), ("positions", "positions.ecsv"))
-        if (results / file).is_file()
-    }
-    whole = add_entries(catalogue, [replace(entry, preferred=preferred, **files)])
+    entry = entry_of_system(
+        read_system(system),
+        solution=solution,
+        aliases=tuple(alias or ()),
+        place=place,
+        preferred=preferred,
+        source=source,
+        remark=remark,
+    )
+    whole = add_entries(catalogue, [entry.moved_to(catalogue.parent)])
     say(f"{entry.key} added to {catalogue}, which has {len(whole)} orbits now", json=json)
     if json:
         emit({"added": entry.to_json(), "catalogue": str(catalogue), "orbits": len(whole)})
@@ -153,7 +153,8 @@ def export(
     from ..catalogue.export import export as write
 
     conditions = _conditions(match, near, period, separation, at, preferred)
-    entries = [entry for part in _read(catalogue) for entry in part.select(**conditions)]
+    chosen = [entry for part in _read(catalogue) for entry in part.select(**conditions)]
+    entries = [entry.moved_to(output.parent) for entry in chosen]
     if not entries:
         raise InputError("no entry fulfils the conditions; nothing was written")
     write(Catalogue.of(entries), output, force=force)

@@ -66,11 +66,14 @@ def test_an_import_that_collides_writes_nothing(nodeline, outside, tmp_path):
 
 def test_a_fitted_system_goes_into_a_catalogue_and_comes_out(nodeline, tmp_path, rng):
     system, path = fitted.system(tmp_path), tmp_path / "lists" / "mine.ecsv"
-    arguments = ("--solution", "2026", "--preferred", "--source", "this work")
+    names = ("--solution", "2026", "--alias", "HX 7", "--place", 52.3, 28.4)
+    arguments = (*names, "--preferred", "--source", "this work")
     code, out, _ = nodeline("catalogue", "add", system, "--catalogue", path, *arguments)
     assert code == 0
     assert "Harrow 7/2026 added to" in out
-    entry = find_entry("Harrow 7", str(path))
+    entry = find_entry("HX 7", str(path))
+    assert entry.data == "10 positions, 12 velocities"
+    assert (entry.number("ra"), entry.number("dec")) == (52.3, 28.4)
     assert (entry.preferred, entry.ascending, entry.source) == (True, True, "this work")
     for name, key in (("period", "period_d"), ("k1", "k1_kms"), ("primary_mass", "primary_msun")):
         # The best sample for elements and amplitudes, the median (to its error) for the masses.
@@ -80,6 +83,11 @@ def test_a_fitted_system_goes_into_a_catalogue_and_comes_out(nodeline, tmp_path,
     bundle = entry.bundle(rng)
     assert bundle.spread == "posterior"
     assert len(bundle.draws) == 200
+    # Exported to another folder, the entry still finds its files.
+    (tmp_path / "paper").mkdir()
+    copy = tmp_path / "paper" / "copy.ecsv"
+    assert nodeline("catalogue", "export", copy, "--catalogue", path)[0] == 0
+    assert len(find_entry("HX 7", str(copy)).bundle(rng).draws) == 200
     code, _, err = nodeline("catalogue", "add", system, "--catalogue", path, *arguments)
     assert code == 3
     assert "Harrow 7/2026 is there already" in err
