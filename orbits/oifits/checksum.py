@@ -49,12 +49,14 @@ def encode(total: int) -> str:
 
 def verify(hdu: HDU) -> str | None:
     """Which checksum keyword of an HDU is contradicted by its bytes; None if none is."""
-    stated = text(hdu.header, "DATASUM")
+    stated, sealed = text(hdu.header, "DATASUM"), text(hdu.header, "CHECKSUM")
+    # The standard allows CHECKSUM to be left as zeros or blanks, meaning not computed.
+    if not stated and not sealed.strip("0"):
+        return None
     data = ones_sum(hdu.data)
     if stated and not (stated.isdigit() and int(stated) % ALL_ONES == data % ALL_ONES):
         return "DATASUM"
-    # The standard allows CHECKSUM to be left as zeros or blanks, meaning not computed.
-    if text(hdu.header, "CHECKSUM").strip("0"):
+    if sealed.strip("0"):
         total = ones_sum(hdu.raw_header, data)
         if total not in (0, ALL_ONES):
             return "CHECKSUM"

@@ -1,23 +1,22 @@
 """From the tables of a file to observations: one target and one night each, as flat arrays."""
 
 from collections.abc import Sequence
-from dataclasses import replace
 from pathlib import Path
 
 import astropy.units as u
 import numpy as np
 
 from ..errors import InputError
-from ..observation import OBSERVABLES, Observable, Observation
-from ..problems import Log, refuse_suspicious
+from ..observation import OBSERVABLES, Observation
+from ..problems import refuse_suspicious
 from .checking import check
-from .correlation import Numbers, positive_definite
+from .flattening import observation, shares
 from .flipping import flipped
 from .joining import join
 from .links import plain
 from .loading import load
-from .model import DataTable, OIFile
-from .observables import KINDS, ErrorBars, Kind, sound, usable
+from .model import OIFile
+from .observables import KINDS, ErrorBars
 from .selecting import EVERYTHING, Selection, select, target_ids
 from .utc import night_label
 
@@ -134,22 +133,20 @@ def observations(
         If no datum is usable, or there are several targets and none was chosen.
     """
     name, ids = _target(file, target)
-    builder = _Builder(file, ids, errors)
-    parts = {key: builder.observable(KINDS[key]) for key in OBSERVABLES if key in observables}
-    times = np.concatenate([observable.mjd for observable, _ in parts.values()])
-    if not times.size:
-        words = " or ".join(KINDS[key].words for key in parts)
+    given = shares(file, ids, observables)
+    with_data = [share.keep.any(axis=1) for share in given]
+    times = [share.table.mjd[rows] for share, rows in zip(given, with_data, strict=True)]
+    if not sum(map(len, times)):
+        words = " or ".join(KINDS[key].words for key in observables)
         raise InputError(f"{file.source}: no usable {words} of {name}")
-    starts = night_starts(times, gap.to_value(u.day))
+    starts = night_starts(np.concatenate(times), gap.to_value(u.day))
     epochs = []
-    for number in range(len(starts)):
-        chosen = {
-            key: np.searchsorted(starts, observable.mjd, side="right") == number + 1
-            for key, (observable, _) in parts.items()
-        }
-        night = {key: part[0].select(chosen[key]) for key, part in parts.items()}
-        numbers = np.concatenate([part[1][chosen[key]] for key, part in parts.items()])
-        epochs.append(builder.observation(name, night, numbers))
+    for start, end in zip(starts, [*starts[1:], np.inf], strict=True):
+        night = [
+            share.select(rows & (share.table.mjd >= start) & (share.table.mjd < end))
+            for share, rows in zip(given, with_data, strict=True)
+        ]
+        epochs.append(observation(file, name, night, errors))
     return epochs
 
 
@@ -184,110 +181,3 @@ def night_starts(times: np.ndarray, gap: float) -> np.ndarray:
     """The first time of each night."""
     ordered = np.unique(times)
     return ordered[np.concatenate([[True], np.diff(ordered) > gap])]
-
-
-class _Builder:
-    """Makes observables, and observations of them, of one target of a file."""
-
-    def __init__(self, file: OIFile, ids: list[int], errors: ErrorBars) -> None:
-        self.file, self.ids, self.errors = file, ids, errors
-        self.numbers = Numbers(file)
-        self.instruments = [w.insname for w in file.wavelengths]
-        self.stations: list[str] = []
-        self.station_numbers: dict[str | None, dict[int, int]] = {}
-        for array in file.arrays:
-            prefix = f"{array.arrname} " if len(file.arrays) > 1 else ""
-            numbers = self.station_numbers.setdefault(array.arrname, {})
-            for index, name in zip(array.sta_index.tolist(), array.sta_name.tolist(), strict=True):
-                numbers[index] = len(self.stations)
-                self.stations.append(prefix + (name or str(index)))
-
-    def observable(self, kind: Kind) -> tuple[Observable, np.ndarray]:
-        """All data of a kind, and their numbers in the correlation matrices (-1: none)."""
-        parts, numbers, first = [], [], 0
-        for table in self.file.of(kind.table):
-            part, number = self._flat(table, kind, first)
-            first += len(table)
-            parts.append(part)
-            numbers.append(number)
-        if not parts:
-            return Observable.empty(kind.legs), np.empty(0, dtype=np.int64)
-        if len(parts) == 1:
-            return parts[0], numbers[0]
-        return Observable.concatenate(parts), np.concatenate(numbers)
-
-    def observation(
-        self, target: str, night: dict[str, Observable], numbers: np.ndarray
-    ) -> Observation:
-        """One night as an observation, with only the instruments and stations that took part."""
-        log = Log(self.file.source)
-        correlation = None
-        if self.numbers.total:
-            correlation = self.numbers.matrix(numbers)
-        if correlation is not None:
-            correlation, repair = positive_definite(correlation)
-            if repair is not None:
-                log.suspicious(
-                    "OI_CORR",
-                    f"the correlations of {repair.blocks} groups of data are not positive definite "
-                    f"(smallest eigenvalue {repair.smallest:.2g})",
-                    "made smaller until they are",
-                )
-        instruments = np.unique(np.concatenate([o.instrument for o in night.values()]))
-        stations = np.unique(np.concatenate([o.stations.ravel() for o in night.values()]))
-        stations = stations[stations >= 0]
-        night = {
-            name: replace(
-                o,
-                instrument=np.searchsorted(instruments, o.instrument).astype(np.int32),
-                stations=np.where(o.stations < 0, -1, np.searchsorted(stations, o.stations)).astype(
-                    np.int32
-                ),
-            )
-            for name, o in night.items()
-        }
-        return Observation(
-            target=target,
-            instruments=tuple(self.instruments[i] for i in instruments),
-            stations=tuple(self.stations[i] for i in stations),
-            correlation=correlation,
-            files=self.file.files,
-            problems=(*self.file.problems, *log.problems),
-            **night,
-        )
-
-    def _flat(self, table: DataTable, kind: Kind, first: int) -> tuple[Observable, np.ndarray]:
-        """The usable data of a table, whose rows are numbered from `first`."""
-        spectrum = self.file.wavelength(table.insname)
-        keep = usable(table, kind) & sound(spectrum)
-        keep &= np.isin(table.target_id, self.ids)[:, None]
-        row, channel = (index.astype(np.int32) for index in np.nonzero(keep))
-        value, error = table[kind.value][keep], table[kind.error][keep]
-        if kind.phase:
-            value = np.radians(value - 360.0 * np.round(value / 360.0))
-            error = np.radians(error)
-        wave, band = (a.astype(np.float64) for a in (spectrum.eff_wave, spectrum.eff_band))
-        band = np.where((band > 0) & (band < wave), band, 0.0)
-        time = np.where(table.int_time > 0, table.int_time, 0.0)
-        numbers = self.numbers.of(table, kind.index)
-        observable = Observable(
-            legs=table.legs[row],
-            wavelength=wave[channel],
-            bandwidth=band[channel],
-            value=value,
-            error=self.errors.apply(kind.name, error),
-            mjd=table.mjd[row],
-            integration=time[row],
-            stations=self._stations(table)[row],
-            row=row + np.int32(first),
-            channel=channel,
-            instrument=np.full(row.size, self.instruments.index(table.insname), dtype=np.int32),
-        )
-        return observable, np.full(row.size, -1) if numbers is None else numbers[keep]
-
-    def _stations(self, table: DataTable) -> np.ndarray:
-        """Positions in `self.stations` of the stations of each row; -1 where unknown."""
-        known = self.station_numbers.get(table.arrname, {})
-        old, where = np.unique(table.sta_index, return_inverse=True)
-        new = np.array([known.get(i, -1) for i in old.tolist()], dtype=np.int32)
-        return new[where].reshape(table.sta_index.shape)

@@ -138,16 +138,16 @@ def _values(content: BinTable, field: Field, column: Column, label: str, log: Lo
         return _texts(values)
     if column.code == "L":
         # Neither T nor F: undefined. In the one place where it matters, FLAG, that means bad.
-        undefined = np.count_nonzero((values != ord("F")) & (values != ord("T")))
+        stored, values = values, values != ord("F")
+        undefined = np.count_nonzero(values) - np.count_nonzero(stored == ord("T"))
         if undefined:
             log.note(label, f"column {name}: {undefined} values are undefined", "taken as true")
-        values = values != ord("F")
     elif column.code == "I" and field.code == "K" and values.size:
         limit = np.iinfo(np.int32)
         if values.min() < limit.min or values.max() > limit.max:
             raise Malformed(f"column {name} has numbers beyond 32 bits")
     values = _shaped(values, field, column)
-    values = values.astype(DTYPES[column.code])
+    values = values.astype(DTYPES[column.code], copy=column.code != "L")
     if column.unit not in (OPEN, ""):
         scale = factor(column.unit, field.unit)
         if scale is None:

@@ -1,0 +1,164 @@
+"""Flattening: from rows and channels of tables to the plain arrays of an observation."""
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from typing import Self
+
+import numpy as np
+
+from ..observation import OBSERVABLES, Observable, Observation
+from ..problems import Log
+from .correlation import Numbers, positive_definite
+from .model import BaselineTable, OIFile, Wavelength
+from .observables import KINDS, ErrorBars, Kind, sound, usable
+
+
+@dataclass(frozen=True)
+class Share:
+    """What a table has to give of one observable."""
+
+    kind: Kind
+    table: BaselineTable
+    keep: np.ndarray
+    """(nrow, nwave) bool: the data that are used."""
+    rows: np.ndarray
+    """(nrow,) number of each row through all tables of the observable."""
+
+    def select(self, rows: np.ndarray) -> Self:
+        """Only these rows, a boolean array."""
+        if rows.all():
+            return self
+        return replace(
+            self, table=self.table.select(rows), keep=self.keep[rows], rows=self.rows[rows]
+        )
+
+
+def shares(file: OIFile, ids: list[int], observables: Sequence[str]) -> list[Share]:
+    """What each table of `file` gives of each of the observables, for targets with these ids."""
+    found = []
+    for name in OBSERVABLES:
+        first = 0
+        for table in file.of(KINDS[name].table) if name in observables else ():
+            keep = usable(table, KINDS[name]) & sound(file.wavelength(table.insname))
+            keep &= np.isin(table.target_id, ids)[:, None]
+            rows = np.arange(first, first + len(table), dtype=np.int32)
+            found.append(Share(KINDS[name], table, keep, rows))
+            first += len(table)
+    return found
+
+
+def observation(
+    file: OIFile, target: str, given: Sequence[Share], errors: ErrorBars
+) -> Observation:
+    """The shares of one night as an observation, with the instruments and stations they involve."""
+    given = [share for share in given if share.keep.any()]
+    used = {share.table.insname for share in given}
+    instruments = tuple(w.insname for w in file.wavelengths if w.insname in used)
+    stations = _Stations(file, given)
+    log = Log(file.source)
+    parts: dict[str, Observable] = {}
+    for name in OBSERVABLES:
+        flat = [
+            _flat(share, file.wavelength(share.table.insname), instruments, stations, errors)
+            for share in given
+            if share.kind.name == name
+        ]
+        if flat:
+            parts[name] = flat[0] if len(flat) == 1 else Observable.concatenate(flat)
+    return Observation(
+        target=target,
+        instruments=instruments,
+        stations=tuple(stations.names),
+        correlation=_correlation(file, given, log),
+        files=file.files,
+        problems=(*file.problems, *log.problems),
+        **parts,
+    )
+
+
+def _flat(
+    share: Share,
+    spectrum: Wavelength,
+    instruments: tuple[str, ...],
+    stations: "_Stations",
+    errors: ErrorBars,
+) -> Observable:
+    table, kind, keep = share.table, share.kind, share.keep
+    row, channel = np.nonzero(keep)
+    value, error = table[kind.value][keep], table[kind.error][keep]
+    if kind.phase:
+        value = np.radians(value - 360.0 * np.round(value / 360.0))
+        error = np.radians(error)
+    wave, band = (a.astype(np.float64) for a in (spectrum.eff_wave, spectrum.eff_band))
+    band = np.where((band > 0) & (band < wave), band, 0.0)
+    time = np.where(table.int_time > 0, table.int_time, 0.0)
+    number = instruments.index(table.insname)
+    return Observable(
+        legs=table.legs[row],
+        wavelength=wave[channel],
+        bandwidth=band[channel],
+        value=value,
+        error=errors.apply(kind.name, error),
+        mjd=table.mjd[row],
+        integration=time[row],
+        stations=stations.of(table)[row],
+        row=share.rows[row],
+        channel=channel.astype(np.int32),
+        instrument=np.full(row.size, number, dtype=np.int32),
+    )
+
+
+class _Stations:
+    """The stations that take part, and the numbers they get."""
+
+    def __init__(self, file: OIFile, given: Sequence[Share]) -> None:
+        arrays = [a for a in file.arrays if any(s.table.arrname == a.arrname for s in given)]
+        self.names: list[str] = []
+        self._numbers: dict[str | None, dict[int, int]] = {}
+        for array in arrays:
+            used = [
+                share.table.sta_index[share.keep.any(axis=1)].ravel()
+                for share in given
+                if share.table.arrname == array.arrname
+            ]
+            present = np.isin(array.sta_index, np.concatenate(used))
+            prefix = f"{array.arrname} " if len(arrays) > 1 else ""
+            numbers = self._numbers.setdefault(array.arrname, {})
+            for row in np.flatnonzero(present):
+                index = int(array.sta_index[row])
+                numbers[index] = len(self.names)
+                self.names.append(prefix + (str(array.sta_name[row]) or str(index)))
+
+    def of(self, table: BaselineTable) -> np.ndarray:
+        """Positions in `names` of the stations of each row of `table`; -1 where unknown."""
+        known = self._numbers.get(table.arrname, {})
+        old, where = np.unique(table.sta_index, return_inverse=True)
+        new = np.array([known.get(index, -1) for index in old.tolist()], dtype=np.int32)
+        return new[where].reshape(table.sta_index.shape)
+
+
+def _correlation(file: OIFile, given: Sequence[Share], log: Log):
+    """Correlation matrix of all the data, mended if need be; None if they are independent."""
+    numbers = Numbers(file)
+    if not numbers.total or not given:
+        return None
+    columns = [(share, numbers.of(share.table, share.kind.index)) for share in given]
+    matrix = numbers.matrix(
+        np.concatenate(
+            [
+                np.full(np.count_nonzero(share.keep), -1) if found is None else found[share.keep]
+                for share, found in columns
+            ]
+        )
+    )
+    if matrix is None:
+        return None
+    matrix, repair = positive_definite(matrix)
+    if repair is not None:
+        log.suspicious(
+            "OI_CORR",
+            f"the correlations of {repair.blocks} groups of data are not positive definite "
+            f"(smallest eigenvalue {repair.smallest:.2g})",
+            "made smaller until they are",
+        )
+    return matrix
