@@ -15,6 +15,8 @@ if TYPE_CHECKING:
 def draw_plane(bundle: Bundle, *, columns: int = 1) -> "Figure":
     """Draw the true orbit, periastron to the right, the companion going counterclockwise.
 
+    A circular orbit has no periastron to show.
+
     The half of the orbit beyond the plane of the sky is drawn thin. Dots stand at equal steps of
     a twentieth of the period; with positions, the places at their dates are filled.
     """
@@ -47,7 +49,8 @@ def draw_plane(bundle: Bundle, *, columns: int = 1) -> "Figure":
         places = _places(bundle, bundle.positions.mjd, scale)
         axes.plot(*places, "o", ms=3.2, color=style.DATUM, mec="white", mew=0.4)
     periastron = {"marker": "D", "ms": 4.2, "mfc": "white", "mec": style.INK}
-    axes.plot(scale * a * (1 - e), 0, **periastron)
+    if e > 0:
+        axes.plot(scale * a * (1 - e), 0, **periastron)
     axes.plot(0, 0, marker=(6, 1, 0), ms=7, color=style.INK, mec="white", mew=0.5)
     axes.set_title(f"{bundle.name}: true orbit")
     axes.set_xlabel(f"towards periastron ({unit})")
@@ -56,7 +59,7 @@ def draw_plane(bundle: Bundle, *, columns: int = 1) -> "Figure":
     handles = [
         Line2D([], [], color=style.CURVE, lw=1.7, label="nearer than the primary"),
         Line2D([], [], color=style.CURVE, lw=0.8, label="farther"),
-        Line2D([], [], ls="", label="periastron", **periastron),
+        *([Line2D([], [], ls="", label="periastron", **periastron)] if e > 0 else []),
         Line2D([], [], ls="", label="ascending node" if bundle.ascending else "node", **node),
     ]
     if not bundle.ascending:  # then near and far may be exchanged

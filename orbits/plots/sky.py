@@ -13,22 +13,18 @@ import numpy as np
 from ..bundle import Bundle, Orbits
 from ..positions import Positions, error_ellipse
 from . import style
+from .compass import Field, draw_compass, draw_scale_bar, free_corners
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
 _TURN = np.linspace(-np.pi, np.pi, 721)
-_CORNERS = ((0.0, 1.0), (1.0, 1.0), (0.0, 0.0), (1.0, 0.0))
-_CORNER_SIZE = 0.19
-"""Side of the square that the compass or the scale bar needs, as a fraction of the axes."""
+_FINE_TURN = np.linspace(-np.pi, np.pi, 7201)
 _DETAIL = 0.22
 """Positions that fill less than this fraction of the field get a picture of their own."""
 MOST_DRAWS = 60
 """Orbits of the cloud that are drawn: more only blacken it."""
-
-Field = tuple[np.ndarray, np.ndarray]
-"""Lowest and highest East offset, and the same of North, mas."""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -78,7 +74,7 @@ def draw_sky(
         close = drawing.add_subplot(*((panels, 1) if columns == 1 else (1, panels)), 2)
         draw_sky_on(close, bundles, marks=marks, field=detail)
         close.set_title("where it was measured", fontweight="normal")
-        _frame(axes, detail, style.angular_unit(np.ptp(_limits(bundles)[0]))[1])
+        _frame(axes, close, _limits(bundles), detail)
     style.legend_below(drawing, handles, columns=per_row)
     return drawing
 
@@ -109,24 +105,30 @@ def draw_sky_on(
         x, y = bundle.best.at_anomaly(_TURN)
         axes.plot(x[0] * scale, y[0] * scale, color=colour, linestyle=dashes, lw=1.2, zorder=4)
     _line_of_nodes(axes, first, scale)
-    _periastron(axes, first.best, scale)
+    if first.best.eccentricity[0] > 0:
+        _periastron(axes, first.best, scale)
     for bundle in bundles:
         if bundle.positions is not None:
             _measurements(axes, bundle.positions, bundle.best, scale, small=small)
     for mark in marks:
         _mark(axes, first.best, mark, scale)
     axes.plot(0, 0, marker=(6, 1, 0), ms=7, color=style.INK, mec="white", mew=0.5, zorder=8)
-    wanted = 1 if small else 2
-    limits, corners = _free_corners(limits, _busy_places(bundles), wanted=wanted, widen=whole)
+    busy, cloud = _busy_places(bundles)
+
+    def taken(width: float) -> np.ndarray:
+        arrows = _arrows(first.best, width).reshape(-1, 2) if whole else np.zeros((0, 2))
+        return np.concatenate([busy, arrows])
+
+    limits, corners = free_corners(limits, taken, cloud, wanted=1 if small else 2)
     axes.set_xlim(limits[0][1] * scale, limits[0][0] * scale)  # East grows to the left
     axes.set_ylim(limits[1][0] * scale, limits[1][1] * scale)
     if whole:
         _direction(axes, first.best, np.ptp(limits[0]), scale)
-    _compass(axes, corners[0])
+    draw_compass(axes, corners[0])
     if small:
         axes.tick_params(labelbottom=False, labelleft=False, length=0)
     else:
-        _scale_bar(axes, corners[1], np.ptp(limits[0]) * scale, unit)
+        draw_scale_bar(axes, corners[1], np.ptp(limits[0]) * scale, unit)
         axes.set_xlabel(f"East offset ({unit})")
         axes.set_ylabel(f"North offset ({unit})")
     return f"{np.ptp(limits[0]) * scale:.4g} {unit}"
@@ -156,11 +158,13 @@ def _detail(bundles: Sequence[Bundle]) -> Field | None:
     return (centre[0] + half * np.array([-1, 1]), centre[1] + half * np.array([-1, 1]))
 
 
-def _frame(axes: "Axes", field: Field, scale: float) -> None:
-    """A thin frame around the part of the sky that the second picture shows."""
-    (left, right), (low, high) = field
+def _frame(axes: "Axes", close: "Axes", whole: Field, detail: Field) -> None:
+    """A thin frame on `axes` around the part of the sky that `close` shows."""
+    # Either may be in arcsec.
+    ratio = style.angular_unit(np.ptp(whole[0]))[1] / style.angular_unit(np.ptp(detail[0]))[1]
+    (left, right), (low, high) = close.get_xlim(), close.get_ylim()
     x, y = [left, right, right, left, left], [low, low, high, high, low]
-    axes.plot(np.array(x) * scale, np.array(y) * scale, color=style.QUIET, lw=0.6, zorder=3)
+    axes.plot(np.array(x) * ratio, np.array(y) * ratio, color=style.QUIET, lw=0.6, zorder=3)
 
 
 def _limits(bundles: Sequence[Bundle]) -> Field:
@@ -283,34 +287,17 @@ def _mark(axes: "Axes", best: Orbits, mark: Mark, scale: float) -> None:
     )
 
 
-def _busy_places(bundles: Sequence[Bundle]) -> np.ndarray:
-    """(m, 2) points of the field that no compass may cover."""
-    places = [np.zeros((1, 2))]
+def _busy_places(bundles: Sequence[Bundle]) -> tuple[np.ndarray, np.ndarray]:
+    """(m, 2) points that no compass may cover, and points of the cloud that it had better not."""
+    places, cloud = [np.zeros((1, 2))], [np.zeros((0, 2))]
     for bundle in bundles:
-        for orbits in (bundle.best, bundle.thin(MOST_DRAWS)):
-            x, y = orbits.at_anomaly(_TURN)
-            places.append(np.stack([x.ravel(), y.ravel()], axis=-1))
+        x, y = bundle.best.at_anomaly(_FINE_TURN)
+        places.append(np.stack([x[0], y[0]], axis=-1))
         if bundle.positions is not None:
             places.append(bundle.positions.xy)
-    return np.concatenate(places)
-
-
-def _free_corners(
-    limits: Field, busy: np.ndarray, *, wanted: int, widen: bool
-) -> tuple[Field, list[tuple[float, float]]]:
-    """The field, widened if need be, and its `wanted` emptiest corners as axes fractions."""
-    for _ in range(6):
-        low, size = np.array([limits[0][0], limits[1][0]]), np.ptp(limits[0])
-        fraction = (busy - low) / size
-        fraction[:, 0] = 1 - fraction[:, 0]
-        crowd = [
-            np.sum(np.all(np.abs(fraction - corner) < _CORNER_SIZE, axis=1)) for corner in _CORNERS
-        ]
-        order = np.argsort(crowd, kind="stable")[:wanted]
-        if crowd[order[-1]] == 0 or not widen:
-            break
-        limits = tuple(v.mean() + 1.08 * (v - v.mean()) for v in limits)
-    return limits, [_CORNERS[number] for number in order]
+        x, y = bundle.thin(MOST_DRAWS).at_anomaly(_TURN)
+        cloud.append(np.stack([x.ravel(), y.ravel()], axis=-1))
+    return np.concatenate(places), np.concatenate(cloud)
 
 
 def _course(best: Orbits, anomaly: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -324,15 +311,20 @@ def _course(best: Orbits, anomaly: np.ndarray) -> tuple[np.ndarray, np.ndarray, 
     return place, along, turn * np.stack([-along[:, 1], along[:, 0]], axis=-1)
 
 
-def _direction(axes: "Axes", best: Orbits, size: float, scale: float) -> None:
-    """Two arrows just outside the orbit that say which way the companion goes."""
+def _arrows(best: Orbits, size: float) -> np.ndarray:
+    """(2, 3, 2) tail, middle and head of two arrows outside the orbit, in a field of `size`."""
     place, along, outward = _course(best, np.radians([-115.0, 115.0]))
-    centre = place + 0.035 * size * outward
-    for point, step in zip(centre, along, strict=True):
+    centre, half = place + 0.035 * size * outward, 0.055 * size * along
+    return np.stack([centre - half, centre, centre + half], axis=1)
+
+
+def _direction(axes: "Axes", best: Orbits, size: float, scale: float) -> None:
+    """Arrows that say which way the companion goes."""
+    for tail, _, head in _arrows(best, size) * scale:
         axes.annotate(
             "",
-            (point + 0.055 * size * step) * scale,
-            (point - 0.055 * size * step) * scale,
+            head,
+            tail,
             arrowprops={
                 "arrowstyle": "-|>",
                 "color": style.CURVE,
@@ -343,71 +335,6 @@ def _direction(axes: "Axes", best: Orbits, size: float, scale: float) -> None:
             },
             zorder=7,
         )
-
-
-def _compass(axes: "Axes", corner: tuple[float, float]) -> None:
-    """Arrows to North (up) and East (left) in a corner of the axes."""
-    # The angle of the L lies away from its two tips, which point up and to the left.
-    x = 0.16 if corner[0] == 0 else 0.95
-    y = 0.84 if corner[1] == 1 else 0.05
-    for tip, label, offset in (
-        ((x, y + 0.09), "N", (0.0, 0.028)),
-        ((x - 0.09, y), "E", (-0.028, 0.0)),
-    ):
-        axes.annotate(
-            "",
-            tip,
-            (x, y),
-            xycoords="axes fraction",
-            textcoords="axes fraction",
-            arrowprops={
-                "arrowstyle": "-|>",
-                "color": style.INK,
-                "lw": 0.8,
-                "shrinkA": 0,
-                "shrinkB": 0,
-                "mutation_scale": 6,
-            },
-            zorder=9,
-        )
-        axes.text(
-            tip[0] + offset[0],
-            tip[1] + offset[1],
-            label,
-            transform=axes.transAxes,
-            ha="center",
-            va="center",
-            fontsize=6.5,
-            zorder=9,
-        )
-
-
-def _scale_bar(axes: "Axes", corner: tuple[float, float], field: float, unit: str) -> None:
-    """A bar of a round length, about an eighth of the `field`, which is in `unit`."""
-    decade = 10.0 ** np.floor(np.log10(0.16 * field))
-    length = max(step for step in (1, 2, 5) if step * decade <= 0.16 * field) * decade
-    half = length / field / 2
-    x = 0.1 if corner[0] == 0 else 0.9
-    y = 0.94 if corner[1] == 1 else 0.05
-    axes.plot(
-        [x - half, x + half],
-        [y, y],
-        transform=axes.transAxes,
-        color=style.INK,
-        lw=1.6,
-        solid_capstyle="butt",
-        zorder=9,
-    )
-    axes.text(
-        x,
-        y + (0.02 if corner[1] == 0 else -0.02),
-        f"{length:g} {unit}",
-        transform=axes.transAxes,
-        ha="center",
-        va="bottom" if corner[1] == 0 else "top",
-        fontsize=6.5,
-        zorder=9,
-    )
 
 
 def _key(bundles: Sequence[Bundle], marks: bool) -> list:
@@ -428,7 +355,8 @@ def _key(bundles: Sequence[Bundle], marks: bool) -> list:
         handles.append(point("o", "measured, 1σ", ms=4, mfc=style.DATUM, mec="none"))
     if len(bundles) == 1 and len(first.draws):
         handles.append(Line2D([], [], color=style.CLOUD, lw=1.2, label=first.spread))
-    handles.append(point("D", "periastron", ms=4.2, mfc="white", mec=style.INK))
+    if first.best.eccentricity[0] > 0:
+        handles.append(point("D", "periastron", ms=4.2, mfc="white", mec=style.INK))
     handles.append(
         Line2D(
             [],
