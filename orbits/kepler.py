@@ -65,19 +65,18 @@ def solve(m, e):
     sign = 1.0 if m >= 0 else -1.0
     m = abs(m)
     # Markley (1995): the sine replaced by a Pade approximant makes the equation a cubic.
-    alpha = (3 * math.pi**2 + 1.6 * math.pi * (math.pi - m) / (1 + e)) / (math.pi**2 - 6)
+    alpha = (3 * math.pi**2 + 1.6 * math.pi * (math.pi - m) / (1 + e)) * (1 / (math.pi**2 - 6))
     gap = 1 - e
     d = 3 * gap + alpha * e
     r = (3 * alpha * d * (d - gap) + m * m) * m
     q = 2 * alpha * d * gap - m * m
     w = _rough_cube_root(r + math.sqrt(q * q * q + r * r)) ** 2
     E = (2 * r * w / (w * w + w * q + q * q) + m) / d
-    if not E > 0:  # m = 0, where the cubic's expressions may be 0/0
-        return sign * 0.0
-    sine, cosine = math.sin(E), math.cos(E)
+    E = E if E > 0 else 0.0  # m = 0, where the cubic's expressions may be 0/0
+    sine, cosine = _sine_cosine(E)
     f0 = _excess(E, sine, m, e)
     f1 = gap + e * (1 - cosine)
-    step = -f0 / (f1 - 0.5 * f0 * e * sine / f1)
+    step = -f0 * f1 / (f1 * f1 - 0.5 * f0 * e * sine)
     E += step
     # |step| < 1e-3: sine and cosine at the new E from the old ones, by Taylor's series.
     square = step * step
@@ -87,31 +86,52 @@ def solve(m, e):
         sine + (cosine * small_sine - sine * small_versine),
         cosine - (sine * small_sine + cosine * small_versine),
     )
-    return sign * (E - _excess(E, sine, m, e) / (gap + e * (1 - cosine)))
+    f0 = _excess(E, sine, m, e)
+    return sign * (E - f0 / (gap + e * (1 - cosine)))
 
 
 @compiled
 def _excess(E, sine, m, e):
     """E - e sin E - m, with E - sin E by its series where the difference would lose digits."""
-    if E > 1.2:
-        return (E - m) - e * sine
     s = E * E
     tail = 1 - s / 156 * (1 - s / 210 * (1 - s / 272 * (1 - s / 342)))
     cubic = (E * s / 6) * (1 - s / 20 * (1 - s / 42 * (1 - s / 72 * (1 - s / 110 * tail))))
-    return ((1 - e) * E - m) + e * cubic
+    return (E - m) - e * sine if E > 1.2 else ((1 - e) * E - m) + e * cubic
+
+
+@compiled
+def _sine_cosine(E):
+    """Sine and cosine of E in [0, pi] to 1.2e-16, by Taylor's series about the quarter turns."""
+    quarter = _round(E * (2 / math.pi))
+    x = (E - quarter * 1.5707963267948966) - quarter * 6.123233995736766e-17
+    s = x * x
+    t = 1 - s * (1 / 110) * (1 - s * (1 / 156) * (1 - s * (1 / 210)))
+    sine = x - x * s * (1 / 6) * (1 - s * (1 / 20) * (1 - s * (1 / 42) * (1 - s * (1 / 72) * t)))
+    t = 1 - s * (1 / 90) * (1 - s * (1 / 132) * (1 - s * (1 / 182) * (1 - s * (1 / 240))))
+    cosine = 1 - s * 0.5 * (1 - s * (1 / 12) * (1 - s * (1 / 30) * (1 - s * (1 / 56) * t)))
+    if quarter == 1.0:
+        return cosine, -sine
+    return (-sine, -cosine) if quarter == 2.0 else (sine, cosine)
 
 
 @compiled
 def _rough_cube_root(x):
     """Cube root of x >= 0 to 1e-4: a third of the bits of x, then one step of Halley's method."""
-    guess = np.int64(np.float64(x).view(np.int64) // 3 + 0x2A9F7893782DA1CE).view(np.float64)
+    third = np.int64(np.float64(np.float64(x).view(np.int64)) * (1 / 3))
+    guess = np.int64(third + 0x2A9F7893782DA1CE).view(np.float64)
     cube = guess * guess * guess
     return guess * (cube + 2 * x) / (2 * cube + x)
 
 
 @compiled
+def _round(x):
+    """The nearest whole number of |x| < 2**51: adding 1.5 * 2**52 leaves no room for a fraction."""
+    return (x + 6755399441055744.0) - 6755399441055744.0
+
+
+@compiled
 def _solve_all(m, e, solution):
     for i in range(m.size):
-        turns = np.rint(m[i] / _TURN)
+        turns = _round(m[i] * (1 / _TURN))
         reduced = ((m[i] - turns * _TURN_HIGH) - turns * _TURN_MIDDLE) - turns * _TURN_LOW
         solution[i] = solve(reduced, e[i])
