@@ -10,7 +10,7 @@ from orbits.fitting.solution import Solution
 
 
 def test_the_demo_finds_what_was_put_in(tmp_path, capsys):
-    demo(out=tmp_path)
+    demo(output=tmp_path)
     results = tmp_path / "harrow-7-results"
     rows = compare(scenario(), Solution.read(results).samples)
     assert len(rows) == 14

@@ -10,7 +10,7 @@ from .frame import Force, Seed, say
 
 
 def demo(
-    out: Annotated[Path, typer.Option(help="Folder for everything.")] = Path("demo-output"),
+    output: Annotated[Path, typer.Option(help="Folder for everything.")] = Path("demo-output"),
     seed: Seed = 7,
     force: Force = False,
 ) -> None:
@@ -26,8 +26,8 @@ def demo(
     say("Harrow 7 is an invented double-lined binary; its array and its nights are invented too.")
     truth = scenario()
     rng = np.random.default_rng(seed)
-    system = simulate(truth, out, rng=rng, force=force, progress=Bar())
-    say(f"\n{len(truth.nights.dates)} nights and the velocities are simulated: {out}")
+    system = simulate(truth, output, rng=rng, force=force, progress=Bar())
+    say(f"\n{len(truth.nights.dates)} nights and the velocities are simulated: {output}")
     say(f"\n$ nodeline measure {system}")
     measure.measure(system, seed=seed, force=force)
     say(f"\n$ nodeline orbit {system}")

@@ -10,7 +10,7 @@ from .frame import Force, Json, Seed, emit, say
 
 def simulate(
     scenario: Annotated[Path, typer.Argument(help="Scenario file (TOML).", metavar="SCENARIO")],
-    out: Annotated[Path, typer.Option(help="Folder for nights, velocities and system file.")],
+    output: Annotated[Path, typer.Option(help="Folder for nights, velocities and system file.")],
     seed: Seed = 0,
     force: Force = False,
     json: Json = False,
@@ -24,7 +24,7 @@ def simulate(
 
     plan = read_scenario(scenario)
     rng = np.random.default_rng(seed)
-    system = carry_out(plan, out, rng=rng, force=force, progress=Bar())
+    system = carry_out(plan, output, rng=rng, force=force, progress=Bar())
     say(f"{plan.name}: {len(plan.nights.dates)} nights simulated; next: nodeline measure {system}",
         json=json)  # fmt: skip
     if json:
