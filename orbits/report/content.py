@@ -131,7 +131,7 @@ _WORDS = {
     "total_msun": ("total mass", "M☉"),
     "primary_msun": ("mass of the primary", "M☉"),
     "companion_msun": ("mass of the companion", "M☉"),
-    "mass_ratio": ("mass of the companion over that of the primary", ""),
+    "mass_ratio": ("mass ratio, companion over primary", ""),
     "primary_sin3i_msun": ("mass of the primary times sin³ i", "M☉"),
     "companion_sin3i_msun": ("mass of the companion times sin³ i", "M☉"),
     "mass_function_msun": ("mass function", "M☉"),
