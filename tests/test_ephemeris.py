@@ -60,6 +60,68 @@ def test_the_fourth_catalogs_ephemerides(name, rng):
     assert_allclose(table.separation, [1000 * p[1] for p in printed], atol=0.5 + 0.1)
 
 
+# The constants printed in the same catalogue, arcsec.
+CONSTANTS = {
+    "alp Cen/Heintz 1960": (8.8020, 6.9032, -13.3015, -3.9252),
+    "I 27 CD/Heintz 1978": (0.7192, -0.8230, 0.7905, 0.5369),
+    "A 2641/Baize 1980": (0.9867, -0.3871, -0.1455, -0.4006),
+    "gam Vir/Strand 1937": (-2.5014, 1.9437, 2.5615, 2.6630),
+    "zet Boo/Wierzbinski 1956": (-0.3730, 0.4634, 0.3689, 0.2895),
+    "mu Vel/van den Bos 1966": (-0.6820, -1.2501, 0.6570, -0.1632),
+    "eta CrB/Silbernagel 1929": (-0.5165, -0.5541, 0.6768, -0.0938),
+    "Sirius/van den Bos 1960": (-2.4293, -6.5242, -6.1022, 0.4161),
+}
+
+
+@pytest.mark.parametrize("name", CONSTANTS)
+def test_the_fourth_catalogs_constants(name, rng):
+    found = find_entry(name, "published").bundle(rng).best.thiele_innes
+    # To the last printed digit.
+    assert_allclose(np.ravel(found) / 1000, CONSTANTS[name], atol=0.5001e-4)
+
+
+def test_meeus_exercise_of_gamma_virginis():
+    """Meeus, Astronomical Algorithms (2nd ed. 1998), chapter 57: printed to 0.01 deg, 0.01 arcsec.
+
+    A retrograde orbit of e = 0.885, through its periastron.
+    """
+    bundle = bundle_of(
+        period=168.68,
+        periastron=2005.13,
+        eccentricity=0.885,
+        semimajor_axis=3.697,
+        inclination=148.0,
+        node=36.9,
+        argument=256.5,
+    )
+    table = predict(bundle, np.arange(1980.0, 2013.0, 4.0))  # all in years and arcsec
+    angles = [296.65, 293.10, 288.70, 282.89, 274.41, 259.34, 208.67, 35.54, 12.72]
+    separations = [3.78, 3.43, 3.04, 2.60, 2.08, 1.45, 0.59, 1.04, 1.87]
+    # 274.415 and 35.535 are printed rounded either way.
+    assert_allclose(table.position_angle, angles, atol=0.0055)
+    assert_allclose(table.separation, separations, atol=0.005)
+
+
+def test_the_drawn_ellipse_has_the_published_apparent_eccentricity():
+    """Meeus, example 57.b: eta Coronae Borealis appears with e' = 0.860 (0.859937436949)."""
+    bundle = bundle_of(
+        period=41.623,
+        periastron=1934.008,
+        eccentricity=0.2763,
+        semimajor_axis=0.907,
+        inclination=59.025,
+        node=23.717,
+        argument=219.907,
+    )
+    # The curve is a linear image of a circle; its semi-axes are the singular values.
+    x, y = bundle.best.at_anomaly(np.array([0.0, np.pi, np.pi / 2, -np.pi / 2]))
+    half = np.array(
+        [[x[0, 0] - x[0, 1], x[0, 2] - x[0, 3]], [y[0, 0] - y[0, 1], y[0, 2] - y[0, 3]]]
+    )
+    major, minor = np.linalg.svd(half, compute_uv=False)
+    assert_allclose(np.sqrt(1 - (minor / major) ** 2), 0.859937436949, atol=1e-11)
+
+
 def test_meeus_example_of_eta_coronae_borealis():
     """Meeus, Astronomical Algorithms (2nd ed. 1998), example 57.a: 318.42426 deg, 0.4110178 arcsec.
 

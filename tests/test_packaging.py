@@ -36,6 +36,8 @@ def test_the_wheel_brings_every_catalogue_and_the_demo(installed):
     for path in (ROOT / "catalogs").glob("*.ecsv"):
         assert (installed / "orbits" / "catalogs" / path.name).read_bytes() == path.read_bytes()
     assert (installed / "orbits" / "demo" / "harrow-7.toml").is_file()
+    for name in ("page.html", "page.css", "page.js"):
+        assert (installed / "orbits" / "report" / "templates" / name).is_file()
     assert sorted(path.name for path in installed.iterdir() if path.suffix != ".dist-info") == [
         "bin",
         "orbits",

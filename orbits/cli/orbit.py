@@ -50,7 +50,8 @@ def orbit(
     )
     solution.write(given.results, force=force)
     command = f"nodeline orbit {given.path.name} --seed {seed}"
-    inputs = (given.path, *given.positions, *given.velocities)
+    measured = (given.results / "positions.ecsv",) if given.nights else ()
+    inputs = (given.path, *given.positions, *measured, *given.velocities)
     record(given.results, "orbit", command=command, seed=seed, inputs=inputs)
     say(table(solution), json=json)
     say(f"Written to {given.results}", json=json)

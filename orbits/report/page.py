@@ -101,19 +101,22 @@ def _maps(system: System, seed: int, lines, progress: Silent) -> list[NightMap]:
     from ..plots.field import draw_field
 
     keys = {line.night: line.key for line in lines}
+    nights = measure(system, rng=np.random.default_rng(seed), progress=progress)
     made = []
-    for night in measure(system, rng=np.random.default_rng(seed), progress=progress):
-        seen = night.observation
-        counts = f"{len(seen.v2)} squared visibilities, {len(seen.t3)} closure phases"
-        made.append(
-            NightMap(
-                key=keys.get(night.label, ""),
-                label=night.label,
-                verdict=_verdict(night),
-                data=f"{seen.target}, {seen.instrument}: {counts}",
-                picture="" if night.result is None else inline_png(draw_field(night.result)),
+    with progress.task("drawing maps", total=len(nights)) as step:
+        for night in nights:
+            seen = night.observation
+            counts = f"{len(seen.v2)} squared visibilities, {len(seen.t3)} closure phases"
+            made.append(
+                NightMap(
+                    key=keys.get(night.label, ""),
+                    label=night.label,
+                    verdict=_verdict(night),
+                    data=f"{seen.target}, {seen.instrument}: {counts}",
+                    picture="" if night.result is None else inline_png(draw_field(night.result)),
+                )
             )
-        )
+            step()
     return made
 
 
