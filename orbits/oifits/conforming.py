@@ -190,8 +190,10 @@ def _fit(table: DataTable, say: Say) -> DataTable:
         datum, sigma = table[value], table[error]
         if datum is None or sigma is None:
             continue
-        bad = ~table.flag & ~np.isnan(datum) & ~((sigma > 0) & (sigma < np.inf))
-        why = "without a positive error"
+        sound = (sigma > 0) & (sigma < np.inf)
+        missing = np.isnan(datum) & (sound | np.isnan(sigma))  # which the standard allows
+        bad = ~table.flag & ~missing & ~(sound & np.isfinite(datum))
+        why = "without a number and a positive error"
         if isinstance(table, T3) and value == "T3AMP":
             bad |= ~table.flag & (datum > 1 + sigma)
             why += ", or above 1,"

@@ -219,7 +219,7 @@ def _row(head: str, text: str) -> str:
 def _night(night: dict[str, Any]) -> str:
     return (
         f"{night['night'][:10]}  MJD {night['mjd']:.4f}  {'+'.join(night['instruments'])}  "
-        f"{night['n_v2']} V2, {night['n_t3']} closure phases"
+        f"{night['n_v2']} V2, {night['n_t3']} T3"
     )
 
 
@@ -238,9 +238,9 @@ def _amounts(result: dict[str, Any]) -> Iterator[str]:
     for name, counts in result["data"].items():
         word = KINDS[name].words
         if name not in DEFAULT:
-            others.append(f"{counts['kept']} x {word}")
+            others.append(f"{counts['kept']} {word}")
             continue
-        text = f"{counts['kept']} x {word}, {counts['flagged']} flagged"
+        text = f"{counts['kept']} {word} kept, {counts['flagged']} flagged"
         yield _row("data", text + (f", {counts['left_out']} left out" * bool(counts["left_out"])))
     if others:
         yield _row("  also", ", ".join(others) + ": off unless asked for")

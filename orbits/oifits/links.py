@@ -157,6 +157,8 @@ def _linked(table, wavelengths, arrays, correlations, log: Log) -> bool:
             "the table is left out",
         )
         return False
+    if table.arrname is None and len(arrays) == 1 and table.sta_index is not None:
+        table.arrname = arrays[0].arrname  # version 1 may leave out what is clear
     for key, known in (
         ("arrname", [a.arrname for a in arrays]),
         ("corrname", [c.corrname for c in correlations]),

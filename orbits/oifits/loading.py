@@ -147,7 +147,10 @@ def _values(content: BinTable, field: Field, column: Column, label: str, log: Lo
         if values.min() < limit.min or values.max() > limit.max:
             raise Malformed(f"column {name} has numbers beyond 32 bits")
     values = _shaped(values, field, column)
-    values = values.astype(DTYPES[column.code], copy=column.code != "L")
+    if column.code == "E" and field.code == "D":
+        log.note(label, f"column {name} is in double precision", "rounded to single precision")
+    with np.errstate(over="ignore"):
+        values = values.astype(DTYPES[column.code], copy=column.code != "L")
     if column.unit not in (OPEN, ""):
         scale = factor(column.unit, field.unit)
         if scale is None:

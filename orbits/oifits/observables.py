@@ -29,7 +29,7 @@ class Kind:
     """The column with the number of its first channel in OI_CORR."""
     phase: bool
     words: str
-    """What people call it."""
+    """What people call its data."""
 
     @property
     def legs(self) -> int:
@@ -40,11 +40,11 @@ class Kind:
 KINDS = {
     kind.name: kind
     for kind in (
-        Kind("v2", Vis2, "VIS2DATA", "VIS2ERR", "CORRINDX_VIS2DATA", False, "squared visibility"),
-        Kind("t3", T3, "T3PHI", "T3PHIERR", "CORRINDX_T3PHI", True, "closure phase"),
-        Kind("t3amp", T3, "T3AMP", "T3AMPERR", "CORRINDX_T3AMP", False, "triple amplitude"),
-        Kind("visamp", Vis, "VISAMP", "VISAMPERR", "CORRINDX_VISAMP", False, "amplitude"),
-        Kind("visphi", Vis, "VISPHI", "VISPHIERR", "CORRINDX_VISPHI", True, "phase"),
+        Kind("v2", Vis2, "VIS2DATA", "VIS2ERR", "CORRINDX_VIS2DATA", False, "squared visibilities"),
+        Kind("t3", T3, "T3PHI", "T3PHIERR", "CORRINDX_T3PHI", True, "closure phases"),
+        Kind("t3amp", T3, "T3AMP", "T3AMPERR", "CORRINDX_T3AMP", False, "triple amplitudes"),
+        Kind("visamp", Vis, "VISAMP", "VISAMPERR", "CORRINDX_VISAMP", False, "amplitudes"),
+        Kind("visphi", Vis, "VISPHI", "VISPHIERR", "CORRINDX_VISPHI", True, "phases"),
     )
 }
 

@@ -235,7 +235,8 @@ def assert_same(one: OIFile, two: OIFile) -> None:
     for a, b in zip(one.tables, two.tables, strict=True):
         assert_same_table(a, b)
     assert one.others == two.others
-    assert one.history == two.history
+    # FITS breaks long lines of history.
+    assert "".join(one.history).replace(" ", "") == "".join(two.history).replace(" ", "")
 
 
 def assert_same_table(a, b) -> None:

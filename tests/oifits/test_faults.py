@@ -372,5 +372,5 @@ def test_a_file_with_everything_flagged_has_nothing_to_offer(rng, tmp_path):
     for table in file.data:
         table.flag[:] = True
     file.write(tmp_path / "night.fits")
-    with pytest.raises(InputError, match="no usable squared visibility or closure phase of Harrow"):
+    with pytest.raises(InputError, match="no usable squared visibilities or closure phases of Ha"):
         read(tmp_path / "night.fits")
