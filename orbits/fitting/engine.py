@@ -20,11 +20,13 @@ from .posterior import equal_weight, sample_table
 from .priors import Priors
 from .proposal import Proposal, Target
 from .refine import refine
-from .scan import Scan, scan
+from .scan import Scan, doubtful, scan
 from .solution import Solution, summarise, summarise_json
 
 STARTS = 40
 """Minima of the scan that are refined."""
+DOUBTFUL_STARTS = 200
+"""The same where nights have alternatives or outliers, which make false minima."""
 SOLUTIONS = 16
 """Solutions that the proposal may hold."""
 NEGLIGIBLE = 16.0
@@ -81,7 +83,8 @@ def fit(
 
 def propose(data: Data, found: Scan, rng: np.random.Generator) -> tuple[Target, float]:
     """The adapted proposal around the solutions that the scan leads to, and its efficiency."""
-    fits = refine(data, found, most=STARTS, rng=rng)
+    most = DOUBTFUL_STARTS if doubtful(data) else STARTS
+    fits = refine(data, found, most=most, rng=rng)
     solutions = sorted(normals(data, fits), key=lambda s: -s.log_weight)
     kept = [s for s in solutions if s.log_weight > solutions[0].log_weight - NEGLIGIBLE]
     proposal, efficiency = adapt(

@@ -15,9 +15,10 @@ from ..elements import campbell
 from .data import Data
 from .likelihood import DERIVED
 from .orbit_jacobian import constants_of, sky, sky_by_constants, turned_motion
-from .scan import Scan, linear_solution
+from .scan import Scan, coarse_error, doubtful, linear_solution
 
 STEPS = 60
+OPPOSITES = 20
 LARGEST_K = 0.9995
 ASSUMED_OUTLIERS = 0.1
 
@@ -72,7 +73,8 @@ def refine(data: Data, found: Scan, *, most: int, rng: np.random.Generator) -> F
     """Refine the lowest minima of a scan and keep the distinct ones.
 
     Where the model has jitters, they are estimated from the residuals of the best solution and
-    the refinement is repeated with them.
+    the refinement is repeated with them. Where positions are in doubt, the first refinement has
+    them as coarse as the scan had, lest a start that is near but not near enough rejects them all.
     """
     unknowns = Unknowns.of(data)
     starts = [
@@ -82,6 +84,10 @@ def refine(data: Data, found: Scan, *, most: int, rng: np.random.Generator) -> F
     ]
     values = np.array(starts)
     jitters = (np.zeros(len(data.tables.places)), np.zeros(len(data.tables.speeds)))
+    if doubtful(data):
+        coarse = (np.full(len(data.tables.places), coarse_error(data)), jitters[1])
+        values, cost, _ = _least_squares(data, unknowns, values, coarse)
+        values = _with_opposites(unknowns, values[np.argsort(cost)])
     for _ in range(3 if data.model.position_jitter or data.model.velocity_jitter else 1):
         values, cost, information = _least_squares(data, unknowns, values, jitters)
         keep = _distinct(values, cost, information)
@@ -95,6 +101,20 @@ def refine(data: Data, found: Scan, *, most: int, rng: np.random.Generator) -> F
         position_jitter=used[0],
         velocity_jitter=used[1],
     )
+
+
+def _with_opposites(unknowns, values):
+    """The solutions, and the best of them with the companion on the primary's other side.
+
+    Where every night has its opposite place among its alternatives, both fit equally.
+    """
+    other = values[:OPPOSITES].copy()
+    if "p_re" in unknowns:
+        columns = [unknowns[name] for name in ("p_re", "p_im", "n_re", "n_im")]
+        other[:, columns] *= -1
+    else:
+        other[:, unknowns["node"]] += np.pi
+    return np.concatenate([values, other])
 
 
 def _start(data, unknowns, period, e, phase, rng) -> list[np.ndarray]:

@@ -24,10 +24,15 @@ PHASES = np.array([1, 8, 14, 22, 34, 56])
 """Times of periastron that are tried for each eccentricity: about 4 for each half-width."""
 OVERSAMPLING = 10
 """Steps in frequency for one turn over the span of the data."""
+PAIRS = 6
+"""Pairs of nights that the constants are drawn from where positions are in doubt."""
 TABLE = 2048
 """Nodes of the tabulated orbital motion; linear between them, wrong by 1e-5 to 1e-3 at most."""
-CUT = 36.0
+CUT = 16.0
 """With outliers, no night counts for more than this in chi-square."""
+COARSENESS = 0.02
+"""Error of the model between nodes, as a share of the typical separation: alternatives and
+outliers are told apart with this beside the errors of the positions."""
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -136,21 +141,36 @@ def _table(e: float) -> np.ndarray:
 def _weights(data: Data) -> np.ndarray:
     """(n, 3) inverse covariance wxx, wxy, wyy of each position."""
     cxx, cxy, cyy = data.tables.places[:, 3:6].T
+    extra = coarse_error(data) ** 2
+    cxx, cyy = cxx + extra, cyy + extra
     determinant = cxx * cyy - cxy**2
     return np.column_stack([cyy, -cxy, cxx]) / determinant[:, None]
+
+
+def coarse_error(data: Data) -> float:
+    """Error that positions are given, mas, while it is open which of them to believe."""
+    if not doubtful(data):
+        return 0.0
+    return COARSENESS * math.sqrt(np.square(data.tables.places[:, 1:3]).sum(axis=1).mean())
+
+
+def doubtful(data: Data) -> bool:
+    """Whether nights have alternatives or may be outliers."""
+    return len(data.tables.places) > 0 and (
+        data.nights < len(data.tables.places) or data.model.outliers
+    )
 
 
 def _seeds(data: Data, rng: np.random.Generator) -> np.ndarray:
     """(k, 2) pairs of rows to start from; none where all positions can simply be used."""
     nights = data.tables.place_labels[:, 0]
-    counts = np.bincount(nights) if len(nights) else np.empty(0, dtype=int)
-    ambiguous = bool((counts > 1).any())
-    if not (ambiguous or data.model.outliers) or counts.size < 2:
+    if not doubtful(data) or data.nights < 2:
         return np.empty((0, 2), dtype=np.int64)
+    counts = np.bincount(nights)
     sure = np.flatnonzero(counts == 1)
     pool = sure if sure.size >= 2 else np.arange(counts.size)
     pairs = []
-    for _ in range(6 if data.model.outliers else 3):
+    for _ in range(PAIRS):
         one, two = rng.choice(pool, 2, replace=False)
         pairs += list(product(np.flatnonzero(nights == one), np.flatnonzero(nights == two)))
     return np.array(pairs, dtype=np.int64)
