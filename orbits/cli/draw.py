@@ -68,6 +68,7 @@ def draw(
 
     from ..files import refuse_existing
     from ..plots.style import save
+    from ..progress import Bar
 
     if bool(names) == all_entries:
         raise typer.BadParameter("give the names of entries or systems, or --all, not both")
@@ -81,8 +82,11 @@ def draw(
         pictures = _pictures(bundles, kinds, columns, _marks(mark or []), _stretch(start, end))
     paths = _paths(list(pictures), output or folder, form.value)
     refuse_existing(*paths.values(), force=force)
-    for name, path in paths.items():
-        save(pictures[name](), path, force=force)
+    with Bar().task("drawing", total=len(paths)) as step:
+        for name, path in paths.items():
+            save(pictures[name](), path, force=force)
+            step()
+    for path in paths.values():
         say(f"drawn: {path}", json=json)
     if json:
         emit({"pictures": [str(path) for path in paths.values()]})

@@ -1,6 +1,7 @@
 """nodeline predict: where the companion will be, and when what happens."""
 
-from dataclasses import fields
+from collections.abc import Callable
+from dataclasses import fields, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
@@ -49,6 +50,7 @@ def predict(
     import numpy as np
 
     from ..ephemeris import events
+    from ..ephemeris import predict as predict_bundle
     from ..files import refuse_existing
 
     if (name is None) != all_entries:
@@ -63,9 +65,13 @@ def predict(
         tables = _of_all(catalogue, mjd, equinox, rng)
         happenings: list[Event] = []
     else:
-        bundle, table = _of_one(name, catalogue, mjd, equinox, rng)
+        bundle, turn = _orbit(name, catalogue, equinox, rng)
+        table = predict_bundle(bundle, mjd, turn=turn(mjd))
         tables = {bundle.name: table}
-        happenings = events(bundle, mjd[0], mjd[0] + bundle.best.period[0])
+        happenings = [
+            replace(event, position_angle=float(event.position_angle + turn(event.mjd)) % 360.0)
+            for event in events(bundle, mjd[0], mjd[0] + bundle.best.period[0])
+        ]
         if not json:
             _say_one(bundle, table, happenings, equinox)
     if all_entries and not json:
@@ -98,10 +104,8 @@ def _equinoxes(equinox: str, mjd: "np.ndarray") -> "np.ndarray | float":
         raise InputError(f"--equinox {equinox!r} is neither a year nor the word date") from None
 
 
-def _of_one(name, catalogue, mjd, equinox, rng) -> "tuple[Bundle, Ephemeris]":
-    from ..ephemeris import predict as predict_bundle
-
-    years = _equinoxes(equinox, mjd)
+def _orbit(name, catalogue, equinox, rng) -> "tuple[Bundle, Callable]":
+    """An orbit, and a function of MJD: what to add to its angles for the equinox asked for."""
     if name.endswith(".toml"):
         if equinox != "2000":
             raise InputError(f"{name}: a system file has no place on the sky; use --equinox 2000")
@@ -110,13 +114,11 @@ def _of_one(name, catalogue, mjd, equinox, rng) -> "tuple[Bundle, Ephemeris]":
         from ..system import read_system
 
         results = read_system(Path(name)).results
-        bundle, turn = Bundle.of_solution(Solution.read(results)), 0.0
-    else:
-        from ..catalogue import find_entry
+        return Bundle.of_solution(Solution.read(results)), lambda mjd: 0.0
+    from ..catalogue import find_entry
 
-        entry = find_entry(name, catalogue)
-        bundle, turn = entry.bundle(rng), entry.turn(years)
-    return bundle, predict_bundle(bundle, mjd, turn=turn)
+    entry = find_entry(name, catalogue)
+    return entry.bundle(rng), lambda mjd: entry.turn(_equinoxes(equinox, mjd))
 
 
 def _of_all(catalogue, mjd, equinox, rng) -> "dict[str, Ephemeris]":

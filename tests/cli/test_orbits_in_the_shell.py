@@ -143,9 +143,15 @@ def test_predict_as_json(nodeline):
     assert kinds.count("periastron") == 1
     # From 1900 to 2000 angles turn by 0.0056 deg a year times sin(ra) / cos(dec).
     _, out, _ = nodeline("predict", "eta CrB", "--at", "B1990.0", "--json")
-    turned = json.loads(out)["entries"][0]["ephemeris"][0]["position_angle_deg"]
+    later = json.loads(out)
+    turned = later["entries"][0]["ephemeris"][0]["position_angle_deg"]
     slope = 0.0055675 * np.sin(np.radians(230.8)) / np.cos(np.radians(30.29))
     assert_allclose(turned - row["position_angle_deg"], 100 * slope, atol=0.01)
+    before, after = (
+        next(e for e in r["events"] if e["kind"] == "ascending node") for r in (result, later)
+    )
+    assert_allclose(before["position_angle_deg"], 203.72, atol=1e-9)  # as the node is printed
+    assert_allclose(after["position_angle_deg"] - 203.72, 100 * slope, atol=0.01)
 
 
 def test_predict_a_range_into_tables(nodeline, tmp_path):
