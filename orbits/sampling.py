@@ -144,13 +144,12 @@ def _sides(table: Observable) -> tuple[np.ndarray, np.ndarray]:
 
 
 def _rates(table: Observable) -> np.ndarray:
-    """How fast the baselines turn with the Earth, from rows of the same stations; 0 for a lone row.
+    """How fast the baselines turn with the Earth, from rows of the same stations; else 0.
 
     OIFITS stores no rates, and station coordinates in circulation are unreliable; the rows tell.
     """
-    rates = np.zeros_like(table.legs)
-    if not table.integration.any():
-        return rates
+    if not table.integration.any() or (table.stations < 0).any():
+        return np.zeros_like(table.legs)
     _, first, row_of = np.unique(table.row, return_index=True, return_inverse=True)
     mjd, legs = table.mjd[first], table.legs[first]
     per_row = np.zeros_like(legs)

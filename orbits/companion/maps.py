@@ -24,10 +24,13 @@ from .fit import Fit, Problem, fit
 from .grid import Grid
 from .response import Response, bright_residual, faint_response
 
-CONTRASTS = (0.02, 0.04, 0.08, 0.15, 0.25, 0.4, 0.6, 0.8, 1.0)
-"""The ladder for bright companions: closer than the width of a peak in log contrast."""
-_DIAMETERS = (1.0, 0.7, 0.0)
-"""Of the diameter that fits a single star: a companion takes part of the blame for low V2."""
+CONTRASTS = (0.003, 0.006, 0.0125, 0.025, 0.05, 0.1, 0.18, 0.3, 0.45, 0.65, 0.85, 1.0)
+"""The ladder for bright companions, and for faint ones beside a primary that is resolved out: a
+contrast off by half a rung keeps nine tenths of the gain."""
+_BRIGHT = 0.1
+_DIAMETERS = (0.7, 0.0)
+"""Of the diameter that fits a single star: from `_BRIGHT` on, a companion takes its part of the
+blame for a low V2."""
 _MAP_PRECISION = 5e-3
 """Of smeared waves in maps; the exact model has the last word."""
 
@@ -137,8 +140,8 @@ class Field:
         beam = np.broadcast_to(self.beam, gain.shape)
         reference = self.residual @ self.residual
         fitted = 0 in self.null.free and self.null.values[0] > 0
-        for part in _DIAMETERS if fitted else (1.0,):
-            for flux in CONTRASTS:
+        for flux in CONTRASTS:
+            for part in (1.0, *_DIAMETERS) if fitted and flux >= _BRIGHT else (1.0,):
                 trial = reference - self._chi2(flux, part * self.null.values[0])
                 better = (trial > gain) & (flux <= beam)
                 gain[better] = trial[better]

@@ -121,7 +121,9 @@ class SearchResult:
     n_visamp: int
     best: Candidate
     alternatives: tuple[Candidate, ...]
-    """Other solutions that the data allow, the likeliest first."""
+    """Other solutions that the data allow, the best first."""
+    kept_chi2: float
+    """Largest chi-square of an alternative above that of the best, scaled as the errors are."""
     null: Fit
     """The scene without the companion."""
     maps: Maps
@@ -148,6 +150,7 @@ class SearchResult:
             "n_visamp": self.n_visamp,
             "best": self.best.to_json(),
             "alternatives": [one.to_json() for one in self.alternatives],
+            "alternatives_within_chi2": self.kept_chi2,
             "single_star": {
                 "primary_diameter_mas": abs(self.null.value("primary_diameter")),
                 "chi2": self.null.chi2,

@@ -34,7 +34,7 @@ _LARGEST_HALF = 256
 _PEAKS = 24
 _BEYOND_LINEAR = 1.5
 """Ratio of the exact to the linear gain that shows that the companion is not faint."""
-_ROUGH_STEPS = 4
+_ROUGH_STEPS = 6
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -120,7 +120,7 @@ def search(
     if companions not in (1, 2):
         raise ValueError(f"companions must be 1 or 2, got {companions}")
     rng = np.random.default_rng(0) if rng is None else rng
-    stars = _settled_stars(observation, stars or Stars(), diameter, companion_diameter)
+    stars = settled_stars(observation, stars or Stars(), diameter, companion_diameter)
     grid = choose_grid(observation, field, step)
     result = None
     for count in range(1, companions + 1):
@@ -258,7 +258,7 @@ class Epoch:
         field = self.field(null)
         faint = field.faint()
         maps = field.all_contrasts(faint) if self.last == 0 else faint
-        fits = self.resolved(self.solutions(maps, null))
+        fits = self.resolved(self.solutions(faint, maps, null))
         if not fits:
             raise NothingFound(
                 f"{self.observation.target}: no companion within "
@@ -291,6 +291,7 @@ class Epoch:
             n_visamp=len(self.observation.visamp),
             best=kept[0],
             alternatives=kept[1:],
+            kept_chi2=KEPT,
             null=null,
             maps=maps,
             statistic=top,
@@ -310,33 +311,34 @@ class Epoch:
             companion=self.last, count=count, rng=rng, progress=progress,
         )  # fmt: skip
 
-    def solutions(self, maps: Maps, null: Fit) -> list[Fit]:
-        """Distinct exact solutions from every peak that could be the answer, the best first."""
-        rough: list[Fit] = []
-        for places in _peaks(maps.gain):
-            # The lower peaks are asked only where the higher ones lead out of the field.
-            starts = (self._start(null, maps, *place) for place in places)
-            rough = [
-                one
-                for one in (self._fit(s, steps=_ROUGH_STEPS) for s in starts)
-                if self._inside(one)
-            ]
-            if rough:
-                break
+    def solutions(self, faint: Maps, maps: Maps, null: Fit) -> list[Fit]:
+        """Distinct exact solutions from every peak that could be the answer, the best first.
+
+        Where the primary is resolved out, neither the maps `faint` nor those of all contrasts,
+        `maps`, are exact: the peaks of both are asked.
+        """
+        rough = self._rough(null, _peaks(faint, 0), _peaks(maps, 0))
+        if not rough:
+            # The higher peaks all led out of the field: the lower ones are asked.
+            rough = self._rough(null, _peaks(faint, 1), _peaks(maps, 1))
         if not rough:
             return []
-        best = min(one.chi2 for one in rough)
-        hopeful = max(4 * KEPT * min(one.reduced for one in rough), 0.3 * (null.chi2 - best))
         found: list[Fit] = []
+        lowest = min(rough, key=lambda one: one.chi2)
+        self._keep(found, lowest)
+        best = min((one.chi2 for one in found), default=lowest.chi2)
+        reduced = max(1.0, best / max(lowest.dof, 1))
+        # A few steps leave the chi-square of a good start far less above its minimum than this.
+        hopeful = best + max(4 * KEPT * reduced, 0.3 * (null.chi2 - best))
         for one in sorted(rough, key=lambda one: one.chi2):
-            if one.chi2 < best + hopeful:
+            if one is not lowest and one.chi2 < hopeful:
                 self._keep(found, one)
-        for one in list(found):
+        best = min((one.chi2 for one in found), default=best)
+        for one in [one for one in found if one.chi2 < best + 4 * KEPT * reduced]:
             self._keep(found, self._fit(self._opposite(one.values), steps=_ROUGH_STEPS))
-        worse = KEPT * max(1.0, min(one.reduced for one in found)) if found else 0.0
-        lowest = min((one.chi2 for one in found), default=0.0)
-        found = [one for one in found if one.chi2 <= lowest + worse and one.chi2 < null.chi2]
-        return sorted(found, key=lambda one: one.chi2)
+        best = min((one.chi2 for one in found), default=best)
+        kept = [one for one in found if one.chi2 < min(best + KEPT * reduced, null.chi2)]
+        return sorted(kept, key=lambda one: one.chi2)
 
     def resolved(self, fits: list[Fit]) -> list[Fit]:
         """`fits` with the companion's diameter fitted too, where the data tell it from a point."""
@@ -355,6 +357,16 @@ class Epoch:
         bright = self._fit(one.values)
         (contrast,) = self._indices("contrast")
         return bright if bright.values[contrast] <= 1 else self._no_brighter(bright)[0]
+
+    def _rough(self, null: Fit, *peaks: tuple[Maps, list[tuple[int, int]]]) -> list[Fit]:
+        """Fits of a few steps from each different peak that stay in the field."""
+        starts = {}
+        for maps, places in peaks:
+            for place in places:
+                start = self._start(null, maps, *place)
+                starts[start.tobytes()] = start
+        fits = (self._fit(start, steps=_ROUGH_STEPS) for start in starts.values())
+        return [one for one in fits if self._inside(one)]
 
     def _start(self, null: Fit, maps: Maps, row: int, column: int) -> np.ndarray:
         """Start values at a position of the map."""
@@ -439,7 +451,7 @@ def _extent(one: Fit) -> float:
     return 1.2 * float(max(places, default=0.0))
 
 
-def _settled_stars(
+def settled_stars(
     observation: Observation,
     stars: Stars,
     diameter: u.Quantity | None,
@@ -502,17 +514,18 @@ def _free(scene: Scene, stars: Stars) -> tuple[int, ...]:
     return tuple(i for i, name in enumerate(scene.names) if name in wanted)
 
 
-def _peaks(gain: np.ndarray) -> tuple[list[tuple[int, int]], list[tuple[int, int]]]:
-    """Local maxima of a map that could be the best once the exact model judges; then lower ones."""
+def _peaks(maps: Maps, part: int) -> tuple[Maps, list[tuple[int, int]]]:
+    """Local maxima that could be the best once the exact model judges (0), or lower ones (1)."""
     from scipy.ndimage import maximum_filter
 
+    gain = maps.gain
     rows, columns = np.nonzero((gain == maximum_filter(gain, size=3)) & (gain > 0))
     height = gain[rows, columns]
     order = np.argsort(height)[::-1][:_PEAKS]
     places = list(zip(rows[order].tolist(), columns[order].tolist(), strict=True))
     top = height.max(initial=0.0)
     high = int((height[order] > min(0.4 * top, top - KEPT)).sum())
-    return places[:high], places[high:]
+    return maps, places[high:] if part else places[:high]
 
 
 def _candidates(

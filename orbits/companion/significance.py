@@ -21,8 +21,8 @@ import numpy as np
 from ..progress import SILENT, Silent
 from .maps import Field, estimate
 
-_BATCH = 4
-"""Transforms at a time; each carries two noise searches."""
+_BATCH_POSITIONS = 1_200_000
+"""Positions in the transforms that are made at a time; each carries two noise searches."""
 _LEAST = 100
 """Noise searches before the first look whether more of them are needed."""
 _BEYOND_DOUBT = 1e-9
@@ -79,11 +79,13 @@ def noise_maxima(
     With a statistic `enough` it stops early where the law of the tail puts that one beyond 1e-9:
     no further search could change what is said about it.
     """
-    transform = field.grid.transform(field.response.u, field.response.v, _BATCH)
+    batch = max(1, _BATCH_POSITIONS // field.grid.side**2)
+    batch = min(batch, -(-count // 2), 8)
+    transform = field.grid.transform(field.response.u, field.response.v, batch)
     maxima = np.empty(0)
     with progress.task("searching noise", count) as tick:
         while len(maxima) < count:
-            k = min(2 * _BATCH, count - len(maxima))
+            k = min(2 * batch, count - len(maxima))
             white = field.project(rng.standard_normal((field.covariance.rank, k)))
             n = transform(field.waves(white))
             chi2 = (white**2).sum(axis=0)

@@ -45,11 +45,22 @@ def draw_epoch(observation: Observation, result: SearchResult) -> "Figure":
             below.set_ylabel("σ")
         if number // _ACROSS == rows - 1:
             below.set_xlabel("wavelength (µm)")
+    style.legend_below(drawing, _key(), columns=3)
     title = f"{observation.target}, MJD {observation.mjd:.3f}"
     if len(panels) > len(shown):
         title += f": {len(shown)} of {len(panels)} baselines and triangles"
     drawing.suptitle(title, x=0.01, ha="left", fontsize=7.5, fontweight="bold", color=style.INK)
     return drawing
+
+
+def _key() -> list:
+    from matplotlib.lines import Line2D
+
+    return [
+        Line2D([], [], marker="o", ms=2.5, ls="", color=style.DATUM, label="data, later paler"),
+        Line2D([], [], color=style.CURVE, label="model"),
+        Line2D([], [], color=style.QUIET, lw=0.7, ls=(0, (2, 1.5)), label="without the companion"),
+    ]
 
 
 def _panels(observation: Observation) -> Iterator[tuple[str, bool, np.ndarray]]:

@@ -36,7 +36,10 @@ def draw_field(result: SearchResult, *, columns: int = 1) -> "Figure":
     image = _shade(whole, result, sigma, smooth=False)
     _shade(close, result, sigma, smooth=True)
     bar = drawing.colorbar(image, ax=whole, shrink=0.8, pad=0.02, spacing="proportional")
-    bar.set_label("local significance (sigma)")
+    words = "local significance (sigma)"
+    if image.norm.vmin > 0:
+        words += f"; white below {image.norm.boundaries[1]:g}"
+    bar.set_label(words)
     bar.outline.set_visible(False)
     whole.set_title(f"{result.target}, MJD {result.mjd:.3f}")
     reach = result.maps.grid.half * result.maps.grid.step
