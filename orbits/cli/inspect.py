@@ -51,20 +51,23 @@ def inspect(
     from ..oifits.joining import join
     from ..oifits.selecting import select
     from ..problems import refuse_suspicious
+    from ..progress import Bar
 
     if plot and plot.suffix.lower() not in (".png", ".pdf", ".svg"):
         raise typer.BadParameter("the name of a picture ends in .png, .pdf or .svg")
     refuse_existing(*(path for path in (plot, convert) if path), force=force)
     selection = _selection(instrument, dates, wavelengths, baselines, tuple(station or ()))
     parts, results = [], []
-    for path in files:
-        file = load(path)
-        file.problems += check(file)
-        if flip_phase:
-            file = flipped(file)
-        parts.append(select(file, selection, target=target))
-        results.append(describe(parts[-1]))
-        say(in_words(results[-1]), json=json)
+    with Bar().task("reading", total=len(files)) as step:
+        for path in files:
+            file = load(path)
+            file.problems += check(file)
+            if flip_phase:
+                file = flipped(file)
+            parts.append(select(file, selection, target=target))
+            results.append(describe(parts[-1]))
+            step()
+    say("\n".join(map(in_words, results)), json=json)
     whole = join(parts)
     outcome: dict[str, Any] = {"files": results}
     if plot:

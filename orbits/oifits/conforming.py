@@ -94,10 +94,13 @@ def stations(file: OIFile, say: Say) -> OIFile:
         if table.sta_index is not None and table.arrname is None:
             table = replace(table, arrname=arrays[0].arrname if len(arrays) == 1 else UNKNOWN_ARRAY)
         data.append(table)
-    wanted = {table.arrname for table in data} - {None}
-    for name in sorted(wanted - {array.arrname for array in arrays}) or ([] if arrays else [""]):
-        arrays.append(_placeholder(name or UNKNOWN_ARRAY))
-        say(f"OI_ARRAY {name or UNKNOWN_ARRAY} made up of station numbers; positions are unknown")
+    wanted = {table.arrname for table in (*data, *file.polarisations)} - {None}
+    unknown = sorted(wanted - {array.arrname for array in arrays})
+    if not arrays and not unknown:
+        unknown = [UNKNOWN_ARRAY]  # there must be one, even if all that is left are spectra
+    for name in unknown:
+        arrays.append(_placeholder(name))
+        say(f"OI_ARRAY {name} made up of station numbers; positions are unknown")
     file = replace(file, arrays=arrays, data=data)
     for number, array in enumerate(arrays):
         file = _with_all_stations(file, number, array, say)
@@ -111,7 +114,8 @@ def _placeholder(name: str) -> Array:
 
 def _with_all_stations(file: OIFile, number: int, array: Array, say: Say) -> OIFile:
     """`array`, the `number`-th of `file`, with all stations that data refer to."""
-    mine = [t for t in file.data if t.arrname == array.arrname and t.sta_index is not None]
+    tables = (*file.data, *file.polarisations)
+    mine = [t for t in tables if t.arrname == array.arrname and t.sta_index is not None]
     used = np.unique(np.concatenate([t.sta_index.ravel() for t in mine] or [np.empty(0, int)]))
     missing = used[~np.isin(used, array.sta_index)]
     if missing.size:
@@ -126,10 +130,7 @@ def _with_all_stations(file: OIFile, number: int, array: Array, say: Say) -> OIF
         file = replace(
             file,
             data=[changed.get(id(t), t) for t in file.data],
-            polarisations=[
-                replace(t, sta_index=_mapped(t.sta_index, new)) if t.arrname == array.arrname else t
-                for t in file.polarisations
-            ],
+            polarisations=[changed.get(id(t), t) for t in file.polarisations],
         )
     return replace(file, arrays=[*file.arrays[:number], array, *file.arrays[number + 1 :]])
 

@@ -22,7 +22,7 @@ def join(files: Sequence[OIFile]) -> OIFile:
     wavelengths: dict[str, Wavelength] = {}
     arrays: dict[str, Array] = {}
     correlations: dict[str, Table] = {}
-    data, polarisations, others, history = [], [], [], []
+    data, polarisations, others, history, comments = [], [], [], [], []
     for number, file in enumerate(files):
         insnames = {w.insname: _place(w, "insname", wavelengths) for w in file.wavelengths}
         arrnames = {a.arrname: _place(a, "arrname", arrays) for a in file.arrays}
@@ -51,6 +51,7 @@ def join(files: Sequence[OIFile]) -> OIFile:
             )
         others += file.others
         history += [line for line in file.history if line not in history]
+        comments += [line for line in file.comments if line not in comments]
     return OIFile(
         target=target,
         wavelengths=list(wavelengths.values()),
@@ -60,6 +61,7 @@ def join(files: Sequence[OIFile]) -> OIFile:
         polarisations=polarisations,
         primary=_shared([file.primary for file in files]),
         history=history,
+        comments=comments,
         others=others,
         version=max(file.version for file in files),
         files=tuple(name for file in files for name in file.files),

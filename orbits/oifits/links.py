@@ -7,7 +7,7 @@ import numpy as np
 from astropy.io import fits
 
 from ..errors import InputError
-from ..problems import Log
+from ..problems import Log, Severity
 from .blocks import cards, text
 from .model import (
     Array,
@@ -19,7 +19,7 @@ from .model import (
     Target,
     Wavelength,
 )
-from .schema import Table, columns
+from .schema import Table, columns, keywords
 
 T = TypeVar("T", bound=Table)
 
@@ -52,7 +52,6 @@ def assemble(
         raise InputError(
             f"{path}: no usable table of data (OI_VIS2, OI_T3, OI_VIS or OI_FLUX)" + _because(log)
         )
-    primary, history = _primary(header)
     return OIFile(
         target=target,
         wavelengths=wavelengths,
@@ -60,8 +59,9 @@ def assemble(
         arrays=arrays,
         correlations=correlations,
         polarisations=[t for t in tables if isinstance(t, Inspol)],
-        primary=primary,
-        history=history,
+        primary=_primary(header),
+        history=_lines(header, "HISTORY"),
+        comments=_lines(header, "COMMENT"),
         others=others,
         version=2 if text(header, "CONTENT").upper() == "OIFITS2" else 1,
         files=(str(path),),
@@ -71,7 +71,7 @@ def assemble(
 
 def _because(log: Log) -> str:
     """The last thing that was left out, as the reason of an error."""
-    left_out = [p for p in log.problems if p.severity == 2]
+    left_out = [p for p in log.problems if p.severity == Severity.UNUSABLE]
     return f": {left_out[-1].table}: {left_out[-1].what}" if left_out else ""
 
 
@@ -125,7 +125,9 @@ def _unique(tables: list[T], key: str, log: Log) -> list[T]:
 
 
 def same_content(a: Table, b: Table) -> bool:
-    """Whether two tables of one kind have equal columns."""
+    """Whether two tables of one kind are equal, but perhaps for their name."""
+    if any(a[k.name] != b[k.name] for k in keywords(type(a)) if not k.name.endswith("NAME")):
+        return False
     for column in columns(type(a)):
         x, y = a[column.name], b[column.name]
         if (x is None) != (y is None):
@@ -201,13 +203,15 @@ def _rows_of_known_targets(table: DataTable, target: Target, log: Log) -> DataTa
     return table.select(known)
 
 
-def _primary(header: fits.Header) -> tuple[dict[str, object], list[str]]:
-    """The keywords of the primary header that say something, and its history."""
-    skip = {"SIMPLE", "BITPIX", "EXTEND", "CHECKSUM", "DATASUM", "COMMENT", "HISTORY", ""}
-    entries = list(cards(header))
-    keywords = {
+def _primary(header: fits.Header) -> dict[str, object]:
+    """The keywords of the primary header that say something about the data."""
+    skip = {"SIMPLE", "BITPIX", "EXTEND", "CHECKSUM", "DATASUM", "COMMENT", "HISTORY"}
+    return {
         name: value
-        for name, value, _ in entries
+        for name, value, _ in cards(header)
         if name not in skip and not name.startswith("NAXIS")
     }
-    return keywords, [str(value) for name, value, _ in entries if name == "HISTORY"]
+
+
+def _lines(header: fits.Header, keyword: str) -> list[str]:
+    return [str(value) for name, value, _ in cards(header) if name == keyword]

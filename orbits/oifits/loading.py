@@ -137,11 +137,7 @@ def _values(content: BinTable, field: Field, column: Column, label: str, log: Lo
     if column.code == "A":
         return _texts(values)
     if column.code == "L":
-        # Neither T nor F: undefined. In the one place where it matters, FLAG, that means bad.
-        stored, values = values, values != ord("F")
-        undefined = np.count_nonzero(values) - np.count_nonzero(stored == ord("T"))
-        if undefined:
-            log.note(label, f"column {name}: {undefined} values are undefined", "taken as true")
+        values = _logical(values, name, label, log)
     elif column.code == "I" and field.code == "K" and values.size:
         limit = np.iinfo(np.int32)
         if values.min() < limit.min or values.max() > limit.max:
@@ -163,6 +159,15 @@ def _values(content: BinTable, field: Field, column: Column, label: str, log: Lo
             values *= values.dtype.type(scale)
             log.note(label, f"column {name} is in {field.unit}", f"converted to {column.unit}")
     return values
+
+
+def _logical(stored: np.ndarray, name: str, label: str, log: Log) -> np.ndarray:
+    """Truth of the bytes T and F; others are undefined, which in a FLAG means not to be used."""
+    true = stored != ord("F")
+    undefined = np.count_nonzero(true) - np.count_nonzero(stored == ord("T"))
+    if undefined:
+        log.note(label, f"column {name}: {undefined} values are undefined", "taken as true")
+    return true
 
 
 def _shaped(values: np.ndarray, field: Field, column: Column) -> np.ndarray:

@@ -336,6 +336,7 @@ class OIFile:
     primary: dict[str, object] = field(default_factory=dict)
     """Keywords of the primary header; the writer fills in those that version 2 demands."""
     history: list[str] = field(default_factory=list)
+    comments: list[str] = field(default_factory=list)
     others: list[OtherHDU] = field(default_factory=list)
     version: int = 2
     files: tuple[str, ...] = ()

@@ -57,6 +57,8 @@ def primary_header(file: OIFile) -> fits.Header:
         header[name] = value
     header["CONTENT"] = "OIFITS2"
     header["DATE"] = datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%S")
+    for line in file.comments:
+        header.add_comment(line)
     for line in file.history:
         header.add_history(line)
     return header

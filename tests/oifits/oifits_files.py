@@ -211,7 +211,12 @@ def full(rng: np.random.Generator) -> OIFile:
                 sta_index=[1],
             )
         ],
-        primary={"ORIGIN": "nowhere", "OBSERVER": "nobody", "PROCSOFT": "none"},
+        primary={
+            "ORIGIN": "nowhere",
+            "OBSERVER": "nobody",
+            "HIERARCH ESO INS MODE NAME": "of a long name",
+        },
+        comments=["a comment", "and another"],
         history=["made for a test"],
         others=[foreign(rng)],
     )
@@ -235,6 +240,9 @@ def assert_same(one: OIFile, two: OIFile) -> None:
     for a, b in zip(one.tables, two.tables, strict=True):
         assert_same_table(a, b)
     assert one.others == two.others
+    stays = {key: value for key, value in one.primary.items() if key != "DATE"}  # of writing
+    assert stays.items() <= two.primary.items()
+    assert one.comments == two.comments
     # FITS breaks long lines of history.
     assert "".join(one.history).replace(" ", "") == "".join(two.history).replace(" ", "")
 
