@@ -6,6 +6,7 @@ from typing import Any
 import astropy.units as u
 import numpy as np
 
+from ..binary import companion_name
 from ..positions import position_angle
 from .bootstrap import Bootstrap
 from .fit import Fit
@@ -167,3 +168,62 @@ class SearchResult:
         if self.previous is not None:
             result["first_companion"] = self.previous.to_json()
         return result
+
+
+def candidates(
+    fits: list[Fit], null: Fit, companion: int, chance: float | None
+) -> tuple[Candidate, ...]:
+    """Candidates for solutions, the best first, with their posterior weights.
+
+    `null` is the scene without the companion, `chance` the false-alarm probability of the best.
+    """
+    scale2 = max(1.0, fits[0].reduced)
+    log_weight = np.array([-0.5 * one.chi2 / scale2 + _log_volume(one, companion) for one in fits])
+    weight = np.exp(log_weight - log_weight.max())
+    weight /= weight.sum()
+    return tuple(
+        _candidate(one, null, companion, chance, float(w), scale2)
+        for one, w in zip(fits, weight, strict=True)
+    )
+
+
+def _log_volume(one: Fit, companion: int) -> float:
+    """Log of the area of the error ellipse of a position."""
+    return 0.5 * float(np.linalg.slogdet(_place_covariance(one, companion))[1])
+
+
+def _place_covariance(one: Fit, companion: int) -> np.ndarray:
+    names = (companion_name(axis, companion) for axis in ("x", "y"))
+    places = [one.free.index(one.scene.names.index(name)) for name in names]
+    return one.covariance[np.ix_(places, places)]
+
+
+def _candidate(
+    one: Fit, null: Fit, companion: int, chance: float | None, weight: float, scale2: float
+) -> Candidate:
+    scale = float(np.sqrt(scale2))
+
+    def name(what: str) -> str:
+        return companion_name(what, companion)
+
+    gain = null.chi2 - one.chi2
+    return Candidate(
+        x_mas=one.value(name("x")),
+        y_mas=one.value(name("y")),
+        covariance_xy_mas2=_place_covariance(one, companion) * scale2,
+        contrast=one.value(name("contrast")),
+        contrast_error=one.error(name("contrast")) * scale,
+        primary_diameter_mas=abs(one.value("primary_diameter")),
+        primary_diameter_error_mas=one.error("primary_diameter") * scale,
+        companion_diameter_mas=abs(one.value(name("diameter"))),
+        companion_diameter_error_mas=one.error(name("diameter")) * scale,
+        error_scale=scale,
+        chi2=one.chi2,
+        dof=one.dof,
+        delta_chi2=gain,
+        significance_sigma=float(np.sqrt(max(gain, 0.0) / scale2)),
+        false_alarm_probability=chance,
+        weight=weight,
+        companion=companion,
+        fit=one,
+    )
