@@ -68,6 +68,25 @@ def test_many_orbits_agree_with_each_alone(rng):
             assert_allclose(speeds[star][row], expected[star].to_value(kms), rtol=0, atol=1e-8)
 
 
+def test_a_bundle_of_elements_alone():
+    elements = Elements(
+        period=0.5 * u.yr,
+        periastron=Time(2_460_000.0, format="jd", scale="tdb"),
+        eccentricity=0.1,
+        semimajor_axis=1.2 * u.arcsec,
+        inclination=1.0 * u.rad,
+        node=10 * u.deg,
+        argument=20 * u.deg,
+    )
+    bundle = Bundle.of_elements("x", elements)
+    assert len(bundle.draws) == 0
+    assert bundle.on_the_sky
+    assert_allclose(bundle.best.period, 182.625)
+    assert_allclose(bundle.best.periastron, 59999.5)
+    assert_allclose(bundle.best.semimajor_axis, 1200.0)
+    assert_allclose(bundle.best.inclination, np.degrees(1.0))
+
+
 def test_draws_follow_the_errors(rng):
     draws = draw_orbits(BEST, {"period": 0.5, "eccentricity": 0.3}, 5000, rng)
     # A Kolmogorov-Smirnov test fails one seed in 10 000 at this level.

@@ -8,6 +8,7 @@ from typing import Self
 import numpy as np
 from astropy.table import Table, vstack
 
+from ..bundle import Orbits
 from ..errors import InputError
 from ..files import whole_file
 from ..tables import read_table
@@ -175,10 +176,8 @@ class Catalogue:
             keep &= self._favourites()
         return self._rows(keep)
 
-    def orbits(self):
-        """The best orbits of all rows, as `orbits.bundle.Orbits`."""
-        from ..bundle import Orbits
-
+    def orbits(self) -> Orbits:
+        """The orbits of all rows."""
         return Orbits.of({name: self.column(name) for name in Orbits.names()})
 
     def with_entries(self, entries: Sequence[Entry]) -> "Catalogue":

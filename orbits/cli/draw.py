@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Annotated
 import typer
 
 from ..errors import InputError
+from ..plots.style import FORMATS
 from .catalogue import Match, Near, Period
 from .frame import CatalogueName, Force, Json, Seed, emit, say
 
@@ -30,7 +31,7 @@ class Kind(StrEnum):
     residuals = "residuals"
 
 
-Form = Enum("Form", {form: form for form in ("png", "pdf", "svg")}, type=str)
+Form = Enum("Form", {form: form for form in FORMATS}, type=str)
 
 
 def draw(
@@ -205,8 +206,6 @@ def _stretch(start: str | None, end: str | None) -> tuple[float | None, float | 
 
 def _paths(stems: list[str], place: Path, form: str) -> dict[str, Path]:
     """The file of each picture: in a folder, or the one that was named."""
-    from ..plots.style import FORMATS
-
     if place.suffix[1:].lower() in FORMATS and place.suffix:
         if len(stems) > 1:
             raise InputError(f"{place} is one file, but there are {len(stems)} pictures to draw")

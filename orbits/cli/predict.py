@@ -143,8 +143,13 @@ def _say_one(bundle: "Bundle", table: "Ephemeris", happenings: "list[Event]", eq
 
     north = "of date" if equinox == "date" else f"of {equinox}"
     print(f"{bundle.name}: companion seen from the primary, position angles {north}")
-    spread = f"errors: {bundle.spread}" if bundle.spread else "nothing is known of the errors"
-    print(f"{spread}{'' if bundle.ascending else '; the node may be either one'}\n")
+    if bundle.spread == "posterior":
+        errors = "errors: half of the 68.3 per cent interval of the posterior"
+    elif bundle.spread:
+        errors = "errors: what those of the elements make, as if they were independent"
+    else:
+        errors = "nothing is known of the errors"
+    print(f"{errors}{'' if bundle.ascending else '; the node may be either one'}\n")
     names = ("separation", "position_angle", "east", "north")
     titles = ("separation/mas", "angle/deg", "East/mas", "North/mas")
     velocities = ("primary_velocity", "companion_velocity")

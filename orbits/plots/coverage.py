@@ -52,8 +52,8 @@ def draw_coverage(observations: list[Observation], *, by: str | None = None) -> 
     visibility.set_ylabel("squared visibility")
     visibility.set_ylim(min(-0.05, *_span(v2)), max(1.05, *_span(v2)))
     phase.set_ylabel("closure phase (deg)")
-    visibility.set_xlabel("spatial frequency (10$^6$/rad)")
-    phase.set_xlabel("that of the longest side (10$^6$/rad)")
+    visibility.set_xlabel("spatial frequency (10⁶/rad)")
+    phase.set_xlabel("that of the longest side (10⁶/rad)")
     names = " ".join(dict.fromkeys(o.instrument for o in observations))
     plane.set_title(f"{observations[0].target}")
     visibility.set_title(names)
@@ -104,8 +104,8 @@ def _plane(axes: "Axes", v2: Observable, t3: Observable, shade: _Shade) -> None:
             axes.scatter(sign * u, sign * v, s=2.5, c=colours, lw=0, rasterized=len(u) > MOST_BARS)
     reach = 1.05 * max(np.abs(axes.dataLim.get_points()).max(), 1e-9)
     axes.set(xlim=(reach, -reach), ylim=(-reach, reach), aspect="equal")  # East to the left
-    axes.set_xlabel("u, East (10$^6$/rad)")
-    axes.set_ylabel("v, North (10$^6$/rad)")
+    axes.set_xlabel("u, East (10⁶/rad)")
+    axes.set_ylabel("v, North (10⁶/rad)")
 
 
 def _against_frequency(

@@ -54,7 +54,7 @@ def draw_motion(
         _measured(upper, lower, bundle.positions, mjd, angle, wrapped=many_turns)
     for axes in (upper, lower):
         axes.grid(True)
-    upper.set_title(bundle.name)
+    upper.set_title(style.title(bundle.name, columns))
     upper.set_ylabel("separation (mas)")
     lower.set_ylabel("position angle (deg)")
     _mark_angles(lower, np.ptp(angle), wrapped=many_turns)
@@ -87,7 +87,7 @@ def draw_residuals(bundle: Bundle, *, columns: int = 1) -> "Figure":
         axes.axhline(0, color=style.QUIET, lw=0.6)
         _points(axes, dates, rest[:, column], errors[:, column], positions.weight)
         axes.set_ylabel(f"{name} O − C (mas)")
-    panels[0].set_title(bundle.name)
+    panels[0].set_title(style.title(bundle.name, columns))
     panels[1].set_xlabel(label)
     drawing.align_ylabels()
     return drawing

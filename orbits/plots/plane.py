@@ -52,7 +52,7 @@ def draw_plane(bundle: Bundle, *, columns: int = 1) -> "Figure":
     if e > 0:
         axes.plot(scale * a * (1 - e), 0, **periastron)
     axes.plot(0, 0, marker=(6, 1, 0), ms=7, color=style.INK, mec="white", mew=0.5)
-    axes.set_title(f"{bundle.name}: true orbit")
+    axes.set_title(style.title(f"{bundle.name}: true orbit", 1))
     axes.set_xlabel(f"towards periastron ({unit})")
     axes.set_ylabel(f"across ({unit})")
     axes.margins(0.07)

@@ -23,6 +23,8 @@ _TURN = np.linspace(-np.pi, np.pi, 721)
 _FINE_TURN = np.linspace(-np.pi, np.pi, 7201)
 _DETAIL = 0.22
 """Positions that fill less than this fraction of the field get a picture of their own."""
+_LONG_LABEL = 26
+"""Letters; of labels in the key that are longer there is one per column."""
 MOST_DRAWS = 60
 """Orbits of the cloud that are drawn: more only blacken it."""
 
@@ -62,13 +64,16 @@ def draw_sky(
             raise ValueError(f"{bundle.name}: its size or inclination is not known")
     detail = _detail(bundles)
     handles = _key(bundles, bool(marks))
-    per_row = 2 * columns
+    name = style.title(_common_name(bundles), 1)
+    longest = max(len(handle.get_label()) for handle in handles)
+    per_row = columns * (2 if longest <= _LONG_LABEL else 1)
     side = 80.0 if columns == 1 or detail is not None else 120.0
     panels = 1 if detail is None else 2
-    height = side * (panels if columns == 1 else 1) + 12 + 4 * -(-len(handles) // per_row)
+    lines = -(-sum(_lines(handle.get_label()) for handle in handles) // per_row)
+    height = side * (panels if columns == 1 else 1) + 9 + 3 * _lines(name) + 4 * lines
     drawing = style.figure(columns, height_mm=height)
     axes = drawing.add_subplot(*((panels, 1) if columns == 1 else (1, panels)), 1)
-    axes.set_title(bundles[0].name if len(bundles) == 1 else _common_name(bundles))
+    axes.set_title(name)
     draw_sky_on(axes, bundles, marks=marks)
     if detail is not None:
         close = drawing.add_subplot(*((panels, 1) if columns == 1 else (1, panels)), 2)
@@ -134,8 +139,14 @@ def draw_sky_on(
     return f"{np.ptp(limits[0]) * scale:.4g} {unit}"
 
 
+def _lines(text: str) -> int:
+    return text.count("\n") + 1
+
+
 def _common_name(bundles: Sequence[Bundle]) -> str:
     """The system, if all solutions are of the same; solutions are called system/solution."""
+    if len(bundles) == 1:
+        return bundles[0].name
     systems = {bundle.name.partition("/")[0] for bundle in bundles}
     return systems.pop() if len(systems) == 1 else "Compared orbits"
 
@@ -350,7 +361,8 @@ def _key(bundles: Sequence[Bundle], marks: bool) -> list:
         handles = []
         for number, bundle in enumerate(bundles):
             colour, dashes = style.SERIES[number % len(style.SERIES)]
-            handles.append(Line2D([], [], color=colour, ls=dashes, lw=1.2, label=bundle.name))
+            label = style.title(bundle.name, 1)
+            handles.append(Line2D([], [], color=colour, ls=dashes, lw=1.2, label=label))
     if any(bundle.positions is not None for bundle in bundles):
         handles.append(point("o", "measured, 1σ", ms=4, mfc=style.DATUM, mec="none"))
     if len(bundles) == 1 and len(first.draws):

@@ -7,6 +7,7 @@ colour-vision deficiency; wherever two things must be told apart their shapes di
 from collections.abc import Callable
 from functools import wraps
 from pathlib import Path
+from textwrap import wrap
 from typing import TYPE_CHECKING, Any
 
 from ..files import whole_file
@@ -46,7 +47,7 @@ SERIES = (
 _SETTINGS: dict[str, Any] = {
     "font.family": "sans-serif",
     "font.sans-serif": ["DejaVu Sans"],  # comes with matplotlib: the same picture everywhere
-    "mathtext.fontset": "dejavusans",
+    "text.parse_math": False,  # a dollar in the name of a star is a dollar
     "font.size": 7.0,
     "axes.labelsize": 7.0,
     "axes.titlesize": 7.5,
@@ -143,6 +144,11 @@ def legend_below(drawing: "Figure", handles: list, *, columns: int) -> None:
     """Put the key under the picture, where it cannot cover anything."""
     if handles:
         drawing.legend(handles=handles, loc="outside lower center", ncols=columns)
+
+
+def title(words: str, columns: int) -> str:
+    """`words` in lines that fit above a drawing of that width."""
+    return "\n".join(wrap(words, 38 if columns == 1 else 88))
 
 
 def angular_unit(extent: float) -> tuple[str, float]:

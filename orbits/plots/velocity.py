@@ -49,7 +49,7 @@ def draw_velocities(bundle: Bundle, *, columns: int = 1) -> "Figure":
     _velocity_curves(curve, bundle, stars)
     if measured is not None:
         _measured_velocities(curve, best, measured)
-    curve.set_title(bundle.name)
+    curve.set_title(style.title(bundle.name, columns))
     curve.set_ylabel("velocity (km/s)")
     curve.set_xlim(-0.02, 1.02)
     drawing.axes[-1 if measured is not None else 0].set_xlabel("phase from periastron")

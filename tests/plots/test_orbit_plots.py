@@ -188,6 +188,21 @@ def test_marks_and_comparisons_are_legible():
     assert set(names) <= set(seen)
 
 
+@pytest.mark.parametrize("columns", [1, 2])
+def test_long_names_and_dollars_are_legible(columns, spectroscopic):
+    """A name as the imported catalogues have them, and one that would be taken for a formula."""
+    long = "14135+5147 STF1821Ba,Bb of a quadruple system with $names$/Kiyaeva 2006 (4)"
+    one = replace(spectroscopic, name=long)
+    for draw in (draw_sky, draw_velocities, draw_motion, draw_residuals, draw_plane):
+        figure = draw(one, columns=columns)
+        assert_legible(figure)
+        shown = " ".join(text.replace("\n", " ") for text, _ in words(figure))
+        assert long in shown
+    pair = [one, replace(six.orbit("face-on"), name=long.replace("(4)", "(5)"))]
+    assert_legible(draw_sky(pair, columns=columns))
+    assert_legible(draw_sheet([one, one]))
+
+
 def test_an_orbit_known_from_velocities_only_has_no_place_on_the_sky():
     bundle = six.orbit("face-on")
     flat = replace(bundle, best=replace(bundle.best, inclination=np.array([np.nan])))
