@@ -15,6 +15,8 @@ if TYPE_CHECKING:
     from ..companion.result import Candidate, SearchResult
 
 SHAPES = "point, disc, linear, power, gaussian or ring."
+MOST_SHOWN = 8
+"""Alternatives in the words for people."""
 CLAIM = 0.01
 """Largest false-alarm probability of a claim, unless told otherwise."""
 
@@ -218,8 +220,12 @@ def describe(result: "SearchResult") -> str:
         )
     lines.append(f"  local significance {best.significance_sigma:.1f} sigma; {_chance(result)}")
     lines += [
-        f"  or         {_place(one)}  (weight {one.weight:.3g})" for one in result.alternatives
+        f"  or         {_place(one)}  (weight {one.weight:.3g})"
+        for one in result.alternatives[:MOST_SHOWN]
     ]
+    more = len(result.alternatives) - MOST_SHOWN
+    if more > 0:
+        lines.append(f"  and {more} more, which --json lists")
     return "\n".join(lines)
 
 

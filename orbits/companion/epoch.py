@@ -3,7 +3,7 @@
 import numpy as np
 
 from ..binary import PRIMARY, companion_name, model
-from ..errors import NothingFound
+from ..errors import InputError, NothingFound
 from ..observation import Observation
 from ..progress import SILENT, Silent
 from ..sampling import Sampling
@@ -52,6 +52,13 @@ class Epoch:
         self.errors = errors or ErrorModel()
         self._samplings: dict[float, Sampling] = {}
         self.calibrate(None)
+        known = self.covariance.rank + len(self.priors)
+        if known <= len(self.free):
+            raise InputError(
+                f"{observation.target}: {known} independent data are too few to fit "
+                f"{len(self.free)} parameters; add nights or data, or fix the primary's diameter "
+                "(--diameter)"
+            )
 
     def problem(self, radius: float) -> Problem:
         """The data, sampled finely enough for companions within `radius` mas."""

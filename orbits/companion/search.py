@@ -78,7 +78,7 @@ def search(
     Raises
     ------
     InputError
-        If the observation has no data that can show a companion.
+        If the observation has no data that can show a companion, or too few.
     NothingFound
         If no position in the field fits better than a single star.
     """

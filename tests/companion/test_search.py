@@ -116,6 +116,31 @@ def test_priors_and_fixed_parameters(rng):
     assert fixed.primary_diameter_error_mas == 0
 
 
+def test_fibre_dims_what_is_off_its_axis(rng):
+    """The contrast of the star itself comes out, not what the fibre lets through (41 per cent)."""
+    scene = Scene(fibre_fwhm=30.0)
+    blank = four_stations(exposures=3, channels=6)
+    observation = fill(blank, rng, scene, x=-14.3, y=9.1, contrast=0.2)
+    best = search(observation, stars=Stars(fibre_fwhm=30.0), noise_searches=0).best
+    assert abs(best.contrast - 0.2) < ROUGHLY * best.contrast_error
+    through = np.exp(-4 * np.log(2) * (14.3**2 + 9.1**2) / 30**2)
+    plain = search(observation, noise_searches=0).best
+    assert abs(plain.contrast - 0.2 * through) < ROUGHLY * plain.contrast_error
+
+
+def test_each_instrument_has_its_contrast(rng):
+    """Half of the exposures in another band, where the companion is 1.5 times as bright."""
+    blank = replace(four_stations(exposures=4, channels=6), instruments=("ONE", "TWO"))
+    for table in (blank.v2, blank.t3):
+        table.instrument[table.mjd > 60000.05] = 1
+    truth = {"x": -14.3, "y": 9.1, "contrast": 0.1, "ratio_1": 0.5}
+    observation = fill(blank, rng, Scene(instruments=2), **truth)
+    stars = Stars(contrast_per_instrument=True)
+    best = search(observation, stars=stars, noise_searches=0).best
+    assert abs(best.contrast - 0.1) < ROUGHLY * best.contrast_error
+    assert abs(best.fit.value("ratio_1") - 0.5) < ROUGHLY * best.fit.error("ratio_1")
+
+
 def test_amplitudes_add_to_what_is_known(rng):
     """Four kinds of data: the errors shrink and the solution stays."""
     truth = {"x": -14.3, "y": 9.1, "contrast": 0.1, "primary_diameter": 1.5}
@@ -143,6 +168,8 @@ def test_field_and_step_follow_from_the_data():
 def test_no_data_and_wrong_arguments_are_refused():
     with pytest.raises(InputError, match="no usable squared visibility or closure phase"):
         search(epoch())
+    with pytest.raises(InputError, match="3 independent data are too few to fit 4 parameters"):
+        search(epoch(v2_legs=[(10, 0), (0, 20)], t3_legs=[[(10, 0), (0, 20)]]))
     observation = four_stations()
     with pytest.raises(ValueError, match="field must be positive"):
         search(observation, field=-1 * u.mas)
