@@ -29,7 +29,7 @@ def draw_sheet(bundles: Sequence[Bundle]) -> "Figure":
     panels = drawing.subplots(rows, ACROSS, squeeze=False).ravel()
     for axes, bundle in zip(panels, bundles, strict=False):
         width = draw_sky_on(axes, [bundle], small=True)
-        axes.set_title(_short(bundle.name), fontsize=6.5)
+        axes.set_title(style.literal(_short(bundle.name)), fontsize=6.5)
         axes.set_xlabel(f"{width} wide, P {_period(bundle.best.period[0])}", fontsize=6)
     for axes in panels[len(bundles) :]:
         axes.set_axis_off()

@@ -47,7 +47,7 @@ SERIES = (
 _SETTINGS: dict[str, Any] = {
     "font.family": "sans-serif",
     "font.sans-serif": ["DejaVu Sans"],  # comes with matplotlib: the same picture everywhere
-    "text.parse_math": False,  # a dollar in the name of a star is a dollar
+    "mathtext.fontset": "dejavusans",
     "font.size": 7.0,
     "axes.labelsize": 7.0,
     "axes.titlesize": 7.5,
@@ -148,7 +148,12 @@ def legend_below(drawing: "Figure", handles: list, *, columns: int) -> None:
 
 def title(words: str, columns: int) -> str:
     """`words` in lines that fit above a drawing of that width."""
-    return "\n".join(wrap(words, 38 if columns == 1 else 88))
+    return literal("\n".join(wrap(words, 38 if columns == 1 else 88)))
+
+
+def literal(words: str) -> str:
+    """`words` so that a dollar in them is drawn as one, and does not begin a formula."""
+    return words.replace("$", r"\$")
 
 
 def angular_unit(extent: float) -> tuple[str, float]:
