@@ -21,12 +21,35 @@ RIDGE = 0.01
 100 times what its own errors say, which is what a matrix that is wrong would make of it."""
 
 
+MOST_NUMBERS = 2**31 - 1
+"""CORRINDX has 32 bits; an NDATA beyond that is a fault of the file."""
+SINGULAR = 1e-6
+"""Eigenvalues below this, times the size, are those of a singular matrix stored with 7 digits."""
+LARGE = 1500
+"""Groups beyond this size have their smallest eigenvalue found by iteration."""
+
+
+class Lookup:
+    """A function of whole numbers given at some points; of equal points the first counts."""
+
+    def __init__(self, points: np.ndarray, values: np.ndarray) -> None:
+        order = np.argsort(points, kind="stable")
+        self._points, self._values = points[order], values[order]
+
+    def __call__(self, queries: np.ndarray) -> np.ndarray:
+        """The values at `queries`; -1 where none is given."""
+        if not self._points.size:
+            return np.full(queries.shape, -1)
+        place = np.searchsorted(self._points, queries).clip(max=self._points.size - 1)
+        return np.where(self._points[place] == queries, self._values[place], -1)
+
+
 class Numbers:
     """Numbers of data through all the OI_CORR tables of a file, from 0."""
 
     def __init__(self, file: OIFile) -> None:
         self.tables = file.correlations
-        sizes = [max(table.ndata, 0) for table in self.tables]
+        sizes = [min(max(table.ndata, 0), MOST_NUMBERS) for table in self.tables]
         starts = np.concatenate([[0], np.cumsum(sizes, dtype=np.int64)])
         self.total = int(starts[-1])
         self._range = {
@@ -56,15 +79,14 @@ class Numbers:
         """Correlation matrix of data with these numbers (-1: none); None if all are independent."""
         from scipy.sparse import coo_array, eye_array
 
-        place = np.full(self.total, -1)
-        known = numbers >= 0
-        place[numbers[known]] = np.flatnonzero(known)
+        known = np.flatnonzero(numbers >= 0)
+        place = Lookup(numbers[known], known)
         rows, cols, values = [], [], []
         for table in self.tables:
             i, j, keep = self.pairs(table)
             # NaN fails the second condition too.
             keep &= (i != j) & (np.abs(table.corr) <= 1) & (table.corr != 0)
-            i, j = place[i[keep]], place[j[keep]]
+            i, j = place(i[keep]), place(j[keep])
             kept = (i >= 0) & (j >= 0)
             rows.append(i[kept])
             cols.append(j[kept])
@@ -106,7 +128,7 @@ def positive_definite(matrix: "csr_array") -> tuple["csr_array", Repair | None]:
     for size in np.unique(sizes[sizes > 1]):
         lowest = _lowest_eigenvalues(entries, group, np.flatnonzero(sizes == size), int(size))
         for which, value in lowest.items():
-            if value < 1e-10 * size:
+            if value < SINGULAR * size:
                 factor[group == which] = (1 - RIDGE) / (1 - value)
                 smallest, changed = min(smallest, value), changed + 1
     if not changed:
@@ -125,6 +147,8 @@ def _lowest_eigenvalues(
     members = members[np.argsort(group[members], kind="stable")].reshape(-1, size)
     place = np.full(len(group), -1)
     place[members] = np.arange(size)
+    if size > LARGE:
+        return {int(group[rows[0]]): _lowest_by_iteration(entries, rows) for rows in members}
     block = np.full(len(group), -1)
     block[members] = np.arange(len(members))[:, None]
     inside = block[entries.row] >= 0
@@ -133,6 +157,17 @@ def _lowest_eigenvalues(
     dense[block[row], place[row], place[col]] = entries.data[inside]
     lowest = np.linalg.eigvalsh(dense)[:, 0]
     return dict(zip(group[members[:, 0]].tolist(), lowest.tolist(), strict=True))
+
+
+def _lowest_by_iteration(entries: "coo_array", rows: np.ndarray) -> float:
+    from scipy.sparse import eye_array
+    from scipy.sparse.linalg import eigsh
+
+    # The tolerance is relative: with 1 added, an eigenvalue near 0 is no harder than any other.
+    block = entries.tocsr()[rows][:, rows] + eye_array(rows.size)
+    start = np.cos(np.arange(rows.size))  # any start without symmetry, the same in every run
+    lowest = eigsh(block, k=1, which="SA", v0=start, tol=1e-3, ncv=60, return_eigenvectors=False)
+    return float(lowest[0]) - 1
 
 
 @dataclass(frozen=True)
@@ -149,35 +184,34 @@ def renumbered(
 ) -> tuple[list[Corr], list[DataTable]]:
     """The tables that remained, numbered anew, and their correlations in the new numbers."""
     tables: list[DataTable] = []
-    lookup = {c.corrname: np.zeros(max(c.ndata, 0) + 1, dtype=np.int64) for c in correlations}
-    count = dict.fromkeys(lookup, 0)
+    old: dict[str, list[np.ndarray]] = {c.corrname: [] for c in correlations}
+    count = dict.fromkeys(old, 0)
     for cut in cuts:
         table, name = cut.after, cut.after.corrname
         changes: dict[str, np.ndarray] = {}
-        for _, _, index in table.quantities if name in lookup else ():
+        for _, _, index in table.quantities if name in old else ():
             if table[index] is None:
                 continue
-            old = table[index].astype(np.int64)[:, None] + cut.channels
-            new = count[name] + 1 + np.arange(old.size).reshape(old.shape)
-            count[name] += old.size
-            valid = (old >= 1) & (old < lookup[name].size)
-            lookup[name][old[valid]] = new[valid]
-            changes[index.lower()] = new[:, 0]
+            before = table[index].astype(np.int64)[:, None] + cut.channels
+            changes[index.lower()] = count[name] + 1 + len(cut.channels) * np.arange(len(table))
+            count[name] += before.size
+            old[name].append(before.ravel())
         tables.append(replace(table, **changes) if changes else table)
     kept: list[Corr] = []
     for table in correlations:
         if not count[table.corrname]:
             continue
-        new = lookup[table.corrname]
-        inside = (np.minimum(table.iindx, table.jindx) >= 1) & (
-            np.maximum(table.iindx, table.jindx) < new.size
+        before = np.concatenate(old[table.corrname])
+        new = Lookup(before, np.arange(1, before.size + 1))
+        exist = (np.minimum(table.iindx, table.jindx) >= 1) & (
+            np.maximum(table.iindx, table.jindx) <= table.ndata
         )
-        i, j = (new[np.where(inside, index, 0)] for index in (table.iindx, table.jindx))
-        rows = (i > 0) & (j > 0)
+        i, j = new(table.iindx), new(table.jindx)
+        rows = exist & (i > 0) & (j > 0)
         kept.append(
             replace(
                 table.select(rows),
-                ndata=count[table.corrname],
+                ndata=before.size,
                 iindx=np.minimum(i, j)[rows],
                 jindx=np.maximum(i, j)[rows],
             )

@@ -111,10 +111,7 @@ def read_epochs(
     file = select(join(files), selection, target=target)
     if flip_phase:
         file = flipped(file)
-    epochs = observations(file, target=target, gap=gap, errors=errors, observables=observables)
-    if strict:
-        refuse_suspicious([problem for epoch in epochs for problem in epoch.problems])
-    return epochs
+    return observations(file, target=target, gap=gap, errors=errors, observables=observables)
 
 
 def observations(

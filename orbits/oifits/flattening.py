@@ -2,15 +2,17 @@
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
-from typing import Self
+from typing import TYPE_CHECKING, Self
 
 import numpy as np
 
 from ..observation import OBSERVABLES, Observable, Observation
-from ..problems import Log
 from .correlation import Numbers, positive_definite
 from .model import BaselineTable, OIFile, Wavelength
 from .observables import KINDS, ErrorBars, Kind, sound, usable
+
+if TYPE_CHECKING:
+    from scipy.sparse import csr_array
 
 
 @dataclass(frozen=True)
@@ -55,7 +57,6 @@ def observation(
     used = {share.table.insname for share in given}
     instruments = tuple(w.insname for w in file.wavelengths if w.insname in used)
     stations = _Stations(file, given)
-    log = Log(file.source)
     parts: dict[str, Observable] = {}
     for name in OBSERVABLES:
         flat = [
@@ -69,9 +70,9 @@ def observation(
         target=target,
         instruments=instruments,
         stations=tuple(stations.names),
-        correlation=_correlation(file, given, log),
+        correlation=_correlation(file, given),
         files=file.files,
-        problems=(*file.problems, *log.problems),
+        problems=tuple(file.problems),
         **parts,
     )
 
@@ -137,28 +138,15 @@ class _Stations:
         return new[where].reshape(table.sta_index.shape)
 
 
-def _correlation(file: OIFile, given: Sequence[Share], log: Log):
+def _correlation(file: OIFile, given: Sequence[Share]) -> "csr_array | None":
     """Correlation matrix of all the data, mended if need be; None if they are independent."""
     numbers = Numbers(file)
     if not numbers.total or not given:
         return None
-    columns = [(share, numbers.of(share.table, share.kind.index)) for share in given]
-    matrix = numbers.matrix(
-        np.concatenate(
-            [
-                np.full(np.count_nonzero(share.keep), -1) if found is None else found[share.keep]
-                for share, found in columns
-            ]
-        )
-    )
-    if matrix is None:
-        return None
-    matrix, repair = positive_definite(matrix)
-    if repair is not None:
-        log.suspicious(
-            "OI_CORR",
-            f"the correlations of {repair.blocks} groups of data are not positive definite "
-            f"(smallest eigenvalue {repair.smallest:.2g})",
-            "made smaller until they are",
-        )
-    return matrix
+    parts = []
+    for share in given:
+        found = numbers.of(share.table, share.kind.index)
+        none = np.full(np.count_nonzero(share.keep), -1)
+        parts.append(none if found is None else found[share.keep])
+    matrix = numbers.matrix(np.concatenate(parts))
+    return None if matrix is None else positive_definite(matrix)[0]

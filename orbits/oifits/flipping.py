@@ -17,7 +17,7 @@ def flipped(file: OIFile) -> OIFile:
     Correlations between a phase and anything else change their sign too.
     """
     numbers = Numbers(file)
-    sign = np.ones(numbers.total)
+    turned = [np.empty(0, dtype=np.int64)]
     data = []
     for table in file.data:
         changes = {}
@@ -27,12 +27,12 @@ def flipped(file: OIFile) -> OIFile:
             changes[name.lower()] = -table[name]
             which = numbers.of(table, f"CORRINDX_{name}")
             if which is not None:
-                sign[which[which >= 0]] = -1.0
+                turned.append(which.ravel())
         data.append(replace(table, **changes) if changes else table)
     correlations = []
     for table in file.correlations:
         i, j, valid = numbers.pairs(table)
-        corr = table.corr.copy()
-        corr[valid] *= sign[i[valid]] * sign[j[valid]]
+        mixed = valid & (np.isin(i, np.concatenate(turned)) != np.isin(j, np.concatenate(turned)))
+        corr = np.where(mixed, -table.corr, table.corr)
         correlations.append(replace(table, corr=corr))
     return replace(file, data=data, correlations=correlations)

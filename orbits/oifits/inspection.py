@@ -237,6 +237,8 @@ def _amounts(result: dict[str, Any]) -> Iterator[str]:
     others = []
     for name, counts in result["data"].items():
         word = KINDS[name].words
+        if name not in DEFAULT and not counts["kept"]:
+            continue
         if name not in DEFAULT:
             others.append(f"{counts['kept']} {word}")
             continue

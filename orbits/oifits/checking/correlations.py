@@ -3,6 +3,7 @@
 import numpy as np
 
 from ...problems import Log
+from ..correlation import Numbers, positive_definite
 from ..model import Corr, OIFile
 
 
@@ -60,6 +61,25 @@ def ranges(file: OIFile, log: Log) -> None:
             )
 
 
+def definite(file: OIFile, log: Log) -> None:
+    """Correlations can be those of real data: no combination of them has a negative variance.
+
+    Whatever part of a matrix is used is positive definite if the whole is.
+    """
+    numbers = Numbers(file)
+    for table in file.correlations:
+        i, j, valid = numbers.pairs(table)
+        matrix = numbers.matrix(np.unique(np.concatenate([i[valid], j[valid]])))
+        repair = None if matrix is None else positive_definite(matrix)[1]
+        if repair is not None:
+            log.suspicious(
+                table.label,
+                f"the correlations of {repair.blocks} groups of data are not positive definite "
+                f"(smallest eigenvalue {repair.smallest:.2g})",
+                "made smaller until they are",
+            )
+
+
 def _ranges(file: OIFile, corr: Corr, log: Log) -> tuple[np.ndarray, np.ndarray]:
     """First number and number of channels of every row of every quantity."""
     starts, lengths = [np.empty(0, np.int64)], [np.empty(0, np.int64)]
@@ -79,4 +99,4 @@ def _ranges(file: OIFile, corr: Corr, log: Log) -> tuple[np.ndarray, np.ndarray]
     return np.concatenate(starts), np.concatenate(lengths)
 
 
-CHECKS = (indices, strengths, repetitions, ranges)
+CHECKS = (indices, strengths, repetitions, ranges, definite)
