@@ -25,7 +25,8 @@ def draw_plane(bundle: Bundle, *, columns: int = 1) -> "Figure":
     best = bundle.best
     e, a, w = best.eccentricity[0], best.semimajor_axis[0], np.radians(best.argument[0])
     unit, scale = style.angular_unit(2 * a)
-    drawing = style.figure(columns, height_mm=style.COLUMN_MM[1])
+    title = style.title(f"{bundle.name}: true orbit", 1)
+    drawing = style.figure(columns, height_mm=style.COLUMN_MM[1] + 7 + 3 * title.count("\n"))
     axes = drawing.add_subplot()
     axes.set_aspect("equal")
     axes.grid(True)
@@ -52,7 +53,7 @@ def draw_plane(bundle: Bundle, *, columns: int = 1) -> "Figure":
     if e > 0:
         axes.plot(scale * a * (1 - e), 0, **periastron)
     axes.plot(0, 0, marker=(6, 1, 0), ms=7, color=style.INK, mec="white", mew=0.5)
-    axes.set_title(style.title(f"{bundle.name}: true orbit", 1))
+    axes.set_title(title)
     axes.set_xlabel(f"towards periastron ({unit})")
     axes.set_ylabel(f"across ({unit})")
     axes.margins(0.07)

@@ -248,6 +248,14 @@ def test_motion_and_plane_of_all_six_are_legible(name):
     assert_legible(draw_residuals(six.orbit(name)))
 
 
+@pytest.mark.parametrize("eccentricity", [0.2, 0.44, 0.7])
+def test_the_plane_is_legible_whatever_its_shape(eccentricity):
+    """The height of the drawing must suffice wherever its width decides the scale."""
+    bundle = six.orbit("face-on")
+    shape = replace(bundle.best, eccentricity=np.array([eccentricity]))
+    assert_legible(draw_plane(replace(bundle, best=shape)))
+
+
 def test_motion_over_many_turns_is_legible(spectroscopic):
     assert_legible(draw_motion(spectroscopic, start=60000.0, end=61000.0))
     with pytest.raises(ValueError, match="end must come after the start"):
