@@ -23,8 +23,9 @@ RIDGE = 0.01
 
 MOST_NUMBERS = 2**31 - 1
 """CORRINDX has 32 bits; an NDATA beyond that is a fault of the file."""
-SINGULAR = 1e-6
-"""Eigenvalues below this, times the size, are those of a singular matrix stored with 7 digits."""
+ROUNDING = 1e-3
+"""Eigenvalues above minus this may be 0 but for the digits that were written. A matrix with zeros is
+right as it is: sets of closure phases are redundant."""
 LARGE = 1500
 """Groups beyond this size have their smallest eigenvalue found by iteration."""
 
@@ -104,7 +105,7 @@ class Numbers:
 
 @dataclass(frozen=True)
 class Repair:
-    """What it took to make a correlation matrix positive definite."""
+    """What it took to make a matrix one of correlations, without negative eigenvalues."""
 
     blocks: int
     """Groups of correlated data that had to be changed."""
@@ -112,8 +113,8 @@ class Repair:
     """The smallest eigenvalue before."""
 
 
-def positive_definite(matrix: "csr_array") -> tuple["csr_array", Repair | None]:
-    """`matrix` with the correlations of each group that is not positive definite made smaller.
+def mended(matrix: "csr_array") -> tuple["csr_array", Repair | None]:
+    """`matrix` with the correlations of each group that cannot be those of any data made smaller.
 
     Data that correlate with each other, directly or through others, form a group. All correlations
     of such a group are multiplied by the factor that lifts its smallest eigenvalue to `RIDGE`.
@@ -128,7 +129,7 @@ def positive_definite(matrix: "csr_array") -> tuple["csr_array", Repair | None]:
     for size in np.unique(sizes[sizes > 1]):
         lowest = _lowest_eigenvalues(entries, group, np.flatnonzero(sizes == size), int(size))
         for which, value in lowest.items():
-            if value < SINGULAR * size:
+            if value < -ROUNDING:
                 factor[group == which] = (1 - RIDGE) / (1 - value)
                 smallest, changed = min(smallest, value), changed + 1
     if not changed:

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Self
 import numpy as np
 
 from ..observation import OBSERVABLES, Observable, Observation
-from .correlation import Numbers, positive_definite
+from .correlation import Numbers, mended
 from .model import BaselineTable, OIFile, Wavelength
 from .observables import KINDS, ErrorBars, Kind, sound, usable
 
@@ -149,4 +149,4 @@ def _correlation(file: OIFile, given: Sequence[Share]) -> "csr_array | None":
         none = np.full(np.count_nonzero(share.keep), -1)
         parts.append(none if found is None else found[share.keep])
     matrix = numbers.matrix(np.concatenate(parts))
-    return None if matrix is None else positive_definite(matrix)[0]
+    return None if matrix is None else mended(matrix)[0]

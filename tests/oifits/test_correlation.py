@@ -5,11 +5,12 @@ import oifits_files as make
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from scipy.sparse import csr_array, diags_array
 
 from orbits import read
 from orbits.oifits import Corr, OIFile, Selection, Wavelength, correlation, observations, select
 from orbits.oifits.conforming import conform
-from orbits.oifits.correlation import Numbers, positive_definite
+from orbits.oifits.correlation import Numbers, mended
 from orbits.oifits.flipping import flipped
 
 
@@ -175,7 +176,7 @@ def test_the_matrix_is_that_of_the_definition(seed):
 
 
 @pytest.mark.parametrize("r", [0.4, -0.4])
-def test_a_matrix_that_is_not_positive_definite_is_mended_and_said(rng, tmp_path, r):
+def test_a_matrix_that_is_not_mended_is_mended_and_said(rng, tmp_path, r):
     """Three data with correlations r, r, -r: the smallest eigenvalue is 1 - 2 |r|, for |r| > 1/2
     negative. Mended, it is 0.01 by design, and the other group is left as it was."""
     file = example(rng)
@@ -194,8 +195,8 @@ def test_a_matrix_that_is_not_positive_definite_is_mended_and_said(rng, tmp_path
     # Eigenvalues of 3 x 3 matrices are good to a few 1e-16.
     assert np.linalg.eigvalsh(matrix)[0] == pytest.approx(0.01, abs=1e-14)
     assert matrix[4, 5] == 0.5
-    assert [p.what for p in observation.problems if "positive definite" in p.what] == [
-        "the correlations of 1 groups of data are not positive definite (smallest eigenvalue -0.6)"
+    assert [p.what for p in observation.problems if "no real data" in p.what] == [
+        "the correlations of 1 groups of data are those of no real data (smallest eigenvalue -0.6)"
     ]
 
 
@@ -206,21 +207,36 @@ def test_chains_of_correlated_data_are_mended_whatever_their_length(monkeypatch,
     Small groups are solved densely, large ones by iteration to a part in a thousand, which leaves
     the mended eigenvalue within 0.002 of the 0.01 it is meant to be.
     """
-    from scipy.sparse import csr_array, diags_array
-
     monkeypatch.setattr(correlation, "LARGE", large)
     size = 200
     beside = np.full(size - 1, 0.6)
     chain = csr_array(diags_array([beside, np.ones(size), beside], offsets=[-1, 0, 1]))
-    mended, repair = positive_definite(chain)
+    better, repair = mended(chain)
     exact = 1 - 1.2 * np.cos(np.pi / (size + 1))
     assert repair.smallest == pytest.approx(exact, abs=0.002)
-    assert np.linalg.eigvalsh(mended.toarray())[0] == pytest.approx(0.01, abs=0.002)
+    assert np.linalg.eigvalsh(better.toarray())[0] == pytest.approx(0.01, abs=0.002)
     beside[:] = 0.4
     sound = csr_array(diags_array([beside, np.ones(size), beside], offsets=[-1, 0, 1]))
-    same, repair = positive_definite(sound)
+    same, repair = mended(sound)
     assert repair is None
     np.testing.assert_array_equal(same.toarray(), sound.toarray())
+
+
+def test_redundant_closure_phases_are_left_as_they_are():
+    """Four closure phases of four stations correlate by 1/3 or -1/3 and have rank three."""
+    third = 1 / 3
+    matrix = np.array(
+        [
+            [1, third, -third, third],
+            [third, 1, third, -third],
+            [-third, third, 1, third],
+            [third, -third, third, 1],
+        ]
+    )
+    assert np.linalg.eigvalsh(matrix)[0] == pytest.approx(0, abs=1e-15)
+    same, repair = mended(csr_array(matrix))
+    assert repair is None
+    np.testing.assert_array_equal(same.toarray(), matrix)
 
 
 def test_an_absurd_number_of_data_asks_for_no_memory(rng):

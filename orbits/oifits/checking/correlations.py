@@ -3,7 +3,7 @@
 import numpy as np
 
 from ...problems import Log
-from ..correlation import Numbers, positive_definite
+from ..correlation import Numbers, mended
 from ..model import Corr, OIFile
 
 
@@ -64,17 +64,17 @@ def ranges(file: OIFile, log: Log) -> None:
 def definite(file: OIFile, log: Log) -> None:
     """Correlations can be those of real data: no combination of them has a negative variance.
 
-    Whatever part of a matrix is used is positive definite if the whole is.
+    If that is so for the whole matrix, it is for whatever part of it is used.
     """
     numbers = Numbers(file)
     for table in file.correlations:
         i, j, valid = numbers.pairs(table)
         matrix = numbers.matrix(np.unique(np.concatenate([i[valid], j[valid]])))
-        repair = None if matrix is None else positive_definite(matrix)[1]
+        repair = None if matrix is None else mended(matrix)[1]
         if repair is not None:
             log.suspicious(
                 table.label,
-                f"the correlations of {repair.blocks} groups of data are not positive definite "
+                f"the correlations of {repair.blocks} groups of data are those of no real data "
                 f"(smallest eigenvalue {repair.smallest:.2g})",
                 "made smaller until they are",
             )
