@@ -28,7 +28,7 @@ def draw_plane(bundle: Bundle, *, columns: int = 1) -> "Figure":
     title = style.title(f"{bundle.name}: true orbit", 1)
     drawing = style.figure(columns, height_mm=style.COLUMN_MM[1] + 7 + 3 * title.count("\n"))
     axes = drawing.add_subplot()
-    axes.set_aspect("equal")
+    axes.set_aspect("equal", adjustable="datalim")
     axes.grid(True)
     true = np.linspace(0, 2 * np.pi, 1441)
     radius = scale * a * (1 - e * e) / (1 + e * np.cos(true))
