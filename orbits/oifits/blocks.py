@@ -96,6 +96,8 @@ def cards(header: fits.Header) -> Iterator[tuple[str, object, str]]:
             continue
         if isinstance(value, fits.card.Undefined) or not re.fullmatch(r"[A-Z0-9_ -]+", name):
             continue
+        if name in ("END", "CONTINUE", "HIERARCH"):  # parts of other cards, when all is well
+            continue
         if len(name) > 8 or " " in name:
             name = f"HIERARCH {name}"  # the way to write longer names, in use at several places
         yield name, _printable(value) if isinstance(value, str) else value, _printable(comment)

@@ -187,10 +187,8 @@ def data(file: OIFile, say: Say) -> OIFile:
 def _fit(table: DataTable, say: Say) -> DataTable:
     changes: dict[str, np.ndarray] = {}
     flag = table.flag
-    for value, error, _ in table.quantities:
+    for value, error, _ in table.measured:
         datum, sigma = table[value], table[error]
-        if datum is None or sigma is None:
-            continue
         sound = (sigma > 0) & (sigma < np.inf)
         missing = np.isnan(datum) & (sound | np.isnan(sigma))  # which the standard allows
         bad = ~table.flag & ~missing & ~(sound & np.isfinite(datum))

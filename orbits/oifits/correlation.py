@@ -24,8 +24,8 @@ RIDGE = 0.01
 MOST_NUMBERS = 2**31 - 1
 """CORRINDX has 32 bits; an NDATA beyond that is a fault of the file."""
 ROUNDING = 1e-3
-"""Eigenvalues above minus this may be 0 but for the digits that were written. A matrix with zeros is
-right as it is: sets of closure phases are redundant."""
+"""Eigenvalues above minus this may be 0 but for the digits that were written. A matrix with zeros
+is right as it is: sets of closure phases are redundant."""
 LARGE = 1500
 """Groups beyond this size have their smallest eigenvalue found by iteration."""
 

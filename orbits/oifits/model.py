@@ -92,6 +92,11 @@ class DataTable(Table):
     quantities: ClassVar[tuple[tuple[str, str, str], ...]]
     """(value, error, correlation index) of each quantity, as column names."""
 
+    @property
+    def measured(self) -> list[tuple[str, str, str]]:
+        """Those of `quantities` that this table has, with their errors."""
+        return [q for q in self.quantities if self[q[0]] is not None and self[q[1]] is not None]
+
 
 @dataclass(kw_only=True, eq=False)
 class BaselineTable(DataTable):

@@ -86,9 +86,7 @@ def _ranges(file: OIFile, corr: Corr, log: Log) -> tuple[np.ndarray, np.ndarray]
     for table in file.data:
         if table.corrname != corr.corrname:
             continue
-        for value, _, index in table.quantities:
-            if table[value] is None:
-                continue
+        for value, _, index in table.measured:
             if table[index] is None:
                 log.suspicious(
                     table.label, f"column {index} is missing", f"{value} is taken as independent"

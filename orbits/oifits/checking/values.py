@@ -19,9 +19,7 @@ SHORT_TIME = 15 / 1440
 def errors(file: OIFile, log: Log) -> None:
     """Errors are positive and finite."""
     for table in file.data:
-        for value, error, _ in table.quantities:
-            if table[error] is None or not len(table):
-                continue
+        for value, error, _ in table.measured if len(table) else ():
             counted = ~table.flag & ~np.isnan(table[value])
             for what, bad in (
                 ("negative", table[error] < 0),
@@ -38,9 +36,7 @@ def errors(file: OIFile, log: Log) -> None:
 def missing_values(file: OIFile, log: Log) -> None:
     """Data and errors that are not flagged are numbers."""
     for table in file.data:
-        for value, error, _ in table.quantities:
-            if table[value] is None or not len(table):
-                continue
+        for value, error, _ in table.measured if len(table) else ():
             nan = np.isnan(table[value]) | np.isnan(table[error])
             nan &= ~table.flag
             if not nan.any():
