@@ -2,6 +2,7 @@
 
 import json
 import time
+from dataclasses import replace
 
 import fitted
 import numpy as np
@@ -315,3 +316,45 @@ def test_listing_ten_thousand_orbits_takes_under_a_second(nodeline, tmp_path):
     assert time.process_time() - start < 1.0
     assert out.splitlines()[-1] == "10000 orbits"
     assert code == 0
+
+
+@pytest.fixture
+def spectroscopic(tmp_path):
+    """A fitted system that is known from velocities alone."""
+    path = tmp_path / "sb.toml"
+    path.write_text('name = "Harrow 7"\n')
+    unknown = ("semimajor_axis_mas", "inclination_deg", "node_deg", "parallax_mas", "total_msun")
+    whole = fitted.solution()
+    lost = [*unknown, "primary_msun", "companion_msun"]
+    best = {key: value for key, value in whole.best.items() if key not in lost}
+    account = dict(whole.account)
+    account["data"] = {"velocities": account["data"]["velocities"]}
+    samples = whole.samples.drop(columns=lost)
+    alone = replace(whole, samples=samples, best=best, positions=None, account=account)
+    alone.write(tmp_path / "sb-results")
+    return path
+
+
+def test_a_spectroscopic_orbit_is_drawn_predicted_and_reported(nodeline, spectroscopic):
+    code, out, _ = nodeline("draw", spectroscopic)
+    assert code == 0
+    assert [line.rpartition("-")[2] for line in out.splitlines()] == ["velocity.png"]
+    code, _, err = nodeline("draw", spectroscopic, "--kind", "sky")
+    assert (code, "without positions only --kind velocity" in err) == (3, True)
+    code, out, _ = nodeline("predict", spectroscopic, "--at", "60312.8", "--json")
+    (row,) = json.loads(out)["entries"][0]["ephemeris"]
+    assert code == 0
+    assert "separation_mas" not in row
+    # At periastron V2 = gamma + K2 (1 + e) cos w.
+    expected = -14.2 + 29.06 * 1.36 * np.cos(np.radians(212))
+    assert_allclose(row["companion_velocity_kms"], expected, atol=0.01)
+    code, out, _ = nodeline("predict", spectroscopic, "--at", "60312.8")
+    assert (code, "unknown" in out) == (0, True)
+    code, _, err = nodeline("report", spectroscopic)
+    assert (code, err) == (0, "")
+    page = (spectroscopic.parent / "sb-results" / "report.html").read_text()
+    assert "Without positions the size, the inclination and the node" in page
+    assert 'id="positions"' not in page
+    arguments = ("--catalogue", spectroscopic.parent / "c.ecsv", "--solution", "x")
+    code, _, err = nodeline("catalogue", "add", spectroscopic, *arguments)
+    assert (code, "without positions there is no orbit on the sky" in err) == (3, True)
