@@ -50,6 +50,7 @@ def inspect(
     from ..oifits.inspection import inspect as describe
     from ..oifits.joining import join
     from ..oifits.selecting import select
+    from ..oifits.validation import validate
     from ..problems import refuse_suspicious
     from ..progress import Bar
 
@@ -65,7 +66,7 @@ def inspect(
             if flip_phase:
                 file = flipped(file)
             parts.append(select(file, selection, target=target))
-            results.append(describe(parts[-1]))
+            results.append(describe(parts[-1], validate(path) if file.version == 2 else ()))
             step()
     say("\n".join(map(in_words, results)), json=json)
     whole = join(parts)

@@ -1,6 +1,6 @@
 """What a file holds and what is wrong with it, in numbers (for machines) and words (for people)."""
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from typing import Any
 
 import numpy as np
@@ -12,16 +12,17 @@ from .links import plain
 from .model import BaselineTable, Flux, OIFile
 from .observables import KINDS, sound, timed, usable
 from .utc import night_label
+from .validation import Breach
 
 LARGEST_CLOSURE_PHASE = 1.5 * 3**0.5
 """Largest closure phase, rad, of a companion of contrast 1, to first order in the contrast: when
 the two legs of a triangle see it turned by 120 degrees (Le Bouquin & Absil 2012, A&A 541, A89)."""
 
 
-def inspect(file: OIFile) -> dict[str, Any]:
+def inspect(file: OIFile, breaches: Sequence[Breach] = ()) -> dict[str, Any]:
     """A description of `file` made of plain numbers, text, lists and dictionaries.
 
-    Numbers that the file does not give are absent. Lengths and angles are in the unit that the
+    `breaches` are the rules of version 2 that it breaks, from `validation.validate`. Numbers that the file does not give are absent. Lengths and angles are in the unit that the
     name of the entry ends in.
     """
     return {
@@ -38,6 +39,7 @@ def inspect(file: OIFile) -> dict[str, Any]:
         **_reach(file),
         **_precision(file),
         "problems": [_problem(problem) for problem in file.problems],
+        "breaches": [str(breach) for breach in breaches],
     }
 
 
@@ -180,7 +182,7 @@ def _problem(problem: Problem) -> dict[str, str]:
     }
 
 
-MOST_NIGHTS = 8
+MOST_NIGHTS, MOST_BREACHES = 8, 6
 SIGN = """\
   A wrong sign of the phases cannot be seen in one file. It turns every position by 180 deg;
   if the instrument is known for it, use --flip-phase."""
@@ -188,7 +190,12 @@ SIGN = """\
 
 def in_words(result: dict[str, Any]) -> str:
     """The result of `inspect` as one screen of text."""
-    lines = [f"{result['file']}: OIFITS {result['version']}"]
+    breaches = result["breaches"]
+    verdict = f", breaks {len(breaches)} rules of it" if breaches else ""
+    lines = [f"{result['file']}: OIFITS {result['version']}{verdict}"]
+    lines += [_row("", breach) for breach in breaches[:MOST_BREACHES]]
+    if len(breaches) > MOST_BREACHES:
+        lines.append(_row("", f"and {len(breaches) - MOST_BREACHES} more"))
     for target in result["targets"]:
         place = ""
         if "ra_deg" in target:

@@ -316,6 +316,16 @@ def test_triple_amplitudes_in_other_units_are_dropped_and_the_phases_kept(rng, t
     assert any("T3AMP is not normalised" in p.what for p in observation.problems)
 
 
+def test_a_quantity_without_its_error_is_not_measured(rng, tmp_path):
+    def edit(opened):
+        opened["OI_VIS"].columns.change_name("RVISERR", "SOMETHING")
+
+    path = damaged(rng, tmp_path, edit, make_file=make.full)
+    file = load(path)
+    assert ("RVIS", "RVISERR", "CORRINDX_RVIS") not in file.data[0].measured
+    assert any("unknown columns SOMETHING" in p.what for p in check(file))
+
+
 def test_undefined_flags_count_as_set(rng, tmp_path):
     """Zero bytes in a logical column are FITS for "undefined"."""
     path = tmp_path / "night.fits"

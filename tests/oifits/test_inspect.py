@@ -84,6 +84,18 @@ def test_what_is_not_oifits_ends_with_code_3_and_one_sentence(nodeline, tmp_path
     assert err == f"nodeline: {path}: not a FITS file\n"
 
 
+def test_a_file_that_breaks_the_standard_is_told_so(nodeline, rng, tmp_path):
+    file = make.small(rng)
+    file.data[0].vis2err[0, 0] = -0.1
+    file.write(tmp_path / "night.fits")
+    code, out, _ = nodeline("inspect", tmp_path / "night.fits", "--json")
+    assert code == 0
+    assert json.loads(out)["files"][0]["breaches"] == [
+        "error: OI_VIS2 (HDU 4): column VIS2ERR is negative in unflagged data"
+    ]
+    assert "OIFITS 2, breaks 1 rules of it" in nodeline("inspect", tmp_path / "night.fits")[1]
+
+
 def test_strict_makes_the_suspicious_unusable(nodeline, rng, tmp_path):
     file = make.small(rng)
     file.data[0].vis2data[0, 0] = 1.9
