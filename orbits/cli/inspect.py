@@ -66,7 +66,7 @@ def inspect(
             if flip_phase:
                 file = flipped(file)
             parts.append(select(file, selection, target=target))
-            results.append(describe(parts[-1], validate(path) if file.version == 2 else ()))
+            results.append(describe(parts[-1], validate(path) if file.version == 2 else None))
             step()
     say("\n".join(map(in_words, results)), json=json)
     whole = join(parts)

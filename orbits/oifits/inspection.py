@@ -19,12 +19,13 @@ LARGEST_CLOSURE_PHASE = 1.5 * 3**0.5
 the two legs of a triangle see it turned by 120 degrees (Le Bouquin & Absil 2012, A&A 541, A89)."""
 
 
-def inspect(file: OIFile, breaches: Sequence[Breach] = ()) -> dict[str, Any]:
+def inspect(file: OIFile, breaches: Sequence[Breach] | None = None) -> dict[str, Any]:
     """A description of `file` made of plain numbers, text, lists and dictionaries.
 
-    `breaches` are the rules of version 2 that it breaks, from `validation.validate`. Numbers that the file does not give are absent. Lengths and angles are in the unit that the
-    name of the entry ends in.
+    Numbers that the file does not give are absent. Lengths and angles are in the unit that the
+    name of the entry ends in. `breaches` are what `validation.validate` says, if it was asked.
     """
+    verdict = {} if breaches is None else {"breaches": [str(breach) for breach in breaches]}
     return {
         "file": file.source,
         "version": file.version,
@@ -39,8 +40,7 @@ def inspect(file: OIFile, breaches: Sequence[Breach] = ()) -> dict[str, Any]:
         **_reach(file),
         **_precision(file),
         "problems": [_problem(problem) for problem in file.problems],
-        "breaches": [str(breach) for breach in breaches],
-    }
+    } | verdict
 
 
 def _targets(file: OIFile) -> Iterator[dict[str, Any]]:
@@ -190,12 +190,7 @@ SIGN = """\
 
 def in_words(result: dict[str, Any]) -> str:
     """The result of `inspect` as one screen of text."""
-    breaches = result["breaches"]
-    verdict = f", breaks {len(breaches)} rules of it" if breaches else ""
-    lines = [f"{result['file']}: OIFITS {result['version']}{verdict}"]
-    lines += [_row("", breach) for breach in breaches[:MOST_BREACHES]]
-    if len(breaches) > MOST_BREACHES:
-        lines.append(_row("", f"and {len(breaches) - MOST_BREACHES} more"))
+    lines = [f"{result['file']}: OIFITS {result['version']}", *_verdict(result)]
     for target in result["targets"]:
         place = ""
         if "ra_deg" in target:
@@ -217,6 +212,16 @@ def in_words(result: dict[str, Any]) -> str:
         SIGN,
     ]
     return "\n".join(lines)
+
+
+def _verdict(result: dict[str, Any]) -> Iterator[str]:
+    """Whether a file is valid, if that was looked into."""
+    breaches = result.get("breaches")
+    if breaches is not None:
+        yield _row("standard", f"{len(breaches)} breaches" if breaches else "valid")
+        yield from (_row("", breach) for breach in breaches[:MOST_BREACHES])
+        if len(breaches) > MOST_BREACHES:
+            yield _row("", f"and {len(breaches) - MOST_BREACHES} more")
 
 
 def _row(head: str, text: str) -> str:
