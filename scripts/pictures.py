@@ -43,7 +43,7 @@ def _demonstrate(folder: Path):
     from orbits.cli.demo import demo
     from orbits.system import read_system
 
-    demo(out=folder, seed=7)
+    demo(output=folder, seed=7)
     (path,) = folder.glob("*.toml")
     return read_system(path)
 
@@ -85,7 +85,9 @@ def _few_colours(png: bytes, path: Path, *, width: int | None = None) -> None:
     image = Image.open(io.BytesIO(png)).convert("RGB")
     if width is not None:
         image = image.resize((width, round(image.height * width / image.width)), Image.LANCZOS)
-    image.quantize(COLOURS, dither=Image.Dither.NONE).save(path, optimize=True)
+    # This method keeps colours that few pixels have, such as those of the measured positions.
+    few = image.quantize(COLOURS, method=Image.Quantize.MAXCOVERAGE, dither=Image.Dither.NONE)
+    few.save(path, optimize=True)
 
 
 def _photograph(system, path: Path) -> None:

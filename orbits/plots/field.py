@@ -113,6 +113,6 @@ def _zoom(axes: "Axes", result: SearchResult) -> None:
 
 def _place(one: Candidate) -> str:
     return (
-        f"{one.separation_mas:.3f} mas, PA {one.position_angle_deg:.2f}°, "
+        f"{one.separation_mas:.3f} mas, PA {one.position_angle_deg:.2f}°\n"
         f"contrast {one.contrast:.3g}, {one.significance_sigma:.1f} sigma"
     )
