@@ -10,7 +10,7 @@ from dataclasses import replace
 import numpy as np
 
 from .correlation import Cut, renumbered
-from .links import plain
+from .links import mapped, plain
 from .model import T3, Array, DataTable, Flux, OIFile, Vis
 from .observables import timed
 from .utc import iso
@@ -81,8 +81,8 @@ def targets(file: OIFile, say: Say) -> OIFile:
     return replace(
         file,
         target=target,
-        data=[replace(t, target_id=_mapped(t.target_id, new)) for t in file.data],
-        polarisations=[replace(t, target_id=_mapped(t.target_id, new)) for t in file.polarisations],
+        data=[replace(t, target_id=mapped(t.target_id, new)) for t in file.data],
+        polarisations=[replace(t, target_id=mapped(t.target_id, new)) for t in file.polarisations],
     )
 
 
@@ -125,8 +125,8 @@ def _with_all_stations(file: OIFile, number: int, array: Array, say: Say) -> OIF
     if array.sta_index.min(initial=1) < 1:
         say(f"OI_ARRAY {array.arrname}: stations numbered anew from 1")
         new = {int(old): i + 1 for i, old in enumerate(dict.fromkeys(array.sta_index.tolist()))}
-        array = replace(array, sta_index=_mapped(array.sta_index, new))
-        changed = {id(t): replace(t, sta_index=_mapped(t.sta_index, new)) for t in mine}
+        array = replace(array, sta_index=mapped(array.sta_index, new))
+        changed = {id(t): replace(t, sta_index=mapped(t.sta_index, new)) for t in mine}
         file = replace(
             file,
             data=[changed.get(id(t), t) for t in file.data],
@@ -145,14 +145,6 @@ def _extended(array: Array, indices: np.ndarray) -> Array:
         for name, extra in array.extra.items()
     }
     return replace(array, **joined, extra=padded)
-
-
-def _mapped(ids: np.ndarray, new: dict[int, int]) -> np.ndarray:
-    """`ids` with those that `new` knows replaced; the others stay."""
-    old, where = np.unique(ids, return_inverse=True)
-    return np.array([new.get(i, i) for i in old.tolist()], dtype=ids.dtype)[where].reshape(
-        ids.shape
-    )
 
 
 def channels(file: OIFile, say: Say) -> OIFile:

@@ -5,7 +5,7 @@ from dataclasses import replace
 
 import numpy as np
 
-from .links import plain, same_content
+from .links import mapped, plain, same_content
 from .model import Array, OIFile, Target, Wavelength
 from .schema import Table, attribute, columns
 
@@ -33,7 +33,7 @@ def join(files: Sequence[OIFile]) -> OIFile:
             data.append(
                 replace(
                     table,
-                    target_id=_renumbered(table.target_id, ids[number]),
+                    target_id=mapped(table.target_id, ids[number]),
                     insname=insnames[table.insname],
                     arrname=arrnames.get(table.arrname),
                     corrname=corrnames.get(table.corrname),
@@ -44,7 +44,7 @@ def join(files: Sequence[OIFile]) -> OIFile:
             polarisations.append(
                 replace(
                     table,
-                    target_id=_renumbered(table.target_id, ids[number]),
+                    target_id=mapped(table.target_id, ids[number]),
                     insname=np.array(names, dtype=str),
                     arrname=arrnames.get(table.arrname, table.arrname),
                 )
@@ -92,11 +92,6 @@ def _targets(files: Sequence[OIFile]) -> tuple[Target, list[dict[int, int]]]:
         joined[attribute(column.name)] = np.concatenate(values) if known else None
     joined["target_id"] = np.arange(1, len(numbers) + 1)
     return Target(**joined, cards=parts[0].cards), maps
-
-
-def _renumbered(ids: np.ndarray, new: dict[int, int]) -> np.ndarray:
-    old, where = np.unique(ids, return_inverse=True)
-    return np.array([new[int(i)] for i in old], dtype=ids.dtype)[where]
 
 
 def _place(table: Table, key: str, placed: dict[str, Table], *, share: bool = True) -> str:

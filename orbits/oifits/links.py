@@ -58,7 +58,9 @@ def assemble(
         data=data,
         arrays=arrays,
         correlations=correlations,
-        polarisations=[t for t in tables if isinstance(t, Inspol)],
+        polarisations=[
+            _rows_of_known_targets(t, target, log) for t in tables if isinstance(t, Inspol)
+        ],
         primary=_primary(header),
         history=_lines(header, "HISTORY"),
         comments=_lines(header, "COMMENT"),
@@ -102,6 +104,13 @@ def _target(path: Path, tables: list[Target], log: Log) -> Target:
 def plain(name: str) -> str:
     """A name for comparison: without regard to case and repeated blanks."""
     return " ".join(name.split()).casefold()
+
+
+def mapped(ids: np.ndarray, new: dict[int, int]) -> np.ndarray:
+    """`ids` with those that `new` knows replaced; the others stay."""
+    old, where = np.unique(ids, return_inverse=True)
+    values = np.array([new.get(number, number) for number in old.tolist()], dtype=ids.dtype)
+    return values[where].reshape(ids.shape)
 
 
 def _unique(tables: list[T], key: str, log: Log) -> list[T]:
@@ -189,7 +198,7 @@ def _match(wanted: str, known: list[str]) -> str | None:
     return alike[0] if len(alike) == 1 else None
 
 
-def _rows_of_known_targets(table: DataTable, target: Target, log: Log) -> DataTable:
+def _rows_of_known_targets(table: T, target: Target, log: Log) -> T:
     known = np.isin(table.target_id, target.target_id)
     if known.all():
         return table

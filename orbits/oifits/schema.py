@@ -120,7 +120,9 @@ class Table:
                 self[known.name] = known.fill
         nrow, nwave = self._size()
         for known in columns(type(self)):
-            if self[known.name] is None and (known.optional or self._fill(known, nrow, nwave)):
+            if self[known.name] is None:
+                if not known.optional:
+                    self[known.name] = self._unknown(known, nrow, nwave)
                 continue
             value = known.array(self[known.name])
             shape = _shape(known, nrow, nwave)
@@ -174,12 +176,11 @@ class Table:
         shape = np.shape(self[spectral.name]) if spectral else ()
         return len(self[given[0].name]), shape[1] if len(shape) > 1 else 0
 
-    def _fill(self, known: Column, nrow: int, nwave: int) -> bool:
-        """Give a column that is missing its "unknown" value."""
+    def _unknown(self, known: Column, nrow: int, nwave: int) -> np.ndarray:
+        """What stands in for a compulsory column that is not given."""
         if known.fill is None:
             raise ValueError(f"{self.extname}: column {known.name} is missing")
-        self[known.name] = known.array(np.full(_shape(known, nrow, nwave), known.fill))
-        return True
+        return known.array(np.full(_shape(known, nrow, nwave), known.fill))
 
 
 def _shape(known: Column, nrow: int, nwave: int) -> tuple[int, ...]:

@@ -8,6 +8,7 @@ from astropy.time import Time
 
 from orbits import InputError, read, read_epochs
 from orbits.oifits import ErrorBars, Selection, observations, select
+from orbits.oifits.checking import check
 from orbits.oifits.joining import join
 
 
@@ -212,3 +213,4 @@ def test_a_target_under_two_numbers_is_one(rng):
     file.data[1].target_id[:] = 2
     (observation,) = observations(file)
     assert (len(observation.v2), len(observation.t3)) == (18, 12)
+    assert "target 'harrow 7' has 2 ids" in [problem.what for problem in check(file)]

@@ -316,6 +316,14 @@ def test_triple_amplitudes_in_other_units_are_dropped_and_the_phases_kept(rng, t
     assert any("T3AMP is not normalised" in p.what for p in observation.problems)
 
 
+def test_an_array_without_stations_is_no_obstacle(rng):
+    file = make.small(rng)
+    file.arrays[0] = file.arrays[0].select(np.zeros(4, dtype=bool))
+    assert [p.what for p in check(file) if "STA_INDEX" in p.what] == [
+        "column STA_INDEX: 12 entries, such as 1, are not in OI_ARRAY"
+    ] * 2
+
+
 def test_a_quantity_without_its_error_is_not_measured(rng, tmp_path):
     def edit(opened):
         opened["OI_VIS"].columns.change_name("RVISERR", "SOMETHING")

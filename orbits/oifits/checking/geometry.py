@@ -15,7 +15,7 @@ def longer_than_array(file: OIFile, log: Log) -> None:
     """No projected baseline is longer than the distance of its stations."""
     for table in file.data:
         array = file.array(table.arrname) if isinstance(table, BaselineTable) else None
-        if array is None or not len(table):
+        if array is None or not len(array) or not len(table):
             continue
         order = np.argsort(array.sta_index, kind="stable")
         place = np.searchsorted(array.sta_index[order], table.sta_index).clip(max=len(array) - 1)
