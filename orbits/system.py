@@ -10,6 +10,8 @@ tables = ["velocities.ecsv"]
 [parallax]
 value = 12.3                   # mas
 error = 0.2
+[primary]
+magnitude = 4.9                # apparent, in the band of the nights
 [fit]
 live_points = 500
 outliers = true                # a share of the positions may be wrong
@@ -54,6 +56,8 @@ class System:
     positions: tuple[Path, ...] = ()
     velocities: tuple[Path, ...] = ()
     parallax: Parallax | None = None
+    magnitude: float | None = None
+    """Apparent magnitude of the primary in the band of the nights."""
     live_points: int = 500
     model: Mapping[str, Any] = made(default_factory=dict)
     """What besides the orbit may explain the data: arguments of `fitting.model.Model`."""
@@ -84,6 +88,7 @@ def read_system(path: Path) -> System:
         positions=_files(path, values, "positions", "tables"),
         velocities=_files(path, values, "velocities", "tables"),
         parallax=_parallax(path, values),
+        magnitude=values.get("primary", {}).get("magnitude"),
         **{key: values["nights"][key] for key in _NIGHTS if key in values.get("nights", {})},
         **_fit(path, values),
     )
@@ -97,6 +102,7 @@ SCHEMA: dict[str, Any] = {
     "positions": {"tables": list},
     "velocities": {"tables": list},
     "parallax": {"value": float, "error": float},
+    "primary": {"magnitude": float},
     "fit": {
         "live_points": int,
         "circular": bool,

@@ -5,7 +5,19 @@ from typing import Annotated
 
 import typer
 
-from . import catalogue, demo, draw, inspect, measure, orbit, predict, report, search, simulate
+from . import (
+    catalogue,
+    demo,
+    draw,
+    inspect,
+    limits,
+    measure,
+    orbit,
+    predict,
+    report,
+    search,
+    simulate,
+)
 from .frame import run
 
 app = typer.Typer(
@@ -33,6 +45,7 @@ app.add_typer(catalogue.app)
 app.command()(demo.demo)
 app.command()(draw.draw)
 app.command()(inspect.inspect)
+app.command()(limits.limits)
 app.command()(measure.measure)
 app.command()(orbit.orbit)
 app.command()(predict.predict)

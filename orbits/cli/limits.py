@@ -1,0 +1,232 @@
+"""nodeline limits: the faintest companion that a night, or several, would have shown."""
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from .frame import Force, Json, Seed, emit, say
+
+if TYPE_CHECKING:
+    from ..companion.limits import Limits
+    from ..observation import Observation
+    from ..system import System
+
+_SHOWN = 8
+"""Separations in the table for people; the files have all of them."""
+_ROUTES = """
+  found blind: in {completeness:.0%} of noise realisations the search finds it at its place, above
+    what noise reaches anywhere in the field with probability {false_alarm:g} (a gain
+    in chi-square of {threshold:.1f})
+  difference:  chi-square there grows too much for it, at {confidence:.2%}, the place being given
+  total:       chi-square of all closure phases, taken as independent, is improbable at the same
+    level; far weaker the more data there are, and wrong where they are correlated: to compare with
+    papers"""
+
+
+def limits(
+    files: Annotated[
+        list[Path],
+        typer.Argument(help="OIFITS files, or one system file.", metavar="FILE...|SYSTEM.toml"),
+    ],
+    target: Annotated[str | None, typer.Option(help="Name, where the files hold several.")] = None,
+    night: Annotated[str | None, typer.Option(help="Date; else all nights together.")] = None,
+    field: Annotated[float | None, typer.Option(help="Half the side of the field, mas.")] = None,
+    diameter: Annotated[
+        float | None, typer.Option(help="Of the primary, mas; else fitted.")
+    ] = None,
+    shared_baselines: Annotated[
+        bool,
+        typer.Option("--shared-baselines", help="Closure phases share their baselines' noise."),
+    ] = False,
+    v2_calibration: Annotated[
+        float, typer.Option(min=0, help="Error of V2 common to all channels, as a part of V2.")
+    ] = 0.0,
+    t3_calibration: Annotated[
+        float, typer.Option(min=0, help="Closure-phase error common to all channels, deg.")
+    ] = 0.0,
+    ignore_correlations: Annotated[
+        bool, typer.Option("--ignore-correlations", help="Take all data for independent.")
+    ] = False,
+    flip_phase: Annotated[
+        bool, typer.Option("--flip-phase", help="The files have phases of the opposite sign.")
+    ] = False,
+    confidence: Annotated[float, typer.Option(help="Of what chi-square excludes.")] = 0.9973,
+    completeness: Annotated[float, typer.Option(help="Share of companions to be found.")] = 0.9,
+    false_alarm: Annotated[float, typer.Option(help="Of what counts as found.")] = 0.01,
+    positions: Annotated[int, typer.Option(min=9, help="Most along a side of the maps.")] = 65,
+    injections: Annotated[int, typer.Option(min=20, help="Noise realisations a place.")] = 200,
+    trials: Annotated[
+        int, typer.Option(min=0, help="Full searches for companions put into the data, a night.")
+    ] = 0,
+    output: Annotated[
+        Path | None, typer.Option(help="Folder for tables (ECSV) and a picture.")
+    ] = None,
+    seed: Seed = 0,
+    force: Force = False,
+    json: Json = False,
+) -> None:
+    """Say what a night excludes: the faintest companion, by separation, that it would have shown.
+
+    A companion that it does show is fitted first. Several nights are taken together for a companion
+    that does not move, and one by one.
+    """
+    import astropy.units as u
+    import numpy as np
+
+    from ..companion.covariance import ErrorModel
+    from ..companion.limits import limits as find
+    from ..files import refuse_existing
+    from ..progress import Bar
+
+    shares = {"confidence": confidence, "completeness": completeness, "false-alarm": false_alarm}
+    for name, value in shares.items():
+        if not 0 < value < 1:
+            raise typer.BadParameter(f"--{name} must be between 0 and 1, got {value}")
+    for name, value in (("--field", field), ("--diameter", diameter)):
+        if value is not None and not value > 0:
+            raise typer.BadParameter(f"{name} must be positive, got {value}")
+    system, observations = _given(files, target, night, flip_phase)
+    if system is not None:
+        field = system.field if field is None else field
+        diameter = system.diameter if diameter is None else diameter
+    paths = {} if output is None else _paths(output, several=len(observations) > 1)
+    refuse_existing(*paths.values(), force=force)
+    result = find(
+        observations,
+        field=None if field is None else field * u.mas,
+        diameter=None if diameter is None else diameter * u.mas,
+        errors=ErrorModel(
+            correlated=not ignore_correlations,
+            shared_baselines=shared_baselines,
+            v2_calibration=v2_calibration,
+            t3_calibration=np.radians(t3_calibration),
+        ),
+        confidence=confidence,
+        completeness=completeness,
+        false_alarm=false_alarm,
+        positions=positions,
+        injections=injections,
+        trials=trials,
+        rng=np.random.default_rng(seed),
+        progress=Bar(),
+    )
+    magnitude = None if system is None else system.magnitude
+    parallax = None
+    if system is not None and system.parallax is not None:
+        parallax = system.parallax.value * u.mas
+    say(describe(result), json=json)
+    if paths:
+        _write(result, paths, parallax, magnitude, force=force)
+        say(f"  written    {', '.join(map(str, paths.values()))}", json=json)
+    if json:
+        told = {"primary_magnitude": magnitude}
+        if parallax is not None:
+            told["parallax_mas"] = parallax.value
+        emit({**result.to_json(), **{k: v for k, v in told.items() if v is not None}})
+
+
+def _given(
+    files: list[Path], target: str | None, night: str | None, flip_phase: bool
+) -> tuple["System | None", list["Observation"]]:
+    """The nights asked for, and the system file if they come from one."""
+    from ..errors import InputError
+    from ..oifits import read, read_epochs
+    from ..system import read_system
+
+    system = None
+    if len(files) == 1 and files[0].suffix == ".toml":
+        system = read_system(files[0])
+        if not system.nights:
+            raise InputError(f"{system.path}: no nights; name OIFITS files under [nights]")
+        files = list(system.nights)
+        target = system.target if target is None else target
+        flip_phase = flip_phase or system.flip_phase
+    if night is not None:
+        return system, [read(files, target=target, night=night, flip_phase=flip_phase)]
+    return system, read_epochs(files, target=target, flip_phase=flip_phase)
+
+
+def _paths(folder: Path, *, several: bool) -> dict[str, Path]:
+    names = {
+        "curve": "limits.ecsv", "map": "limits-map.ecsv", "completeness": "completeness.ecsv",
+        "picture": "limits.png",
+    }  # fmt: skip
+    if several:
+        names["nights"] = "limits-nights.ecsv"
+    return {what: folder / name for what, name in names.items()}
+
+
+def _write(result: "Limits", paths: dict[str, Path], parallax, magnitude, *, force: bool) -> None:
+    from ..companion.limit_tables import completeness_table, curve_table, map_table, nights_table
+    from ..files import whole_file
+    from ..plots import style
+    from ..plots.limits import draw_limits
+
+    tables = {
+        "curve": curve_table(result, parallax=parallax, magnitude=magnitude),
+        "map": map_table(result),
+        "completeness": completeness_table(result),
+    }
+    if "nights" in paths:
+        tables["nights"] = nights_table(result)
+    for what, table in tables.items():
+        with whole_file(paths[what], force=force) as temporary:
+            table.write(temporary, format="ascii.ecsv", overwrite=True)
+    style.save(draw_limits(result, parallax=parallax), paths["picture"], force=force)
+
+
+def describe(result: "Limits") -> str:
+    """The limits in lines for people."""
+    columns = result.curve()
+    n = len(result.nights)
+    lines = [f"{result.target}, {n} night{'s' if n > 1 else ''}, within {result.field:.4g} mas"]
+    for (mjd, _), one in zip(result.nights, result.removed, strict=True):
+        if one is not None:
+            lines.append(
+                f"  MJD {mjd:.4f} shows a companion at {one.separation_mas:.3f} mas, PA "
+                f"{one.position_angle_deg:.2f} deg, contrast {one.contrast:.4g}; limits on another"
+            )
+    lines += [
+        "                 faintest companion excluded, contrast (magnitudes): median / worst angle",
+        "  separation     found blind                   difference                    total",
+    ]
+    rows = len(columns["separation"])
+    for k in range(rows // _SHOWN, rows, -(-rows // _SHOWN)):
+        cells = [
+            " / ".join(_magnitudes(columns[f"{route}_{part}"][k]) for part in ("median", "worst"))
+            for route in ("recovered", "profile", "published")
+            if route in result.maps
+        ]
+        separation = columns["separation"][k]
+        lines.append(f"  {separation:7.2f} mas   " + "  ".join(f"{c:<28}" for c in cells).rstrip())
+    if result.each:
+        lines.append("  each night, median over the field:")
+        lines += [_night(one) for one in result.each]
+    for one in result.each or (result,):
+        if one.trials:
+            found = sum(t.found for t in one.trials)
+            lines.append(
+                f"  MJD {one.nights[0][0]:.4f}: full searches found {found} of {len(one.trials)} "
+                "companions of limiting contrast put into the data"
+            )
+    told = ("completeness", "false_alarm", "threshold", "confidence")
+    return "\n".join(lines) + _ROUTES.format(**{name: getattr(result, name) for name in told})
+
+
+def _night(one: "Limits") -> str:
+    import numpy as np
+
+    mjd, instrument = one.nights[0]
+    routes = ("recovered", "profile", "published")
+    cells = [_magnitudes(float(np.median(one.maps[r]))) for r in routes if r in one.maps]
+    return f"  MJD {mjd:.4f}  " + "  ".join(f"{cell:<16}" for cell in cells) + f"  {instrument}"
+
+
+def _magnitudes(contrast: float) -> str:
+    """A contrast and the magnitudes that it means."""
+    import math
+
+    if not math.isfinite(contrast):
+        return "none"
+    return f"{contrast:.2g} ({-2.5 * math.log10(contrast):.2f})"

@@ -1,0 +1,190 @@
+"""Limits: coverage by simulation, maps against sums, and recovery against the search itself."""
+
+import json
+from dataclasses import replace
+
+import astropy.units as u
+import numpy as np
+import pytest
+from numpy.testing import assert_allclose
+from scipy.stats import chi2 as chi2_law
+from scipy.stats import ncx2, norm
+from skies import fill, four_stations
+
+from orbits.companion.exclusion import profile_limit, published_limit
+from orbits.companion.limit_tables import completeness_table, curve_table, map_table, nights_table
+from orbits.companion.limits import limits
+from orbits.companion.recovery import critical_amplitudes, lobes, responses
+from orbits.companion.stack import Stack
+from orbits.errors import InputError
+from orbits.observation import Observable
+
+QUICK = {"field": 25 * u.mas, "positions": 17, "noise_searches": 200, "injections": 40}
+
+
+@pytest.fixture(scope="module")
+def observation():
+    """A resolved star, no companion."""
+    blank = four_stations(exposures=3, channels=4)
+    return fill(blank, np.random.default_rng(7), primary_diameter=1.0)
+
+
+@pytest.fixture(scope="module")
+def result(observation):
+    return limits(observation, trials=6, **QUICK)
+
+
+@pytest.mark.parametrize("strength", [0.0, 0.5, 2.0])
+def test_profile_limit_excludes_the_truth_as_often_as_it_says(strength, rng):
+    """Of 20 000 estimates; a companion that may be stronger than 1.3 sigma is excluded in 10%.
+
+    Weaker ones are excluded less often: never without a companion, at 0.5 sigma where the estimate
+    e < 0 and e + sqrt(e^2 + z^2) < 0.5 has no solution above the e of a positive limit.
+    """
+    d = np.full(20_000, 4.0)
+    truth = strength / 2.0
+    estimate = truth + rng.standard_normal(d.size) / 2.0
+    limit = profile_limit(estimate * d, d, 0.9)
+    z = norm.isf(0.1)
+    # Excluded where the deviate is below -z or, with the estimate negative, below this root.
+    root = (strength**2 - z**2) / (2 * strength) - strength if strength else -np.inf
+    expected = norm.cdf(min(-z, root)) if strength < z else 0.1
+    error = np.sqrt(max(expected * (1 - expected), 1e-9) / d.size)
+    assert abs(np.mean(limit < truth) - expected) < 4 * error + 1e-9
+
+
+def test_published_limit_is_where_the_total_becomes_improbable():
+    """Put back into the chi-square, the limit has the probability asked for."""
+    n, d, total, dof = np.array([30.0, -50.0]), np.array([4e4, 9e4]), 130.0, 100
+    limit = published_limit(n, d, total, dof, 0.9973)
+    there = total - 2 * limit * n + limit**2 * d
+    assert_allclose(chi2_law.sf(dof * there / total, dof), 0.0027, rtol=1e-6)
+    assert np.isinf(published_limit(np.zeros(1), np.zeros(1), total, dof, 0.9973)).all()
+
+
+def test_response_to_a_companion_is_its_map(observation, result):
+    """K(x, p) by transforms, in single precision, against s(x)^T P s(p) position by position."""
+    stack = _stack(observation)
+    grid = stack.grid
+    got = responses(stack, np.array([6.0]), np.array([-9.0]))[0]
+    rng = np.random.default_rng(3)
+    rows, columns = rng.integers(0, grid.side, (2, 40))
+    here = stack.signatures(np.array([6.0]), np.array([-9.0]))[0][:, 0]
+    there = stack.signatures(grid.axis[columns], grid.axis[rows])[0]
+    # 1e-3 of the largest term, which is what the transform is asked for.
+    assert_allclose(got[rows, columns], here @ there, atol=3e-3 * (here @ here))
+
+
+def test_amplitudes_follow_the_noncentral_law_where_nothing_confuses(observation):
+    """With the sidelobes left out, a peak gains two degrees of freedom by moving to its top.
+
+    P(found at amplitude a) is that of a noncentral chi-square with 3 degrees of freedom above the
+    threshold (quadratic peak), raised where the reduced chi-square exceeds 1. 0.045 is three
+    standard deviations of the share among 1000 draws, 0.015 is left for lobes not quite quadratic.
+    """
+    stack = _stack(observation)
+    middle = stack.grid.half
+    place = np.array([(middle + 9) * stack.grid.side + middle - 7])
+    alone = lobes(stack, place)
+    none = np.zeros(2, dtype=int)
+    alone = replace(alone, first=none, rival=alone.rival[:0], rho=alone.rho[:0])
+    amplitude = critical_amplitudes(stack, alone, 25.0, 1000, np.random.default_rng(5))[:, 0]
+    reduced = chi2_law.rvs(stack.dof, size=4000, random_state=1) / stack.dof
+    threshold = 25.0 * np.maximum(reduced, 1.0)
+    for a in (4.5, 5.0, 5.5, 6.5):
+        assert abs(np.mean(amplitude < a) - ncx2.sf(threshold, 3, a**2).mean()) < 0.06
+
+
+def test_recovery_agrees_with_full_searches(result):
+    """Of six companions stated to be found in 90 per cent, 3 or fewer are a 1 in 60 chance."""
+    assert len(result.trials) == 6
+    assert sum(one.found for one in result.trials) >= 4
+
+
+def test_expected_gain_of_the_threshold_is_found_half_the_time(result):
+    ring = result.ring(15.0)
+    assert_allclose(result.reaching(15.0, 0.5), np.median(result.expected[ring]), rtol=0.1)
+
+
+def test_routes_are_ordered_and_complete(result):
+    """A search pays for the whole field; the total chi-square is the most modest of all."""
+    curve = result.curve()
+    far = curve["separation"] > 5
+    assert (curve["profile_median"] < curve["recovered_median"])[far].all()
+    assert (curve["recovered_median"] < curve["published_median"])[far].all()
+    for name in result.maps:
+        assert (curve[f"{name}_median"] <= curve[f"{name}_worst"]).all()
+    found = result.found(15.0, np.array([1e-6, 1.0]))
+    assert_allclose(found, [0.0, 1.0], atol=0.01)
+
+
+def test_same_seed_gives_the_same_limits(observation, result):
+    again = limits(observation, **QUICK)
+    for name, values in result.maps.items():
+        np.testing.assert_array_equal(values, again.maps[name])
+    np.testing.assert_array_equal(result.critical, again.critical)
+
+
+def test_companion_that_shows_is_no_part_of_the_limits(result):
+    blank = four_stations(exposures=3, channels=4)
+    truth = {"x": 9.0, "y": -11.0, "contrast": 0.05, "primary_diameter": 1.0}
+    lit = limits(fill(blank, np.random.default_rng(8), **truth), **QUICK)
+    assert_allclose(lit.removed[0].contrast, 0.05, atol=0.01)
+    curve, without = lit.curve(), result.curve()
+    outer = curve["separation"] > 8
+    # The same night but for the noise: median limits by chi-square within a few tens of per cent.
+    ratio = np.median(curve["recovered_median"][outer] / without["recovered_median"][outer])
+    assert 0.8 < ratio < 1.25
+
+
+def test_two_nights_go_deeper_by_the_root_of_two(observation, result):
+    second = fill(observation, np.random.default_rng(9), primary_diameter=1.0)
+    both = limits([observation, second], **QUICK)
+    assert len(both.each) == 2
+    assert len(nights_table(both)) == 3
+    seen = np.isfinite(both.expected)
+    ratio = np.median(both.expected[seen] / both.each[0].expected[seen])
+    # sqrt(T / 2 D): the thresholds are measured with 200 searches each, to some 10 per cent.
+    assert_allclose(ratio, np.sqrt(0.5), rtol=0.12)
+
+
+def test_without_closure_phases_there_is_no_published_route(observation):
+    alone = replace(observation, t3=Observable.empty(2))
+    result = limits(alone, **QUICK)
+    assert "published" not in result.maps
+    assert json.loads(json.dumps(result.to_json(), allow_nan=False))["curve"]
+
+
+def test_tables_have_units_and_conversions(result):
+    """At 100 mas of parallax the modulus is -5 + 5 = 0: absolute is apparent; 1 mas is 0.01 au."""
+    table = curve_table(result, parallax=100 * u.mas, magnitude=4.0)
+    assert_allclose(table["separation_au"].quantity.to_value(u.au), table["separation"] / 100)
+    assert_allclose(table["absolute_mag_profile_median"], 4.0 + table["delta_mag_profile_median"])
+    contrast = np.asarray(table["profile_median"])
+    seen = np.isfinite(contrast)
+    assert_allclose(
+        10 ** (-0.4 * np.asarray(table["delta_mag_profile_median"])[seen]), contrast[seen]
+    )
+    assert len(map_table(result)) == result.axis.size**2
+    completeness = completeness_table(result)
+    assert ((completeness["found"] >= 0) & (completeness["found"] <= 1)).all()
+
+
+def test_wrong_arguments_are_refused(observation):
+    with pytest.raises(ValueError, match="confidence must be between 0 and 1"):
+        limits(observation, confidence=1.0)
+    with pytest.raises(ValueError, match="no observation"):
+        limits([])
+    with pytest.raises(InputError, match="no usable"):
+        limits(replace(observation, v2=Observable.empty(1), t3=Observable.empty(2)))
+
+
+def _stack(observation):
+    from orbits.companion.epoch import Epoch
+    from orbits.companion.search import choose_grid
+    from orbits.companion.stars import Stars
+
+    grid = choose_grid(observation, 25 * u.mas)
+    stars = Stars(free=("primary_diameter",))
+    epoch = Epoch(observation, stars, grid, None, 1, True)
+    return Stack([epoch.field(epoch.null(None))])
