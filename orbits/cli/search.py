@@ -76,7 +76,9 @@ def search(
     false_alarm: Annotated[
         float, typer.Option(min=0, max=1, help="Claim what noise imitates less often than this.")
     ] = CLAIM,
-    noise_searches: Annotated[int, typer.Option(min=100, help="At most.")] = 1000,
+    noise_searches: Annotated[
+        int, typer.Option(min=100, help="Searches of pure noise, at most.")
+    ] = 1000,
     bootstrap: Annotated[
         int, typer.Option(min=0, help="Resamplings of the data for errors from their scatter.")
     ] = 0,
@@ -90,7 +92,8 @@ def search(
     """Search one night for a companion, everywhere in a field and without a start value.
 
     Parameters to fix or fit: primary_diameter, primary_darkening, background, and of the companion
-    slope (the power of the wavelength that its contrast follows), diameter, darkening; mas.
+    slope (the power of the wavelength that its contrast follows), diameter, darkening. Diameters
+    are in mas.
     """
     import astropy.units as u
     import numpy as np

@@ -26,6 +26,8 @@ _ROUGH_STEPS = 6
 """Steps of a first fit, after which only hopeful ones go on."""
 _BEYOND_LINEAR = 1.5
 """Ratio of the exact to the linear gain that shows that the companion is not faint."""
+_BEYOND_NOISE = 50.0
+"""A gain that noise does not reach, so that this second statistic does not add to false alarms."""
 
 
 class Epoch:
@@ -143,7 +145,7 @@ class Epoch:
         top = scaled(field, faint.gain, field.chi2)
         looks = 1
         exact = (null.chi2 - fits[0].chi2) / max(1.0, fits[0].reduced)
-        if exact > _BEYOND_LINEAR * top:
+        if exact > max(_BEYOND_LINEAR * top, _BEYOND_NOISE):
             # A bright companion, for which the linear statistic is too modest: a second look.
             top, looks = exact, 2
         alarms, chance, extrapolated = None, None, False

@@ -45,9 +45,11 @@ def efficiency(epochs: int, rng: np.random.Generator) -> dict[str, np.ndarray]:
         if truth["contrast"] < 8 * floor[2]:
             weak += 1
             continue
+        # The bound counts the parameters that are fitted: of a point the diameter is not.
         result = search(
-            observation, field=FIELD * design.resolution * u.mas, errors=errors, noise_searches=0
-        )
+            observation, field=FIELD * design.resolution * u.mas, errors=errors, noise_searches=0,
+            diameter=None if truth["primary_diameter"] else 0 * u.mas,
+        )  # fmt: skip
         best, miss = result.best, misses(result.best, truth)
         if np.hypot(*miss[:2]) > design.resolution / 2:
             # Another fringe: an error that no local bound knows of, told apart here.
@@ -101,8 +103,7 @@ def misses(candidate, truth: dict[str, float]) -> np.ndarray:
 def cramer_rao(design: Design, covariance: Covariance, truth: dict[str, float]) -> np.ndarray:
     """Least standard errors along and across the position angle (mas), and of the contrast.
 
-    From the Fisher matrix of all fitted parameters at the truth. A primary without diameter has no
-    slope there: its diameter is then no parameter.
+    From the Fisher matrix of all fitted parameters at the truth; the diameter of a point is fixed.
     """
     scene = Scene()
     names = ["x", "y", "contrast"] + ["primary_diameter"] * bool(truth["primary_diameter"])
