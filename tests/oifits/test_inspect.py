@@ -128,6 +128,28 @@ def test_a_copy_has_the_selection_and_the_history(nodeline, full, tmp_path):
     np.testing.assert_array_equal(after.t3.value, -before.t3.value[inside])
 
 
+@pytest.mark.parametrize(
+    ("options", "kept"),
+    [
+        (("--wavelengths", "1.52", "1.58"), 6 - 1),  # one is flagged
+        (("--baselines", "0", "65"), None),
+        (("--dates", "2026-03-14T12:00", "2026-03-16"), 6),
+        (("--instrument", "sim_k"), 6),
+    ],
+)
+def test_the_options_select(nodeline, full, rng, options, kept):
+    """The file has 18 V2 of three channels in one night and 6 of one channel in the next."""
+    code, out, _ = nodeline("inspect", full, *options, "--json")
+    assert code == 0
+    if kept is None:
+        pairs = make.legs(make.PAIRS), make.legs(make.PAIRS, 1.0)
+        short = [np.hypot(*pair.T) < 65 for pair in pairs]
+        table = make.full(np.random.default_rng(20260314)).data[1]
+        usable = ~table.flag & np.isfinite(table.vis2data)
+        kept = int(usable[short[0]].sum() + short[1].sum())
+    assert json.loads(out)["files"][0]["data"]["v2"]["kept"] == kept
+
+
 def test_several_files_become_one_copy(nodeline, rng, tmp_path):
     paths = [tmp_path / f"{k}.fits" for k in range(2)]
     for day, path in enumerate(paths):
