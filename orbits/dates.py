@@ -55,13 +55,15 @@ def dates_between(start: float, end: float, step: str) -> np.ndarray:
 
 
 def show_date(mjd: float, *, minutes: bool = False) -> str:
-    """Calendar date (UTC) of an MJD TDB, with hours and minutes if wanted."""
+    """Calendar date (UTC) of an MJD TDB to the nearest minute, with hours and minutes if wanted."""
     from astropy.time import Time
 
     year = 2000 + (mjd - _J2000) / _JULIAN_YEAR
     if not 1 <= year < 9999:  # beyond what calendar dates are written for
         return f"year {year:.1f}"
-    moment = Time(utc_of_tdb(mjd), format="mjd", scale="tai")  # a scale without leap seconds
+    # Half a second more keeps the rounding of the division from showing the minute before.
+    minute = (np.rint(utc_of_tdb(mjd) * 1440) + 1 / 120) / 1440
+    moment = Time(minute, format="mjd", scale="tai")  # a scale without leap seconds
     return moment.strftime("%Y-%m-%d %H:%M" if minutes else "%Y-%m-%d")
 
 

@@ -37,6 +37,8 @@ def test_no_date(text):
 
 
 def test_dates_are_shown_as_they_were_written():
+    assert show_date(read_date("2026-12-01T22:29:59.999"), minutes=True) == "2026-12-01 22:30"
+    assert show_date(read_date("2026-12-01T23:59:59.999")) == "2026-12-02"
     for text in ("2026-12-01 22:30", "1850-01-31 00:00", "2210-07-09 12:01"):
         assert show_date(read_date(text), minutes=True) == text
     assert show_date(-1e6) == "year -879.0"  # 2000 - 1051544.5 / 365.25

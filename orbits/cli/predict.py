@@ -18,6 +18,9 @@ if TYPE_CHECKING:
 
 _UNITS = {"mjd": "d", "separation": "mas", "position_angle": "deg", "east": "mas", "north": "mas"}
 
+_ROUND = 0.05
+"""Below this eccentricity the errors of time and argument of periastron mostly cancel."""
+
 All = Annotated[bool, typer.Option("--all", help="Every entry of the catalogue.")]
 
 
@@ -147,6 +150,8 @@ def _say_one(bundle: "Bundle", table: "Ephemeris", happenings: "list[Event]", eq
         errors = "errors: half of the 68.3 per cent interval of the posterior"
     elif bundle.spread:
         errors = "errors: what those of the elements make, as if they were independent"
+        if bundle.best.eccentricity[0] < _ROUND:
+            errors += " (near a circle time and argument of periastron are not: they are too large)"
     else:
         errors = "nothing is known of the errors"
     print(f"{errors}{'' if bundle.ascending else '; the node may be either one'}\n")
