@@ -22,7 +22,7 @@ unless others bridge the gap."""
 
 def solutions_of(target: Target, points: np.ndarray) -> np.ndarray:
     """(S,) number of the solution that each point belongs to, 0 the one with most points."""
-    if len(target.proposal.weight) == 0:
+    if len(target.proposal) == 0:
         return np.zeros(len(points), dtype=int)
     groups = _groups(target.data, target.proposal)
     share, _, _ = responsibilities(target, points)
@@ -159,8 +159,8 @@ def undetermined(data: Data, points: np.ndarray) -> list[str]:
     """Quantities that the data only bound: their posterior fills or touches the prior's range.
 
     On the scale where its prior is uniform from 0 to 1, a quantity counts as undetermined if its
-    standard deviation exceeds 0.2 (that of the prior is 0.29), or if more than a twentieth of the
-    samples lie within a hundredth of an end, other than at e = 0, i = 0, 90 or 180 deg.
+    standard deviation exceeds 0.2 (that of the prior is 0.29), or if the samples come nearer to an
+    end than a quarter of it (other than at e = 0 and at i = 0 or 180 deg).
     """
     told = []
     space = data.space
@@ -170,14 +170,13 @@ def undetermined(data: Data, points: np.ndarray) -> list[str]:
             continue
         part = (points[:, i] - space.low[i]) / (space.high[i] - space.low[i])
         ends = name not in ("cos_inclination", "outlier_fraction")
-        edge = ends and ((part < 0.01).mean() > 0.05 or (part > 0.99).mean() > 0.05)
-        if part.std() > 0.2 or edge:
+        if part.std() > 0.2 or (ends and _touches(part, low=True, high=True)):
             told.append(_NAMES.get(name) or data.nuisances.get(name, name))
     if "h_x" in space.names:
         i, j = space.names.index("h_x"), space.names.index("h_y")
         low, high = space.eccentricity
         part = (points[:, i] ** 2 + points[:, j] ** 2 - low) / (high - low)
-        if part.std() > 0.2 or (part > 0.99).mean() > 0.05:
+        if part.std() > 0.2 or _touches(part, low=low > 0, high=True):
             told.append("eccentricity")
         phase = np.arctan2(points[:, j], points[:, i])
         longitude = points[:, space.names.index("longitude")]
@@ -193,6 +192,12 @@ def undetermined(data: Data, points: np.ndarray) -> list[str]:
     return told
 
 
+def _touches(part: np.ndarray, *, low: bool, high: bool) -> bool:
+    """Whether samples reach an end of 0 to 1, measured by their spread."""
+    near = 0.25 * part.std()
+    return bool((low and part.min() < near) or (high and part.max() > 1 - near))
+
+
 _NAMES = {
     "log_period": "period_d",
     "log_axis": "semimajor_axis_mas",
@@ -203,9 +208,13 @@ _NAMES = {
 }
 
 
-def notes(data: Data) -> list[str]:
-    """Sentences that go with every result of this kind of data."""
+def notes(data: Data, *, confined: bool) -> list[str]:
+    """Sentences that go with the result; `confined` tells that the proposal was not the prior."""
     said = []
+    if not confined:
+        said.append(
+            "The data do not confine the orbit to compact solutions: the plain priors were sampled."
+        )
     if data.positions is not None and data.velocities is None:
         said.append(
             "Without velocities node and argument are known only up to half a turn of both; "

@@ -31,6 +31,9 @@ SOLUTIONS = 16
 """Solutions that the proposal may hold."""
 NEGLIGIBLE = 16.0
 """A solution whose ln evidence is lower by this much than the best is not kept."""
+TRUSTED = 0.15
+"""Efficiency below which the adapted proposal may have missed a part of the posterior: the data do
+not confine the orbit, and the plain prior takes over."""
 CHECKS = 10_000
 """Draws of the proposal that check the evidence."""
 
@@ -82,7 +85,10 @@ def fit(
 
 
 def propose(data: Data, found: Scan, rng: np.random.Generator) -> tuple[Target, float]:
-    """The adapted proposal around the solutions that the scan leads to, and its efficiency."""
+    """The adapted proposal around the solutions that the scan leads to, and its efficiency.
+
+    Where that is too low to be trusted, the proposal is the prior.
+    """
     most = DOUBTFUL_STARTS if doubtful(data) else STARTS
     fits = refine(data, found, most=most, rng=rng)
     solutions = sorted(normals(data, fits), key=lambda s: -s.log_weight)
@@ -90,6 +96,8 @@ def propose(data: Data, found: Scan, rng: np.random.Generator) -> tuple[Target, 
     proposal, efficiency = adapt(
         data, Proposal.around(kept[:SOLUTIONS], data.space.dimensions), rng
     )
+    if efficiency < TRUSTED:
+        proposal = Proposal.prior(data.space.dimensions)
     return Target(data, proposal), efficiency
 
 
@@ -137,11 +145,11 @@ def _solution(data, found, target, efficiency, run, name, rng, begin) -> Solutio
     samples.insert(0, "solution", label)
     top = int(np.argmax(target.log_likelihood(points)))
     best = samples.drop(columns="solution").iloc[top].to_dict()
-    check, check_error = importance(target, rng)
+    check = importance(target, rng) if len(target.proposal) else {}
     account = {
         "log_evidence": run.log_evidence,
         "log_evidence_err": run.log_evidence_error,
-        "log_evidence_check": {"value": check, "error": check_error},
+        **check,
         "effective_samples": run.effective_samples,
         "likelihood_calls": run.calls,
         "proposal_efficiency": efficiency,
@@ -158,7 +166,7 @@ def _solution(data, found, target, efficiency, run, name, rng, begin) -> Solutio
         "nights": nights(data, points),
         "model": {k: v for k, v in vars(data.model).items() if v},
         "priors": data.priors.to_json(),
-        "notes": notes(data),
+        "notes": notes(data, confined=len(target.proposal) > 0),
         "seconds": time.monotonic() - begin,
     }
     return Solution(
@@ -172,12 +180,11 @@ def _solution(data, found, target, efficiency, run, name, rng, begin) -> Solutio
     )
 
 
-def importance(target: Target, rng: np.random.Generator) -> tuple[float, float]:
+def importance(target: Target, rng: np.random.Generator) -> dict:
     """ln evidence and its error from plain draws of the proposal: it checks the nested sampling."""
     log_weight = target.log_weight(target.draw(CHECKS, rng))
     most = log_weight.max()
     weight = np.exp(log_weight - most)
-    return (
-        float(most + np.log(weight.mean())),
-        float(weight.std() / weight.mean() / np.sqrt(CHECKS)),
-    )
+    error = weight.std() / weight.mean() / np.sqrt(CHECKS)
+    value = most + np.log(weight.mean())
+    return {"log_evidence_check": {"value": float(value), "error": float(error)}}

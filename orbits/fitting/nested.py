@@ -11,6 +11,8 @@ IMPOSSIBLE = -1e300
 """ln likelihood where the prior is 0, as dynesty wants it."""
 WALK_BELOW = 4.0
 """Acceptance, per cent, below which a walk within ellipsoids finds new points sooner."""
+WALK, LONG_WALK = 30, 100
+"""Steps of a walk; long where only the prior leads to a posterior that may be narrow and bent."""
 REMAINDER = 0.5
 """The run ends when the live points can add no more than this to ln of the evidence."""
 
@@ -65,6 +67,7 @@ def sample(
         nlive=live_points,
         bound="multi",
         sample="rwalk",
+        walks=WALK if len(target.proposal) else LONG_WALK,
         rstate=rng,
         first_update={"min_ncall": 2 * live_points, "min_eff": WALK_BELOW},
     )

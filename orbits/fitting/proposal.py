@@ -49,6 +49,11 @@ class Proposal:
         return 1.0 - float(self.weight.sum())
 
     @classmethod
+    def prior(cls, dimensions: int) -> "Proposal":
+        """Nothing but the prior: plain nested sampling."""
+        return cls.around([], dimensions)
+
+    @classmethod
     def around(cls, solutions: list[Normal], dimensions: int) -> "Proposal":
         """The mixture of `solutions`, weighted by their evidence but none below a thousandth."""
         log_weight = np.array([s.log_weight for s in solutions])
@@ -62,6 +67,9 @@ class Proposal:
             ),
             solution=np.arange(len(solutions)),
         )
+
+    def __len__(self) -> int:
+        return len(self.weight)
 
 
 class Mixture(NamedTuple):

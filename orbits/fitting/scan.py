@@ -19,8 +19,8 @@ from ..kepler import eccentric_anomaly
 from ..progress import SILENT, Silent
 from .data import Data
 
-ECCENTRICITIES = np.array([0.0, 0.3, 0.55, 0.75, 0.88, 0.95])
-PHASES = np.array([1, 8, 14, 22, 34, 56])
+ECCENTRICITIES = np.array([0.0, 0.3, 0.55, 0.75, 0.88, 0.95, 0.985])
+PHASES = np.array([1, 8, 14, 22, 34, 56, 100])
 """Times of periastron that are tried for each eccentricity: about 4 for each half-width."""
 OVERSAMPLING = 10
 """Steps in frequency for one turn over the span of the data."""
