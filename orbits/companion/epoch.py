@@ -101,7 +101,7 @@ class Epoch:
         priors = {i: prior for i, prior in self.priors.items() if i < len(PRIMARY)}
         problem = self.problem(0.0)
         if 0 in free:
-            start = single_star(problem, self.before, diameter=None, values=start).values
+            start = single_star(problem, self.before, start).values
         return fit(problem, self.before, start, free, priors)
 
     def _again(self, one: Fit) -> Fit:

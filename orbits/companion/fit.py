@@ -1,7 +1,7 @@
 """Least squares with the exact model: from a start value to the nearest solution."""
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -133,11 +133,6 @@ def fit(
 def polish(problem: Problem, rough: Fit) -> Fit:
     """Go on from `rough` until the fit settles."""
     return fit(problem, rough.scene, rough.values, rough.free, rough.priors)
-
-
-def with_values(rough: Fit, values: np.ndarray) -> Fit:
-    """`rough` with other values of the parameters, everything else unchanged."""
-    return replace(rough, values=values)
 
 
 def _linear(problem, scene, values, index, priors) -> tuple[np.ndarray, np.ndarray]:

@@ -100,7 +100,7 @@ class Field:
         removed = np.concatenate([self.covariance.removed, self._nuisance_rows])
         d = self.response.square(self.grid, self._precision, removed)
         # What is left of complete cancellation (a companion upon the primary) is rounding.
-        return np.where(d > 1e-7 * d.max(), d, 0.0) * self.beam**2
+        return np.where(d > 1e-6 * d.max(), d, 0.0) * self.beam**2
 
     @property
     def chi2(self) -> float:
@@ -173,18 +173,11 @@ def estimate(n: np.ndarray, d: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     return contrast, contrast * (2 * n - contrast * d)
 
 
-def single_star(
-    problem: Problem, scene: Scene, *, diameter: float | None, values: np.ndarray | None = None
-) -> Fit:
-    """Fit a star without companion: its diameter (mas), or the rest where `diameter` is given.
+def single_star(problem: Problem, scene: Scene, start: np.ndarray) -> Fit:
+    """Fit the diameter of a star without companion, its other parameters as in `start`.
 
     A visibility with nulls has many minima: a scan of diameters finds the lowest.
     """
-    start = scene.vector({}) if values is None else values
-    if diameter is not None:
-        start = start.copy()
-        start[0] = diameter
-        return fit(problem, scene, start, ())
     longest = problem.sampling.modulus.max()
     shortest = problem.sampling.modulus.min()
     finest = 1 / (longest * MAS)

@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from ..binary import model
-from ..companion.fit import Fit, Problem
+from ..companion.fit import Fit
 from ..companion.result import SearchResult
 from ..observation import Observable, Observation
 from ..sampling import Sampling
@@ -90,9 +90,11 @@ def _predict(observation: Observation, fit: Fit) -> np.ndarray:
 
 def _residual(observation: Observation, predicted: np.ndarray) -> np.ndarray:
     """(n,) data minus model over the error, phases wrapped."""
-    problem = Problem.of(observation, None, None)
-    error = np.concatenate([observation.v2.error, observation.t3.error])
-    return problem.residual(predicted) / error
+    v2, t3 = observation.v2, observation.t3
+    n = len(v2)
+    phase = t3.value - predicted[n : n + len(t3)]
+    phase = (phase + np.pi) % (2 * np.pi) - np.pi
+    return np.concatenate([(v2.value - predicted[:n]) / v2.error, phase / t3.error])
 
 
 def _panel(

@@ -1,6 +1,7 @@
 """The search of an epoch: published data, symmetries, and companions put in on purpose."""
 
 import json
+import time
 from dataclasses import replace
 
 import astropy.units as u
@@ -31,14 +32,17 @@ def test_binary_of_the_2008_imaging_contest(outside):
     """
     from orbits.oifits import read
 
-    result = search(read(outside / "contest-2008-binary.oifits"))
+    observation = read(outside / "contest-2008-binary.oifits")
+    began = time.process_time()
+    result = search(observation)
+    # Five seconds are what a person waits; processor time does not depend on who else computes.
+    assert time.process_time() - began < 5
     best = result.best
     assert_allclose(best.separation_mas, 5.0, atol=0.02)
     assert_allclose(best.position_angle_deg, 30.0, atol=0.1)
     assert 0.09 < best.contrast < 0.13
     assert_allclose(best.primary_diameter_mas, 1.2, rtol=0.03)
     assert best.false_alarm_probability < 1e-9
-    assert result.seconds < 5
     assert json.loads(json.dumps(result.to_json(), allow_nan=False))["n_t3"] == 800
 
 
