@@ -5,7 +5,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from .blocks import HDU, card, text
+from .blocks import HDU
 
 _SIZES = {
     "A": 1,
@@ -51,10 +51,10 @@ class BinTable:
 
     def __init__(self, hdu: HDU) -> None:
         header = hdu.header
-        if text(header, "XTENSION") not in ("BINTABLE", "A3DTABLE") or card(header, "NAXIS") != 2:
+        if header.text("XTENSION") not in ("BINTABLE", "A3DTABLE") or header.get("NAXIS") != 2:
             raise Malformed("it is not a binary table")
-        self.row_bytes, self.nrow = int(header["NAXIS1"]), int(header["NAXIS2"])
-        count = card(header, "TFIELDS")
+        self.row_bytes, self.nrow = header.get("NAXIS1"), header.get("NAXIS2")
+        count = header.get("TFIELDS")
         if isinstance(count, bool) or not isinstance(count, int) or not 0 <= count <= 999:
             raise Malformed(f"keyword TFIELDS is {count!r}")
         self.fields: list[Field] = []
@@ -106,7 +106,7 @@ class BinTable:
 def _field(header, number: int, offset: int) -> Field:
     cards = {}
     for stem in CARDS:
-        value = card(header, f"{stem}{number}")
+        value = header.get(f"{stem}{number}")
         if value is not None:
             cards[stem] = value
     form = str(cards.get("TFORM", "")).strip()

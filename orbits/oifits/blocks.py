@@ -1,22 +1,20 @@
 """FITS as a row of header and data units (HDUs), each read whole and checked for its size.
 
 Only the container is handled here (FITS Standard 4.0; Pence et al. 2010, A&A 524, A42): headers
-become `astropy.io.fits.Header`, data stay bytes. A size is believed only as far as the file goes.
+become a `Header`, data stay bytes. A size is believed only as far as the file goes.
 """
 
 import gzip
 import math
 import os
-import re
-import warnings
 from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
 
 from astropy.io import fits
-from astropy.utils.exceptions import AstropyUserWarning
 
 from ..errors import InputError
+from .header import Header
 
 BLOCK = 2880
 MAX_HEADER_BLOCKS = 2000  # 72 000 cards; a header without END must not swallow the whole file
@@ -31,7 +29,7 @@ class HDU:
 
     number: int
     """0 is the primary HDU."""
-    header: fits.Header
+    header: Header
     raw_header: bytes
     data: bytes
     """Without the padding to whole blocks."""
@@ -39,7 +37,7 @@ class HDU:
     @property
     def name(self) -> str:
         """EXTNAME, in upper case; "" without one."""
-        return text(self.header, "EXTNAME").upper()
+        return self.header.text("EXTNAME").upper()
 
     @property
     def raw(self) -> bytes:
@@ -68,55 +66,6 @@ def read_hdus(path: Path) -> Iterator[HDU]:
         raise InputError(f"{path}: no such file") from None
     except (OSError, EOFError, gzip.zlib.error) as error:
         raise InputError(f"{path}: cannot be read: {error}") from error
-
-
-def text(header: fits.Header, keyword: str, default: str = "") -> str:
-    """The value of `keyword` as text without padding; `default` where it is absent or garbled."""
-    value = card(header, keyword)
-    return default if value is None else str(value).strip()
-
-
-def card(header: fits.Header, keyword: str) -> object | None:
-    """The value of `keyword`; None where it is absent, undefined or garbled."""
-    try:
-        value = header.get(keyword)
-    except (fits.VerifyError, ValueError, KeyError, TypeError):
-        return None
-    if isinstance(value, fits.card.Undefined):
-        return None
-    return _printable(value) if isinstance(value, str) else value
-
-
-def cards(header: fits.Header) -> Iterator[tuple[str, object, str]]:
-    """Keyword, value and comment of every card that is legible and has a value."""
-    for entry in header.cards:
-        try:
-            name, value, comment = entry.keyword, entry.value, entry.comment
-        except (fits.VerifyError, ValueError, KeyError, TypeError):
-            continue
-        if isinstance(value, fits.card.Undefined) or not re.fullmatch(r"[A-Z0-9_ -]+", name):
-            continue
-        if name in ("END", "CONTINUE", "HIERARCH"):  # parts of other cards, when all is well
-            continue
-        if len(name) > 8 or " " in name:
-            name = f"HIERARCH {name}"  # the way to write longer names, in use at several places
-        yield name, _printable(value) if isinstance(value, str) else value, _printable(comment)
-
-
-def illegible(header: fits.Header) -> int:
-    """How many cards cannot be read."""
-    count = 0
-    for entry in header.cards:
-        try:
-            count += not re.fullmatch(r"[A-Z0-9_ -]*", entry.keyword) or entry.value is None
-        except (fits.VerifyError, ValueError, KeyError, TypeError):
-            count += 1
-    return count
-
-
-def _printable(value: str) -> str:
-    """`value` with a question mark for what FITS does not allow in a header."""
-    return re.sub(r"[^ -~]", "?", value)
 
 
 def _hdus(path: Path, handle) -> Iterator[HDU]:
@@ -170,20 +119,18 @@ def _read_header(path: Path, handle, number: int) -> bytes | None:
     raise InputError(f"{path}: the header of HDU {number} has no END")
 
 
-def _parse(path: Path, raw: bytes, number: int) -> fits.Header:
+def _parse(path: Path, raw: bytes, number: int) -> Header:
     try:
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore", AstropyUserWarning)  # said by `illegible`
-            return fits.Header.fromstring(raw.decode("ascii", errors="replace"))
+        return Header(raw)
     except (ValueError, fits.VerifyError, KeyError, TypeError) as error:
         raise InputError(f"{path}: the header of HDU {number} cannot be read: {error}") from error
 
 
-def _data_size(path: Path, header: fits.Header, number: int) -> int:
+def _data_size(path: Path, header: Header, number: int) -> int:
     """Bytes of data that the header announces."""
 
     def whole(keyword: str, default: int | None = None) -> int:
-        value = card(header, keyword)
+        value = header.get(keyword)
         if value is None and default is not None and keyword not in header:
             return default
         if isinstance(value, bool) or not isinstance(value, int) or value < 0:

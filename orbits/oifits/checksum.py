@@ -6,7 +6,7 @@ the sum of the data in decimal; CHECKSUM is chosen such that the whole HDU sums 
 
 import numpy as np
 
-from .blocks import HDU, text
+from .blocks import HDU
 
 ALL_ONES = 0xFFFFFFFF
 
@@ -49,7 +49,7 @@ def encode(total: int) -> str:
 
 def verify(hdu: HDU) -> str | None:
     """Which checksum keyword of an HDU is contradicted by its bytes; None if none is."""
-    stated, sealed = text(hdu.header, "DATASUM"), text(hdu.header, "CHECKSUM")
+    stated, sealed = hdu.header.text("DATASUM"), hdu.header.text("CHECKSUM")
     # The standard allows CHECKSUM to be left as zeros or blanks, meaning not computed.
     if not stated and not sealed.strip("0"):
         return None

@@ -139,10 +139,11 @@ def observations(
     starts = night_starts(np.concatenate(times), gap.to_value(u.day))
     epochs = []
     for start, end in zip(starts, [*starts[1:], np.inf], strict=True):
-        night = [
-            share.select(rows & (share.table.mjd >= start) & (share.table.mjd < end))
-            for share, rows in zip(given, with_data, strict=True)
-        ]
+        night = []
+        for share, rows in zip(given, with_data, strict=True):
+            here = rows & (share.table.mjd >= start) & (share.table.mjd < end)
+            if here.any():
+                night.append(share.select(here))
         epochs.append(observation(file, name, night, errors))
     return epochs
 

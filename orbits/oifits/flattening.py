@@ -53,7 +53,6 @@ def observation(
     file: OIFile, target: str, given: Sequence[Share], errors: ErrorBars
 ) -> Observation:
     """The shares of one night as an observation, with the instruments and stations they involve."""
-    given = [share for share in given if share.keep.any()]
     used = {share.table.insname for share in given}
     instruments = tuple(w.insname for w in file.wavelengths if w.insname in used)
     stations = _Stations(file, given)

@@ -4,11 +4,10 @@ from pathlib import Path
 from typing import TypeVar
 
 import numpy as np
-from astropy.io import fits
 
 from ..errors import InputError
 from ..problems import Log, Severity
-from .blocks import cards, text
+from .header import Header
 from .model import (
     Array,
     Corr,
@@ -25,7 +24,7 @@ T = TypeVar("T", bound=Table)
 
 
 def assemble(
-    path: Path, header: fits.Header, tables: list[Table], others: list[OtherHDU], log: Log
+    path: Path, header: Header, tables: list[Table], others: list[OtherHDU], log: Log
 ) -> OIFile:
     """An `OIFile` of the tables that were read, with every link that can be resolved.
 
@@ -65,7 +64,7 @@ def assemble(
         history=_lines(header, "HISTORY"),
         comments=_lines(header, "COMMENT"),
         others=others,
-        version=2 if text(header, "CONTENT").upper() == "OIFITS2" else 1,
+        version=2 if header.text("CONTENT").upper() == "OIFITS2" else 1,
         files=(str(path),),
         problems=log.problems,
     )
@@ -212,15 +211,15 @@ def _rows_of_known_targets(table: T, target: Target, log: Log) -> T:
     return table.select(known)
 
 
-def _primary(header: fits.Header) -> dict[str, object]:
+def _primary(header: Header) -> dict[str, object]:
     """The keywords of the primary header that say something about the data."""
     skip = {"SIMPLE", "BITPIX", "EXTEND", "CHECKSUM", "DATASUM", "COMMENT", "HISTORY"}
     return {
         name: value
-        for name, value, _ in cards(header)
+        for name, value, _ in header.cards
         if name not in skip and not name.startswith("NAXIS")
     }
 
 
-def _lines(header: fits.Header, keyword: str) -> list[str]:
-    return [str(value) for name, value, _ in cards(header) if name == keyword]
+def _lines(header: Header, keyword: str) -> list[str]:
+    return [str(value) for name, value, _ in header.cards if name == keyword]

@@ -8,7 +8,7 @@ from ..errors import InputError
 from ..problems import Log
 from . import amending, checksum, links
 from .bintable import CARDS, BinTable, Field, Malformed
-from .blocks import HDU, card, cards, illegible, read_hdus, text
+from .blocks import HDU, read_hdus
 from .model import KINDS, OIFile, OtherHDU
 from .schema import (
     DTYPES,
@@ -60,7 +60,7 @@ def load(path: str | Path) -> OIFile:
                 f"keyword {contradicted} does not agree with the contents",
                 "read all the same; the file was changed by hand or damaged",
             )
-        garbled = illegible(hdu.header)
+        garbled = hdu.header.illegible
         if garbled:
             log.note(place, f"{garbled} cards of the header cannot be read", "ignored")
         if hdu.number == 0:
@@ -215,11 +215,11 @@ def _keywords(kind: type[Table], hdu: HDU, label: str, log: Log) -> dict[str, ob
 
 
 def _keyword(keyword: Keyword, hdu: HDU, label: str, log: Log) -> object | None:
-    value = card(hdu.header, keyword.name)
+    value = hdu.header.get(keyword.name)
     if value is None:
         return None
     if keyword.kind is str:
-        return text(hdu.header, keyword.name)
+        return hdu.header.text(keyword.name)
     if isinstance(value, bool) or not isinstance(value, int | float) or not np.isfinite(value):
         log.suspicious(label, f"keyword {keyword.name} is {value!r}, not a number", "ignored")
         return None
@@ -227,7 +227,7 @@ def _keyword(keyword: Keyword, hdu: HDU, label: str, log: Log) -> object | None:
 
 
 def _revision(hdu: HDU) -> int | None:
-    value = card(hdu.header, "OI_REVN")
+    value = hdu.header.get("OI_REVN")
     return value if isinstance(value, int) and not isinstance(value, bool) else None
 
 
@@ -236,6 +236,6 @@ def _cards(kind: type[Table], hdu: HDU) -> list[tuple[str, object, str]]:
     skip = STRUCTURAL | {keyword.name for keyword in keywords(kind)}
     return [
         entry
-        for entry in cards(hdu.header)
+        for entry in hdu.header.cards
         if entry[0] not in skip and entry[0].rstrip("0123456789") not in CARDS
     ]

@@ -13,7 +13,7 @@ from pathlib import Path
 import numpy as np
 
 from .bintable import BinTable, Field, Malformed
-from .blocks import card, read_hdus, text
+from .blocks import read_hdus
 from .checksum import verify
 from .model import KINDS, T3, DataTable, Vis, Vis2
 from .observables import LONGEST_WAVE, SHORTEST_WAVE
@@ -53,7 +53,7 @@ class RawTable:
 
     def key(self, keyword: str) -> str:
         """The value of a keyword as text."""
-        return text(self.header, keyword)
+        return self.header.text(keyword)
 
     def values(self, column: str) -> np.ndarray:
         """(nrow, repeat) values of a column, or (nrow,) text; empty if it is not there."""
@@ -125,12 +125,12 @@ def validate(path: str | Path) -> list[Breach]:
 
 def primary_header(file: Contents) -> Iterator[Breach]:
     """1. The compulsory keywords of the primary header."""
-    if text(file.primary, "CONTENT") != "OIFITS2":
+    if file.primary.text("CONTENT") != "OIFITS2":
         yield Breach(ERROR, "", "primary keyword CONTENT is not 'OIFITS2'")
     for name in (
         "ORIGIN", "DATE", "DATE-OBS", "TELESCOP", "INSTRUME", "OBSERVER", "OBJECT", "INSMODE",
     ):  # fmt: skip
-        if not text(file.primary, name):
+        if not file.primary.text(name):
             yield Breach(ERROR, "", f"primary keyword {name} is missing or empty")
 
 
@@ -148,7 +148,7 @@ def tables_there(file: Contents) -> Iterator[Breach]:
 def revisions(file: Contents) -> Iterator[Breach]:
     """3. OI_REVN is 2, or 1 in the tables that version 2 introduced."""
     for table in file.tables:
-        found = card(table.header, "OI_REVN")
+        found = table.header.get("OI_REVN")
         if found != table.kind.revision:
             yield Breach(ERROR, table.label, f"OI_REVN is {found}, not {table.kind.revision}")
 
@@ -158,7 +158,7 @@ def parts(file: Contents) -> Iterator[Breach]:
     channels = file.channels()
     for table in file.tables:
         for keyword in keywords(table.kind):
-            if not keyword.optional and card(table.header, keyword.name) is None:
+            if not keyword.optional and table.header.get(keyword.name) is None:
                 yield Breach(ERROR, table.label, f"keyword {keyword.name} is missing")
         for known in columns(table.kind):
             field = table.fields.get(known.name)
@@ -345,7 +345,7 @@ def names(file: Contents) -> Iterator[Breach]:
 def correlations(file: Contents) -> Iterator[Breach]:
     """15. Pairs of OI_CORR name existing data, once, with correlations between -1 and 1."""
     for table in file.named("OI_CORR"):
-        size = card(table.header, "NDATA")
+        size = table.header.get("NDATA")
         i, j = table.values("IINDX").ravel(), table.values("JINDX").ravel()
         corr = table.values("CORR").ravel()
         if not (len(i) == len(j) == len(corr)) or not isinstance(size, int):
