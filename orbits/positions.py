@@ -7,6 +7,7 @@ import astropy.units as u
 import numpy as np
 from astropy.table import Table
 
+from .constants import JULIAN_YEAR, MAS
 from .errors import InputError
 from .files import whole_file
 from .rows import Rows
@@ -18,6 +19,11 @@ COLUMNS = (
     Column("year"),
     Column("separation", u.mas),
     Column("position_angle", u.deg),
+    Column("east", u.mas),
+    Column("north", u.mas),
+    Column("error_east", u.mas),
+    Column("error_north", u.mas),
+    Column("correlation"),
     Column("error_major", u.mas),
     Column("error_minor", u.mas),
     Column("error_angle", u.deg),
@@ -107,8 +113,13 @@ def read_positions(path: Path) -> Positions:
     """Read a table of positions (ECSV, or CSV with units in the column names).
 
     Times are MJD UTC, or years with ``year_kind`` ("besselian" or "julian") in the table's
-    metadata; they are returned as TDB. `error_major`, `error_minor`, `error_angle` or
-    `separation_error`, `position_angle_error` give the error ellipse.
+    metadata; they are returned as TDB. Places are `separation` and `position_angle`, or the
+    offsets `east` and `north`. `error_major`, `error_minor`, `error_angle`, or `separation_error`,
+    `position_angle_error`, or `error_east`, `error_north` and perhaps their `correlation` give the
+    error ellipse. Position angles that count from the North of another equinox than J2000 are
+    brought to it if the metadata hold `equinox` ("date", or a Julian year) and the star's `ra` and
+    `dec` (ICRS, deg); with `pm_ra` (its proper motion in right ascension times cos dec, mas per
+    year) the turn of the meridian by the star's own motion since J2000 is taken off as well.
 
     Raises
     ------
@@ -117,15 +128,14 @@ def read_positions(path: Path) -> Positions:
     """
     path = Path(path)
     table = read_table(path, COLUMNS)
-    require(path, table, "separation", "position_angle")
-    require_finite(path, table, "separation", "position_angle")
     n = len(table)
     mjd = _times(path, table)
-    x, y = offsets(np.asarray(table["separation"]), np.asarray(table["position_angle"]))
+    xy, covariance = _places(path, table)
+    xy, covariance = _turned(xy, covariance, _equinox_turn(path, table, mjd))
     return Positions(
         mjd=mjd,
-        xy=np.stack([x, y], axis=-1),
-        covariance=_covariance(path, table),
+        xy=xy,
+        covariance=covariance,
         **_alternatives(path, table, n),
         instrument=_text(table, "instrument", n),
         source=_text(table, "source", n),
@@ -172,6 +182,66 @@ def _times(path: Path, table: Table) -> np.ndarray:
     return tdb_of_year(table["year"], kind)
 
 
+def _places(path: Path, table: Table) -> tuple[np.ndarray, np.ndarray]:
+    """Offsets (n, 2) and their covariance (n, 2, 2), as the table has them."""
+    if "east" in table.colnames or "north" in table.colnames:
+        require(path, table, "east", "north")
+        require_finite(path, table, "east", "north")
+        x, y = np.asarray(table["east"]), np.asarray(table["north"])
+    else:
+        require(path, table, "separation", "position_angle")
+        require_finite(path, table, "separation", "position_angle")
+        x, y = offsets(np.asarray(table["separation"]), np.asarray(table["position_angle"]))
+    if "error_east" not in table.colnames:
+        return np.stack([x, y], axis=-1), _covariance(path, table)
+    require(path, table, "error_north")
+    require_finite(path, table, "error_east", "error_north", positive=True)
+    errors = np.stack([table["error_east"], table["error_north"]], axis=-1)
+    correlation = _numbers(table, "correlation", len(table))
+    correlation[np.isnan(correlation)] = 0.0
+    if not (np.abs(correlation) < 1).all():
+        row = int(np.argmax(np.abs(correlation) >= 1))
+        raise InputError(
+            f"{path}: row {row + 1}, column correlation: {correlation[row]} is not within -1 to 1"
+        )
+    covariance = errors[:, :, None] * errors[:, None, :]
+    covariance[:, 0, 1] *= correlation
+    covariance[:, 1, 0] *= correlation
+    return np.stack([x, y], axis=-1), covariance
+
+
+def _equinox_turn(path: Path, table: Table, mjd: np.ndarray) -> np.ndarray:
+    """(n,) deg to add to the position angles to have them of J2000."""
+    equinox = table.meta.get("equinox", 2000.0)
+    if equinox == 2000.0 and "pm_ra" not in table.meta:
+        return np.zeros(len(table))
+    years = 2000.0 + (mjd - 51544.5) / JULIAN_YEAR
+    try:
+        ra, dec = float(table.meta["ra"]), float(table.meta["dec"])
+        motion = float(table.meta.get("pm_ra", 0.0))
+        of = years if equinox == "date" else np.full(len(table), float(equinox))
+    except (KeyError, TypeError, ValueError) as error:
+        raise InputError(
+            f"{path}: an equinox other than 2000 needs 'equinox' (date, or a Julian year), 'ra' "
+            f"and 'dec' (deg) in the table's metadata; {error} is missing or not a number"
+        ) from error
+    from .precession import turn
+
+    # The star's motion turns its meridian by d(alpha) sin(delta) (e.g. Heintz 1978, Double Stars).
+    own = motion * MAS * np.degrees(np.tan(np.radians(dec))) * (2000.0 - years)
+    return own - turn(ra, dec, 2000.0, of)
+
+
+def _turned(xy: np.ndarray, covariance: np.ndarray, angle: np.ndarray):
+    """Offsets and covariances with `angle` (deg) added to their position angles."""
+    c, s = np.cos(np.radians(angle)), np.sin(np.radians(angle))
+    rotation = np.stack([np.stack([c, s], -1), np.stack([-s, c], -1)], -2)
+    return (
+        np.einsum("nij,nj->ni", rotation, xy),
+        rotation @ covariance @ np.swapaxes(rotation, 1, 2),
+    )
+
+
 def _covariance(path: Path, table: Table) -> np.ndarray:
     if "error_major" in table.colnames:
         names = ("error_major", "error_minor", "error_angle")
@@ -181,6 +251,7 @@ def _covariance(path: Path, table: Table) -> np.ndarray:
         return ellipse_covariance(*(np.asarray(table[name]) for name in names))
     require(path, table, "separation_error", "position_angle_error")
     require_finite(path, table, "separation_error", "position_angle_error", positive=True)
+    require(path, table, "separation", "position_angle")
     # One axis of the ellipse points along the position angle, the other across it.
     separation = np.asarray(table["separation"])
     across = separation * np.radians(np.asarray(table["position_angle_error"]))

@@ -23,7 +23,8 @@ COLUMNS = (
     Column("source", text=True),
 )
 
-STARS = ("primary", "companion")
+STARS = ("primary", "companion", "difference")
+"""Whose velocity a row is; "difference" is the companion's less the primary's."""
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -37,7 +38,7 @@ class Velocities(Rows):
     error: np.ndarray
     """(n,) km/s, > 0."""
     star: np.ndarray
-    """(n,) int: 0 the primary, 1 the companion."""
+    """(n,) int: 0 the primary, 1 the companion, 2 the companion less the primary."""
     instrument: np.ndarray
     """(n,) text: each has its own zero point."""
     source: np.ndarray
@@ -45,7 +46,7 @@ class Velocities(Rows):
 
 
 def read_velocities(path: Path) -> Velocities:
-    """Read a table of velocities: mjd (UTC), velocity, error, star (primary or companion).
+    """Read a table of velocities: mjd (UTC), velocity, error, star (see `STARS`).
 
     Raises
     ------
@@ -88,6 +89,6 @@ def _stars(path: Path, names: Sequence[str]) -> np.ndarray:
     for row, name in enumerate(names):
         if name not in STARS:
             raise InputError(
-                f"{path}: row {row + 1}, column star: {name!r} is neither primary nor companion"
+                f"{path}: row {row + 1}, column star: {name!r} is none of {', '.join(STARS)}"
             )
     return np.array([STARS.index(name) for name in names])

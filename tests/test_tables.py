@@ -115,7 +115,7 @@ def test_faults_are_named_with_file_row_and_column(tmp_path, change, message):
 
 def test_unknown_star_is_refused(tmp_path):
     path = save(tmp_path, "v.csv", VELOCITIES_CSV.replace("companion", "B"))
-    with pytest.raises(InputError, match="row 2, column star: 'B' is neither"):
+    with pytest.raises(InputError, match="row 2, column star: 'B' is none of"):
         read_velocities(path)
 
 
