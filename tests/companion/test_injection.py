@@ -1,0 +1,110 @@
+"""Companions put into data and taken out again, as arrays and as files."""
+
+from dataclasses import replace
+
+import astropy.units as u
+import numpy as np
+import pytest
+from numpy.testing import assert_allclose
+from skies import fill, four_stations, wrapped
+
+from orbits.binary import predict
+from orbits.companion.injection import Companion, inject, remove
+from orbits.companion.injection_files import fitted_diameter, inject_file, remove_file
+from orbits.errors import InputError
+from orbits.oifits import load, observations
+from orbits.oifits.validation import validate
+from orbits.simulation.array import Array
+from orbits.simulation.export import night_file
+from orbits.simulation.nights import Noise, Spectrum, blank_night, observe
+
+STAR = {"primary_diameter": 1.1}
+PAIR = {**STAR, "x": 7.0, "y": -4.0, "contrast": 0.05, "diameter": 0.3}
+COMPANION = Companion(**PAIR)
+
+
+def test_a_pair_is_what_a_star_becomes():
+    """Without noise the data become those that the model of the pair predicts."""
+    blank = four_stations(exposures=2, channels=3)
+    lit, pair = inject(fill(blank, **STAR), COMPANION), fill(blank, **PAIR)
+    assert_allclose(lit.v2.value, pair.v2.value, rtol=1e-9)
+    assert_allclose(wrapped(lit.t3.value - pair.t3.value), 0, atol=1e-9)
+
+
+def test_noise_stays_and_the_inverse_gives_the_data_back(rng):
+    observation = fill(four_stations(exposures=2, channels=3), rng, **STAR)
+    lit = inject(observation, COMPANION)
+    assert_allclose(lit.v2.value / lit.v2.error, observation.v2.value / observation.v2.error)
+    np.testing.assert_array_equal(lit.t3.error, observation.t3.error)
+    back = remove(lit, COMPANION)
+    assert_allclose(back.v2.value, observation.v2.value, rtol=1e-12)
+    assert_allclose(back.v2.error, observation.v2.error, rtol=1e-12)
+    assert_allclose(wrapped(back.t3.value - observation.t3.value), 0, atol=1e-12)
+
+
+def test_companion_by_separation_and_position_angle():
+    """East is at position angle 90 deg."""
+    one = Companion.at(10 * u.mas, 90 * u.deg, 0.1)
+    assert_allclose([one.x, one.y], [10, 0], atol=1e-12)
+    with pytest.raises(ValueError, match="contrast"):
+        Companion.at(10 * u.mas, 90 * u.deg, 1.5)
+    with pytest.raises(ValueError, match="separation"):
+        Companion.at(-1 * u.mas, 90 * u.deg, 0.5)
+
+
+@pytest.fixture
+def night(tmp_path, rng):
+    """A simulated file, with a flagged datum, and one that is no number."""
+    array = Array(
+        name="FOUR", latitude=-24.6, longitude=-70.4, diameter=1.0, stations=("A", "B", "C", "D"),
+        local=np.array([[0, 0, 0], [48, 22, 0], [-35, 81, 0], [66, 103, 0]], float),
+    )  # fmt: skip
+    spectrum = Spectrum.even("K", 2.0e-6, 2.4e-6, 5)
+    blank = blank_night(
+        array, spectrum, target="Harrow 7", ra=40.0, dec=-30.0, mjd=60000.1 + np.arange(2) / 24
+    )
+    noise = Noise(v2_floor=0.002, closure_phase=1e-3)
+    taken = observe(blank, lambda one: predict(one, **STAR), noise, rng)
+    file = night_file(taken, array, spectrum, ra=40.0, dec=-30.0)
+    file.data[0].flag[0, 0] = True
+    file.data[1].t3phi[0, 1] = np.nan
+    path = tmp_path / "night.fits"
+    file.write(path)
+    return path
+
+
+def test_file_with_a_companion_is_valid_and_says_so(night, tmp_path):
+    lit = inject_file(load(night), COMPANION)
+    lit.write(tmp_path / "lit.fits")
+    read = load(tmp_path / "lit.fits")
+    assert validate(tmp_path / "lit.fits") == validate(night)
+    assert any("put in by nodeline" in line for line in " ".join(read.history).splitlines())
+    (got,), (star,) = observations(read), observations(load(night))
+    expected = inject(star, COMPANION)
+    assert_allclose(got.v2.value, expected.v2.value, rtol=1e-12)
+    assert_allclose(wrapped(got.t3.value - expected.t3.value), 0, atol=1e-12)
+    assert read.data[0].flag[0, 0]
+    assert np.isnan(read.data[1].t3phi[0, 1])
+
+
+def test_file_comes_back(night):
+    original = load(night)
+    back = remove_file(inject_file(original, COMPANION), COMPANION)
+    assert_allclose(back.data[0].vis2data, original.data[0].vis2data, rtol=1e-12)
+    assert_allclose(back.data[1].t3phi, original.data[1].t3phi, atol=1e-9)
+    assert len(back.history) == len(original.history) + 2
+
+
+def test_diameter_of_the_star_is_fitted_with_the_companion_and_without(night):
+    """Errors of 0.002 in V2 leave some 0.005 mas."""
+    star = load(night)
+    unknown = replace(COMPANION, primary_diameter=0.0)
+    alone = fitted_diameter(star, unknown, present=False)
+    assert_allclose(alone.primary_diameter, 1.1, atol=0.02)
+    lit = inject_file(star, COMPANION)
+    assert_allclose(fitted_diameter(lit, unknown, present=True).primary_diameter, 1.1, atol=0.02)
+
+
+def test_unknown_target_is_refused(night):
+    with pytest.raises(InputError, match="no target 'Other'"):
+        inject_file(load(night), COMPANION, target="Other")
