@@ -98,6 +98,9 @@ def _identify(path, name, unit, known) -> tuple[Column, u.UnitBase | None]:
             )
         if not unit.is_equivalent(column.unit):
             raise InputError(f"{path}: column {name!r} is in {unit}, which is no {column.unit}")
+    elif unit is not None and unit not in (u.dimensionless_unscaled, u.year):
+        # A date in years may say so.
+        raise InputError(f"{path}: column {name!r} is in {unit}, but it must have no unit")
     return column, unit
 
 

@@ -56,6 +56,7 @@ def test_entries_come_back_as_they_went_in(two):
     ("old", "new", "message"),
     [
         ("unit: mas", "unit: km", r"column 'semimajor_axis' is in km, which is no mas"),
+        ("{name: eccentricity,", "{name: eccentricity, unit: deg,", r"must have no unit"),
         ("{name: period, unit: d,", "{name: period,", r"column 'period' has no unit"),
         ("0.95", "1.95", r"row 2 \(Tarn 3/first\), column eccentricity: 1.95 must be at least 0"),
         ("0.95", "nan", r"row 2, column eccentricity: empty or not a number"),
