@@ -40,6 +40,11 @@ class HDU:
         return self.header.text("EXTNAME").upper()
 
     @property
+    def label(self) -> str:
+        """How messages call it; "" for the primary HDU, which stands for the whole file."""
+        return f"{self.name} (HDU {self.number})" if self.number else ""
+
+    @property
     def raw(self) -> bytes:
         """The bytes of the HDU as they stand in a file."""
         return self.raw_header + self.data + b"\0" * (-len(self.data) % BLOCK)

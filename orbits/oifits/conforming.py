@@ -1,7 +1,7 @@
 """Making a file fit to be written: whatever version 2 forbids is put right, and said.
 
-Data are never changed. What the standard forbids to count is flagged, or NaN where only one of
-the two quantities that share a flag is concerned.
+No usable datum is changed. What the standard does not let count is flagged, or NaN where only one
+of the two quantities that share a flag is concerned.
 """
 
 from collections.abc import Callable
@@ -19,11 +19,9 @@ UNKNOWN_ARRAY = "UNKNOWN"
 
 
 def conform(file: OIFile) -> OIFile:
-    """A copy of `file` of which `write` makes a valid version 2 file.
+    """A copy of `file` of which `write` makes a valid file; its history tells the changes.
 
-    Its history tells what was changed.
-
-    What nobody but the author of the file can know, such as the reference channels of differential
+    What only the author of the file can know, such as the reference channels of differential
     phases, stays as it is.
     """
     for step in STEPS:

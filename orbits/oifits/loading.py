@@ -52,17 +52,7 @@ def load(path: str | Path) -> OIFile:
     primary: HDU | None = None
     foreign = True
     for hdu in read_hdus(path):
-        place = f"{hdu.name} (HDU {hdu.number})" if hdu.number else ""
-        contradicted = checksum.verify(hdu)
-        if contradicted:
-            log.suspicious(
-                place,
-                f"keyword {contradicted} does not agree with the contents",
-                "read all the same; the file was changed by hand or damaged",
-            )
-        garbled = hdu.header.illegible
-        if garbled:
-            log.note(place, f"{garbled} cards of the header cannot be read", "ignored")
+        _damage(hdu, log)
         if hdu.number == 0:
             primary = hdu
             if hdu.data:
@@ -76,7 +66,7 @@ def load(path: str | Path) -> OIFile:
         try:
             tables.append(_table(kind, hdu, log))
         except Malformed as fault:
-            log.unusable(f"{hdu.name} (HDU {hdu.number})", str(fault), "the table is left out")
+            log.unusable(hdu.label, str(fault), "the table is left out")
     if primary is None or foreign:
         raise InputError(f"{path}: FITS, but not OIFITS: it has no OI_ table")
     file = links.assemble(path, primary.header, tables, others, log)
@@ -84,23 +74,28 @@ def load(path: str | Path) -> OIFile:
     return file
 
 
+def _damage(hdu: HDU, log: Log) -> None:
+    """Say what in an HDU does not look as it was written."""
+    contradicted = checksum.verify(hdu)
+    if contradicted:
+        log.suspicious(
+            hdu.label,
+            f"keyword {contradicted} does not agree with the contents",
+            "read all the same; the file was changed by hand or damaged",
+        )
+    garbled = hdu.header.illegible
+    if garbled:
+        log.note(hdu.label, f"{garbled} cards of the header cannot be read", "ignored")
+
+
 def _table(kind: type[Table], hdu: HDU, log: Log) -> Table:
-    label = f"{hdu.name} (HDU {hdu.number})"
+    """A table with the columns that the standard knows, and the others as they are."""
+    label = hdu.label
     content = BinTable(hdu)
-    found: dict[str, Field] = {}
-    extra: dict[str, ExtraColumn] = {}
-    known = {column.name: column for column in columns(kind)}
-    for field in content.fields:
-        name = field.name.upper()
-        if name in known and name not in found:
-            found[name] = field
-        elif field.code in "PQ":
-            log.note(label, f"column {field.name} has rows of varying length", "it is not kept")
-        else:
-            extra[field.name] = ExtraColumn(field.cards, np.array(content.raw(field)))
+    found, extra = _sorted_out(kind, content, label, log)
     values: dict[str, object] = {}
     units: dict[str, str] = {}
-    for column in known.values():
+    for column in columns(kind):
         if column.name not in found:
             _missing(kind, column, label, log)
             continue
@@ -126,6 +121,24 @@ def _table(kind: type[Table], hdu: HDU, log: Log) -> Table:
         )
     except ValueError as fault:
         raise Malformed(str(fault).removeprefix(f"{kind.extname}: ")) from fault
+
+
+def _sorted_out(
+    kind: type[Table], content: BinTable, label: str, log: Log
+) -> tuple[dict[str, Field], dict[str, ExtraColumn]]:
+    """The columns of the standard by name, and copies of those that it does not know."""
+    known = {column.name for column in columns(kind)}
+    found: dict[str, Field] = {}
+    extra: dict[str, ExtraColumn] = {}
+    for field in content.fields:
+        name = field.name.upper()
+        if name in known and name not in found:
+            found[name] = field
+        elif field.code in "PQ":
+            log.note(label, f"column {field.name} has rows of varying length", "it is not kept")
+        else:
+            extra[field.name] = ExtraColumn(field.cards, np.array(content.raw(field)))
+    return found, extra
 
 
 def _values(content: BinTable, field: Field, column: Column, label: str, log: Log) -> np.ndarray:

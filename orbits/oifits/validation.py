@@ -41,7 +41,7 @@ class RawTable:
 
     def __init__(self, hdu) -> None:
         self.name, self.header = hdu.name, hdu.header
-        self.label = f"{hdu.name} (HDU {hdu.number})"
+        self.label = hdu.label
         self.kind: type[Table] = KINDS[hdu.name]
         self.content = BinTable(hdu)
         self.fields: dict[str, Field] = {}
@@ -104,16 +104,15 @@ def validate(path: str | Path) -> list[Breach]:
     for hdu in read_hdus(Path(path)):
         contradicted = verify(hdu)
         if contradicted:
-            place = f"{hdu.name} (HDU {hdu.number})"
-            contents.faults.append(Breach(WARNING, place, f"{contradicted} does not verify"))
+            what = f"{contradicted} does not verify"
+            contents.faults.append(Breach(WARNING, hdu.label, what))
         if hdu.number == 0:
             contents.primary = hdu.header
         elif hdu.name in KINDS:
             try:
                 contents.tables.append(RawTable(hdu))
             except Malformed as fault:
-                place = f"{hdu.name} (HDU {hdu.number})"
-                contents.faults.append(Breach(ERROR, place, str(fault)))
+                contents.faults.append(Breach(ERROR, hdu.label, str(fault)))
     breaches = list(contents.faults)
     for rule in RULES:
         try:
