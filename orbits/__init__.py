@@ -38,6 +38,7 @@ _HOMES = {
     "read_system": ".system",
     "read_velocities": ".velocities",
     "search": ".companion.search",
+    "spectrum": ".companion.spectrum",
     "write_positions": ".positions",
     "write_velocities": ".velocities",
 }

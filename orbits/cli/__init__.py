@@ -17,6 +17,7 @@ from . import (
     report,
     search,
     simulate,
+    spectrum,
 )
 from .frame import run
 
@@ -52,6 +53,7 @@ app.command()(predict.predict)
 app.command()(report.report)
 app.command()(search.search)
 app.command()(simulate.simulate)
+app.command()(spectrum.spectrum)
 
 
 def main() -> None:

@@ -1,0 +1,116 @@
+"""nodeline spectrum: the contrast of a companion, channel by channel."""
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from ..errors import NothingFound
+from .frame import Force, Json, Seed, emit, say
+
+if TYPE_CHECKING:
+    from ..companion.spectrum import ContrastSpectrum
+
+_SHOWN = 12
+"""Channels in the table for people; the file has all of them."""
+CLAIM = 0.01
+
+
+def spectrum(
+    files: Annotated[
+        list[Path], typer.Argument(help="OIFITS files of one night.", metavar="FILE...")
+    ],
+    target: Annotated[str | None, typer.Option(help="Name, where the files hold several.")] = None,
+    night: Annotated[str | None, typer.Option(help="Date, where the files hold several.")] = None,
+    field: Annotated[float | None, typer.Option(help="Half the side of the field, mas.")] = None,
+    diameter: Annotated[
+        float | None, typer.Option(help="Of the primary, mas; else fitted.")
+    ] = None,
+    bins: Annotated[
+        int | None, typer.Option(min=1, help="For each instrument; else every channel.")
+    ] = None,
+    fix_place: Annotated[
+        bool, typer.Option("--fix-place", help="Take the place found for known exactly.")
+    ] = False,
+    v2_calibration: Annotated[
+        float, typer.Option(min=0, help="Error of V2 common to all channels, as a part of V2.")
+    ] = 0.0,
+    t3_calibration: Annotated[
+        float, typer.Option(min=0, help="Closure-phase error common to all channels, deg.")
+    ] = 0.0,
+    flip_phase: Annotated[
+        bool, typer.Option("--flip-phase", help="The files have phases of the opposite sign.")
+    ] = False,
+    output: Annotated[Path | None, typer.Option(help="Table (ECSV), with the covariance.")] = None,
+    picture: Annotated[Path | None, typer.Option(help="A .png, .pdf or .svg file.")] = None,
+    seed: Seed = 0,
+    force: Force = False,
+    json: Json = False,
+) -> None:
+    """Find the companion of a night and measure its contrast in every channel.
+
+    The channels are fitted together, with the place of the companion and the diameter of the
+    primary, whose errors tie the contrasts together: the covariance says how.
+    """
+    import astropy.units as u
+    import numpy as np
+
+    from ..companion.covariance import ErrorModel
+    from ..companion.search import search
+    from ..companion.spectrum import spectrum as measure
+    from ..files import refuse_existing, whole_file
+    from ..oifits import read
+    from ..progress import Bar
+
+    for name, value in (("--field", field), ("--diameter", diameter)):
+        if value is not None and not value > 0:
+            raise typer.BadParameter(f"{name} must be positive, got {value}")
+    if picture and picture.suffix.lower() not in (".png", ".pdf", ".svg"):
+        raise typer.BadParameter("the name of a picture ends in .png, .pdf or .svg")
+    refuse_existing(*(path for path in (output, picture) if path), force=force)
+    observation = read(files, target=target, night=night, flip_phase=flip_phase)
+    errors = ErrorModel(
+        v2_calibration=v2_calibration, t3_calibration=float(np.radians(t3_calibration))
+    )
+    found = search(
+        observation,
+        field=None if field is None else field * u.mas,
+        diameter=None if diameter is None else diameter * u.mas,
+        errors=errors,
+        rng=np.random.default_rng(seed),
+        progress=Bar(),
+    )
+    if not found.best.false_alarm_probability < CLAIM:
+        raise NothingFound(
+            f"{found.target}: no companion can be claimed, so there is no spectrum of one"
+        )
+    result = measure(observation, found.best, bins=bins, fix_place=fix_place, errors=errors)
+    say(describe(result), json=json)
+    if output:
+        with whole_file(output, force=force) as temporary:
+            result.table().write(temporary, format="ascii.ecsv", overwrite=True)
+        say(f"  table      {output}", json=json)
+    if picture:
+        from ..plots import style
+        from ..plots.spectrum import draw_spectrum
+
+        style.save(draw_spectrum(result), picture, force=force)
+        say(f"  picture    {picture}", json=json)
+    if json:
+        emit(result.to_json())
+
+
+def describe(result: "ContrastSpectrum") -> str:
+    """The spectrum in lines for people, every so many channels."""
+    place = "taken for known" if result.place_fixed else "fitted too"
+    lines = [
+        f"{result.target}: contrast in {len(result.contrast)} channels; place {place}, "
+        f"x {result.x_mas:.3f}, y {result.y_mas:.3f} mas",
+        f"  chi-square {result.chi2:.1f} for {result.dof} degrees of freedom",
+    ]
+    step = -(-len(result.contrast) // _SHOWN)
+    lines += [
+        f"  {1e6 * result.wavelength[k]:.4f} um   {result.contrast[k]:.5f} +- {result.error[k]:.5f}"
+        for k in range(0, len(result.contrast), step)
+    ]
+    return "\n".join(lines)

@@ -1,0 +1,96 @@
+"""The contrast spectrum against the slope that was put in, and its covariance against scatter."""
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+from numpy.testing import assert_allclose
+from scipy.stats import chi2
+from skies import fill, four_stations
+
+from orbits.binary import Scene, model
+from orbits.companion.covariance import Covariance, ErrorModel
+from orbits.companion.search import search
+from orbits.companion.spectrum import spectrum
+from orbits.errors import InputError
+from orbits.sampling import Sampling
+
+SCENE = Scene(reference=1.65e-6)
+TRUTH = {"x": -14.3, "y": 9.1, "contrast": 0.03, "slope": 3.0, "primary_diameter": 1.2}
+
+
+def expected(waves):
+    return 0.03 * (waves / 1.65e-6) ** 3.0
+
+
+def test_slope_is_recovered_with_the_stated_covariance(rng):
+    """Chi-square of all trials together, about the truth, with the covariance between channels."""
+    blank = four_stations(exposures=3, channels=6)
+    best = search(fill(blank, rng, SCENE, **TRUTH), noise_searches=0).best
+    total, trials = 0.0, 25
+    for _ in range(trials):
+        got = spectrum(fill(blank, rng, SCENE, **TRUTH), best)
+        miss = got.contrast - expected(got.wavelength)
+        total += got.error_scale**2 * miss @ np.linalg.solve(got.covariance, miss)
+    low, high = chi2.ppf([1e-4, 1 - 1e-4], 6 * trials)
+    assert low < total < high
+
+
+def test_errors_are_the_fisher_matrix_of_one_contrast_each(rng):
+    """Against derivatives taken channel by channel by cutting the Jacobian of a common contrast."""
+    blank = four_stations(exposures=3, channels=4)
+    flat = {**TRUTH, "slope": 0.0}
+    observation = fill(blank, rng, **flat)
+    best = search(observation, noise_searches=0).best
+    got = spectrum(observation, best, fix_place=True)
+    sampling = Sampling.of(observation, radius=30.0)
+    scene = Scene()
+    free = [scene.names.index(name) for name in ("primary_diameter", "contrast")]
+    jacobian = model(scene, scene.vector(flat), sampling, free)[1]
+    channel = np.concatenate([observation.v2.channel, observation.t3.channel])
+    columns = [jacobian[:, 0], *(jacobian[:, 1] * (channel == k) for k in range(4))]
+    white = Covariance.of(observation, sampling).whiten(np.column_stack(columns))
+    fisher = np.linalg.inv(white.T @ white)[1:, 1:]
+    # The fit stands at its estimates, a few per cent from the truth.
+    assert_allclose(np.diag(got.covariance) / got.error_scale**2, np.diag(fisher), rtol=0.1)
+    correlation = got.covariance / np.outer(got.error, got.error)
+    size = np.sqrt(np.diag(fisher))
+    assert_allclose(correlation, fisher / np.outer(size, size), atol=0.03)
+
+
+def test_fitting_the_place_only_adds_to_the_errors(rng):
+    observation = fill(four_stations(exposures=3, channels=4), rng, SCENE, **TRUTH)
+    best = search(observation, noise_searches=0).best
+    free, fixed = spectrum(observation, best), spectrum(observation, best, fix_place=True)
+    assert fixed.place_fixed
+    assert (fixed.x_mas, fixed.y_mas) == (best.x_mas, best.y_mas)
+    # The two fits stand at places that differ by their errors: slopes there by a few per cent.
+    assert (free.error / free.error_scale >= 0.95 * fixed.error / fixed.error_scale).all()
+    assert free.dof == fixed.dof - 2
+
+
+def test_bins_hold_adjoining_channels(rng):
+    observation = fill(four_stations(exposures=3, channels=6), rng, SCENE, **TRUTH)
+    best = search(observation, noise_searches=0).best
+    got = spectrum(observation, best, bins=2)
+    waves = np.unique(observation.v2.wavelength)
+    assert_allclose(got.wavelength, [waves[:3].mean(), waves[3:].mean()])
+    table = got.table()
+    assert table["covariance"].shape == (2, 2)
+    with pytest.raises(InputError, match="cannot be put into 7 bins"):
+        spectrum(observation, best, bins=7)
+
+
+def test_common_calibration_errors_tie_the_channels_together(rng):
+    """A calibration error of all channels moves all contrasts alike: positive correlations."""
+    blank = four_stations(exposures=3, channels=4)
+    blank.v2.value[:] = 1.0
+    errors = ErrorModel(v2_calibration=0.05)
+    flat = {**TRUTH, "slope": 0.0, "primary_diameter": 0.0}
+    alone = replace(blank, t3=blank.t3.select(np.zeros(len(blank.t3), dtype=bool)))
+    observation = fill(alone, rng, errors=errors, **flat)
+    best = search(observation, errors=errors, noise_searches=0).best
+    tied = spectrum(observation, best, errors=errors, fix_place=True)
+    free = spectrum(observation, best, fix_place=True)
+    mean = [one.covariance.mean() / np.diag(one.covariance).mean() for one in (tied, free)]
+    assert mean[0] > mean[1]
