@@ -9,6 +9,8 @@ from ..errors import InputError
 from .frame import Force, Json, Seed, emit, say
 
 if TYPE_CHECKING:
+    from ..fitting.comparison import Hypothesis
+    from ..fitting.model import Model
     from ..fitting.solution import Solution
     from ..positions import Positions
     from ..system import System
@@ -17,6 +19,10 @@ if TYPE_CHECKING:
 
 def orbit(
     system: Annotated[Path, typer.Argument(help="System file (TOML).", metavar="SYSTEM")],
+    compare: Annotated[
+        str | None,
+        typer.Option(help="Hypotheses to weigh: circular, drift, outliers, velocity-jitter ..."),
+    ] = None,
     cores: Annotated[int, typer.Option(min=1, help="Threads; the result is the same.")] = 1,
     seed: Seed = 0,
     force: Force = False,
@@ -26,37 +32,46 @@ def orbit(
     import numpy as np
 
     from ..files import refuse_existing
+    from ..fitting.comparison import CHANGES
+    from ..fitting.comparison import compare as weigh
     from ..fitting.engine import fit
     from ..fitting.solution import outputs
     from ..progress import Bar
-    from ..provenance import record
     from ..system import read_system
 
+    names = [name.strip() for name in compare.split(",")] if compare else []
+    for name in names:
+        if name not in CHANGES:
+            raise typer.BadParameter(f"no hypothesis {name!r}; there are {', '.join(CHANGES)}")
     given = read_system(system)
     refuse_existing(*outputs(given.results), force=force)
     positions, velocities = read_data(given)
     model, priors = read_settings(given, positions, velocities)
-    solution = fit(
-        positions,
-        velocities=velocities,
-        parallax=given.parallax,
-        model=model,
-        priors=priors,
-        live_points=given.live_points,
-        name=given.name,
-        cores=cores,
-        rng=np.random.default_rng(seed),
-        progress=Bar(),
-    )
+
+    def solve(model: "Model") -> "Solution":
+        return fit(
+            positions,
+            velocities=velocities,
+            parallax=given.parallax,
+            model=model,
+            priors=priors,
+            live_points=given.live_points,
+            name=given.name,
+            cores=cores,
+            rng=np.random.default_rng(seed),
+            progress=Bar(),
+        )
+
+    solution = solve(model)
+    hypotheses = weigh(names, model, solve, solution) if names else []
     solution.write(given.results, force=force)
-    command = f"nodeline orbit {given.path.name} --seed {seed}"
-    measured = (given.results / "positions.ecsv",) if given.nights else ()
-    inputs = (given.path, *given.positions, *measured, *given.velocities)
-    record(given.results, "orbit", command=command, seed=seed, inputs=inputs)
     say(table(solution), json=json)
+    if hypotheses:
+        say(comparison_table(hypotheses), json=json)
     say(f"Written to {given.results}", json=json)
     if json:
-        emit(solution.to_json())
+        weighed = {"comparison": [vars(one) for one in hypotheses]} if hypotheses else {}
+        emit(solution.to_json() | weighed)
 
 
 def read_data(system: "System") -> tuple["Positions | None", "Velocities | None"]:
@@ -119,6 +134,17 @@ def table(solution: "Solution") -> str:
     lines += _solutions(account["solutions"])
     lines += _nights(account["nights"])
     return "\n".join(lines + list(account["notes"]))
+
+
+def comparison_table(hypotheses: "list[Hypothesis]") -> str:
+    """Evidence and odds of hypotheses."""
+    lines = ["hypothesis        ln evidence            odds      chi2   dof"]
+    lines += [
+        f"{one.name:<16} {one.log_evidence:>9.2f} +- {one.log_evidence_err:.2f} {one.odds:>12.4g} "
+        f"{one.chi2:>9.1f} {one.dof:>5}"
+        for one in hypotheses
+    ]
+    return "\n".join(lines)
 
 
 def _digits(plus: float, minus: float) -> int:

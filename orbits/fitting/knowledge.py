@@ -3,6 +3,7 @@
 import numpy as np
 
 from .. import masses
+from ..errors import InputError
 from .data import Data
 
 ANGLES = ("inclination_deg", "node_deg", "argument_deg")
@@ -54,10 +55,10 @@ def quantities(data: Data, points: np.ndarray) -> dict[str, np.ndarray]:
 
 
 def check_knowledge(data: Data) -> None:
-    """Raise ValueError for knowledge of a quantity that the points do not fix."""
+    """Raise InputError for knowledge of a quantity that the points do not fix."""
     known = quantities(data, np.full((1, data.space.dimensions), 0.1))
     for name in data.priors.normal:
         if name not in known:
-            raise ValueError(
+            raise InputError(
                 f"priors.normal: {name!r} is not among what these data fix: {', '.join(known)}"
             )

@@ -137,9 +137,11 @@ def test_charts_invert_and_keep_the_prior_even(rng):
     coordinates, back = np.empty(7), np.empty(7)
     for chart in (DIRECT, RETROGRADE):
         filled = []
-        for point in points_of(data, rng, 4000):
+        for count, point in enumerate(points_of(data, rng, 4000)):
             to_chart(point, chart, columns, coordinates)
             filled.append((coordinates[columns[4]] ** 2 + coordinates[columns[6]] ** 2) / 2)
+            if count >= 50:
+                continue
             from_chart(coordinates, chart, columns, back)
             other = elements_of(data, point).thiele_innes.value
             assert_allclose(elements_of(data, back).thiele_innes.value, other, atol=1e-9)
