@@ -137,7 +137,8 @@ def _sorted_out(
         elif field.code in "PQ":
             log.note(label, f"column {field.name} has rows of varying length", "it is not kept")
         else:
-            extra[field.name] = ExtraColumn(field.cards, np.array(content.raw(field)))
+            name = field.name if field.name not in extra else f"{field.name} {len(extra)}"
+            extra[name] = ExtraColumn(field.cards, np.array(content.raw(field)))
     return found, extra
 
 
