@@ -23,6 +23,9 @@ def orbit(
         str | None,
         typer.Option(help="Hypotheses to weigh: circular, drift, outliers, velocity-jitter ..."),
     ] = None,
+    pictures: Annotated[
+        bool, typer.Option("--pictures", help="Also draw the joint distribution and the scan.")
+    ] = False,
     cores: Annotated[int, typer.Option(min=1, help="Threads; the result is the same.")] = 1,
     seed: Seed = 0,
     force: Force = False,
@@ -44,7 +47,8 @@ def orbit(
         if name not in CHANGES:
             raise typer.BadParameter(f"no hypothesis {name!r}; there are {', '.join(CHANGES)}")
     given = read_system(system)
-    refuse_existing(*outputs(given.results), force=force)
+    drawn = [given.results / name for name in ("joint.png", "periods.png")] if pictures else []
+    refuse_existing(*outputs(given.results), *drawn, force=force)
     positions, velocities = read_data(given)
     model, priors = read_settings(given, positions, velocities)
 
@@ -65,6 +69,13 @@ def orbit(
     solution = solve(model)
     hypotheses = weigh(names, model, solve, solution) if names else []
     solution.write(given.results, force=force)
+    if pictures:
+        from ..plots.joint import draw_joint
+        from ..plots.periods import draw_periods
+        from ..plots.style import save
+
+        for draw, path in zip((draw_joint, draw_periods), drawn, strict=True):
+            save(draw(solution), path, force=force)
     say(table(solution), json=json)
     if hypotheses:
         say(comparison_table(hypotheses), json=json)

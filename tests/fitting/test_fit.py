@@ -70,6 +70,23 @@ def test_solution_survives_its_folder(joint, tmp_path):
         Solution.read(tmp_path / "none")
 
 
+def test_pictures_show_what_was_found(joint):
+    """The scan's curve is lowest at the period; the correlation shown is that of the samples."""
+    from orbits.plots.joint import draw_joint
+    from orbits.plots.periods import draw_periods
+
+    axes = draw_periods(joint).axes[0]
+    period, chi2 = axes.lines[0].get_data()
+    assert abs(period[np.argmin(chi2)] - 104.0) < 1.0
+    assert any("100 %" in text.get_text() for text in axes.texts)
+    corner = draw_joint(joint)
+    count = round(len(corner.axes) ** 0.5)
+    assert corner.axes[-count].get_xlabel() == "period (d)"
+    expected = np.corrcoef(joint.samples["period_d"], joint.samples["eccentricity"])[0, 1]
+    shown = corner.axes[1].texts[0].get_text().replace("\N{MINUS SIGN}", "-")
+    assert abs(float(shown) - expected) <= 0.0051  # two decimals are shown
+
+
 def test_single_lines_and_parallax_give_both_masses():
     rng = np.random.default_rng(12)
     k1, _ = amplitudes(104.0, 0.35, np.radians(137.0), 2.0, 1.2)
