@@ -1,4 +1,4 @@
-"""Damage valid OIFITS files at random and inspect them: python scripts/fuzz.py [--cases N].
+"""Damage valid OIFITS files at random and inspect them: scripts/fuzz.py [--cases N] [FILE ...].
 
 Every case runs `nodeline inspect` in a child process. It must end within 10 s and 1 GiB, with the
 exit code 0 or 3, and without a traceback. Prints what went wrong, with the seed to repeat it.
@@ -13,7 +13,7 @@ import sys
 import tempfile
 import time
 from collections import Counter
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from contextlib import redirect_stderr, redirect_stdout
 from dataclasses import dataclass
 from pathlib import Path
@@ -207,7 +207,7 @@ def _command(*arguments: str) -> int:
 
 
 def valid_files(folder: Path) -> list[bytes]:
-    """Files to damage: small and full ones of ours, and those of other people where they are."""
+    """Files to damage: a small and a full one, the small one also in the dress of version 1."""
     import oifits_files
 
     rng = np.random.default_rng(1)
@@ -216,16 +216,16 @@ def valid_files(folder: Path) -> list[bytes]:
         path = folder / "base.fits"
         make(rng).write(path, force=True)
         bases.append(path.read_bytes())
-    outside = Path(os.environ.get("NODELINE_DATA", ROOT.parent / "shared" / "data"))
-    bases += [path.read_bytes() for path in sorted(outside.glob("*fits"))]
-    return bases
+    old = bases[0].replace(b"'OIFITS2 '", b"'NOTHING '")
+    old = old.replace(b"OI_REVN =                    2", b"OI_REVN =                    1")
+    return [*bases, old]
 
 
-def fuzz(cases: int, first: int = 0) -> list[Outcome]:
-    """Run seeds `first` to `first + cases`, in order."""
+def fuzz(cases: int, first: int = 0, more: Sequence[Path] = ()) -> list[Outcome]:
+    """Run seeds `first` to `first + cases`, in order, on our own files and on `more` of them."""
     with tempfile.TemporaryDirectory() as name:
         folder = Path(name)
-        bases = valid_files(folder)
+        bases = [*valid_files(folder), *(path.read_bytes() for path in more)]
         # Everything that a child needs is imported by a first case in the parent.
         with redirect_stdout(io.StringIO()):
             _command("inspect", str(folder / "base.fits"), "--convert", str(folder / "first.fits"))
@@ -237,8 +237,9 @@ def main() -> int:
     parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
     parser.add_argument("--cases", type=int, default=2000)
     parser.add_argument("--first", type=int, default=0, help="seed of the first case")
+    parser.add_argument("files", nargs="*", type=Path, help="files to damage beside our own")
     options = parser.parse_args()
-    outcomes = fuzz(options.cases, options.first)
+    outcomes = fuzz(options.cases, options.first, options.files)
     for outcome in outcomes:
         if outcome.fault:
             print(f"seed {outcome.seed}, {outcome.mutation}: {outcome.fault}\n")
