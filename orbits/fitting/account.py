@@ -13,7 +13,7 @@ from .likelihood import (
     velocity_shape,
 )
 from .proposal import Proposal, Target, responsibilities
-from .space import from_chart, to_chart
+from .space import K1, K2, from_chart, to_chart
 
 SEPARATE = 4.0
 """Two densities whose centres lie this many of their standard deviations apart are two solutions,
@@ -144,7 +144,7 @@ def _velocities(data: Data, point: np.ndarray) -> float:
     """Chi-square of the velocities at the zero points that suit them best."""
     tables = data.tables
     columns = tables.columns
-    k1, k2 = (math.exp(point[columns[i]]) if columns[i] >= 0 else 0.0 for i in (7, 8))
+    k1, k2 = (math.exp(point[columns[i]]) if columns[i] >= 0 else 0.0 for i in (K1, K2))
     shape = np.array([velocity_shape(point, columns, time) for time in tables.speeds[:, 0]])
     residual = tables.speeds[:, 1] - shape * (tables.speeds[:, 3] * k1 + tables.speeds[:, 4] * k2)
     error = np.sqrt(tables.speeds[:, 2])

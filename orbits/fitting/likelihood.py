@@ -13,6 +13,7 @@ import numpy as np
 from ..compiled import compiled
 from ..constants import KMS_IN_AU_PER_DAY
 from ..kepler import solve
+from .space import AXIS, COS_I, H_X, H_Y, K1, K2, LONGITUDE, NODE, OUTLIERS, PERIOD
 
 LOG_2PI = math.log(2 * math.pi)
 NO_PARALLAX, DERIVED, BOUNDED = range(3)
@@ -22,7 +23,7 @@ class Tables(NamedTuple):
     """The data as plain arrays, their rows in the order of time."""
 
     columns: np.ndarray
-    """(10,) int: where the axes of `space.AXES` stand in a point."""
+    """(10,) int: where the axes of `space.AXES` stand in a point; -1 where absent."""
     places: np.ndarray
     """(n, 7) positions: time, x, y, covariance xx, xy, yy, ln weight; a night's rows together."""
     place_labels: np.ndarray
@@ -59,9 +60,9 @@ def log_likelihood(point, tables):
 @compiled
 def eccentricity_and_phase(point, columns):
     """Eccentricity, and mean anomaly at the reference time."""
-    if columns[1] < 0:
+    if columns[H_X] < 0:
         return 0.0, 0.0
-    hx, hy = point[columns[1]], point[columns[2]]
+    hx, hy = point[columns[H_X]], point[columns[H_Y]]
     return hx * hx + hy * hy, math.atan2(hy, hx)
 
 
@@ -80,9 +81,9 @@ def position_densities(point, tables, inside, outside):
     """
     columns, places, labels = tables.columns, tables.places, tables.place_labels
     e, phase = eccentricity_and_phase(point, columns)
-    motion = math.exp(-point[columns[0]])
-    axis, cosine = math.exp(point[columns[3]]), point[columns[4]]
-    argument, node = point[columns[5]] - phase, point[columns[6]]
+    motion = math.exp(-point[columns[PERIOD]])
+    axis, cosine = math.exp(point[columns[AXIS]]), point[columns[COS_I]]
+    argument, node = point[columns[LONGITUDE]] - phase, point[columns[NODE]]
     minor = math.sqrt((1 - e) * (1 + e))
     c, s, cn, sn = math.cos(argument), math.sin(argument), math.cos(node), math.sin(node)
     A, B = axis * (c * cn - s * sn * cosine), axis * (c * sn + s * cn * cosine)
@@ -106,7 +107,7 @@ def position_densities(point, tables, inside, outside):
             )
         extra = math.exp(2 * point[labels[row, 1]]) if labels[row, 1] >= 0 else 0.0
         inside[row] = places[row, 6] + _normal(places[row], x, y, extra)
-        if columns[9] >= 0:
+        if columns[OUTLIERS] >= 0:
             outside[row] = places[row, 6] + _normal(places[row], 0.0, 0.0, tables.field_variance)
 
 
@@ -115,8 +116,8 @@ def _positions(point, tables):
     rows = tables.places.shape[0]
     inside, outside = np.empty(rows), np.empty(rows)
     position_densities(point, tables, inside, outside)
-    outliers = tables.columns[9] >= 0
-    share = point[tables.columns[9]] if outliers else 0.0
+    outliers = tables.columns[OUTLIERS] >= 0
+    share = point[tables.columns[OUTLIERS]] if outliers else 0.0
     total, row = 0.0, 0
     while row < rows:
         night, likelihood, wide = tables.place_labels[row, 0], -math.inf, -math.inf
@@ -155,8 +156,8 @@ def _log_sum(a, b):
 def velocity_shape(point, columns, time):
     """cos(argument + true anomaly) + e cos(argument) at `time` after the reference."""
     e, phase = eccentricity_and_phase(point, columns)
-    E = anomaly(time, math.exp(-point[columns[0]]), phase, e)
-    argument = point[columns[5]] - phase
+    E = anomaly(time, math.exp(-point[columns[PERIOD]]), phase, e)
+    argument = point[columns[LONGITUDE]] - phase
     c, s, minor = math.cos(E), math.sin(E), math.sqrt((1 - e) * (1 + e))
     return (math.cos(argument) * (1 - e * e) * c - math.sin(argument) * minor * s) / (1 - e * c)
 
@@ -167,8 +168,8 @@ def velocity_normal_equations(point, columns, speeds, labels, design, matrix, ve
 
     `matrix` (q, q) becomes 1 + G^T D^-1 G and `vector` (q,) becomes G^T D^-1 r.
     """
-    k1 = math.exp(point[columns[7]]) if columns[7] >= 0 else 0.0
-    k2 = math.exp(point[columns[8]]) if columns[8] >= 0 else 0.0
+    k1 = math.exp(point[columns[K1]]) if columns[K1] >= 0 else 0.0
+    k2 = math.exp(point[columns[K2]]) if columns[K2] >= 0 else 0.0
     terms = design.shape[1]
     matrix[:] = 0.0
     vector[:] = 0.0
@@ -229,13 +230,13 @@ def largest_parallax(point, columns):
     With both velocity curves that is the orbital parallax; with one of them, the bound beyond
     which the other star would need a negative mass.
     """
-    k1 = math.exp(point[columns[7]]) if columns[7] >= 0 else 0.0
-    k2 = math.exp(point[columns[8]]) if columns[8] >= 0 else 0.0
+    k1 = math.exp(point[columns[K1]]) if columns[K1] >= 0 else 0.0
+    k2 = math.exp(point[columns[K2]]) if columns[K2] >= 0 else 0.0
     e, _ = eccentricity_and_phase(point, columns)
-    cosine = point[columns[4]]
+    cosine = point[columns[COS_I]]
     sine = math.sqrt((1 - cosine) * (1 + cosine))
-    projected = (k1 + k2) * KMS_IN_AU_PER_DAY * math.exp(point[columns[0]]) / (2 * math.pi)
-    return math.exp(point[columns[3]]) * sine / (projected * math.sqrt((1 - e) * (1 + e)))
+    projected = (k1 + k2) * KMS_IN_AU_PER_DAY * math.exp(point[columns[PERIOD]]) / (2 * math.pi)
+    return math.exp(point[columns[AXIS]]) * sine / (projected * math.sqrt((1 - e) * (1 + e)))
 
 
 @compiled
@@ -262,7 +263,8 @@ def night_probabilities(points, tables, chosen, outlier):
     """
     rows = tables.places.shape[0]
     inside, outside = np.empty(rows), np.empty(rows)
-    outliers = tables.columns[9] >= 0
+    columns = tables.columns
+    outliers = columns[OUTLIERS] >= 0
     chosen[:] = 0.0
     outlier[:] = 0.0
     for s in range(points.shape[0]):
@@ -279,12 +281,6 @@ def night_probabilities(points, tables, chosen, outlier):
             for k in range(first, row):
                 chosen[k] += math.exp(inside[k] - likelihood) / points.shape[0]
             if outliers:
-                share = point_share(points[s], tables)
+                share = max(points[s, columns[OUTLIERS]], 1e-300)  # its logarithm is wanted
                 yes, no = math.log(share) + wide, math.log1p(-share) + likelihood
                 outlier[night] += math.exp(yes - _log_sum(yes, no)) / points.shape[0]
-
-
-@compiled
-def point_share(point, tables):
-    """The share of outliers, kept off 0 for its logarithm."""
-    return max(point[tables.columns[9]], 1e-300)

@@ -149,16 +149,17 @@ class Solution:
             scan = Table.read(folder / SCAN_FILE, format="ascii.ecsv").to_pandas()
             account = {key: tree[key] for key in tree if key not in _DERIVED}
             name, best, data = tree["name"], tree["best"], tree["data"]
+            positions = read_positions(folder / POSITIONS_FILE) if "positions" in data else None
+            velocities = read_velocities(folder / VELOCITIES_FILE) if "velocities" in data else None
         except (OSError, ValueError, KeyError, TypeError) as error:
             raise InputError(f"{folder}: not the results of an orbit fit: {error}") from error
-        has = {"positions": data.get("positions"), "velocities": data.get("velocities")}
         return cls(
             name=name,
             samples=samples,
             best=best,
             account=account,
-            positions=read_positions(folder / POSITIONS_FILE) if has["positions"] else None,
-            velocities=read_velocities(folder / VELOCITIES_FILE) if has["velocities"] else None,
+            positions=positions,
+            velocities=velocities,
             scan=scan,
         )
 

@@ -182,33 +182,37 @@ def _logs(bounds: tuple[float, float]) -> tuple[float, float]:
 def to_chart(point, chart, columns, coordinates):
     """Write the coordinates of `point` in a chart."""
     coordinates[:] = point
-    if chart == 0:
+    if chart == PLAIN:
         return
-    cosine = point[columns[4]]
-    total = point[columns[5]] + point[columns[6]]
-    difference = point[columns[5]] - point[columns[6]]
-    if chart == 1:
+    cosine = point[columns[COS_I]]
+    total = point[columns[LONGITUDE]] + point[columns[NODE]]
+    difference = point[columns[LONGITUDE]] - point[columns[NODE]]
+    if chart == DIRECT:
         radius, phase, other = math.sqrt(max(1 - cosine, 0.0)), difference, total
     else:
         radius, phase, other = math.sqrt(max(1 + cosine, 0.0)), total, difference
-    coordinates[columns[4]] = radius * math.cos(phase)
-    coordinates[columns[5]] = other
-    coordinates[columns[6]] = radius * math.sin(phase)
+    coordinates[columns[COS_I]] = radius * math.cos(phase)
+    coordinates[columns[LONGITUDE]] = other
+    coordinates[columns[NODE]] = radius * math.sin(phase)
 
 
 @compiled
 def from_chart(coordinates, chart, columns, point):
     """Write the point that has these coordinates in a chart; the inverse of `to_chart`."""
     point[:] = coordinates
-    if chart == 0:
+    if chart == PLAIN:
         return
-    ux, uy, other = coordinates[columns[4]], coordinates[columns[6]], coordinates[columns[5]]
+    ux, uy, other = (
+        coordinates[columns[COS_I]],
+        coordinates[columns[NODE]],
+        coordinates[columns[LONGITUDE]],
+    )
     square, phase = ux * ux + uy * uy, math.atan2(uy, ux)
-    point[columns[5]] = (other + phase) / 2
-    if chart == 1:
-        point[columns[4]], point[columns[6]] = 1 - square, (other - phase) / 2
+    point[columns[LONGITUDE]] = (other + phase) / 2
+    if chart == DIRECT:
+        point[columns[COS_I]], point[columns[NODE]] = 1 - square, (other - phase) / 2
     else:
-        point[columns[4]], point[columns[6]] = square - 1, (phase - other) / 2
+        point[columns[COS_I]], point[columns[NODE]] = square - 1, (phase - other) / 2
 
 
 @compiled
@@ -218,12 +222,12 @@ def allowed(point, region):
     for k in range(point.size):
         if not math.isfinite(point[k]):
             return False
-        if k == columns[5] or k == columns[6] or k == columns[1] or k == columns[2]:
+        if k == columns[LONGITUDE] or k == columns[NODE] or k == columns[H_X] or k == columns[H_Y]:
             continue
         if not (region.low[k] <= point[k] <= region.high[k]):
             return False
-    if columns[1] >= 0:
-        e = point[columns[1]] ** 2 + point[columns[2]] ** 2
+    if columns[H_X] >= 0:
+        e = point[columns[H_X]] ** 2 + point[columns[H_Y]] ** 2
         return region.least_e <= e <= region.most_e
     return True
 
@@ -231,7 +235,7 @@ def allowed(point, region):
 @compiled
 def from_prior(uniform, deviates, region, point):
     """Write the point of the prior that d uniform numbers, or their normal deviates, stand for."""
-    i, j = region.columns[1], region.columns[2]
+    i, j = region.columns[H_X], region.columns[H_Y]
     for k in range(point.size):
         if region.normal[k]:
             point[k] = deviates[k]
