@@ -151,15 +151,22 @@ def _prior_precision(space, chart) -> np.ndarray:
 
 def _nuisances(data, fits, row, names, mean, precision) -> None:
     """Guesses for jitters and the share of outliers, which least squares treats as known."""
-    for labels, jitter in (
-        (data.tables.place_labels[:, 1], fits.position_jitter),
-        (data.tables.speed_labels, fits.velocity_jitter),
+    places, speeds = data.tables.places, data.tables.speeds
+    for labels, jitter, variance in (
+        (data.tables.place_labels[:, 1], fits.position_jitter, (places[:, 3] + places[:, 5]) / 2),
+        (data.tables.speed_labels, fits.velocity_jitter, speeds[:, 2]),
     ):
         for axis in np.unique(labels[labels >= 0]):
             rows = labels == axis
             low, high = data.space.low[axis], data.space.high[axis]
-            mean[axis] = np.clip(np.log(max(jitter[rows].mean(), 1e-300)), low, high)
-            precision[axis, axis] += rows.sum()
+            error = np.sqrt(variance[rows].mean())
+            if jitter[rows].mean() > 0.3 * error:
+                mean[axis] = np.clip(np.log(jitter[rows].mean()), low, high)
+                precision[axis, axis] += rows.sum()
+            else:  # not needed: anything much below the errors does
+                top = np.clip(np.log(0.5 * error), low + 0.1, high)
+                mean[axis] = (low + top) / 2
+                precision[axis, axis] += 12.0 / (top - low) ** 2
     if "outlier_fraction" in names:
         axis = names.index("outlier_fraction")
         mean[axis] = data.space.high[axis] / 3
