@@ -23,6 +23,10 @@ if TYPE_CHECKING:
     from .velocities import Velocities
 
 
+_ROUND = 0.1
+"""Below this eccentricity the place on the orbit is known some ten times better than periastron."""
+
+
 @dataclass(frozen=True, eq=False, kw_only=True)
 class Orbits(Rows):
     """n orbits; conventions as in `Elements`."""
@@ -151,6 +155,13 @@ class Bundle:
             velocities=velocities,
         )
 
+    @property
+    def errors_too_large(self) -> bool:
+        """The errors count as independent, but time and argument of periastron all but cancel."""
+        if self.spread in ("", "posterior") or self.best.eccentricity[0] >= _ROUND:
+            return False
+        return bool(np.ptp(self.draws.periastron) > 0 and np.ptp(self.draws.argument) > 0)
+
     def thin(self, n: int) -> Orbits:
         """At most `n` of the draws, evenly picked."""
         if len(self.draws) <= n:
@@ -235,8 +246,8 @@ def draw_orbits(
 
     Quantities without an error keep their value. The normal laws are cut where an orbit would
     cease to be one: the period at 0, the eccentricity at 0 and 1, the semimajor axis at 0. What a
-    catalogue leaves out, the correlations, is not invented; near a circle, where the time and the
-    argument of periastron balance each other, the spread is then wider than the truth.
+    catalogue leaves out, the correlations, is not invented; the rounder the orbit, the more the
+    errors of time and argument of periastron cancel in truth, and the wider is this spread.
     """
     known = {name: value for name, value in errors.items() if np.isfinite(value) and value > 0}
     if not known:

@@ -101,7 +101,7 @@ class Entry:
             best = {name: self.number(name) for name in Orbits.names()}
             errors = {name: self.number(f"{name}_error") for name in Orbits.names()}
             draws = draw_orbits(best, errors, DRAWS, rng)
-            spread = "allowed by the errors" if len(draws) else ""
+            spread = "errors, as if independent" if len(draws) else ""
         return Bundle(
             name=self.system,
             best=Orbits.of({name: [self.number(name)] for name in Orbits.names()}),

@@ -18,9 +18,6 @@ if TYPE_CHECKING:
 
 _UNITS = {"mjd": "d", "separation": "mas", "position_angle": "deg", "east": "mas", "north": "mas"}
 
-_ROUND = 0.05
-"""Below this eccentricity the errors of time and argument of periastron mostly cancel."""
-
 All = Annotated[bool, typer.Option("--all", help="Every entry of the catalogue.")]
 
 
@@ -65,12 +62,13 @@ def predict(
     mjd = _dates(at or [], start, end, every)
     rng = np.random.default_rng(seed)
     if all_entries:
-        tables = _of_all(catalogue, mjd, equinox, rng)
+        tables, accounts = _of_all(catalogue, mjd, equinox, rng)
         happenings: list[Event] = []
     else:
         bundle, turn = _orbit(name, catalogue, equinox, rng)
         table = predict_bundle(bundle, mjd, turn=turn(mjd))
         tables = {bundle.name: table}
+        accounts = {bundle.name: _account(bundle)}
         happenings = [
             replace(event, position_angle=float(event.position_angle + turn(event.mjd)) % 360.0)
             for event in events(bundle, mjd[0], mjd[0] + bundle.best.period[0])
@@ -78,12 +76,12 @@ def predict(
         if not json:
             _say_one(bundle, table, happenings, equinox)
     if all_entries and not json:
-        _say_all(tables)
+        _say_all(tables, accounts)
     if output is not None:
-        _write(output, tables, force=force)
+        _write(output, tables, accounts, equinox, force=force)
         say(f"\nwritten to {output}", json=json)
     if json:
-        emit(_json(tables, happenings, equinox))
+        emit(_json(tables, accounts, happenings, equinox))
 
 
 def _dates(at: list[str], start: str | None, end: str | None, every: str) -> "np.ndarray":
@@ -124,19 +122,31 @@ def _orbit(name, catalogue, equinox, rng) -> "tuple[Bundle, Callable]":
     return entry.bundle(rng), lambda mjd: entry.turn(_equinoxes(equinox, mjd))
 
 
-def _of_all(catalogue, mjd, equinox, rng) -> "dict[str, Ephemeris]":
+def _account(bundle: "Bundle") -> dict[str, object]:
+    """What must be known of an orbit to trust its ephemeris."""
+    return {
+        "errors": bundle.spread or "unknown",
+        "errors_too_large": bundle.errors_too_large,
+        "node": "ascending" if bundle.ascending else "either one",
+    }
+
+
+def _of_all(catalogue, mjd, equinox, rng) -> "tuple[dict[str, Ephemeris], dict[str, dict]]":
+    """The ephemeris of every entry, and the account of each."""
     from ..catalogue import Catalogue, catalogue_file
     from ..ephemeris import predict as predict_bundle
     from ..progress import Bar
 
     years = _equinoxes(equinox, mjd)
     entries = [entry for file in catalogue_file(catalogue) for entry in Catalogue.read(file)]
-    tables = {}
+    tables, accounts = {}, {}
     with Bar().task("predicting", total=len(entries)) as step:
         for entry in entries:
-            tables[entry.key] = predict_bundle(entry.bundle(rng), mjd, turn=entry.turn(years))
+            bundle = entry.bundle(rng)
+            tables[entry.key] = predict_bundle(bundle, mjd, turn=entry.turn(years))
+            accounts[entry.key] = _account(bundle)
             step()
-    return tables
+    return tables, accounts
 
 
 def _say_one(bundle: "Bundle", table: "Ephemeris", happenings: "list[Event]", equinox: str) -> None:
@@ -150,11 +160,16 @@ def _say_one(bundle: "Bundle", table: "Ephemeris", happenings: "list[Event]", eq
         errors = "errors: half of the 68.3 per cent interval of the posterior"
     elif bundle.spread:
         errors = "errors: what those of the elements make, as if they were independent"
-        if bundle.best.eccentricity[0] < _ROUND:
-            errors += " (near a circle time and argument of periastron are not: they are too large)"
     else:
         errors = "nothing is known of the errors"
-    print(f"{errors}{'' if bundle.ascending else '; the node may be either one'}\n")
+    print(f"{errors}{'' if bundle.ascending else '; the node may be either one'}")
+    loose = bundle.errors_too_large
+    if loose:
+        print(
+            "(in brackets: too large. So near a circle the errors of time and argument of "
+            "periastron all but cancel; by how much, the entry does not say)"
+        )
+    print()
     names = ("separation", "position_angle", "east", "north")
     titles = ("separation/mas", "angle/deg", "East/mas", "North/mas")
     velocities = ("primary_velocity", "companion_velocity")
@@ -162,51 +177,66 @@ def _say_one(bundle: "Bundle", table: "Ephemeris", happenings: "list[Event]", eq
         names, titles = names + velocities, (*titles, "V1/(km/s)", "V2/(km/s)")
     print(f"{'date (UTC)':<17}" + "".join(f"{title:>20}" for title in titles))
     for row in range(len(table)):
-        cells = (_cell(table, name, row) for name in names)
+        cells = (_cell(table, name, row, loose=loose) for name in names)
         when = show_date(table.mjd[row], minutes=True)
         print(f"{when:<17}" + "".join(f"{cell:>20}" for cell in cells))
     print("\nin the period that follows")
     for event in happenings:
         when = show_date(event.mjd, minutes=bundle.best.period[0] < 1000)
-        error = "" if np.isnan(event.error) else f" ± {float(f'{event.error:.2g}'):g} d"
+        error = "" if np.isnan(event.error) else f"± {float(f'{event.error:.2g}'):g} d"
+        # The time of periastron itself is as uncertain as it is said to be.
+        error = f"({error})" if error and loose and event.kind != "periastron" else error
         print(
-            f"{event.kind:<20} {when:<17}{error:<12} at {event.separation:.5g} mas, "
+            f"{event.kind:<20} {when:<17} {error:<12} at {event.separation:.5g} mas, "
             f"{event.position_angle:.2f} deg"
         )
 
 
-def _cell(table: "Ephemeris", name: str, row: int) -> str:
-    """A value with its error, or to six digits where nothing is known of that."""
-    from ..rounding import plain
+def _cell(table: "Ephemeris", name: str, row: int, *, loose: bool) -> str:
+    """A value with its error, in brackets if `loose`, or to six digits where it is not known."""
+    from ..rounding import rounded
 
     value, error = getattr(table, name)[row], getattr(table, f"{name}_error")[row]
     if value != value:
         return "unknown"
-    return plain(value, error) if error > 0 else f"{value:.6g}"
+    if not error > 0:
+        return f"{value:.6g}"
+    number, uncertainty = rounded(value, error)
+    return f"{number} (± {uncertainty})" if loose else f"{number} ± {uncertainty}"
 
 
-def _say_all(tables: "dict[str, Ephemeris]") -> None:
+def _say_all(tables: "dict[str, Ephemeris]", accounts: "dict[str, dict]") -> None:
+    from functools import cache
+
     from ..dates import show_date
 
+    shown = cache(show_date)  # the dates are the same for all entries
     print(f"{'entry':<40} {'date (UTC)':<17}{'separation/mas':>20}{'angle/deg':>18}")
     lines = []
     for key, table in tables.items():
+        loose = accounts[key]["errors_too_large"]
         for row in range(len(table)):
-            separation, angle = _cell(table, "separation", row), _cell(table, "position_angle", row)
-            when = show_date(table.mjd[row], minutes=True)
+            separation, angle = (
+                _cell(table, name, row, loose=loose) for name in ("separation", "position_angle")
+            )
+            when = shown(float(table.mjd[row]), minutes=True)
             lines.append(f"{key:<40} {when:<17}{separation:>20}{angle:>18}")
     print("\n".join(lines))
+    if any(account["errors_too_large"] for account in accounts.values()):
+        print("(in brackets: too large, of nearly circular orbits without posterior samples)")
 
 
-def _write(path: Path, tables: "dict[str, Ephemeris]", *, force: bool) -> None:
-    """ECSV with units, or CSV with the units in the names of the columns."""
+def _write(path: Path, tables, accounts, equinox: str, *, force: bool) -> None:
+    """ECSV with units and what goes with them, or CSV with the units in the names of columns."""
     import numpy as np
     from astropy.table import Table
 
     from ..files import whole_file
     from ..times import utc_of_tdb
 
-    table = Table()
+    table = Table(
+        meta={"times": "MJD UTC", "equinox of position angles": equinox, "orbits": accounts}
+    )
     if len(tables) > 1:
         table["entry"] = [key for key, rows in tables.items() for _ in range(len(rows))]
     for name in _columns(tables):
@@ -233,16 +263,21 @@ def _columns(tables: "dict[str, Ephemeris]") -> list[str]:
     return [n for n in names if any(np.isfinite(getattr(t, n)).any() for t in tables.values())]
 
 
-def _json(tables, happenings, equinox: str) -> dict:
+def _json(tables, accounts, happenings, equinox: str) -> dict:
+    from functools import cache
+
     import numpy as np
 
     from ..dates import show_date
 
+    shown = cache(show_date)  # the dates are the same for all entries
+    names = _columns(tables)
     endings = {**_UNITS, "mjd": "", "primary_velocity": "kms", "companion_velocity": "kms"}
 
     def row_of(table, row: int) -> dict:
-        line = {"mjd_tdb": table.mjd[row], "date": show_date(table.mjd[row], minutes=True)}
-        for name in _columns({"": table}):
+        when = float(table.mjd[row])
+        line = {"mjd_tdb": when, "date": shown(when, minutes=True)}
+        for name in names:
             if name != "mjd" and np.isfinite(getattr(table, name)[row]):
                 stem = name.removesuffix("_error")
                 error = "_err" if name != stem else ""
@@ -252,7 +287,11 @@ def _json(tables, happenings, equinox: str) -> dict:
     return {
         "equinox": equinox,
         "entries": [
-            {"name": key, "ephemeris": [row_of(table, row) for row in range(len(table))]}
+            {
+                "name": key,
+                **accounts[key],
+                "ephemeris": [row_of(table, row) for row in range(len(table))],
+            }
             for key, table in tables.items()
         ],
         "events": [

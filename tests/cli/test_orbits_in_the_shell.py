@@ -52,7 +52,9 @@ def test_import_and_predict_for_all(nodeline, outside, tmp_path):
     assert out.splitlines()[-1].startswith("2073 orbits added to ")
     code, out, _ = nodeline("predict", "--all", "--catalogue", path, "--at", "2026-12-01")
     assert code == 0
-    assert len(out.splitlines()) == 1 + 2073
+    lines = out.splitlines()
+    assert len(lines) == 1 + 2073 + 1
+    assert lines[-1].startswith("(in brackets: too large")
 
 
 def test_an_import_that_collides_writes_nothing(nodeline, outside, tmp_path):
@@ -153,6 +155,31 @@ def test_predict_as_json(nodeline):
     )
     assert_allclose(before["position_angle_deg"], 203.72, atol=1e-9)  # as the node is printed
     assert_allclose(after["position_angle_deg"] - 203.72, 100 * slope, atol=0.01)
+
+
+def test_predict_says_which_errors_are_too_large(nodeline, tmp_path):
+    """Capella's periastron is known to 2.6 d, 9.0 deg of its orbit, and so is its argument: the two
+    errors are one and the same, and the place of the companion is known far better than that. Of
+    omicron Leonis, a circle, the time of the node is published, and its error holds as it is."""
+    from astropy.table import Table
+
+    path = tmp_path / "e.ecsv"
+    code, out, _ = nodeline("predict", "Capella", "--at", "2026-12-01", "--output", path)
+    assert code == 0
+    assert "(± 12)" in out
+    assert "in brackets: too large" in out
+    (periastron,) = (line for line in out.splitlines() if line.startswith("periastron"))
+    assert "(±" not in periastron
+    meta = Table.read(path).meta
+    assert meta["times"] == "MJD UTC"
+    assert meta["equinox of position angles"] == "2000"
+    assert meta["orbits"]["Capella"]["errors_too_large"]
+    for name, too_large in (("Capella", True), ("omi Leo", False), ("Mizar A", False)):
+        _, out, _ = nodeline("predict", name, "--at", "2026-12-01", "--json")
+        (entry,) = json.loads(out)["entries"]
+        assert entry["errors"] == "errors, as if independent"
+        assert entry["errors_too_large"] is too_large
+        assert entry["node"] == "either one"
 
 
 def test_predict_a_range_into_tables(nodeline, tmp_path):

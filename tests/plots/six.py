@@ -54,7 +54,7 @@ def orbit(name: str) -> Bundle:
         name=name,
         best=best,
         draws=draw_orbits(values, _ERRORS.get(name, small), 100, rng),
-        spread="allowed by the errors",
+        spread="errors, as if independent",
         ascending=name in ("edge-on", "circular"),
         positions=Positions(
             mjd=mjd,
