@@ -2,6 +2,7 @@
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from pathlib import Path
 
 import numpy as np
 
@@ -82,7 +83,9 @@ def positions(nights: Sequence[Night]) -> Positions:
     text = {
         "night": [night.label for night, _ in rows],
         "instrument": [night.observation.instrument for night, _ in rows],
-        "source": [" ".join(night.observation.files) for night, _ in rows],
+        "source": [
+            " ".join(Path(file).name for file in night.observation.files) for night, _ in rows
+        ],
     }
     return Positions(
         mjd=tdb_of_utc([night.observation.mjd for night, _ in rows]),

@@ -108,8 +108,9 @@ class Observation:
     """Correlation matrix of all data, stacked in the order of `OBSERVABLES` (V2, closure phases,
     then whatever else was asked for); None if the data are independent."""
     files: tuple[str, ...] = ()
+    """The files that its data come from."""
     problems: tuple[Problem, ...] = ()
-    """What is wrong with the files or their data, and what was done about it."""
+    """What is wrong with any file that was read together with them, and what was done about it."""
 
     @property
     def mjd(self) -> float:

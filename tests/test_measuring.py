@@ -27,6 +27,8 @@ def measured(plan, folder, seed=3):
 def test_positions_are_where_the_orbit_was(three_nights, tmp_path):
     nights = measured(three_nights, tmp_path)
     assert [night.detected for night in nights] == [True] * 3
+    sources = dict.fromkeys(positions(nights).source)
+    assert list(sources) == [path.name for path in sorted(tmp_path.glob("nights/*.fits"))]
     path = tmp_path / "positions.ecsv"
     write_positions(path, positions(nights))
     table = read_positions(path)

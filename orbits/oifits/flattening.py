@@ -54,6 +54,7 @@ def observation(
 ) -> Observation:
     """The shares of one night as an observation, with the instruments and stations they involve."""
     used = {share.table.insname for share in given}
+    sources = {share.table.file for share in given}
     instruments = tuple(w.insname for w in file.wavelengths if w.insname in used)
     stations = _Stations(file, given)
     parts: dict[str, Observable] = {}
@@ -70,7 +71,7 @@ def observation(
         instruments=instruments,
         stations=tuple(stations.names),
         correlation=_correlation(file, given),
-        files=file.files,
+        files=tuple(name for name in file.files if name in sources),
         problems=tuple(file.problems),
         **parts,
     )

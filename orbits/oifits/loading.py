@@ -116,6 +116,7 @@ def _table(kind: type[Table], hdu: HDU, log: Log) -> Table:
             units=units,
             extra=extra,
             cards=_cards(kind, hdu),
+            file=log.file,
             hdu=hdu.number,
             revn=_revision(hdu),
         )

@@ -107,10 +107,12 @@ class Table:
     extra: dict[str, ExtraColumn] = field(default_factory=dict)
     cards: list[tuple[str, object, str]] = field(default_factory=list)
     """Header cards the standard does not know: (keyword, value, comment)."""
+    file: str | None = None
+    """The file it was read from."""
     hdu: int | None = None
-    """Number of the HDU in the file it was read from."""
+    """Number of the HDU in that file."""
     revn: int | None = None
-    """OI_REVN in the file it was read from."""
+    """OI_REVN in that file."""
 
     def __post_init__(self) -> None:
         for known in keywords(type(self)):

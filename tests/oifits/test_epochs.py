@@ -1,5 +1,7 @@
 """From tables to observations: targets, nights, instruments, errors."""
 
+from pathlib import Path
+
 import astropy.units as u
 import numpy as np
 import oifits_files as make
@@ -191,7 +193,19 @@ def test_files_join_by_content_not_by_number(rng, tmp_path):
     other = read(paths, target="Other")
     assert other.instruments == ("SIM_H_2",)
     np.testing.assert_array_equal(np.unique(other.v2.wavelength), three.wavelengths[0].eff_wave)
-    assert first.files == tuple(map(str, paths))
+    assert (first.files, second.files) == ((str(paths[0]),), (str(paths[1]),))
+
+
+def test_each_night_names_the_files_that_its_data_come_from(rng, tmp_path):
+    nights = {"first": [0.0], "second": [1.0], "both": [0.1, 1.1], "spoilt": [0.0]}
+    for name, times in nights.items():
+        file = make.small(rng)
+        file.data = [make.vis2(rng, night=t) for t in times]
+        file.data[0].flag[:] = name == "spoilt"
+        file.write(tmp_path / f"{name}.fits")
+    epochs = read_epochs([tmp_path / f"{name}.fits" for name in nights])
+    found = [[Path(file).stem for file in epoch.files] for epoch in epochs]
+    assert found == [["first", "both"], ["second", "both"]]
 
 
 def test_joined_correlations_stay_with_their_file(rng):
