@@ -2,11 +2,15 @@
 
 import json as json_format
 import sys
-from typing import Annotated, Any
+from collections.abc import Sequence
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
 from ..errors import InputError, NothingFound
+
+if TYPE_CHECKING:
+    from ..problems import Problem
 
 DONE, OUR_FAULT, WRONG_USAGE, UNUSABLE_INPUT, NOTHING_FOUND = range(5)
 INTERRUPTED = 130
@@ -45,6 +49,18 @@ def run(app: typer.Typer) -> int:
 def say(text: str, *, json: bool = False) -> None:
     """Print words for people: to stdout, or to stderr when stdout belongs to JSON."""
     print(text, file=sys.stderr if json else sys.stdout)
+
+
+def warn(problems: "Sequence[Problem]") -> None:
+    """Say on stderr, a line a file, what is more than a note among the problems of files read."""
+    from ..problems import Severity
+
+    serious = [problem for problem in problems if problem.severity > Severity.NOTE]
+    for file in dict.fromkeys(problem.file for problem in serious):
+        mine = [problem for problem in serious if problem.file == file]
+        worst = max(mine, key=lambda problem: problem.severity)
+        more = f" (and {len(mine) - 1} more: nodeline inspect tells all)" if len(mine) > 1 else ""
+        print(f"nodeline: {worst.severity}: {file}: {worst}{more}", file=sys.stderr)
 
 
 def emit(result: dict[str, Any]) -> None:

@@ -5,7 +5,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from .frame import Force, Json, Seed, emit, say
+from .frame import Force, Json, Seed, emit, say, warn
 
 if TYPE_CHECKING:
     from ..companion.limits import Limits
@@ -87,6 +87,7 @@ def limits(
         if value is not None and not value > 0:
             raise typer.BadParameter(f"{name} must be positive, got {value}")
     system, observations = _given(files, target, night, flip_phase)
+    warn(observations[0].problems)
     if system is not None:
         field = system.field if field is None else field
         diameter = system.diameter if diameter is None else diameter

@@ -5,7 +5,7 @@ from typing import Annotated
 
 import typer
 
-from .frame import Force, Json, Seed, emit, say
+from .frame import Force, Json, Seed, emit, say, warn
 
 
 def measure(
@@ -29,6 +29,7 @@ def measure(
     path = given.results / "positions.ecsv"
     refuse_existing(path, force=force)
     nights = measure_nights(given, rng=np.random.default_rng(seed), progress=Bar())
+    warn(nights[0].observation.problems)
     say(_table(nights), json=json)
     found = positions(nights)
     write_positions(path, found, force=force)

@@ -9,7 +9,7 @@ import typer
 
 from ..errors import NothingFound
 from ..files import refuse_existing
-from .frame import Force, Json, Seed, emit, say
+from .frame import Force, Json, Seed, emit, say, warn
 
 if TYPE_CHECKING:
     from ..companion.result import Candidate, SearchResult
@@ -122,6 +122,7 @@ def search(
     observation = _checked(
         read, files, target=target, night=night, flip_phase=flip_phase, observables=use
     )
+    warn(observation.problems)
     paths = _picture_paths(pictures, observation.target, observation.mjd, force=force)
     result = _checked(
         look,

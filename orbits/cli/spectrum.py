@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING, Annotated
 import typer
 
 from ..errors import NothingFound
-from .frame import Force, Json, Seed, emit, say
+from .frame import Force, Json, Seed, emit, say, warn
 
 if TYPE_CHECKING:
     from ..companion.spectrum import ContrastSpectrum
@@ -69,6 +69,7 @@ def spectrum(
         raise typer.BadParameter("the name of a picture ends in .png, .pdf or .svg")
     refuse_existing(*(path for path in (output, picture) if path), force=force)
     observation = read(files, target=target, night=night, flip_phase=flip_phase)
+    warn(observation.problems)
     errors = ErrorModel(
         v2_calibration=v2_calibration, t3_calibration=float(np.radians(t3_calibration))
     )

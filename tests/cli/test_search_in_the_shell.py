@@ -8,6 +8,7 @@ import pytest
 from matplotlib.image import imread
 
 from orbits.binary import predict
+from orbits.oifits import load
 from orbits.simulation.array import Array
 from orbits.simulation.export import night_file
 from orbits.simulation.nights import Spectrum, blank_night
@@ -128,3 +129,17 @@ def test_correlated_errors_can_be_asked_for(nodeline, nights):
         assert code == 0
         errors.append(json.loads(out)["best"]["contrast_err"])
     assert errors[1] > 1.2 * errors[0]
+
+
+def test_what_is_wrong_with_the_file_is_said_in_a_line(nodeline, nights, tmp_path):
+    file = load(nights / "lit.fits")
+    v2, t3 = file.data
+    v2.vis2err[0, 0], t3.t3phierr[0, 0] = -1.0, 0.0
+    file.write(tmp_path / "spoilt.fits")
+    code, _, err = nodeline("search", tmp_path / "spoilt.fits", "--field", 15, "--json")
+    assert code == 0
+    told = [line for line in err.splitlines() if line.startswith("nodeline: unusable: ")]
+    assert len(told) == 1
+    assert "spoilt.fits: OI_VIS2 (HDU 4): column VIS2ERR is negative in row 1, channel 1" in told[0]
+    assert "(and 1 more: nodeline inspect tells all)" in told[0]
+    assert "nodeline:" not in nodeline("search", nights / "lit.fits", "--field", 15, "--json")[2]
