@@ -85,7 +85,7 @@ def _flat(
     errors: ErrorBars,
 ) -> Observable:
     table, kind, keep = share.table, share.kind, share.keep
-    row, channel = np.nonzero(keep)
+    count = np.count_nonzero(keep, axis=1)
     value, error = table[kind.value][keep], table[kind.error][keep]
     if kind.phase:
         value = np.radians(value - 360.0 * np.round(value / 360.0))
@@ -94,18 +94,26 @@ def _flat(
     band = np.where((band > 0) & (band < wave), band, 0.0)
     time = np.where(table.int_time > 0, table.int_time, 0.0)
     number = instruments.index(table.insname)
+
+    # Without arrays of indices, which would be as large as the data.
+    def by_row(values: np.ndarray) -> np.ndarray:
+        return np.repeat(values, count, axis=0)
+
+    def by_channel(values: np.ndarray) -> np.ndarray:
+        return np.broadcast_to(values, keep.shape)[keep]
+
     return Observable(
-        legs=table.legs[row],
-        wavelength=wave[channel],
-        bandwidth=band[channel],
+        legs=by_row(table.legs),
+        wavelength=by_channel(wave),
+        bandwidth=by_channel(band),
         value=value,
         error=errors.apply(kind.name, error),
-        mjd=table.mjd[row],
-        integration=time[row],
-        stations=stations.of(table)[row],
-        row=share.rows[row],
-        channel=channel.astype(np.int32),
-        instrument=np.full(row.size, number, dtype=np.int32),
+        mjd=by_row(table.mjd),
+        integration=by_row(time),
+        stations=by_row(stations.of(table)),
+        row=by_row(share.rows),
+        channel=by_channel(np.arange(len(spectrum), dtype=np.int32)),
+        instrument=np.full(value.size, number, dtype=np.int16),
     )
 
 
@@ -134,7 +142,7 @@ class _Stations:
         """Positions in `names` of the stations of each row of `table`; -1 where unknown."""
         known = self._numbers.get(table.arrname, {})
         old, where = np.unique(table.sta_index, return_inverse=True)
-        new = np.array([known.get(index, -1) for index in old.tolist()], dtype=np.int32)
+        new = np.array([known.get(index, -1) for index in old.tolist()], dtype=np.int16)
         return new[where].reshape(table.sta_index.shape)
 
 
