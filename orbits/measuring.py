@@ -39,6 +39,11 @@ class Night:
         return (self.result.best, *self.result.alternatives)
 
     @property
+    def sources(self) -> tuple[str, ...]:
+        """Names of the files it was measured from, without their folders."""
+        return tuple(Path(file).name for file in self.observation.files)
+
+    @property
     def detected(self) -> bool:
         """Whether noise alone would look as good less often than one claims a companion for."""
         best = next(iter(self.candidates), None)
