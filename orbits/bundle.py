@@ -23,6 +23,9 @@ if TYPE_CHECKING:
     from .velocities import Velocities
 
 
+ONE_SIGMA = (15.865, 84.135)
+"""Percentiles of the interval that holds 68.27 per cent."""
+
 _ROUND = 0.1
 """Below this eccentricity the place on the orbit is known some ten times better than periastron."""
 
@@ -78,6 +81,11 @@ class Orbits(Rows):
         """(n, m) eccentric anomaly, rad, at the (m,) times `mjd` (TDB), or (n, m) times."""
         mean = mean_anomaly(mjd, self.period[:, None], self.periastron[:, None])
         return eccentric_anomaly(mean, self.eccentricity[:, None])
+
+    def anomaly_at(self, longitude: float) -> np.ndarray:
+        """(n,) eccentric anomaly, rad, where the companion is `longitude` deg beyond the node."""
+        half, e = np.radians(longitude - self.argument) / 2, self.eccentricity
+        return 2 * np.arctan2(np.sqrt(1 - e) * np.sin(half), np.sqrt(1 + e) * np.cos(half))
 
     def at_anomaly(self, anomaly: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """(n, m) East and North offset, mas, at eccentric anomalies (m,) or (n, m), rad."""

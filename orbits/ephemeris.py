@@ -1,15 +1,14 @@
 """Where the companion will be, how fast the stars move, and when something happens."""
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 
-from .bundle import Bundle, Orbits
+from .bundle import ONE_SIGMA, Bundle, Orbits
 from .positions import offsets, position_angle
 from .rows import Rows
 
-_BAND = (15.865, 84.135)
-"""Percentiles of the one-sigma interval."""
 _GRID = np.linspace(-np.pi, np.pi, 721)
 
 
@@ -81,17 +80,18 @@ def events(bundle: Bundle, start: float, end: float) -> list[Event]:
     found: list[Event] = []
     if not bundle.on_the_sky:
         return found
-    for kind, anomaly in _happenings(best, ascending=bundle.ascending):
+    for kind, where in _happenings(best, ascending=bundle.ascending):
+        anomaly = where(best)
         period, moment = best.period[0], _moment(best, anomaly, 0.0)[0]
+        x, y = best.at_anomaly(anomaly)
         first = np.ceil((start - moment) / period)
         for turn in np.arange(first, np.ceil((end - moment) / period)):
             when = moment + turn * period
-            x, y = best.at_anomaly(np.array([anomaly]))
             found.append(
                 Event(
                     kind=kind,
                     mjd=float(when),
-                    error=_timing_error(bundle, kind, anomaly, when),
+                    error=_timing_error(bundle, where, when),
                     separation=float(np.hypot(x, y)[0, 0]),
                     position_angle=float(position_angle(x, y)[0, 0]),
                 )
@@ -122,31 +122,30 @@ def _half_interval(draws: np.ndarray, best: np.ndarray, *, angle: bool) -> np.nd
     off = draws - best
     if angle:
         off = (off + 180) % 360 - 180
-    low, high = np.percentile(off, _BAND, axis=0)
+    low, high = np.percentile(off, ONE_SIGMA, axis=0)
     return (high - low) / 2
 
 
-def _happenings(best: Orbits, *, ascending: bool) -> list[tuple[str, float]]:
-    """Names of the events of one orbit with their eccentric anomalies, rad."""
+_Where = Callable[[Orbits], np.ndarray]
+"""Gives for n orbits the eccentric anomaly (n,), rad, at which something happens."""
+
+
+def _happenings(best: Orbits, *, ascending: bool) -> list[tuple[str, _Where]]:
+    """Names of the events of one orbit, and where they happen."""
     names = (
         ("ascending node", "descending node", "companion behind", "companion in front")
         if ascending
         else ("node", "node", "conjunction", "conjunction")
     )
-    found = [] if best.eccentricity[0] == 0 else [("periastron", 0.0)]
+    found: list[tuple[str, _Where]] = []
+    if best.eccentricity[0] > 0:
+        found.append(("periastron", lambda orbits: np.zeros(len(orbits))))
     for name, longitude in zip(names, (0.0, 180.0, 90.0, 270.0), strict=True):
-        found.append((name, _at_longitude(best, longitude)[0]))
+        found.append((name, lambda orbits, longitude=longitude: orbits.anomaly_at(longitude)))
     return found + _extremes(best)
 
 
-def _at_longitude(orbits: Orbits, longitude: float) -> np.ndarray:
-    """(n,) eccentric anomaly where the companion is `longitude` deg beyond the node."""
-    e = orbits.eccentricity
-    half = np.radians(longitude - orbits.argument) / 2
-    return 2 * np.arctan2(np.sqrt(1 - e) * np.sin(half), np.sqrt(1 + e) * np.cos(half))
-
-
-def _extremes(best: Orbits) -> list[tuple[str, float]]:
+def _extremes(best: Orbits) -> list[tuple[str, _Where]]:
     """Where the separation on the sky is greatest or smallest, of its neighbourhood at least."""
     x, y = best.at_anomaly(_GRID)
     if np.ptp(np.hypot(x, y)) < 1e-9 * best.semimajor_axis[0]:
@@ -154,8 +153,11 @@ def _extremes(best: Orbits) -> list[tuple[str, float]]:
     slope, _ = _slope(best, _GRID)
     change = np.flatnonzero((slope[0, :-1] > 0) != (slope[0, 1:] > 0))
     kinds = np.where(slope[0, change] > 0, "greatest separation", "smallest separation")
-    anomalies = _to_zero_slope(best, _GRID[change] + np.diff(_GRID)[0] / 2)[0]
-    return [(str(kind), float(anomaly)) for kind, anomaly in zip(kinds, anomalies, strict=True)]
+    starts = _to_zero_slope(best, _GRID[change] + np.diff(_GRID)[0] / 2)[0]
+    return [
+        (str(kind), lambda orbits, start=start: _to_zero_slope(orbits, np.array([start]))[:, 0])
+        for kind, start in zip(kinds, starts, strict=True)
+    ]
 
 
 def _slope(orbits: Orbits, anomaly: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -184,28 +186,17 @@ def _to_zero_slope(orbits: Orbits, anomaly: np.ndarray) -> np.ndarray:
     return found
 
 
-def _moment(orbits: Orbits, anomaly: np.ndarray | float, near: np.ndarray | float) -> np.ndarray:
+def _moment(orbits: Orbits, anomaly: np.ndarray, near: np.ndarray | float) -> np.ndarray:
     """(n,) time, MJD, at which the orbits are at that eccentric anomaly, the one nearest `near`."""
     mean = anomaly - orbits.eccentricity * np.sin(anomaly)
     moment = orbits.periastron + orbits.period * mean / (2 * np.pi)
     return moment + orbits.period * np.rint((near - moment) / orbits.period)
 
 
-def _timing_error(bundle: Bundle, kind: str, anomaly: float, when: float) -> float:
+def _timing_error(bundle: Bundle, where: _Where, when: float) -> float:
     """Half of the 68% interval of the times at which the draws do the same."""
-    draws = bundle.draws
-    if len(draws) == 0:
+    if len(bundle.draws) == 0:
         return np.nan
-    if "separation" in kind:
-        anomalies = _to_zero_slope(draws, np.array([anomaly]))[:, 0]
-    elif kind == "periastron":
-        anomalies = np.zeros(len(draws))
-    else:
-        e, w = bundle.best.eccentricity[0], bundle.best.argument[0]
-        true = 2 * np.arctan2(
-            np.sqrt(1 + e) * np.sin(anomaly / 2), np.sqrt(1 - e) * np.cos(anomaly / 2)
-        )
-        anomalies = _at_longitude(draws, np.degrees(true) + w)
-    times = _moment(draws, anomalies, when)
-    low, high = np.percentile(times, _BAND)
+    times = _moment(bundle.draws, where(bundle.draws), when)
+    low, high = np.percentile(times, ONE_SIGMA)
     return float(high - low) / 2

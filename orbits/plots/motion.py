@@ -4,7 +4,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from ..bundle import Bundle
+from ..bundle import ONE_SIGMA, Bundle, Orbits
 from ..positions import Positions, position_angle
 from . import style
 
@@ -12,9 +12,9 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-_BAND = (15.865, 84.135)
-"""Percentiles of the one-sigma band."""
 _MOST_DRAWS = 300
+_MOST_PLACES = 10_000_000
+"""Of all draws at all times together, lest a stretch of thousands of turns fill the memory."""
 _LONG = 1500.0
 """d; a longer stretch of time is labelled in years, a shorter one in days."""
 
@@ -28,28 +28,25 @@ def draw_motion(
     `start` and `end` are MJD TDB; without them the stretch holds the positions and one period
     after the first of them, or one period from periastron where there are no positions.
     """
-    mjd = np.linspace(*_stretch(bundle, start, end), 1001)
+    mjd = _fine_times(bundle.best, *_stretch(bundle, start, end))
     x, y = bundle.best.offsets(mjd)
     drawing = style.figure(columns, height_mm=84)
     upper, lower = drawing.subplots(2, 1, sharex=True)
     dates, label = _dates(mjd, mjd)
     angle = np.unwrap(position_angle(x[0], y[0]), period=360)
     many_turns = np.ptp(angle) > 800
-    draws = bundle.thin(_MOST_DRAWS)
+    draws = bundle.thin(min(_MOST_DRAWS, _MOST_PLACES // len(mjd)))
     if len(draws):
         cloud_x, cloud_y = draws.offsets(mjd)
-        low, high = np.percentile(np.hypot(cloud_x, cloud_y), _BAND, axis=0)
+        low, high = np.percentile(np.hypot(cloud_x, cloud_y), ONE_SIGMA, axis=0)
         upper.fill_between(dates, low, high, color=style.CLOUD, alpha=0.6, lw=0)
         # The angle of each draw on the turn nearest to that of the best orbit.
         off = (position_angle(cloud_x, cloud_y) - angle + 180) % 360 - 180
-        low, high = angle + np.percentile(off, _BAND, axis=0)
+        low, high = angle + np.percentile(off, ONE_SIGMA, axis=0)
         if not many_turns:
             lower.fill_between(dates, low, high, color=style.CLOUD, alpha=0.6, lw=0)
     upper.plot(dates, np.hypot(x[0], y[0]), color=style.CURVE)
-    shown = np.where(
-        np.diff(angle % 360, prepend=angle[0] % 360) ** 2 > 180**2, np.nan, angle % 360
-    )
-    lower.plot(dates, shown if many_turns else angle, color=style.CURVE)
+    lower.plot(dates, _broken(angle % 360) if many_turns else angle, color=style.CURVE)
     if bundle.positions is not None:
         _measured(upper, lower, bundle.positions, mjd, angle, wrapped=many_turns)
     for axes in (upper, lower):
@@ -102,6 +99,21 @@ def _stretch(bundle: Bundle, start: float | None, end: float | None) -> tuple[fl
     if not last > first:
         raise ValueError(f"the end must come after the start, got MJD {first} and {last}")
     return first, last
+
+
+def _fine_times(best: Orbits, first: float, last: float) -> np.ndarray:
+    """(m,) times from `first` to `last`, close together where the companion is fast.
+
+    Of each period there are 400, at equal steps of the eccentric anomaly: the shape of the curve
+    at periastron is then as smooth as anywhere. Of more than 50 periods, whose turns run together
+    on paper, there are fewer each.
+    """
+    e, period, periastron = best.eccentricity[0], best.period[0], best.periastron[0]
+    turns = (np.array([first, last]) - periastron) / period
+    steps = int(np.clip(20_000 / np.ptp(turns), 8, 400))
+    anomaly = 2 * np.pi * np.arange(np.floor(turns[0]) * steps, np.ceil(turns[1]) * steps) / steps
+    mjd = periastron + period * (anomaly - e * np.sin(anomaly)) / (2 * np.pi)
+    return np.concatenate([[first], mjd[(mjd > first) & (mjd < last)], [last]])
 
 
 def _dates(mjd: np.ndarray, whole: np.ndarray) -> tuple[np.ndarray, str]:

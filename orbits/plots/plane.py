@@ -15,7 +15,8 @@ if TYPE_CHECKING:
 def draw_plane(bundle: Bundle, *, columns: int = 1) -> "Figure":
     """Draw the true orbit, periastron to the right, the companion going counterclockwise.
 
-    A circular orbit has no periastron to show.
+    A circular orbit has no periastron to show; the place at the time that stands for it is on the
+    right.
 
     The half of the orbit beyond the plane of the sky is drawn thin. Dots stand at equal steps of
     a twentieth of the period; with positions, the places at their dates are filled.
@@ -54,7 +55,7 @@ def draw_plane(bundle: Bundle, *, columns: int = 1) -> "Figure":
         axes.plot(scale * a * (1 - e), 0, **periastron)
     axes.plot(0, 0, marker=(6, 1, 0), ms=7, color=style.INK, mec="white", mew=0.5)
     axes.set_title(title)
-    axes.set_xlabel(f"towards periastron ({unit})")
+    axes.set_xlabel(f"towards periastron ({unit})" if e > 0 else f"along ({unit})")
     axes.set_ylabel(f"across ({unit})")
     axes.margins(0.07)
     handles = [

@@ -217,7 +217,8 @@ def _cloud(axes: "Axes", draws: Orbits, scale: float, number: int | None) -> Non
 
 def _line_of_nodes(axes: "Axes", bundle: Bundle, scale: float) -> None:
     """The chord through the primary, and a triangle where the companion passes the node."""
-    x, y = _at_true_anomaly(bundle.best, -bundle.best.argument[0] + np.array([0.0, 180.0]))
+    nodes = np.concatenate([bundle.best.anomaly_at(longitude) for longitude in (0.0, 180.0)])
+    x, y = (offset[0] for offset in bundle.best.at_anomaly(nodes))
     axes.plot(x * scale, y * scale, color=style.QUIET, lw=0.7, ls=(0, (4, 2)), zorder=3)
     axes.plot(
         x[0] * scale,
@@ -231,16 +232,8 @@ def _line_of_nodes(axes: "Axes", bundle: Bundle, scale: float) -> None:
 
 
 def _periastron(axes: "Axes", best: Orbits, scale: float) -> None:
-    x, y = _at_true_anomaly(best, np.zeros(1))
-    axes.plot(x * scale, y * scale, marker="D", ms=4.2, mfc="white", mec=style.INK, zorder=7)
-
-
-def _at_true_anomaly(best: Orbits, degrees: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    e = best.eccentricity[0]
-    half = np.radians(degrees) / 2
-    anomaly = 2 * np.arctan2(np.sqrt(1 - e) * np.sin(half), np.sqrt(1 + e) * np.cos(half))
-    x, y = best.at_anomaly(anomaly)
-    return x[0], y[0]
+    x, y = best.at_anomaly(np.zeros(1))
+    axes.plot(x[0] * scale, y[0] * scale, marker="D", ms=4.2, mfc="white", mec=style.INK, zorder=7)
 
 
 def _measurements(

@@ -5,7 +5,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from ..bundle import Bundle, Orbits
+from ..bundle import ONE_SIGMA, Bundle, Orbits
 from ..velocities import Velocities
 from . import style
 
@@ -19,8 +19,6 @@ _STARS = (
     ("companion − primary", style.MARK, "^"),
 )
 _DIFFERENCE = 2
-_BAND = (15.865, 84.135)
-"""Percentiles of the one-sigma band."""
 _MOST_DRAWS = 300
 
 
@@ -52,14 +50,29 @@ def draw_velocities(bundle: Bundle, *, columns: int = 1) -> "Figure":
     curve.set_title(style.title(bundle.name, columns))
     curve.set_ylabel("velocity (km/s)")
     curve.set_xlim(-0.02, 1.02)
-    drawing.axes[-1 if measured is not None else 0].set_xlabel("phase from periastron")
+    drawing.axes[-1 if measured is not None else 0].set_xlabel(_phase_label(best))
     drawing.align_ylabels()
     style.legend_below(drawing, _velocity_key(bundle, stars), columns=3)
     return drawing
 
 
+def _phase_label(best: Orbits) -> str:
+    """A circle has no periastron; its phase counts from the time that stands for it."""
+    if best.eccentricity[0] > 0:
+        return "phase from periastron"
+    return "phase from the time of the elements"
+
+
 def _velocity_curves(axes: "Axes", bundle: Bundle, stars: list[int]) -> None:
+    """The curves of the best orbit, and the bands of the draws at the same times.
+
+    At the same phases, each from a periastron of its own, the draws would seem to differ where
+    errors of periastron and argument cancel. The times are those of the period amid the data.
+    """
     phase = np.linspace(-0.02, 1.02, 801)
+    period, periastron = bundle.best.period[0], bundle.best.periastron[0]
+    middle = periastron if bundle.velocities is None else np.median(bundle.velocities.mjd)
+    mjd = periastron + period * (phase + np.floor((middle - periastron) / period))
     axes.grid(True)
     if np.isfinite(bundle.best.gamma[0]):
         axes.axhline(bundle.best.gamma[0], color=style.QUIET, lw=0.6, ls=(0, (4, 2)))
@@ -67,21 +80,16 @@ def _velocity_curves(axes: "Axes", bundle: Bundle, stars: list[int]) -> None:
     for star in stars:
         _, colour, _ = _STARS[star]
         if len(draws):
-            low, high = np.percentile(_at_phase(draws, phase)[star], _BAND, axis=0)
+            low, high = np.percentile(_curves(draws, mjd)[star], ONE_SIGMA, axis=0)
             axes.fill_between(phase, low, high, color=colour, alpha=0.25, lw=0)
-        axes.plot(phase, _at_phase(bundle.best, phase)[star][0], color=colour, lw=1.1)
+        axes.plot(phase, _curves(bundle.best, mjd)[star][0], color=colour, lw=1.1)
 
 
 def _curves(orbits: Orbits, mjd: np.ndarray) -> np.ndarray:
-    """(3, n, m) velocities of primary and companion, and their difference."""
-    primary, companion = orbits.velocities(mjd)
+    """(3, n, m) velocities of both stars, and their difference; an unknown gamma counts as 0."""
+    known = replace(orbits, gamma=np.nan_to_num(orbits.gamma))
+    primary, companion = known.velocities(mjd)
     return np.stack([primary, companion, companion - primary])
-
-
-def _at_phase(orbits: Orbits, phase: np.ndarray) -> np.ndarray:
-    """The curves at the same phase of each orbit; an unknown gamma counts as 0."""
-    mjd = orbits.periastron[:, None] + orbits.period[:, None] * phase
-    return _curves(replace(orbits, gamma=np.nan_to_num(orbits.gamma)), mjd)
 
 
 def _measured_velocities(axes: "Axes", best: Orbits, measured: Velocities) -> None:
