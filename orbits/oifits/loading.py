@@ -1,5 +1,7 @@
 """Reading: from the HDUs of a file to an `OIFile`, naming whatever departs from the standard."""
 
+from collections.abc import Collection
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -9,7 +11,7 @@ from ..problems import Log
 from . import amending, checksum, links
 from .bintable import CARDS, BinTable, Field, Malformed
 from .blocks import HDU, read_hdus
-from .model import KINDS, OIFile, OtherHDU
+from .model import KINDS, DataTable, OIFile, OtherHDU
 from .schema import (
     DTYPES,
     NWAVE,
@@ -29,9 +31,11 @@ STRUCTURAL = {
     "EXTNAME", "EXTVER", "EXTEND", "OI_REVN", "CHECKSUM", "DATASUM", "END", "",
 }  # fmt: skip
 COMPATIBLE = {
-    "L": "L", "I": "IJBK", "J": "IJBK", "E": "EDIJBK", "D": "EDIJBK", "C": "CM", "A": "A",
+    "L": "LBIJ", "I": "IJBK", "J": "IJBK", "E": "EDIJBK", "D": "EDIJBK", "C": "CM", "A": "A",
 }  # fmt: skip
 """Which forms of the file can stand for a form of the standard."""
+ALIASES = {"FLUX": "FLUXDATA"}
+"""Columns that pipelines still write as drafts of version 2 called them."""
 
 
 def load(path: str | Path) -> OIFile:
@@ -103,13 +107,14 @@ def _table(kind: type[Table], hdu: HDU, log: Log) -> Table:
         try:
             values[attribute(column.name)] = _values(content, field, column, label, log)
         except Malformed as fault:
-            if not column.optional and column.fill is None:
+            # Without its flags, a table would offer data that its author calls bad.
+            if column.name == "FLAG" or (not column.optional and column.fill is None):
                 raise
             log.unusable(label, str(fault), "the column is left out")
             continue
         if column.unit == OPEN:
             units[column.name] = field.unit
-    values |= _keywords(kind, hdu, label, log)
+    values |= _keywords(kind, hdu, found, label, log)
     try:
         return kind(
             **values,
@@ -129,10 +134,15 @@ def _sorted_out(
 ) -> tuple[dict[str, Field], dict[str, ExtraColumn]]:
     """The columns of the standard by name, and copies of those that it does not know."""
     known = {column.name for column in columns(kind)}
+    given = {field.name.upper() for field in content.fields}
     found: dict[str, Field] = {}
     extra: dict[str, ExtraColumn] = {}
     for field in content.fields:
         name = field.name.upper()
+        meant = ALIASES.get(name)
+        if meant in known and meant not in given:
+            log.note(label, f"column {name} is not in the standard", f"taken as {meant}")
+            name = meant
         if name in known and name not in found:
             found[name] = field
         elif field.code in "PQ":
@@ -140,7 +150,17 @@ def _sorted_out(
         else:
             name = field.name if field.name not in extra else f"{field.name} {len(extra)}"
             extra[name] = ExtraColumn(field.cards, np.array(content.raw(field)))
-    return found, extra
+    return _with_units_of_errors(kind, found), extra
+
+
+def _with_units_of_errors(kind: type[Table], found: dict[str, Field]) -> dict[str, Field]:
+    """The same columns; errors that state no unit have that of what they are the errors of."""
+    same = dict(found)
+    fixed = {column.name for column in columns(kind) if column.unit != OPEN}
+    for value, error, _ in kind.quantities if issubclass(kind, DataTable) else ():
+        if error in found and value in found and error in fixed and not found[error].unit:
+            same[error] = replace(found[error], unit=found[value].unit)
+    return same
 
 
 def _values(content: BinTable, field: Field, column: Column, label: str, log: Log) -> np.ndarray:
@@ -152,7 +172,7 @@ def _values(content: BinTable, field: Field, column: Column, label: str, log: Lo
     if column.code == "A":
         return _texts(values)
     if column.code == "L":
-        values = _logical(values, name, label, log)
+        values = _logical(values, field, label, log)
     elif column.code == "I" and field.code == "K" and values.size:
         limit = np.iinfo(np.int32)
         if values.min() < limit.min or values.max() > limit.max:
@@ -164,6 +184,10 @@ def _values(content: BinTable, field: Field, column: Column, label: str, log: Lo
         values = values.astype(DTYPES[column.code], copy=column.code != "L")
     if column.unit not in (OPEN, ""):
         scale = factor(column.unit, field.unit)
+        if scale is None and column.unit == "m" and column.fill is None:
+            raise Malformed(
+                f"column {name} has the unit {field.unit!r}, which is no length: convert it to m"
+            )
         if scale is None:
             log.suspicious(
                 label,
@@ -176,12 +200,23 @@ def _values(content: BinTable, field: Field, column: Column, label: str, log: Lo
     return values
 
 
-def _logical(stored: np.ndarray, name: str, label: str, log: Log) -> np.ndarray:
-    """Truth of the bytes T and F; others are undefined, which in a FLAG means not to be used."""
+def _logical(stored: np.ndarray, field: Field, label: str, log: Log) -> np.ndarray:
+    """Truth of the bytes T and F; others are undefined, which in a FLAG means not to be used.
+
+    In a column of numbers, as some write it, 0 stands for false.
+    """
+    name = field.name
+    if field.code != "L":
+        log.note(label, f"column {name} holds numbers", "0 taken as false, others as true")
+        return stored != 0
     true = stored != ord("F")
     undefined = np.count_nonzero(true) - np.count_nonzero(stored == ord("T"))
     if undefined:
-        log.note(label, f"column {name}: {undefined} values are undefined", "taken as true")
+        what = f"column {name}: {undefined} values are undefined, neither true nor false"
+        if name.upper() == "FLAG":
+            log.unusable(label, what, "these data are left out")
+        else:
+            log.note(label, what, "taken as true")
     return true
 
 
@@ -214,7 +249,9 @@ def _missing(kind: type[Table], column: Column, label: str, log: Log) -> None:
     log.suspicious(label, f"column {column.name} is missing", f"taken as {column.fill}")
 
 
-def _keywords(kind: type[Table], hdu: HDU, label: str, log: Log) -> dict[str, object]:
+def _keywords(
+    kind: type[Table], hdu: HDU, given: Collection[str], label: str, log: Log
+) -> dict[str, object]:
     values: dict[str, object] = {}
     for keyword in keywords(kind):
         value = _keyword(keyword, hdu, label, log)
@@ -224,6 +261,14 @@ def _keywords(kind: type[Table], hdu: HDU, label: str, log: Log) -> dict[str, ob
             if keyword.name == "DATE-OBS":
                 log.note(label, "keyword DATE-OBS is missing", "not needed: MJD is used")
                 values["date_obs"] = ""
+            elif keyword.name == "CALSTAT":
+                values["calstat"] = "U" if "STA_INDEX" in given else "C"
+                log.note(
+                    label,
+                    "keyword CALSTAT is missing",
+                    f"taken as {values['calstat']}, as there are "
+                    f"{'' if values['calstat'] == 'U' else 'no '}stations",
+                )
             else:
                 raise Malformed(f"keyword {keyword.name} is missing")
     return values

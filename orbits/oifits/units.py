@@ -45,7 +45,7 @@ def factor(standard: str, stated: str) -> float | None:
 
     A unit that is not stated is the standard's.
     """
-    stated = stated.strip().lower()
+    stated = stated.strip(" []()").lower()
     if not stated or stated in SYNONYMS[standard]:
         return 1.0
     return FACTORS.get((standard, stated))

@@ -6,7 +6,7 @@ import pytest
 from astropy.io import fits
 
 from orbits import InputError, read
-from orbits.oifits import load
+from orbits.oifits import Flux, load
 from orbits.oifits.checking import check
 from orbits.problems import Severity
 
@@ -67,7 +67,43 @@ def unit(name, column, value):
     return edit
 
 
+def column(name, old, form, change, new=None, unit=None):
+    """An edit that writes a column in another form, under another name, in another unit."""
+
+    def edit(opened):
+        place = opened.index_of(name)
+        table = opened[place]
+        columns = [
+            fits.Column(new or c.name, form, unit=unit, array=change(table.data[old]))
+            if c.name == old
+            else fits.Column(c.name, c.format, unit=c.unit, array=table.data[c.name])
+            for c in table.columns
+        ]
+        opened[place] = fits.BinTableHDU.from_columns(columns, name=name)
+        kept = ("OI_REVN", "DATE-OBS", "ARRNAME", "INSNAME")
+        opened[place].header.update({key: table.header[key] for key in kept})
+
+    return edit
+
+
+def one_flagged(flags):
+    flags = flags.copy()
+    flags[2, 1] = True
+    return flags
+
+
 FAULTS = {
+    "flags as numbers": (
+        column("OI_VIS2", "FLAG", "3I", one_flagged), NOTE, r"FLAG holds numbers", (17, 12),
+    ),
+    "flags as text": (
+        column("OI_VIS2", "FLAG", "3A", lambda f: np.full(len(f), "FTF")),
+        UNUSABLE, r"FLAG has the form '3A', not L", (0, 12),
+    ),
+    "(u, v) in millions of wavelengths": (
+        unit("OI_VIS2", "VCOORD", "Mlambda"),
+        UNUSABLE, r"VCOORD has the unit 'Mlambda', which is no length", (0, 12),
+    ),
     "negative error": (
         values("OI_VIS2", "VIS2ERR", -0.02, (1, 2)),
         UNUSABLE, r"VIS2ERR is negative in row 2, channel 3", (17, 12),
@@ -243,6 +279,40 @@ def test_stated_units_are_converted(rng, tmp_path):
     np.testing.assert_allclose(file.arrays[0].staxyz, make.STATIONS, rtol=1e-14)
 
 
+def test_errors_without_a_unit_share_that_of_their_data(rng, tmp_path):
+    """Phases in rad beside errors taken as degrees would count 3000 times too much."""
+    path = damaged(rng, tmp_path, lambda opened: None)
+    plain = read(path)
+
+    def in_radians(opened):
+        column("OI_T3", "T3PHI", "3D", np.radians, unit="rad")(opened)
+        column("OI_T3", "T3PHIERR", "3D", np.radians)(opened)
+
+    (tmp_path / "other").mkdir()
+    other = read(damaged(rng, tmp_path / "other", in_radians))
+    # Twice a conversion there and back: two roundings each of 2^-53, of errors that are the same.
+    np.testing.assert_allclose(other.t3.error, plain.t3.error, rtol=1e-15)
+
+
+def test_spectra_as_drafts_of_version_2_had_them_are_read(rng, tmp_path):
+    """FLUX for FLUXDATA, and no CALSTAT: so does more than one pipeline."""
+    path = tmp_path / "spectra.fits"
+    file = make.full(rng)
+    file.data = [*file.data[1:2], make.flux(rng, raw=True)]
+    file.write(path)
+    with fits.open(path) as opened:
+        opened["OI_FLUX"].columns.change_name("FLUXDATA", "FLUX")
+        del opened["OI_FLUX"].header["CALSTAT"]
+        opened.writeto(tmp_path / "draft.fits")
+    draft = load(tmp_path / "draft.fits")
+    (spectra,) = draft.of(Flux)
+    np.testing.assert_array_equal(spectra.fluxdata, file.data[1].fluxdata)
+    assert spectra.calstat == "U"
+    assert {"column FLUX is not in the standard", "keyword CALSTAT is missing"} <= {
+        problem.what for problem in draft.problems
+    }
+
+
 @pytest.mark.parametrize("scale", [1e6, 1e9], ids=["micron", "nanometre"])
 def test_wavelengths_in_an_unstated_unit_are_never_guessed(rng, tmp_path, scale):
     path = damaged(rng, tmp_path, every("OI_WAVELENGTH", "EFF_WAVE", lambda w: w * scale))
@@ -344,7 +414,8 @@ def test_undefined_flags_count_as_set(rng, tmp_path):
     path.write_bytes(content[:place] + b"\0F\0" + content[place + 3 :])
     read_back = load(path)
     np.testing.assert_array_equal(read_back.data[0].flag[0], [True, False, True])
-    assert any("FLAG: 2 values are undefined" in p.what for p in read_back.problems)
+    said = [p for p in read_back.problems if "FLAG: 2 values are undefined" in p.what]
+    assert [p.severity for p in said] == [UNUSABLE]
 
 
 REFUSED = {
