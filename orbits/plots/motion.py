@@ -1,5 +1,6 @@
 """Where the companion is in time: separation and position angle against date, and residuals."""
 
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -7,14 +8,15 @@ import numpy as np
 from ..bundle import ONE_SIGMA, Bundle, Orbits
 from ..positions import Positions, position_angle
 from . import style
+from .velocity import phase_label
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
 _MOST_DRAWS = 300
-_MOST_PLACES = 10_000_000
-"""Of all draws at all times together, lest a stretch of thousands of turns fill the memory."""
+_MOST_TURNS = 40
+"""More periods run together on paper, and are laid on top of each other."""
 _LONG = 1500.0
 """d; a longer stretch of time is labelled in years, a shorter one in days."""
 
@@ -26,16 +28,25 @@ def draw_motion(
     """Draw separation and position angle against date, with the one-sigma band of the draws.
 
     `start` and `end` are MJD TDB; without them the stretch holds the positions and one period
-    after the first of them, or one period from periastron where there are no positions.
+    after the first of them, or one period from periastron where there are no positions. A stretch
+    of more than 40 periods is folded to one: the period in its middle, and all positions at their
+    phases.
     """
-    mjd = _fine_times(bundle.best, *_stretch(bundle, start, end))
+    first, last = _stretch(bundle, start, end)
+    folded = last - first > _MOST_TURNS * bundle.best.period[0]
+    if folded:
+        bundle, first, last = _fold(bundle, first, last)
+    mjd = _fine_times(bundle.best, first, last)
     x, y = bundle.best.offsets(mjd)
     drawing = style.figure(columns, height_mm=84)
     upper, lower = drawing.subplots(2, 1, sharex=True)
-    dates, label = _dates(mjd, mjd)
+    if folded:
+        dates, label = (mjd - first) / (last - first), phase_label(bundle.best)
+    else:
+        dates, label = _dates(mjd, mjd)
     angle = np.unwrap(position_angle(x[0], y[0]), period=360)
     many_turns = np.ptp(angle) > 800
-    draws = bundle.thin(min(_MOST_DRAWS, _MOST_PLACES // len(mjd)))
+    draws = bundle.thin(_MOST_DRAWS)
     if len(draws):
         cloud_x, cloud_y = draws.offsets(mjd)
         low, high = np.percentile(np.hypot(cloud_x, cloud_y), ONE_SIGMA, axis=0)
@@ -48,7 +59,7 @@ def draw_motion(
     upper.plot(dates, np.hypot(x[0], y[0]), color=style.CURVE)
     lower.plot(dates, _broken(angle % 360) if many_turns else angle, color=style.CURVE)
     if bundle.positions is not None:
-        _measured(upper, lower, bundle.positions, mjd, angle, wrapped=many_turns)
+        _measured(upper, lower, bundle.positions, mjd, dates, angle, wrapped=many_turns)
     for axes in (upper, lower):
         axes.grid(True)
     upper.set_title(style.title(bundle.name, columns))
@@ -101,17 +112,27 @@ def _stretch(bundle: Bundle, start: float | None, end: float | None) -> tuple[fl
     return first, last
 
 
+def _fold(bundle: Bundle, first: float, last: float) -> tuple[Bundle, float, float]:
+    """The period in the middle of a stretch, with all positions of the stretch brought into it."""
+    period, periastron = bundle.best.period[0], bundle.best.periastron[0]
+    start = periastron + period * np.floor(((first + last) / 2 - periastron) / period)
+    positions = bundle.positions
+    if positions is not None:
+        positions = positions.select((positions.mjd >= first) & (positions.mjd <= last))
+        mjd = start + (positions.mjd - start) % period
+        positions = replace(positions, mjd=mjd)
+    return replace(bundle, positions=positions), start, start + period
+
+
 def _fine_times(best: Orbits, first: float, last: float) -> np.ndarray:
     """(m,) times from `first` to `last`, close together where the companion is fast.
 
     Of each period there are 400, at equal steps of the eccentric anomaly: the shape of the curve
-    at periastron is then as smooth as anywhere. Of more than 50 periods, whose turns run together
-    on paper, there are fewer each.
+    at periastron is then as smooth as anywhere.
     """
     e, period, periastron = best.eccentricity[0], best.period[0], best.periastron[0]
     turns = (np.array([first, last]) - periastron) / period
-    steps = int(np.clip(20_000 / np.ptp(turns), 8, 400))
-    anomaly = 2 * np.pi * np.arange(np.floor(turns[0]) * steps, np.ceil(turns[1]) * steps) / steps
+    anomaly = 2 * np.pi * np.arange(400 * np.floor(turns[0]), 400 * np.ceil(turns[1])) / 400
     mjd = periastron + period * (anomaly - e * np.sin(anomaly)) / (2 * np.pi)
     return np.concatenate([[first], mjd[(mjd > first) & (mjd < last)], [last]])
 
@@ -146,6 +167,7 @@ def _measured(
     lower: "Axes",
     positions: Positions,
     mjd: np.ndarray,
+    dates: np.ndarray,
     angle: np.ndarray,
     *,
     wrapped: bool,
@@ -154,7 +176,6 @@ def _measured(
     if not inside.any():
         return
     seen = positions.select(inside)
-    dates, _ = _dates(seen.mjd, mjd)
     radial = seen.xy / seen.separation[:, None]
     tangential = np.stack([radial[:, 1], -radial[:, 0]], axis=-1)
     along, across = (
@@ -166,8 +187,9 @@ def _measured(
     turned = near + (seen.position_angle - near + 180) % 360 - 180
     turned = turned % 360 if wrapped else turned
     error = np.minimum(np.degrees(across / seen.separation), 180)
-    _points(upper, dates, seen.separation, along, seen.weight)
-    _points(lower, dates, turned, error, seen.weight)
+    place = np.interp(seen.mjd, mjd, dates)
+    _points(upper, place, seen.separation, along, seen.weight)
+    _points(lower, place, turned, error, seen.weight)
 
 
 def _points(axes: "Axes", x, y, error, weight: np.ndarray) -> None:

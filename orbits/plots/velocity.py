@@ -50,13 +50,13 @@ def draw_velocities(bundle: Bundle, *, columns: int = 1) -> "Figure":
     curve.set_title(style.title(bundle.name, columns))
     curve.set_ylabel("velocity (km/s)")
     curve.set_xlim(-0.02, 1.02)
-    drawing.axes[-1 if measured is not None else 0].set_xlabel(_phase_label(best))
+    drawing.axes[-1 if measured is not None else 0].set_xlabel(phase_label(best))
     drawing.align_ylabels()
     style.legend_below(drawing, _velocity_key(bundle, stars), columns=3)
     return drawing
 
 
-def _phase_label(best: Orbits) -> str:
+def phase_label(best: Orbits) -> str:
     """A circle has no periastron; its phase counts from the time that stands for it."""
     if best.eccentricity[0] > 0:
         return "phase from periastron"

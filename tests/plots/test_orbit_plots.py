@@ -295,6 +295,20 @@ def test_motion_over_many_turns_is_legible(spectroscopic):
         draw_motion(spectroscopic, start=60000.0, end=59000.0)
 
 
+def test_motion_over_very_many_turns_is_folded():
+    """Positions keep their distance from the curve, whatever period they were seen in."""
+    bundle = six.orbit("face-on")
+    turns = 1000.0 * np.arange(12)
+    late = replace(bundle.positions, mjd=bundle.positions.mjd + bundle.best.period[0] * turns)
+    folded = draw_motion(replace(bundle, positions=late, draws=bundle.draws.select(slice(0))))
+    assert_legible(folded)
+    assert folded.axes[1].get_xlabel() == "phase from periastron"
+    assert_allclose(folded.axes[1].get_xlim(), (0, 1))
+    points = folded.axes[0].lines[1]
+    assert_allclose(points.get_xdata(), np.arange(12) / 12, atol=1e-9)
+    assert_allclose(points.get_ydata(), bundle.positions.separation)
+
+
 def test_residuals_are_what_was_measured_less_the_orbit(spectroscopic):
     figure = draw_residuals(spectroscopic)
     mjd, xy = spectroscopic.positions.mjd, spectroscopic.positions.xy
