@@ -70,13 +70,9 @@ def show(
 @app.command()
 def add(
     system: Annotated[Path, typer.Argument(help="A system file whose orbit has been fitted.")],
-    catalogue: Annotated[
-        Path, typer.Option("--catalogue", help="Catalogue file; made if missing.")
-    ],
+    catalogue: Target,
     solution: Annotated[str, typer.Option(help="Name of the solution, unique in its system.")],
-    preferred: Annotated[
-        bool, typer.Option("--preferred", help="Prefer it to the others.")
-    ] = False,
+    preferred: Favourite = False,
     source: Annotated[str, typer.Option(help="Who made it, or where it is published.")] = "",
     remark: Annotated[str, typer.Option(help="Anything else.")] = "",
     alias: Annotated[list[str] | None, typer.Option(help="Other name; repeatable.")] = None,
@@ -107,9 +103,7 @@ def add(
 @app.command(name="import")
 def import_orbits(
     lines: Annotated[Path, typer.Argument(help="Fixed-width lines of orbits of visual binaries.")],
-    catalogue: Annotated[
-        Path, typer.Option("--catalogue", help="Catalogue file; made if missing.")
-    ],
+    catalogue: Target,
     json: Json = False,
 ) -> None:
     """Import orbits of visual binaries; each line that cannot be used is listed with the reason."""

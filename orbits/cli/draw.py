@@ -73,6 +73,10 @@ def draw(
 
     if bool(names) == all_entries:
         raise typer.BadParameter("give the names of entries or systems, or --all, not both")
+    for_sheets = {"--match": match, "--near": near, "--period": period}
+    for_names = {"--kind": kind, "--positions": positions, "--mark": mark}
+    for_names |= {"--from": start, "--to": end}
+    _refuse_idle(for_names if all_entries else for_sheets, all_entries=all_entries)
     rng = np.random.default_rng(seed)
     if all_entries:
         pictures = _sheets(catalogue, rng, match=match, near=near, period=period)
@@ -80,6 +84,10 @@ def draw(
     else:
         bundles, folder = _bundles(names, catalogue, positions, rng)
         kinds = [Kind(k) for k in kind or []] or _possible(bundles, names)
+        if Kind.motion not in kinds and (start or end):
+            raise typer.BadParameter("--from and --to go with --kind motion")
+        if Kind.sky not in kinds and mark:
+            raise typer.BadParameter("--mark goes with --kind sky")
         pictures = _pictures(bundles, kinds, columns, _marks(mark or []), _stretch(start, end))
     paths = _paths(list(pictures), output or folder, form.value)
     refuse_existing(*paths.values(), force=force)
@@ -91,6 +99,14 @@ def draw(
         say(f"drawn: {path}", json=json)
     if json:
         emit({"pictures": [str(path) for path in paths.values()]})
+
+
+def _refuse_idle(options: dict[str, object], *, all_entries: bool) -> None:
+    """Refuse the options that would do nothing."""
+    for name, value in options.items():
+        if value:
+            reason = "does not go with --all" if all_entries else "goes with --all only"
+            raise typer.BadParameter(f"{name} {reason}")
 
 
 def _bundles(names, catalogue, positions, rng) -> "tuple[list[Bundle], Path]":

@@ -294,6 +294,10 @@ def test_draw_a_contact_sheet(nodeline, tmp_path):
     [
         ((), 2, "give the names of entries or systems, or --all"),
         (("Capella", "--all"), 2, "not both"),
+        (("Capella", "--near", 79, 46, 1), 2, "--near goes with --all only"),
+        (("--all", "--kind", "velocity"), 2, "--kind does not go with --all"),
+        (("Capella", "--from", "2026"), 2, "--from and --to go with --kind motion"),
+        (("Capella", "--kind", "plane", "--mark", "2026"), 2, "--mark goes with --kind sky"),
         (("Tarn 3", "--kind", "velocity"), 3, "no velocity amplitude is known"),
         (("Tarn 3", "--kind", "residuals"), 3, "no positions are known"),
         (("Tarn 3", "Harrow 7", "--kind", "plane"), 3, "compared on the sky only"),
