@@ -32,6 +32,7 @@ _HOMES = {
     "fit": ".fitting.engine",
     "predict": ".ephemeris",
     "limits": ".companion.limits",
+    "posterior": ".companion.posterior",
     "read": ".oifits",
     "read_epochs": ".oifits",
     "read_positions": ".positions",

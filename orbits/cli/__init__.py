@@ -13,6 +13,7 @@ from . import (
     limits,
     measure,
     orbit,
+    posterior,
     predict,
     report,
     search,
@@ -49,6 +50,7 @@ app.command()(inspect.inspect)
 app.command()(limits.limits)
 app.command()(measure.measure)
 app.command()(orbit.orbit)
+app.command()(posterior.posterior)
 app.command()(predict.predict)
 app.command()(report.report)
 app.command()(search.search)

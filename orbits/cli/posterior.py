@@ -1,0 +1,123 @@
+"""nodeline posterior: every place where a night allows a companion, with its share."""
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from .frame import Force, Json, Seed, emit, say
+
+if TYPE_CHECKING:
+    from ..companion.posterior import EpochPosterior
+
+_SHOWN = 10
+
+
+def posterior(
+    files: Annotated[
+        list[Path], typer.Argument(help="OIFITS files of one night.", metavar="FILE...")
+    ],
+    target: Annotated[str | None, typer.Option(help="Name, where the files hold several.")] = None,
+    night: Annotated[str | None, typer.Option(help="Date, where the files hold several.")] = None,
+    field: Annotated[float | None, typer.Option(help="Half the side of the field, mas.")] = None,
+    diameter: Annotated[
+        float | None, typer.Option(help="Of the primary, mas; else fitted.")
+    ] = None,
+    companion_diameter: Annotated[
+        float | None, typer.Option(help="Of the companion, mas; else fitted where it shows.")
+    ] = None,
+    v2_calibration: Annotated[
+        float, typer.Option(min=0, help="Error of V2 common to all channels, as a part of V2.")
+    ] = 0.0,
+    t3_calibration: Annotated[
+        float, typer.Option(min=0, help="Closure-phase error common to all channels, deg.")
+    ] = 0.0,
+    flip_phase: Annotated[
+        bool, typer.Option("--flip-phase", help="The files have phases of the opposite sign.")
+    ] = False,
+    live_points: Annotated[int, typer.Option(min=50, help="Of nested sampling.")] = 200,
+    output: Annotated[Path | None, typer.Option(help="Samples (ECSV).")] = None,
+    positions: Annotated[
+        Path | None, typer.Option(help="The modes as a table of positions for nodeline orbit.")
+    ] = None,
+    seed: Seed = 0,
+    force: Force = False,
+    json: Json = False,
+) -> None:
+    """Sample all of a night's posterior: every solution with its share, and the evidence.
+
+    Flat priors: places in the field, contrasts from 0 to 1, diameters up to 3 resolutions.
+    """
+    import astropy.units as u
+    import numpy as np
+
+    from ..companion.covariance import ErrorModel
+    from ..companion.posterior import posterior as sample
+    from ..files import refuse_existing, whole_file
+    from ..oifits import read
+    from ..oifits.epochs import night_label
+    from ..positions import write_positions
+    from ..progress import Bar
+
+    def mas(value: float | None) -> u.Quantity | None:
+        return None if value is None else value * u.mas
+
+    for name, value in (("--field", field), ("--diameter", diameter)):
+        if value is not None and not value > 0:
+            raise typer.BadParameter(f"{name} must be positive, got {value}")
+    refuse_existing(*(path for path in (output, positions) if path), force=force)
+    observation = read(files, target=target, night=night, flip_phase=flip_phase)
+    result = sample(
+        observation,
+        field=mas(field),
+        diameter=mas(diameter),
+        companion_diameter=mas(companion_diameter),
+        errors=ErrorModel(
+            v2_calibration=v2_calibration, t3_calibration=float(np.radians(t3_calibration))
+        ),
+        live_points=live_points,
+        rng=np.random.default_rng(seed),
+        progress=Bar(),
+    )
+    say(describe(result), json=json)
+    if output:
+        with whole_file(output, force=force) as temporary:
+            result.table().write(temporary, format="ascii.ecsv", overwrite=True)
+        say(f"  samples    {output}", json=json)
+    if positions:
+        label = f"{night_label(observation.mjd)} {observation.instrument}"
+        write_positions(positions, result.positions(label), force=force)
+        say(f"  positions  {positions}", json=json)
+    if json:
+        emit(result.to_json())
+
+
+def describe(result: "EpochPosterior") -> str:
+    """The modes in lines for people."""
+    import numpy as np
+
+    from ..positions import position_angle
+
+    x, y, contrast = (result.names.index(name) for name in ("x", "y", "contrast"))
+    evidence = result.log_evidence / np.log(10)
+    lines = [
+        f"{result.target}, {result.instrument}, MJD {result.mjd:.4f}: "
+        f"{len(result.samples)} samples, {len(result.modes)} places",
+        f"  a pair is 10^{evidence:.2f} times as probable as a single star, if equally likely "
+        "before, for flat priors",
+    ]
+    for one in result.modes[:_SHOWN]:
+        east, north = one.mean[[x, y]]
+        spread = np.sqrt(np.diag(one.covariance))
+        angle = position_angle(east, north)
+        lines.append(
+            f"  {100 * one.weight:5.1f}%  {np.hypot(east, north):.3f} mas, PA {angle:.2f} deg "
+            f"(x {east:.3f} +- {spread[x]:.3f}, y {north:.3f} +- {spread[y]:.3f}), "
+            f"contrast {one.mean[contrast]:.4g} +- {spread[contrast]:.2g}"
+        )
+    if len(result.modes) > _SHOWN:
+        lines.append(f"  and {len(result.modes) - _SHOWN} more, which --json lists")
+    elsewhere = float(np.mean(result.mode < 0))
+    if elsewhere > 0:
+        lines.append(f"  {100 * elsewhere:5.1f}%  at none of these places")
+    return "\n".join(lines)
