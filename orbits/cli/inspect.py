@@ -5,7 +5,7 @@ from typing import Annotated, Any
 
 import typer
 
-from .frame import Force, Json, emit, say
+from .frame import Force, Json, emit, say, warn
 
 Between = tuple[float, float]
 
@@ -43,7 +43,7 @@ def inspect(
     """
     from ..files import refuse_existing
     from ..oifits import load
-    from ..oifits.checking import check
+    from ..oifits.checking import check, check_together
     from ..oifits.converting import convert as write_copy
     from ..oifits.flipping import flipped
     from ..oifits.inspection import in_words
@@ -60,7 +60,7 @@ def inspect(
     selection = _selection(instrument, dates, wavelengths, baselines, tuple(station or ()))
     parts, results = [], []
     with Bar().task("reading", total=len(files)) as step:
-        for path in files:
+        for path in dict.fromkeys(files):
             file = load(path)
             file.problems += check(file)
             if flip_phase:
@@ -70,6 +70,9 @@ def inspect(
             step()
     say("\n".join(map(in_words, results)), json=json)
     whole = join(parts)
+    together = check_together(whole)
+    warn(together)
+    whole.problems += together
     outcome: dict[str, Any] = {"files": results}
     if plot:
         _draw(whole, plot, force=force)
@@ -89,7 +92,7 @@ def inspect(
     if json:
         emit(outcome)
     if strict:
-        refuse_suspicious([problem for part in parts for problem in part.problems])
+        refuse_suspicious(whole.problems)
 
 
 def _selection(instrument, dates, wavelengths, baselines, stations):

@@ -9,7 +9,7 @@ import numpy as np
 from ..errors import InputError
 from ..observation import OBSERVABLES, Observation
 from ..problems import refuse_suspicious
-from .checking import check
+from .checking import check, check_together
 from .flattening import observation, shares
 from .flipping import flipped
 from .joining import join
@@ -106,9 +106,11 @@ def read_epochs(
     files = [load(path) for path in _listed(paths)]
     for file in files:
         file.problems += check(file)
+    file = join(files)
+    file.problems += check_together(file)
     if strict:
-        refuse_suspicious([problem for file in files for problem in file.problems])
-    file = select(join(files), selection, target=target)
+        refuse_suspicious(file.problems)
+    file = select(file, selection, target=target)
     if flip_phase:
         file = flipped(file)
     return observations(file, target=target, gap=gap, errors=errors, observables=observables)
@@ -152,7 +154,8 @@ def _listed(paths: Paths) -> list[str | Path]:
     listed = [paths] if isinstance(paths, str | Path) else list(paths)
     if not listed:
         raise ValueError("no file was given")
-    return listed
+    # A file that is named twice, as by two patterns, is read once.
+    return list({Path(path).resolve(): path for path in listed}.values())
 
 
 def _target(file: OIFile, wanted: str | None) -> tuple[str, list[int]]:

@@ -294,6 +294,24 @@ def test_errors_without_a_unit_share_that_of_their_data(rng, tmp_path):
     np.testing.assert_allclose(other.t3.error, plain.t3.error, rtol=1e-15)
 
 
+def test_data_given_twice_are_noticed_in_one_file_and_in_two(rng, tmp_path):
+    file = make.small(rng)
+    file.write(tmp_path / "night.fits")
+    file.data = [*file.data, file.data[0]]
+    (found,) = [p for p in check(file) if "the same as in" in p.what]
+    assert (found.severity, found.table) == (SUSPICIOUS, "OI_VIS2")
+    assert "6 rows" in found.what
+    file.data = [file.data[0], make.vis2(rng)]  # the same baselines and times, other numbers
+    file.write(tmp_path / "more.fits")
+    assert not any("the same as in" in p.what for p in check(file))
+    paths = [tmp_path / "night.fits", tmp_path / "more.fits"]
+    (found,) = [p for p in read(paths).problems if "the same as in" in p.what]
+    assert found.what == f"6 rows of {paths[1]} are the same as in {paths[0]}"
+    assert len(read([paths[0], paths[0]]).v2) == 18  # a file named twice is one file
+    with pytest.raises(InputError, match=r"refused as strictly asked.*the same as in"):
+        read(paths, strict=True)
+
+
 def test_spectra_as_drafts_of_version_2_had_them_are_read(rng, tmp_path):
     """FLUX for FLUXDATA, and no CALSTAT: so does more than one pipeline."""
     path = tmp_path / "spectra.fits"

@@ -7,9 +7,9 @@ words what was found and what became of it.
 
 from ...problems import Log, Problem
 from ..model import OIFile
-from . import correlations, geometry, spectra, structure, values
+from . import correlations, geometry, repeats, spectra, structure, values
 
-SUBJECTS = (structure, spectra, values, geometry, correlations)
+SUBJECTS = (structure, spectra, values, geometry, repeats, correlations)
 CHECKS = tuple(one for subject in SUBJECTS for one in subject.CHECKS)
 
 
@@ -18,4 +18,11 @@ def check(file: OIFile) -> list[Problem]:
     log = Log(file.source)
     for one in CHECKS:
         one(file, log)
+    return log.problems
+
+
+def check_together(file: OIFile) -> list[Problem]:
+    """What is wrong with files, each sound by itself, that `file` was joined from."""
+    log = Log(file.source)
+    repeats.between_files(file, log)
     return log.problems
