@@ -109,6 +109,16 @@ class Orbits(Rows):
         gamma = self.gamma[:, None]
         return gamma - self.k1[:, None] * course, gamma + self.k2[:, None] * course
 
+    def curves(self, mjd: np.ndarray) -> np.ndarray:
+        """(3, n, m) velocities as `Velocities.star` counts them: primary, companion, difference.
+
+        Of an orbit whose gamma is unknown they are those seen from the centre of mass, which is
+        all that the difference of both stars' velocities tells.
+        """
+        known = replace(self, gamma=np.nan_to_num(self.gamma))
+        primary, companion = known.velocities(mjd)
+        return np.stack([primary, companion, companion - primary])
+
     def phase(self, mjd: np.ndarray) -> np.ndarray:
         """(n, m) phase in [0, 1) since periastron at the (m,) times `mjd` (TDB)."""
         return (mjd - self.periastron[:, None]) / self.period[:, None] % 1.0
@@ -162,6 +172,16 @@ class Bundle:
             positions=solution.positions,
             velocities=velocities,
         )
+
+    def position_residuals(self) -> np.ndarray:
+        """(n, 2) East and North of the positions less the best orbit, mas."""
+        return self.positions.xy - np.stack(self.best.offsets(self.positions.mjd), axis=-1)[0]
+
+    def velocity_residuals(self) -> np.ndarray:
+        """(n,) velocities less those of the best orbit, km/s."""
+        measured = self.velocities
+        model = self.best.curves(measured.mjd)[:, 0]
+        return measured.velocity - model[measured.star, np.arange(len(measured))]
 
     @property
     def errors_too_large(self) -> bool:

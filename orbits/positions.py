@@ -71,6 +71,20 @@ class Positions(Rows):
         """(n,) deg from North through East, 0 <= PA < 360."""
         return position_angle(self.xy[:, 0], self.xy[:, 1])
 
+    @property
+    def polar_errors(self) -> tuple[np.ndarray, np.ndarray]:
+        """(n,) errors of separation, mas, and position angle, deg, to first order.
+
+        Beyond half a turn the angle is unknown: its error is at most 180.
+        """
+        radial = self.xy / self.separation[:, None]
+        across = np.stack([radial[:, 1], -radial[:, 0]], axis=-1)
+        along, sideways = (
+            np.sqrt(np.einsum("ni,nij,nj->n", unit, self.covariance, unit))
+            for unit in (radial, across)
+        )
+        return along, np.minimum(np.degrees(sideways / self.separation), 180.0)
+
 
 def position_angle(x: np.ndarray, y: np.ndarray) -> np.ndarray:
     """Angle of (x east, y north) from North through East, deg in [0, 360)."""

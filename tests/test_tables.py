@@ -5,7 +5,13 @@ import pytest
 from numpy.testing import assert_allclose
 
 from orbits import InputError, read_positions, read_velocities, write_positions, write_velocities
-from orbits.positions import ellipse_covariance, error_ellipse, position_angle
+from orbits.positions import (
+    Positions,
+    ellipse_covariance,
+    error_ellipse,
+    offsets,
+    position_angle,
+)
 from orbits.times import utc_of_tdb
 
 POSITIONS_ECSV = """\
@@ -157,3 +163,26 @@ def test_position_angle_stays_below_a_full_turn():
     assert_allclose(position_angle(np.array([0, 1, 0, -1.0]), np.array([1, 0, -1, 0.0])),
                     [0, 90, 180, 270])  # fmt: skip
     assert position_angle(np.array([-1e-20]), np.array([1.0]))[0] == 0.0
+
+
+def test_polar_errors_are_the_axes_of_an_ellipse_along_the_radius():
+    """An ellipse whose major axis points at the primary, one across, and one that holds it."""
+    angle = np.array([30.0, 200.0, 30.0])
+    xy = np.stack(offsets(np.array([5.0, 8.0, 0.01]), angle), axis=-1)
+    turned = angle + [0.0, 90.0, 0.0]
+    covariance = ellipse_covariance(np.full(3, 0.2), np.full(3, 0.1), turned)
+    blank = np.full(3, "", dtype=object)
+    found = Positions(
+        mjd=np.full(3, 60000.0),
+        xy=xy,
+        covariance=covariance,
+        weight=np.ones(3),
+        night=blank,
+        instrument=blank,
+        source=blank,
+        contrast=np.full(3, np.nan),
+        contrast_error=np.full(3, np.nan),
+    )
+    along, across = found.polar_errors
+    assert_allclose(along, [0.2, 0.1, 0.2], rtol=1e-12)
+    assert_allclose(across, [np.degrees(0.1 / 5), np.degrees(0.2 / 8), 180.0], rtol=1e-12)

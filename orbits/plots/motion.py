@@ -84,8 +84,7 @@ def draw_residuals(bundle: Bundle, *, columns: int = 1) -> "Figure":
     positions = bundle.positions
     if positions is None:
         raise ValueError(f"{bundle.name}: there are no positions to take residuals of")
-    x, y = bundle.best.offsets(positions.mjd)
-    rest = positions.xy - np.stack([x[0], y[0]], axis=-1)
+    rest = bundle.position_residuals()
     errors = np.sqrt(np.diagonal(positions.covariance, axis1=1, axis2=2))
     dates, label = _dates(positions.mjd, positions.mjd)
     drawing = style.figure(columns, height_mm=70)
@@ -176,17 +175,11 @@ def _measured(
     if not inside.any():
         return
     seen = positions.select(inside)
-    radial = seen.xy / seen.separation[:, None]
-    tangential = np.stack([radial[:, 1], -radial[:, 0]], axis=-1)
-    along, across = (
-        np.sqrt(np.einsum("ni,nij,nj->n", unit, seen.covariance, unit))
-        for unit in (radial, tangential)
-    )
-    # The turn nearest to the curve; errors in angle beyond a turn say nothing more.
+    along, error = seen.polar_errors
+    # The turn nearest to the curve.
     near = np.interp(seen.mjd, mjd, angle)
     turned = near + (seen.position_angle - near + 180) % 360 - 180
     turned = turned % 360 if wrapped else turned
-    error = np.minimum(np.degrees(across / seen.separation), 180)
     place = np.interp(seen.mjd, mjd, dates)
     _points(upper, place, seen.separation, along, seen.weight)
     _points(lower, place, turned, error, seen.weight)

@@ -1,6 +1,5 @@
 """Velocity curves: both stars against phase from periastron, with the residuals beneath."""
 
-from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -43,10 +42,10 @@ def draw_velocities(bundle: Bundle, *, columns: int = 1) -> "Figure":
         curve = drawing.add_subplot()
     else:
         curve, rest = drawing.subplots(2, 1, sharex=True, height_ratios=(3, 1.2))
-        _velocity_residuals(rest, best, measured)
+        _velocity_residuals(rest, bundle)
     _velocity_curves(curve, bundle, stars)
     if measured is not None:
-        _measured_velocities(curve, best, measured)
+        _points(curve, best.phase(measured.mjd)[0], measured.velocity, measured)
     curve.set_title(style.title(bundle.name, columns))
     curve.set_ylabel("velocity (km/s)")
     curve.set_xlim(-0.02, 1.02)
@@ -80,28 +79,16 @@ def _velocity_curves(axes: "Axes", bundle: Bundle, stars: list[int]) -> None:
     for star in stars:
         _, colour, _ = _STARS[star]
         if len(draws):
-            low, high = np.percentile(_curves(draws, mjd)[star], ONE_SIGMA, axis=0)
+            low, high = np.percentile(draws.curves(mjd)[star], ONE_SIGMA, axis=0)
             axes.fill_between(phase, low, high, color=colour, alpha=0.25, lw=0)
-        axes.plot(phase, _curves(bundle.best, mjd)[star][0], color=colour, lw=1.1)
+        axes.plot(phase, bundle.best.curves(mjd)[star][0], color=colour, lw=1.1)
 
 
-def _curves(orbits: Orbits, mjd: np.ndarray) -> np.ndarray:
-    """(3, n, m) velocities of both stars, and their difference; an unknown gamma counts as 0."""
-    known = replace(orbits, gamma=np.nan_to_num(orbits.gamma))
-    primary, companion = known.velocities(mjd)
-    return np.stack([primary, companion, companion - primary])
-
-
-def _measured_velocities(axes: "Axes", best: Orbits, measured: Velocities) -> None:
-    _points(axes, best.phase(measured.mjd)[0], measured.velocity, measured)
-
-
-def _velocity_residuals(axes: "Axes", best: Orbits, measured: Velocities) -> None:
-    model = _curves(best, measured.mjd)[:, 0]
-    rest = measured.velocity - model[measured.star, np.arange(len(measured))]
+def _velocity_residuals(axes: "Axes", bundle: Bundle) -> None:
+    phase = bundle.best.phase(bundle.velocities.mjd)[0]
     axes.grid(True)
     axes.axhline(0, color=style.QUIET, lw=0.6)
-    _points(axes, best.phase(measured.mjd)[0], rest, measured)
+    _points(axes, phase, bundle.velocity_residuals(), bundle.velocities)
     axes.set_ylabel("O − C (km/s)")
 
 

@@ -92,6 +92,8 @@ class Content:
 
     name: str
     headline: str
+    observed: str
+    """What the result rests on."""
     quantities: list[Quantity]
     fit: dict[str, Any]
     statements: list[str]
@@ -139,6 +141,8 @@ _WORDS = {
     "next_periastron_mjd": ("next periastron", "MJD TDB"),
     "periastron_separation_mas": ("separation at periastron", "mas"),
 }
+_STARS = ("primary", "companion", "difference, companion − primary")
+"""As `Velocities.star` counts them."""
 _UNITS = {"d": "d", "mas": "mas", "deg": "deg", "kms": "km/s", "au": "au", "msun": "M☉"}
 
 
@@ -181,6 +185,28 @@ def headline(solution: Solution) -> str:
     elif "total_msun" in summary:
         parts.append(f"total mass {short('total_msun')} M☉")
     return "; ".join(parts)
+
+
+def observed(solution: Solution) -> str:
+    """What was observed, in a sentence."""
+
+    def span(mjd: np.ndarray) -> str:
+        first, last = show_date(mjd.min()), show_date(mjd.max())
+        return f"on {first}" if first == last else f"from {first} to {last}"
+
+    parts = []
+    if solution.positions is not None:
+        nights = len(set(solution.positions.night))
+        used = sorted(filter(None, set(solution.positions.instrument)))
+        parts.append(
+            f"positions of {nights} night{'s' if nights > 1 else ''}"
+            f"{' with ' + ', '.join(used) if used else ''} {span(solution.positions.mjd)}"
+        )
+    if solution.velocities is not None:
+        counts = np.bincount(solution.velocities.star, minlength=len(_STARS))
+        each = [f"{n} of the {star}" for n, star in zip(counts, _STARS, strict=True) if n]
+        parts.append(f"velocities, {' and '.join(each)}, {span(solution.velocities.mjd)}")
+    return "Observed: " + "; ".join(parts) + "."
 
 
 def statements(solution: Solution) -> list[str]:
@@ -245,21 +271,14 @@ def places(bundle: Bundle) -> list[Place]:
     positions = bundle.positions
     if positions is None:
         return []
-    x, y = bundle.best.offsets(positions.mjd)
-    rest = positions.xy - np.stack([x[0], y[0]], axis=-1)
+    rest = bundle.position_residuals()
     sigma = np.sqrt(np.einsum("ni,nij,nj->n", rest, np.linalg.inv(positions.covariance), rest))
     errors = np.sqrt(np.diagonal(positions.covariance, axis1=1, axis2=2))
-    radial = positions.xy / positions.separation[:, None]
-    across = np.stack([radial[:, 1], -radial[:, 0]], axis=-1)
-    along_error, across_error = (
-        np.sqrt(np.einsum("ni,nij,nj->n", unit, positions.covariance, unit))
-        for unit in (radial, across)
-    )
+    along_error, angle_error = positions.polar_errors
     keys = {night: f"n{number}" for number, night in enumerate(dict.fromkeys(positions.night), 1)}
     lines = []
     for row in range(len(positions)):
         separation, angle = positions.separation[row], positions.position_angle[row]
-        angle_error = min(float(np.degrees(across_error[row] / separation)), 180.0)
         lines.append(
             Place(
                 night=positions.night[row],
@@ -270,7 +289,7 @@ def places(bundle: Bundle) -> list[Place]:
                 separation=float(separation),
                 separation_text=" ± ".join(rounded(separation, along_error[row])),
                 angle=float(angle),
-                angle_text=" ± ".join(rounded(angle, angle_error)),
+                angle_text=" ± ".join(rounded(angle, angle_error[row])),
                 contrast=float(positions.contrast[row]),
                 contrast_text=" ± ".join(
                     filter(None, rounded(positions.contrast[row], positions.contrast_error[row]))
@@ -291,15 +310,12 @@ def speeds(bundle: Bundle) -> list[Speed]:
     measured = bundle.velocities
     if measured is None:
         return []
-    primary, companion = (v[0] for v in bundle.best.velocities(measured.mjd))
-    model = np.stack([primary, companion, companion - primary])
-    rest = measured.velocity - model[measured.star, np.arange(len(measured))]
-    stars = ("primary", "companion", "companion − primary")
+    rest = bundle.velocity_residuals()
     return [
         Speed(
             date=show_date(measured.mjd[row], minutes=True),
             mjd=float(measured.mjd[row]),
-            star=stars[measured.star[row]],
+            star=_STARS[measured.star[row]],
             instrument=measured.instrument[row],
             velocity=float(measured.velocity[row]),
             velocity_text=" ± ".join(rounded(measured.velocity[row], measured.error[row])),

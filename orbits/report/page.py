@@ -11,7 +11,17 @@ from ..fitting.solution import Solution
 from ..progress import SILENT, Silent
 from ..provenance import history, versions
 from ..system import System
-from .content import Content, NightMap, headline, inputs, places, quantities, speeds, statements
+from .content import (
+    Content,
+    NightMap,
+    headline,
+    inputs,
+    observed,
+    places,
+    quantities,
+    speeds,
+    statements,
+)
 from .pictures import inline_png, inline_svg
 
 
@@ -45,6 +55,7 @@ def gather(system: System, *, seed: int, progress: Silent = SILENT) -> Content:
     return Content(
         name=solution.name,
         headline=headline(solution),
+        observed=observed(solution),
         quantities=quantities(solution),
         fit=dict(solution.account),
         statements=statements(solution),
