@@ -164,6 +164,8 @@ def posterior(
 ) -> EpochPosterior:
     """Sample the posterior of a companion in one epoch; the arguments are those of `search`.
 
+    A companion that the search does not resolve keeps the diameter that it has there.
+
     Raises
     ------
     InputError

@@ -15,7 +15,10 @@ def clear():
     rng = np.random.default_rng(4)
     truth = {"x": -7.3, "y": 9.1, "contrast": 0.08, "primary_diameter": 1.2}
     observation = fill(four_stations(exposures=2, channels=3), rng, **truth)
-    return posterior(observation, field=20 * u.mas, live_points=100, rng=np.random.default_rng(1))
+    return posterior(
+        observation, field=20 * u.mas, companion_diameter=0 * u.mas, live_points=100,
+        rng=np.random.default_rng(1),
+    )  # fmt: skip
 
 
 def test_clear_detection_agrees_with_its_covariance(clear):
