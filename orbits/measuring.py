@@ -6,6 +6,7 @@ from pathlib import Path
 
 import numpy as np
 
+from .companion.covariance import ErrorModel
 from .companion.result import Candidate, SearchResult
 from .companion.search import FALSE_ALARM, search
 from .errors import InputError, NothingFound
@@ -24,7 +25,8 @@ class Night:
 
     observation: Observation
     result: SearchResult | None
-    """None where no position fits better than a single star."""
+    """None where nothing could be found, for the `reason`."""
+    reason: str = ""
 
     @property
     def label(self) -> str:
@@ -88,9 +90,7 @@ def positions(nights: Sequence[Night]) -> Positions:
     text = {
         "night": [night.label for night, _ in rows],
         "instrument": [night.observation.instrument for night, _ in rows],
-        "source": [
-            " ".join(Path(file).name for file in night.observation.files) for night, _ in rows
-        ],
+        "source": [" ".join(night.sources) for night, _ in rows],
     }
     return Positions(
         mjd=tdb_of_utc([night.observation.mjd for night, _ in rows]),
@@ -111,8 +111,14 @@ def _measure_night(system: System, observation: Observation, rng: np.random.Gene
         for name, value in (("field", system.field), ("diameter", system.diameter))
         if value is not None
     }
+    errors = ErrorModel(
+        shared_baselines=system.shared_baselines,
+        v2_calibration=system.v2_calibration,
+        t3_calibration=float(np.radians(system.t3_calibration)),
+    )
     try:
-        result = search(observation, rng=rng, **lengths)
-    except NothingFound:
-        result = None
+        result = search(observation, errors=errors, rng=rng, **lengths)
+    except (NothingFound, InputError) as error:
+        # One night with nothing in it, or with too few data, does not hold up the others.
+        return Night(observation=observation, result=None, reason=str(error))
     return Night(observation=observation, result=result)

@@ -3,6 +3,7 @@
 name = "Harrow 7"
 [nights]
 files = ["nights/*.fits"]      # OIFITS, relative to this file
+v2_calibration = 0.02          # an error that all channels of a baseline share
 [positions]
 tables = ["positions.ecsv"]
 [velocities]
@@ -53,6 +54,12 @@ class System:
     """Uniform-disc diameter of the primary, mas; fitted where None."""
     flip_phase: bool = False
     """The OIFITS files use the opposite sign of phase."""
+    shared_baselines: bool = False
+    """Closure phases share the noise of their baselines."""
+    v2_calibration: float = 0.0
+    """Error of V2 that all channels of a baseline share, as a part of V2."""
+    t3_calibration: float = 0.0
+    """Error of the closure phase that all channels of a triangle share, deg."""
     positions: tuple[Path, ...] = ()
     velocities: tuple[Path, ...] = ()
     parallax: Parallax | None = None
@@ -94,11 +101,19 @@ def read_system(path: Path) -> System:
     )
 
 
-_NIGHTS = ("target", "field", "diameter", "flip_phase")
+_NIGHTS = {
+    "target": str,
+    "field": float,
+    "diameter": float,
+    "flip_phase": bool,
+    "shared_baselines": bool,
+    "v2_calibration": float,
+    "t3_calibration": float,
+}
 
 SCHEMA: dict[str, Any] = {
     "name": str,
-    "nights": {"files": list, "target": str, "field": float, "diameter": float, "flip_phase": bool},
+    "nights": {"files": list, **_NIGHTS},
     "positions": {"tables": list},
     "velocities": {"tables": list},
     "parallax": {"value": float, "error": float},

@@ -6,10 +6,19 @@ import astropy.units as u
 import numpy as np
 import pytest
 from astropy.time import Time
+from numpy.testing import assert_allclose
 
-from orbits import NothingFound, read_positions, read_system, write_positions
+from orbits import (
+    ErrorModel,
+    NothingFound,
+    read_positions,
+    read_system,
+    search,
+    write_positions,
+)
 from orbits.demo import scenario
 from orbits.measuring import measure, positions
+from orbits.simulation.nights import Spectrum
 from orbits.simulation.outputs import simulate
 
 
@@ -51,3 +60,33 @@ def test_no_companion_is_claimed_where_there_is_none(three_nights, tmp_path):
     assert not any(night.detected for night in nights)
     with pytest.raises(NothingFound, match="none of 1 nights shows a companion"):
         positions(nights)
+
+
+def test_a_night_with_too_few_data_is_passed_over_with_its_reason(three_nights, tmp_path):
+    array = three_nights.array
+    poor = replace(
+        three_nights,
+        array=replace(array, stations=array.stations[:2], local=array.local[:2]),
+        spectrum=Spectrum.even("NARROW", 1.6e-6, 1.65e-6, 1),
+        nights=replace(three_nights.nights, dates=three_nights.nights.dates[:1], exposures=2),
+    )
+    (night,) = measured(poor, tmp_path)
+    assert not night.detected
+    assert "2 independent data" in night.reason
+
+
+def test_errors_that_channels_share_are_taken_into_account(three_nights, tmp_path):
+    """The keys of [nights] reach the search, which answers as if it were asked directly."""
+    one = replace(three_nights, nights=replace(three_nights.nights, dates=(60345.0,)))
+    path = simulate(one, tmp_path, rng=np.random.default_rng(3))
+    path.write_text(
+        path.read_text().replace("[nights]", "[nights]\nv2_calibration = 0.3\nt3_calibration = 4")
+    )
+    (shared,) = measure(read_system(path), rng=np.random.default_rng(3))
+    errors = ErrorModel(v2_calibration=0.3, t3_calibration=np.radians(4.0))
+    alone, asked = (
+        search(shared.observation, errors=given, noise_searches=0).best.covariance_xy_mas2
+        for given in (None, errors)
+    )
+    assert_allclose(shared.result.best.covariance_xy_mas2, asked, rtol=1e-6)
+    assert np.linalg.det(asked) > np.linalg.det(alone)

@@ -46,6 +46,7 @@ def measure(
                         "night": night.label,
                         "mjd": night.observation.mjd,
                         "detected": night.detected,
+                        "reason": None if night.detected else _why_not(night),
                         "solutions": [one.to_json() for one in night.candidates],
                     }
                     for night in nights
@@ -63,7 +64,7 @@ def _table(nights) -> str:
     for night in nights:
         when = night.label.split()[0]
         if not night.detected:
-            lines.append(f"{when}  no companion claimed")
+            lines.append(f"{when}  no companion claimed: {_why_not(night)}")
             continue
         for one in night.candidates:
             lines.append(
@@ -74,3 +75,10 @@ def _table(nights) -> str:
             )
             when = ""
     return "\n".join(lines)
+
+
+def _why_not(night) -> str:
+    if night.reason:
+        return night.reason
+    chance = night.candidates[0].false_alarm_probability
+    return f"noise alone looks as good in {chance:.2g} of its searches"

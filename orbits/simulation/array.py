@@ -45,7 +45,7 @@ class Array:
     @property
     def triangles(self) -> np.ndarray:
         """(n_triangles, 3) indices of the stations of each triangle."""
-        return np.array(list(combinations(range(len(self.stations)), 3))).reshape(-1, 3)
+        return np.array(list(combinations(range(len(self.stations)), 3)), dtype=int).reshape(-1, 3)
 
     @property
     def _axes(self) -> np.ndarray:
