@@ -1,0 +1,92 @@
+"""The command lines of limits, spectrum, posterior and of companions put into files."""
+
+import json
+
+import numpy as np
+import pytest
+
+from orbits.binary import predict
+from orbits.cli import app
+from orbits.cli.frame import run
+from orbits.simulation.array import Array
+from orbits.simulation.export import night_file
+from orbits.simulation.nights import Noise, Spectrum, blank_night, observe
+
+
+@pytest.fixture
+def night(tmp_path, rng):
+    array = Array(
+        name="FOUR", latitude=-24.6, longitude=-70.4, diameter=1.0, stations=("A", "B", "C", "D"),
+        local=np.array([[0, 0, 0], [48, 22, 0], [-35, 81, 0], [66, 103, 0]], float),
+    )  # fmt: skip
+    spectrum = Spectrum.even("K", 2.0e-6, 2.4e-6, 3)
+    blank = blank_night(
+        array, spectrum, target="Harrow 9", ra=40.0, dec=-30.0, mjd=60000.1 + np.arange(2) / 24
+    )
+    noise = Noise(v2_floor=0.01, closure_phase=0.01)
+    taken = observe(blank, lambda one: predict(one, primary_diameter=1.0), noise, rng)
+    path = tmp_path / "night.fits"
+    night_file(taken, array, spectrum, ra=40.0, dec=-30.0).write(path)
+    return path
+
+
+def command(monkeypatch, capsys, *arguments):
+    """Exit code, stdout and stderr of a command."""
+    monkeypatch.setattr("sys.argv", ["nodeline", *map(str, arguments)])
+    code = run(app)
+    return code, *capsys.readouterr()
+
+
+QUICK = ("--field", 15, "--positions", 9, "--injections", 20)
+
+
+def test_limits_writes_tables_and_a_picture_once(night, tmp_path, monkeypatch, capsys):
+    system = tmp_path / "harrow.toml"
+    system.write_text(
+        'name = "Harrow 9"\n[nights]\nfiles = ["night.fits"]\n[parallax]\nvalue = 12.0\n'
+        "error = 0.2\n[primary]\nmagnitude = 4.9\n"
+    )
+    arguments = ("limits", system, *QUICK, "--json", "--output", tmp_path / "out")
+    code, out, words = command(monkeypatch, capsys, *arguments)
+    assert code == 0, words
+    told = json.loads(out)
+    assert told["parallax_mas"] == 12.0
+    assert told["primary_magnitude"] == 4.9
+    assert len(told["curve"]) == 20
+    names = {path.name for path in (tmp_path / "out").iterdir()}
+    assert names == {"limits.ecsv", "limits-map.ecsv", "completeness.ecsv", "limits.png"}
+    assert command(monkeypatch, capsys, *arguments)[0] == 3
+
+
+def test_companion_goes_in_and_comes_out(night, tmp_path, monkeypatch, capsys):
+    lit, dark = tmp_path / "lit.fits", tmp_path / "dark.fits"
+    place = ("9", "140", "0.06")
+    code, out, _ = command(
+        monkeypatch, capsys, "simulate", night, "--inject", *place, "--output", lit, "--json"
+    )
+    assert code == 0
+    assert json.loads(out)["injected"] is True
+    code, out, _ = command(
+        monkeypatch, capsys, "spectrum", lit, "--field", 15, "--output", tmp_path / "s.ecsv",
+        "--picture", tmp_path / "s.png", "--json",
+    )  # fmt: skip
+    assert code == 0
+    assert len(json.loads(out)["channels"]) == 3
+    code, out, _ = command(
+        monkeypatch, capsys, "posterior", lit, "--field", 15, "--live-points", 50, "--json",
+        "--positions", tmp_path / "positions.ecsv",
+    )  # fmt: skip
+    assert code == 0
+    assert json.loads(out)["log_evidence_against_single_star"] > 10
+    code, _, _ = command(monkeypatch, capsys, "simulate", lit, "--remove", *place, "--output", dark)
+    assert code == 0
+    assert command(monkeypatch, capsys, "spectrum", dark, "--field", 15)[0] == 4
+
+
+def test_wrong_usage_is_said(night, tmp_path, monkeypatch, capsys):
+    assert command(monkeypatch, capsys, "limits", night, "--confidence", 1.5)[0] == 2
+    both = ("--inject", 1, 2, 0.1, "--remove", 1, 2, 0.1)
+    out = tmp_path / "x.fits"
+    assert command(monkeypatch, capsys, "simulate", night, *both, "--output", out)[0] == 2
+    wrong = ("--inject", 1, 2, 3.0)
+    assert command(monkeypatch, capsys, "simulate", night, *wrong, "--output", out)[0] == 2
