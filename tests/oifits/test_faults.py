@@ -6,7 +6,7 @@ import pytest
 from astropy.io import fits
 
 from orbits import InputError, read
-from orbits.oifits import Flux, load
+from orbits.oifits import Flux, Wavelength, load
 from orbits.oifits.checking import check
 from orbits.problems import Severity
 
@@ -121,6 +121,13 @@ FAULTS = {
     "errors beyond belief": (
         every("OI_VIS2", "VIS2ERR", lambda e: e * 1e-6),
         SUSPICIOUS, r"VIS2ERR is typically 2e-08", KEPT,
+    ),
+    "errors far below the scatter between channels": (
+        every("OI_T3", "T3PHIERR", lambda e: e * 1e-3),
+        SUSPICIOUS, r"T3PHIERR is \d+ times smaller than the scatter between neighb", KEPT,
+    ),
+    "everything flagged": (
+        values("OI_T3", "FLAG", True, slice(None)), SUSPICIOUS, r"every datum is fl", (18, 0),
     ),
     "V2 far above 1": (
         values("OI_VIS2", "VIS2DATA", 1.9), SUSPICIOUS, r"far outside 0 to 1 in row 1", KEPT,
@@ -292,6 +299,22 @@ def test_errors_without_a_unit_share_that_of_their_data(rng, tmp_path):
     other = read(damaged(rng, tmp_path / "other", in_radians))
     # Twice a conversion there and back: two roundings each of 2^-53, of errors that are the same.
     np.testing.assert_allclose(other.t3.error, plain.t3.error, rtol=1e-15)
+
+
+def test_a_bright_companion_is_no_sign_of_small_errors(rng):
+    """One as bright as the primary, 30 mas away, turns phases wildly from channel to channel."""
+    file = make.small(rng)
+    waves = np.linspace(1.5e-6, 1.7e-6, 8)
+    file.wavelengths = [Wavelength(insname="SIM_H", eff_wave=waves, eff_band=np.full(8, 2.5e-8))]
+    turns = file.data[1].legs @ np.array([20, 22.0]) * np.radians(1 / 3.6e6)
+    a, b = (np.exp(-2j * np.pi * turns[:, k, None] / waves) for k in (0, 1))
+    dimmed = 0.9
+    phase = np.degrees(np.angle((1 + dimmed * a) * (1 + dimmed * b) * np.conj(1 + dimmed * a * b)))
+    table = make.t3(rng, nwave=8)
+    table.t3phi[:], table.t3phierr[:] = phase, 0.2
+    file.data = [table]
+    assert np.median(np.abs(np.diff(phase, axis=1))) > 10  # the test of the test
+    assert not any("smaller than the scatter" in p.what for p in check(file))
 
 
 def test_data_given_twice_are_noticed_in_one_file_and_in_two(rng, tmp_path):

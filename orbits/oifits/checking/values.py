@@ -10,6 +10,9 @@ from ..observables import KINDS, Kind, sound, unnormalised, usable
 
 TOO_SMALL = 30.0
 """Scatter over error beyond which errors are called far too small: one and a half decades."""
+ROUGH = 300.0
+"""The same for the scatter between channels, to which a companion far out contributes: bright ones
+make neighbouring closure phases differ by tens of degrees, hundreds of times the best errors."""
 BEST_V2, BEST_PHASE = 1e-6, 1e-4
 """Errors (of V2; of closure phase, deg) that no interferometer has come near."""
 SHORT_TIME = 15 / 1440
@@ -31,6 +34,13 @@ def errors(file: OIFile, log: Log) -> None:
                     log.unusable(
                         table.label, f"column {error} is {what} in {_where(bad)}", "left out"
                     )
+
+
+def nothing_left(file: OIFile, log: Log) -> None:
+    """Not every datum is flagged."""
+    for table in file.data:
+        if len(table) and table.flag.all():
+            log.suspicious(table.label, "every datum is flagged", "nothing of it is used")
 
 
 def missing_values(file: OIFile, log: Log) -> None:
@@ -135,14 +145,18 @@ def tiny_errors(file: OIFile, log: Log) -> None:
                     "used as it is; scale it, or set a floor",
                 )
                 continue
-            ratio = _scatter(table, kind, keep)
-            if ratio > TOO_SMALL:
-                log.suspicious(
-                    table.label,
-                    f"column {kind.error} is {ratio:.0f} times smaller than the scatter between "
-                    "repeated measurements",
-                    "used as it is; scale it, or set a floor",
-                )
+            for ratio, limit, between in (
+                (_scatter(table, kind, keep), TOO_SMALL, "repeated measurements"),
+                (_roughness(table, kind, keep), ROUGH, "neighbouring channels"),
+            ):
+                if ratio > limit:
+                    log.suspicious(
+                        table.label,
+                        f"column {kind.error} is {ratio:.0f} times smaller than the scatter "
+                        f"between {between}",
+                        "used as it is; scale it, or set a floor",
+                    )
+                    break
 
 
 def _scatter(table: BaselineTable, kind: Kind, keep: np.ndarray) -> float:
@@ -158,9 +172,31 @@ def _scatter(table: BaselineTable, kind: Kind, keep: np.ndarray) -> float:
     if np.count_nonzero(both) < 20:
         return 0.0
     difference = table[kind.value][now][both] - table[kind.value][then][both]
+    sigma = np.hypot(table[kind.error][now][both], table[kind.error][then][both])
+    return _typical(difference, sigma, kind)
+
+
+def _roughness(table: BaselineTable, kind: Kind, keep: np.ndarray) -> float:
+    """Median ratio of second difference and its error, for channels and both their neighbours."""
+    if keep.shape[1] < 3:
+        return 0.0
+    rows = slice(None, None, 1 + keep.size // 100_000)
+    value, error, keep = table[kind.value][rows], table[kind.error][rows], keep[rows]
+    three = keep[:, :-2] & keep[:, 1:-1] & keep[:, 2:]
+    if np.count_nonzero(three) < 4:  # of which one wild datum cannot be the median
+        return 0.0
+    low, middle, high = (
+        (value[:, k : k + three.shape[1]][three], error[:, k : k + three.shape[1]][three])
+        for k in range(3)
+    )
+    sigma = np.sqrt(low[1] ** 2 + 4 * middle[1] ** 2 + high[1] ** 2)
+    return _typical(low[0] - 2 * middle[0] + high[0], sigma, kind)
+
+
+def _typical(difference: np.ndarray, sigma: np.ndarray, kind: Kind) -> float:
+    """Median ratio of differences and their errors: 1 if they are normal deviates of those."""
     if kind.phase:
         difference = np.remainder(difference + 180, 360) - 180
-    sigma = np.hypot(table[kind.error][now][both], table[kind.error][then][both])
     return float(np.median(np.abs(difference) / sigma)) / 0.6745  # median of |normal deviate|
 
 
@@ -181,6 +217,7 @@ def _where(bad: np.ndarray) -> str:
 
 CHECKS = (
     errors,
+    nothing_left,
     missing_values,
     range_of_v2,
     amplitudes,
