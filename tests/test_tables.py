@@ -169,7 +169,7 @@ def test_polar_errors_are_the_axes_of_an_ellipse_along_the_radius():
     """An ellipse whose major axis points at the primary, one across, and one that holds it."""
     angle = np.array([30.0, 200.0, 30.0])
     xy = np.stack(offsets(np.array([5.0, 8.0, 0.01]), angle), axis=-1)
-    turned = angle + [0.0, 90.0, 0.0]
+    turned = angle + np.array([0.0, 90.0, 0.0])
     covariance = ellipse_covariance(np.full(3, 0.2), np.full(3, 0.1), turned)
     blank = np.full(3, "", dtype=object)
     found = Positions(
