@@ -15,7 +15,8 @@ def inspect(
     target: Annotated[str | None, typer.Option(help="Only this target.")] = None,
     instrument: Annotated[str | None, typer.Option(help="Only this INSNAME.")] = None,
     dates: Annotated[
-        tuple[str, str] | None, typer.Option(help="Only from one date to another.")
+        tuple[str, str] | None,
+        typer.Option(help="Only from one date (0 h UTC if no time is given) to another."),
     ] = None,
     wavelengths: Annotated[Between | None, typer.Option(help="Only between these, um.")] = None,
     baselines: Annotated[Between | None, typer.Option(help="Only between these, m.")] = None,
@@ -30,6 +31,9 @@ def inspect(
     ] = False,
     plot: Annotated[
         Path | None, typer.Option(help="Draw coverage, V2 and closure phases to this file.")
+    ] = None,
+    colour: Annotated[
+        str | None, typer.Option(help="What colours of --plot mean: time or wavelength.")
     ] = None,
     convert: Annotated[
         Path | None, typer.Option(help="Write what is selected to this file, as OIFITS 2.")
@@ -56,6 +60,8 @@ def inspect(
 
     if plot and plot.suffix.lower() not in (".png", ".pdf", ".svg"):
         raise typer.BadParameter("the name of a picture ends in .png, .pdf or .svg")
+    if colour not in (None, "time", "wavelength"):
+        raise typer.BadParameter(f"--colour is time or wavelength, not {colour!r}")
     refuse_existing(*(path for path in (plot, convert) if path), force=force)
     selection = _selection(instrument, dates, wavelengths, baselines, tuple(station or ()))
     parts, results = [], []
@@ -75,7 +81,7 @@ def inspect(
     whole.problems += together
     outcome: dict[str, Any] = {"files": results}
     if plot:
-        _draw(whole, plot, force=force)
+        _draw(whole, plot, colour, force=force)
         outcome["plot"] = str(plot)
         say(f"drawn: {plot}", json=json)
     if convert:
@@ -111,12 +117,12 @@ def _selection(instrument, dates, wavelengths, baselines, stations):
     )
 
 
-def _draw(file, path: Path, *, force: bool) -> None:
+def _draw(file, path: Path, colour: str | None, *, force: bool) -> None:
     from ..oifits.epochs import observations
     from ..plots.coverage import draw_coverage
     from ..plots.style import save
 
-    save(draw_coverage(observations(file)), path, force=force)
+    save(draw_coverage(observations(file), by=colour), path, force=force)
 
 
 def _verdict(breaches: list) -> str:

@@ -50,7 +50,7 @@ def draw_coverage(observations: list[Observation], *, by: str | None = None) -> 
     longest = t3.baselines / t3.wavelength
     _against_frequency(phase, t3, longest, shade, np.degrees(1.0))
     visibility.set_ylabel("squared visibility")
-    visibility.set_ylim(min(-0.05, *_span(v2)), max(1.05, *_span(v2)))
+    _frame(visibility, v2)
     phase.set_ylabel("closure phase (deg)")
     visibility.set_xlabel("spatial frequency (10⁶/rad)")
     phase.set_xlabel("that of the longest side (10⁶/rad)")
@@ -124,9 +124,14 @@ def _against_frequency(
     axes.set_xlim(0, 1.03 * x.max())
 
 
-def _span(part: Observable) -> tuple[float, float]:
-    """Range that holds nearly all values: a few wild ones must not flatten the others."""
-    if not len(part):
-        return 0.0, 1.0
-    low, high = np.percentile(part.value, [0.5, 99.5])
-    return float(low), float(high)
+def _frame(axes: "Axes", part: Observable) -> None:
+    """Show 0 to 1 and nearly all values: a few wild ones must not flatten the others, but count."""
+    low, high = np.percentile(part.value, [0.5, 99.5]) if len(part) else (0.0, 1.0)
+    edges = min(-0.05, 1.1 * low), max(1.05, 1.1 * high)
+    axes.set_ylim(*edges)
+    beyond = np.count_nonzero((part.value < edges[0]) | (part.value > edges[1]))
+    if beyond:
+        axes.text(
+            0.97, 0.97, f"{beyond} beyond the frame",
+            ha="right", va="top", transform=axes.transAxes, color=style.QUIET,
+        )  # fmt: skip

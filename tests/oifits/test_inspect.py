@@ -9,7 +9,7 @@ import pytest
 from orbits import read
 from orbits.cli import app
 from orbits.cli.frame import run
-from orbits.oifits import load
+from orbits.oifits import load, observations
 from orbits.oifits.inspection import inspect
 
 MAS = np.pi / 180 / 3600 / 1000
@@ -173,6 +173,11 @@ def test_a_picture_is_drawn_of_the_data(nodeline, full, tmp_path):
     assert code == 0
     assert picture.read_bytes().startswith(b"\x89PNG")
     assert nodeline("inspect", full, "--plot", tmp_path / "night.gif")[0] == 2
+    other = tmp_path / "by_time.svg"
+    options = ("--target", "Harrow 7", "--plot", other)
+    assert nodeline("inspect", full, *options, "--colour", "mood")[0] == 2
+    assert nodeline("inspect", full, *options, "--colour", "time")[0] == 0
+    assert "MJD" in other.read_text()
 
 
 def test_the_drawing_shows_every_datum_where_it_was_measured(rng, tmp_path):
@@ -189,3 +194,16 @@ def test_the_drawing_shows_every_datum_where_it_was_measured(rng, tmp_path):
     np.testing.assert_allclose(drawn[:, 0], frequency.ravel() / 1e6, rtol=1e-12)
     np.testing.assert_array_equal(drawn[:, 1], table.vis2data.ravel())
     assert len(phase.collections[-1].get_offsets()) == 12
+    assert not visibility.texts
+
+
+def test_data_beyond_the_frame_are_counted(rng, tmp_path):
+    from orbits.plots.coverage import draw_coverage
+
+    file = make.small(rng)
+    file.data = [make.vis2(rng, night=0.01 * k) for k in range(60)]  # 1080 data
+    file.data[0].vis2data[0, :2] = [40.0, -7.0]
+    (observation,) = observations(file)
+    visibility = draw_coverage([observation]).axes[1]
+    assert [text.get_text() for text in visibility.texts] == ["2 beyond the frame"]
+    assert visibility.get_ylim() == (-0.05, 1.05)
