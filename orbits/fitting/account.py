@@ -213,7 +213,8 @@ def notes(data: Data, *, confined: bool) -> list[str]:
     said = []
     if not confined:
         said.append(
-            "The data do not confine the orbit to compact solutions: the plain priors were sampled."
+            "The data do not confine the orbit to compact solutions: "
+            "all that the priors allow was searched."
         )
     if data.positions is not None and data.velocities is None:
         said.append(

@@ -14,6 +14,7 @@ from .adaptation import adapt
 from .data import Data, make_data
 from .knowledge import check_knowledge
 from .laplace import normals
+from .linear import LinearTarget
 from .model import Model
 from .nested import sample
 from .posterior import equal_weight, sample_table
@@ -33,9 +34,10 @@ NEGLIGIBLE = 16.0
 """A solution whose ln evidence is lower by this much than the best is not kept."""
 TRUSTED = 0.15
 """Efficiency below which the adapted proposal may have missed a part of the posterior: the data do
-not confine the orbit, and the plain prior takes over."""
+not confine the orbit, and the prior takes over, but for what is linear in the data."""
 CHECKS = 10_000
-"""Draws of the proposal that check the evidence."""
+LINEAR_CHECKS = 200_000
+"""Draws of the proposal that check the evidence; many where it is wide."""
 
 
 def fit(
@@ -87,7 +89,8 @@ def fit(
 def propose(data: Data, found: Scan, rng: np.random.Generator) -> tuple[Target, float]:
     """The adapted proposal around the solutions that the scan leads to, and its efficiency.
 
-    Where that is too low to be trusted, the proposal is the prior.
+    Where that is too low to be trusted, the proposal is the prior, with the Thiele-Innes constants
+    drawn as the data want them if the positions are simple enough for that.
     """
     most = DOUBTFUL_STARTS if doubtful(data) else STARTS
     fits = refine(data, found, most=most, rng=rng)
@@ -97,6 +100,8 @@ def propose(data: Data, found: Scan, rng: np.random.Generator) -> tuple[Target, 
         data, Proposal.around(kept[:SOLUTIONS], data.space.dimensions), rng
     )
     if efficiency < TRUSTED:
+        if LinearTarget.suits(data):
+            return LinearTarget(data), efficiency
         proposal = Proposal.prior(data.space.dimensions)
     return Target(data, proposal), efficiency
 
@@ -145,7 +150,7 @@ def _solution(data, found, target, efficiency, run, name, rng, begin) -> Solutio
     samples.insert(0, "solution", label)
     top = int(np.argmax(target.log_likelihood(points)))
     best = samples.drop(columns="solution").iloc[top].to_dict()
-    check = importance(target, rng) if len(target.proposal) else {}
+    check = _check(target, rng)
     account = {
         "log_evidence": run.log_evidence,
         "log_evidence_err": run.log_evidence_error,
@@ -180,11 +185,18 @@ def _solution(data, found, target, efficiency, run, name, rng, begin) -> Solutio
     )
 
 
-def importance(target: Target, rng: np.random.Generator) -> dict:
+def _check(target: Target, rng: np.random.Generator) -> dict:
+    """A second estimate of the evidence, where plain draws of the proposal can give one."""
+    if isinstance(target, LinearTarget):
+        return importance(target, rng, LINEAR_CHECKS)
+    return importance(target, rng, CHECKS) if len(target.proposal) else {}
+
+
+def importance(target: Target, rng: np.random.Generator, count: int) -> dict:
     """ln evidence and its error from plain draws of the proposal: it checks the nested sampling."""
-    log_weight = target.log_weight(target.draw(CHECKS, rng))
+    log_weight = target.log_weight(target.draw(count, rng))
     most = log_weight.max()
     weight = np.exp(log_weight - most)
-    error = weight.std() / weight.mean() / np.sqrt(CHECKS)
+    error = weight.std() / weight.mean() / np.sqrt(count)
     value = most + np.log(weight.mean())
     return {"log_evidence_check": {"value": float(value), "error": float(error)}}

@@ -12,7 +12,7 @@ IMPOSSIBLE = -1e300
 WALK_BELOW = 4.0
 """Acceptance, per cent, below which a walk within ellipsoids finds new points sooner."""
 WALK, LONG_WALK = 30, 100
-"""Steps of a walk; long where only the prior leads to a posterior that may be narrow and bent."""
+"""Steps of a walk; long where no normal densities lead to a posterior that is narrow and bent."""
 REMAINDER = 0.5
 """The run ends when the live points can add no more than this to ln of the evidence."""
 
