@@ -14,7 +14,14 @@ from astropy.table import Table
 
 from .errors import InputError
 
-CSV_UNITS = {"mas": u.mas, "arcsec": u.arcsec, "deg": u.deg, "kms": u.km / u.s, "d": u.day}
+CSV_UNITS = {
+    "mas": u.mas,
+    "arcsec": u.arcsec,
+    "deg": u.deg,
+    "kms": u.km / u.s,
+    "d": u.day,
+    "msun": u.solMass,
+}
 
 
 @dataclass(frozen=True)
@@ -49,6 +56,12 @@ def read_table(path: Path, columns: Sequence[Column]) -> Table:
             _text(raw[name]) if column.text else _number(path, raw[name], unit, column)
         )
     return result
+
+
+def csv_name(name: str, unit: u.UnitBase | None) -> str:
+    """What a column is called in CSV, where it carries its unit in its name."""
+    ending = next((ending for ending, known in CSV_UNITS.items() if known == unit), None)
+    return name if ending is None else f"{name}_{ending}"
 
 
 def require(path: Path, table: Table, *names: str) -> None:

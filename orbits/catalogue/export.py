@@ -7,7 +7,7 @@ import numpy as np
 from ..errors import InputError
 from ..files import whole_file
 from ..rounding import latex
-from .entry import full_name
+from ..tables import csv_name
 from .table import Catalogue
 
 FORMATS = (".ecsv", ".csv", ".vot", ".tex")
@@ -16,7 +16,8 @@ FORMATS = (".ecsv", ".csv", ".vot", ".tex")
 def export(catalogue: Catalogue, path: Path, *, force: bool = False) -> None:
     """Write `catalogue` to `path` in the format of its ending: .ecsv, .csv, .vot or .tex.
 
-    CSV has the units in the names of its columns (``period_d``, ``period_err_d``).
+    CSV has the units in the names of its columns (``period_d``, ``period_error_d``), and can be
+    read as a catalogue again; so can ECSV.
 
     Raises
     ------
@@ -32,9 +33,7 @@ def export(catalogue: Catalogue, path: Path, *, force: bool = False) -> None:
         elif path.suffix == ".csv":
             table = catalogue.table
             for name in table.colnames:
-                if table[name].dtype.kind == "f":
-                    stem = name.removesuffix("_error")
-                    table.rename_column(name, full_name(stem, error=name != stem))
+                table.rename_column(name, csv_name(name, table[name].unit))
             table.write(temporary, format="ascii.csv", overwrite=True)
         else:
             form = {".ecsv": "ascii.ecsv", ".vot": "votable"}[path.suffix]

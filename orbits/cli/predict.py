@@ -232,6 +232,7 @@ def _write(path: Path, tables, accounts, equinox: str, *, force: bool) -> None:
     from astropy.table import Table
 
     from ..files import whole_file
+    from ..tables import csv_name
     from ..times import utc_of_tdb
 
     table = Table(
@@ -245,9 +246,8 @@ def _write(path: Path, tables, accounts, equinox: str, *, force: bool) -> None:
         table[name].unit = _UNITS.get(name.removesuffix("_error"), "km/s")
     if path.suffix == ".csv":
         for name in table.colnames:
-            unit = {"km/s": "kms"}.get(str(table[name].unit), str(table[name].unit))
-            if name not in ("entry", "mjd"):
-                table.rename_column(name, f"{name}_{unit.replace(' / s', 's')}")
+            if name != "mjd":
+                table.rename_column(name, csv_name(name, table[name].unit))
     form = "ascii.ecsv" if path.suffix == ".ecsv" else "ascii.csv"
     with whole_file(path, force=force) as temporary:
         table.write(temporary, format=form, overwrite=True)

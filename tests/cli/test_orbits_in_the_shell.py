@@ -110,7 +110,12 @@ def test_export(nodeline, tmp_path, ending):
         from astropy.table import Table
 
         row = Table.read(path, format="ascii.csv")[0]
-        assert (row["period_d"], row["k1_err_kms"]) == (104.02128, 0.0044)
+        assert (row["period_d"], row["k1_error_kms"]) == (104.02128, 0.0044)
+        ours = Catalogue.read(packaged_catalogues()["published"]).find("Capella")
+        again = Catalogue.read(path).find("Capella")
+        known = {name: value for name, value in ours.numbers.items() if np.isfinite(value)}
+        assert {name: again.numbers[name] for name in known} == known
+        assert (again.aliases, again.source) == (ours.aliases, ours.source)
     elif ending == "vot":
         from astropy.table import Table
 
