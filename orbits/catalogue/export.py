@@ -41,6 +41,15 @@ def export(catalogue: Catalogue, path: Path, *, force: bool = False) -> None:
 
 
 _ANGLES = (("inclination", "i"), ("node", r"\Omega"), ("argument", r"\omega"))
+_FURTHER = (
+    ("k1", r"$K_1$ (km\,s$^{-1}$)"),
+    ("k2", r"$K_2$ (km\,s$^{-1}$)"),
+    ("parallax", r"$\varpi$ (mas)"),
+    ("total_mass", r"$M$ ($M_\odot$)"),
+    ("primary_mass", r"$M_1$ ($M_\odot$)"),
+    ("companion_mass", r"$M_2$ ($M_\odot$)"),
+)
+"""Columns that stand in the table where at least one orbit fills them."""
 _YEAR = 365.25
 _LONG = 2000.0
 """d; where half of the periods are longer they are given in Julian years."""
@@ -51,13 +60,16 @@ def _latex(catalogue: Catalogue) -> str:
     years = float(np.median(catalogue.column("period"))) > _LONG
     size, unit = (_YEAR, "yr") if years else (1.0, "d")
     head = ["System", f"$P$ ({unit})", r"$T_0$ (MJD)", "$e$", "$a$ (mas)"]
-    head += [rf"${symbol}$ (deg)" for _, symbol in _ANGLES] + ["Source"]
+    further = [(n, words) for n, words in _FURTHER if np.isfinite(catalogue.column(n)).any()]
+    head += [rf"${symbol}$ (deg)" for _, symbol in _ANGLES]
+    head += [*(words for _, words in further), "Source"]
     rows = []
     for entry in catalogue:
         number, error = entry.number, lambda name, entry=entry: entry.number(f"{name}_error")
         cells = [_escaped(entry.system)]
         cells.append(latex(number("period") / size, error("period") / size))
-        names = ("periastron", "eccentricity", "semimajor_axis", *(name for name, _ in _ANGLES))
+        names = ("periastron", "eccentricity", "semimajor_axis")
+        names += tuple(name for name, _ in (*_ANGLES, *further))
         cells += [latex(number(name), error(name)) for name in names]
         rows.append(" & ".join([*cells, _escaped(entry.source)]) + r" \\")
     return "\n".join(

@@ -106,6 +106,13 @@ def test_export(nodeline, tmp_path, ending):
         assert r"Capella & $104.02128 \pm 0.00016$ & $48147.1 \pm 2.6$" in text
         assert r"$0.00089 \pm 0.00011$ & $56.442 \pm 0.023$" in text
         assert r"Pavlovski \& Dotter" in text
+        # As published (Torres et al. 2015): 2.5687 and 2.4828 solar masses; no total is given.
+        assert r"$2.5687 \pm 0.0074$ & $2.4828 \pm 0.0067$ & Torres" in text
+        (head,) = (line for line in text.splitlines() if line.startswith("System"))
+        assert r"$M_1$ ($M_\odot$)" in head
+        assert r"$M$ ($M_\odot$)" not in head
+        (row,) = (line for line in text.splitlines() if line.startswith("Capella"))
+        assert row.count(" & ") == head.count(" & ")
     elif ending == "csv":
         from astropy.table import Table
 
