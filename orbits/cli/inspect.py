@@ -50,7 +50,7 @@ def inspect(
     from ..oifits.checking import check, check_together
     from ..oifits.converting import convert as write_copy
     from ..oifits.flipping import flipped
-    from ..oifits.inspection import in_words
+    from ..oifits.inspection import in_words, problem_entry
     from ..oifits.inspection import inspect as describe
     from ..oifits.joining import join
     from ..oifits.selecting import select
@@ -79,7 +79,9 @@ def inspect(
     together = check_together(whole)
     warn(together)
     whole.problems += together
-    outcome: dict[str, Any] = {"files": results}
+    if strict:
+        refuse_suspicious(whole.problems)
+    outcome: dict[str, Any] = {"files": results, "together": list(map(problem_entry, together))}
     if plot:
         _draw(whole, plot, colour, force=force)
         outcome["plot"] = str(plot)
@@ -97,8 +99,6 @@ def inspect(
         say(f"written: {convert}, {_verdict(breaches)}", json=json)
     if json:
         emit(outcome)
-    if strict:
-        refuse_suspicious(whole.problems)
 
 
 def _selection(instrument, dates, wavelengths, baselines, stations):

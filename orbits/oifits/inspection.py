@@ -39,7 +39,7 @@ def inspect(file: OIFile, breaches: Sequence[Breach] | None = None) -> dict[str,
         "correlations": sum(len(table) for table in file.correlations),
         **_reach(file),
         **_precision(file),
-        "problems": [_problem(problem) for problem in file.problems],
+        "problems": [problem_entry(problem) for problem in file.problems],
     } | verdict
 
 
@@ -173,7 +173,8 @@ def _precision(file: OIFile) -> dict[str, float]:
     return result
 
 
-def _problem(problem: Problem) -> dict[str, str]:
+def problem_entry(problem: Problem) -> dict[str, str]:
+    """A problem as an entry of the JSON of `nodeline inspect`."""
     return {
         "severity": str(problem.severity),
         "table": problem.table,

@@ -60,7 +60,7 @@ def test_json_is_one_object_and_nothing_else(nodeline, full):
     code, out, err = nodeline("inspect", full, "--json")
     result = json.loads(out)
     assert code == 0
-    assert list(result) == ["files"]
+    assert list(result) == ["files", "together"]
     assert result["files"][0]["file"] == str(full)
     assert "Harrow 7" in err
 
@@ -105,6 +105,21 @@ def test_strict_makes_the_suspicious_unusable(nodeline, rng, tmp_path):
     assert code == 3
     assert "suspicious" in out
     assert "refused as strictly asked: OI_VIS2 (HDU 4): column VIS2DATA is far outside" in err
+    copy = tmp_path / "copy.fits"
+    assert nodeline("inspect", tmp_path / "night.fits", "--strict", "--convert", copy)[0] == 3
+    assert not copy.exists()
+
+
+def test_files_that_hold_the_same_data_are_told(nodeline, rng, tmp_path):
+    file = make.small(rng)
+    paths = [tmp_path / "night.fits", tmp_path / "merged.fits"]
+    for path in paths:
+        file.write(path)
+    code, out, err = nodeline("inspect", *paths, "--json")
+    assert code == 0
+    told = [problem["what"] for problem in json.loads(out)["together"]]
+    assert told == [f"{n} rows of {paths[1]} are the same as in {paths[0]}" for n in (6, 4)]
+    assert f"{told[0]}; used twice" in err
 
 
 def test_a_copy_has_the_selection_and_the_history(nodeline, full, tmp_path):
