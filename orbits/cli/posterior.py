@@ -5,7 +5,7 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from .frame import Force, Json, Seed, emit, say
+from .frame import Force, Json, Seed, emit, say, warn
 
 if TYPE_CHECKING:
     from ..companion.posterior import EpochPosterior
@@ -67,6 +67,7 @@ def posterior(
             raise typer.BadParameter(f"{name} must be positive, got {value}")
     refuse_existing(*(path for path in (output, positions) if path), force=force)
     observation = read(files, target=target, night=night, flip_phase=flip_phase)
+    warn(observation.problems)
     result = sample(
         observation,
         field=mas(field),
