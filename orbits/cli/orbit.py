@@ -26,7 +26,9 @@ def orbit(
     pictures: Annotated[
         bool, typer.Option("--pictures", help="Also draw the joint distribution and the scan.")
     ] = False,
-    cores: Annotated[int, typer.Option(min=1, help="Threads; the result is the same.")] = 1,
+    cores: Annotated[
+        int, typer.Option(min=1, help="Threads for the scan; the result is the same.")
+    ] = 1,
     seed: Seed = 0,
     force: Force = False,
     json: Json = False,

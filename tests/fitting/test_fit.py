@@ -195,8 +195,14 @@ def test_further_knowledge_is_used():
 
 @pytest.mark.parametrize(
     "given",
-    [{"inclination": 90.0}, {"inclination": 0.0}, {"eccentricity": 0.0}, {"eccentricity": 0.95}],
-    ids=["edge-on", "face-on", "circular", "eccentric"],
+    [
+        {"inclination": 90.0},
+        {"inclination": 0.0},
+        {"eccentricity": 0.0},
+        {"eccentricity": 0.95},
+        {"eccentricity": 0.99},
+    ],
+    ids=["edge-on", "face-on", "circular", "eccentric", "very eccentric"],
 )
 def test_hard_geometries(given):
     rng = np.random.default_rng(15)
