@@ -13,6 +13,8 @@ TOO_SMALL = 30.0
 ROUGH = 300.0
 """The same for the scatter between channels, to which a companion far out contributes: bright ones
 make neighbouring closure phases differ by tens of degrees, hundreds of times the best errors."""
+SAMPLE = 100_000
+"""So many data tell what is typical of a table of any length."""
 BEST_V2, BEST_PHASE = 1e-6, 1e-4
 """Errors (of V2; of closure phase, deg) that no interferometer has come near."""
 SHORT_TIME = 15 / 1440
@@ -137,7 +139,8 @@ def tiny_errors(file: OIFile, log: Log) -> None:
         for table, kind, keep in _usable(file, name):
             if not keep.any():
                 continue
-            typical = float(np.median(table[kind.error][keep]))
+            error = table[kind.error][keep]
+            typical = float(np.median(error[:: 1 + error.size // SAMPLE]))
             if typical < best:
                 log.suspicious(
                     table.label,
@@ -180,7 +183,7 @@ def _roughness(table: BaselineTable, kind: Kind, keep: np.ndarray) -> float:
     """Median ratio of second difference and its error, for channels and both their neighbours."""
     if keep.shape[1] < 3:
         return 0.0
-    rows = slice(None, None, 1 + keep.size // 100_000)
+    rows = slice(None, None, 1 + keep.size // SAMPLE)
     value, error, keep = table[kind.value][rows], table[kind.error][rows], keep[rows]
     three = keep[:, :-2] & keep[:, 1:-1] & keep[:, 2:]
     if np.count_nonzero(three) < 4:  # of which one wild datum cannot be the median
