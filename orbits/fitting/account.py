@@ -19,6 +19,12 @@ SEPARATE = 4.0
 """Two densities whose centres lie this many of their standard deviations apart are two solutions,
 unless others bridge the gap."""
 
+DISAGREE = 4.0
+"""Standard errors beyond which two estimates of the evidence cannot both be right."""
+
+Estimate = tuple[float, float]
+"""A value and its standard error."""
+
 
 def solutions_of(target: Target, points: np.ndarray) -> np.ndarray:
     """(S,) number of the solution that each point belongs to, 0 the one with most points."""
@@ -206,6 +212,17 @@ _NAMES = {
     "log_k2": "k2_kms",
     "outlier_fraction": "outlier_fraction",
 }
+
+
+def disagreement(one: Estimate, other: Estimate) -> list[str]:
+    """A sentence where nested sampling and plain draws find different ln of the evidence."""
+    if abs(one[0] - other[0]) < DISAGREE * math.hypot(one[1], other[1]):
+        return []
+    return [
+        f"Nested sampling found ln evidence {one[0]:.2f} +- {one[1]:.2f}, plain draws of its "
+        f"proposal {other[0]:.2f} +- {other[1]:.2f}: weights of solutions and odds are no surer "
+        "than that; more live points help."
+    ]
 
 
 def notes(data: Data, *, confined: bool) -> list[str]:

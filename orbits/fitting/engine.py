@@ -9,7 +9,7 @@ from ..positions import Positions
 from ..progress import SILENT, Silent
 from ..system import Parallax
 from ..velocities import Velocities
-from .account import chi_square, nights, notes, solutions_of, undetermined
+from .account import Estimate, chi_square, disagreement, nights, notes, solutions_of, undetermined
 from .adaptation import adapt
 from .data import Data, make_data
 from .knowledge import check_knowledge
@@ -150,11 +150,9 @@ def _solution(data, found, target, efficiency, run, name, rng, begin) -> Solutio
     samples.insert(0, "solution", label)
     top = int(np.argmax(target.log_likelihood(points)))
     best = samples.drop(columns="solution").iloc[top].to_dict()
-    check = _check(target, rng)
     account = {
         "log_evidence": run.log_evidence,
         "log_evidence_err": run.log_evidence_error,
-        **check,
         "effective_samples": run.effective_samples,
         "likelihood_calls": run.calls,
         "proposal_efficiency": efficiency,
@@ -172,8 +170,12 @@ def _solution(data, found, target, efficiency, run, name, rng, begin) -> Solutio
         "model": {k: v for k, v in vars(data.model).items() if v},
         "priors": data.priors.to_json(),
         "notes": notes(data, confined=len(target.proposal) > 0),
-        "seconds": time.monotonic() - begin,
     }
+    check = _check(target, rng)
+    if check is not None:
+        account["log_evidence_check"] = {"value": check[0], "error": check[1]}
+        account["notes"] += disagreement((run.log_evidence, run.log_evidence_error), check)
+    account["seconds"] = time.monotonic() - begin
     return Solution(
         name=name,
         samples=samples,
@@ -185,18 +187,17 @@ def _solution(data, found, target, efficiency, run, name, rng, begin) -> Solutio
     )
 
 
-def _check(target: Target, rng: np.random.Generator) -> dict:
+def _check(target: Target, rng: np.random.Generator) -> Estimate | None:
     """A second estimate of the evidence, where plain draws of the proposal can give one."""
     if isinstance(target, LinearTarget):
         return importance(target, rng, LINEAR_CHECKS)
-    return importance(target, rng, CHECKS) if len(target.proposal) else {}
+    return importance(target, rng, CHECKS) if len(target.proposal) else None
 
 
-def importance(target: Target, rng: np.random.Generator, count: int) -> dict:
+def importance(target: Target, rng: np.random.Generator, count: int) -> Estimate:
     """ln evidence and its error from plain draws of the proposal: it checks the nested sampling."""
     log_weight = target.log_weight(target.draw(count, rng))
     most = log_weight.max()
     weight = np.exp(log_weight - most)
     error = weight.std() / weight.mean() / np.sqrt(count)
-    value = most + np.log(weight.mean())
-    return {"log_evidence_check": {"value": float(value), "error": float(error)}}
+    return float(most + np.log(weight.mean())), float(error)

@@ -6,6 +6,7 @@ from made_binaries import binary, seen
 from numpy.testing import assert_allclose
 
 from orbits import Model, Priors, fit
+from orbits.fitting.account import disagreement
 from orbits.fitting.data import make_data
 from orbits.fitting.linear import LinearTarget
 
@@ -81,3 +82,11 @@ def test_short_arc_agrees_with_plain_draws_of_the_prior():
         mean = weight @ truth
         width = np.sqrt(weight @ (truth - mean) ** 2)
         assert_allclose(found.mean(), mean, atol=5 * width * np.sqrt(variance))
+
+
+def test_estimates_of_the_evidence_that_disagree_are_said():
+    """0.5 apart: 5 standard errors of 0.06 and 0.08 together, but 3.5 of 0.1 and 0.1."""
+    assert disagreement((-11.7, 0.1), (-12.2, 0.1)) == []
+    (said,) = disagreement((-11.7, 0.06), (-12.2, 0.08))
+    assert "-11.70 +- 0.06" in said
+    assert "-12.20 +- 0.08" in said
