@@ -192,8 +192,9 @@ def _roughness(table: BaselineTable, kind: Kind, keep: np.ndarray) -> float:
         (value[:, k : k + three.shape[1]][three], error[:, k : k + three.shape[1]][three])
         for k in range(3)
     )
-    sigma = np.sqrt(low[1] ** 2 + 4 * middle[1] ** 2 + high[1] ** 2)
-    return _typical(low[0] - 2 * middle[0] + high[0], sigma, kind)
+    with np.errstate(over="ignore", invalid="ignore"):  # the numbers can be any
+        sigma = np.sqrt(low[1] ** 2 + 4 * middle[1] ** 2 + high[1] ** 2)
+        return _typical(low[0] - 2 * middle[0] + high[0], sigma, kind)
 
 
 def _typical(difference: np.ndarray, sigma: np.ndarray, kind: Kind) -> float:
