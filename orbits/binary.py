@@ -31,6 +31,10 @@ class Scene:
     that the contrast follows), `diameter`, `darkening`, and `ratio_k` for each further instrument
     (its contrast is that of instrument 0 times 1 + ratio). From the second companion on the names
     end in its number: `x_2`.
+
+    The visibility of a companion is 1 less what its diameter takes off; a negative diameter adds as
+    much. No star looks so, but a fit to noise does: the square of a diameter that is too small to
+    be seen comes out negative as often as not, and only such a fit is right on average.
     """
 
     primary_shape: str = "disc"
@@ -121,10 +125,12 @@ class _Light:
         s = self.sampling
         shape, by_diameter, by_darkening = self._shape(
             self.scene.companion_shape,
-            diameter,
+            abs(diameter),
             darkening,
             wanted=bool({start + 4, start + 5} & self.free),
         )
+        if diameter < 0:
+            shape, by_darkening = 2 - shape, -by_darkening
         turn = np.exp((-2j * np.pi * MAS) * (s.u * x + s.v * y))
         beam = tilt * seen  # flux per unit of contrast
         wave = shape * turn

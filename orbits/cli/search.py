@@ -207,7 +207,7 @@ def describe(result: "SearchResult") -> str:
     lines += [
         f"  best       {_place(best)}",
         f"  primary    {_diameter(best.primary_diameter_mas, best.primary_diameter_error_mas)}",
-        f"  companion  {_diameter(best.companion_diameter_mas, best.companion_diameter_error_mas)}",
+        f"  companion  {_companion(best)}",
         f"  chi-square {best.chi2:.1f} for {best.dof} degrees of freedom, "
         f"{best.delta_chi2:.1f} less than without it",
     ]
@@ -255,6 +255,15 @@ def _diameter(value: float, error: float) -> str:
     if value == 0:
         return "a point"
     return f"{value:.3f} +- {error:.3f} mas" if error else f"{value:.3f} mas (fixed)"
+
+
+def _companion(best: "Candidate") -> str:
+    value, error = best.companion_diameter_mas, best.companion_diameter_error_mas
+    prior = best.companion_diameter_prior_mas
+    if prior is None:
+        return _diameter(value, error)
+    words = _diameter(value, error) if value else f"below {error:.3f} mas"
+    return f"{words}, for a prior of its square of 0 +- ({prior:.3f} mas)^2"
 
 
 def _chance(result: "SearchResult") -> str:

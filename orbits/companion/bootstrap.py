@@ -95,8 +95,9 @@ def bootstrap(
             times = np.bincount(rng.integers(blocks, size=blocks), minlength=blocks)
             resampled = replace(problem, weights=times[owner].astype(float))
             found[k] = fit(
-                resampled, solution.scene, solution.values, solution.free, solution.priors
-            ).values
+                resampled, solution.scene, solution.values, solution.free, solution.priors,
+                squares=tuple(solution.squares),
+            ).values  # fmt: skip
             tick()
     names = solution.scene.names
     x, y, contrast = (

@@ -1,5 +1,7 @@
 """One observation made ready for the search of a companion: maps, exact fits, significance."""
 
+from dataclasses import replace
+
 import numpy as np
 
 from ..binary import PRIMARY, companion_name, model
@@ -17,7 +19,10 @@ from .significance import FalseAlarms, noise_maxima, scaled
 from .stars import Stars, free_parameters, known_values, priors_of, scene_of
 
 RESOLVED = 16.0
-"""Chi-square, scaled as the errors are, that the diameter of a companion must gain to be fitted."""
+"""Chi-square, scaled as the errors are, that the diameter of a companion must gain to be fitted
+without a prior."""
+SURFACE = 5.0
+"""How many times the light of equal surface brightness the prior gives the disc of a companion."""
 KEPT = 25.0
 """Solutions within this chi-square of the best, scaled as the errors are, are kept."""
 _PEAKS = 24
@@ -221,17 +226,38 @@ class Epoch:
         return [one for one in found if one.chi2 < limit]
 
     def resolved(self, fits: list[Fit], null: Fit) -> list[Fit]:
-        """`fits` with the companion's diameter fitted too, where the data tell it from a point."""
+        """`fits` with the companion's diameter fitted too.
+
+        Where the data do not tell the companion from a point, the square of its diameter has a
+        Gaussian prior of mean 0. So the contrast is neither drawn to that of a point, nor is its
+        error that of one, and a faint companion is not made less certain by impossible diameters.
+        """
         (own,) = self._indices("diameter")
         if not fits or own in self.free or not self.stars.may_resolve:
             return fits
         self.free = tuple(sorted((*self.free, own)))
         best = self._resolve(fits[0])
-        if fits[0].chi2 - best.chi2 > RESOLVED * max(1.0, best.reduced):
+        gain = (fits[0].chi2 - best.chi2) / max(1.0, best.reduced)
+        if gain > RESOLVED and best.values[own] > 0:
             larger = [best, *(self._resolve(one) for one in fits[1:])]
             return self._best([one for one in larger if self._inside(one)], null)
         self.free = tuple(i for i in self.free if i != own)
-        return fits
+        return self._best([self._unresolved(one, own) for one in fits], null)
+
+    def _unresolved(self, one: Fit, own: int) -> Fit:
+        """`one` with the square of its companion's diameter fitted within its prior.
+
+        One standard deviation is the square of the primary's diameter, or of the disc that a
+        companion `SURFACE` times below the primary in surface brightness has, if that is smaller.
+        """
+        (contrast,) = self._indices("contrast")
+        primary = abs(one.values[0]) * (abs(one.values[0]) + 2 * one.error("primary_diameter"))
+        width = primary * min(1.0, SURFACE * one.values[contrast])
+        if width == 0:
+            return one
+        priors = {**one.priors, own: (0.0, width)}
+        wider = polish(self.problem(_extent(one)), replace(one, priors=priors, squares={own: 0.0}))
+        return wider if wider.values[contrast] <= 1 else self._at_limit(wider)
 
     def _resolve(self, one: Fit) -> Fit:
         bright = self._fit(one.values)
@@ -286,14 +312,20 @@ class Epoch:
             return [one]
         turned = self._fit(self._opposite(one.values))
         fair = [turned] if turned.values[contrast] <= 1 else []
+        return [*fair, self._at_limit(one)]
+
+    def _at_limit(self, one: Fit) -> Fit:
+        """`one` with a companion as bright as the primary.
+
+        The contrast has the error that it would have without the limit.
+        """
+        (contrast,) = self._indices("contrast")
         values = one.values.copy()
         values[contrast] = 1.0
-        free = tuple(i for i in self.free if i != contrast)
-        problem = self.problem(_extent(one))
-        bound = fit(problem, self.scene, values, free, self.priors)
-        # At the limit, but with the error that the contrast would have without it.
-        bound = fit(problem, self.scene, bound.values, self.free, self.priors, steps=0)
-        return [*fair, bound]
+        free = tuple(i for i in one.free if i != contrast)
+        problem, squares = self.problem(_extent(one)), tuple(one.squares)
+        bound = fit(problem, one.scene, values, free, one.priors, squares=squares)
+        return fit(problem, one.scene, bound.values, one.free, one.priors, squares=squares, steps=0)
 
     def _opposite(self, values: np.ndarray) -> np.ndarray:
         """The two stars exchanged, where their parameters can be; else the companion opposite."""

@@ -1,6 +1,6 @@
 """Least squares with the exact model: from a start value to the nearest solution."""
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -16,6 +16,9 @@ _SETTLED = 1e-7
 
 _LEAP = 1e5
 """A step longer than this (mas, or whatever the unit) follows a direction without information."""
+
+_SPOT = 1e-3
+"""mas; a diameter whose square is fitted is kept from 0 by this, where slopes are 0 over 0."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -63,6 +66,9 @@ class Fit:
     settled: bool
     priors: Mapping[int, tuple[float, float]] = field(default_factory=dict)
     """Index of a parameter: mean and standard deviation of its Gaussian prior."""
+    squares: Mapping[int, float] = field(default_factory=dict)
+    """Index of a diameter whose square was fitted too: the standard error of the square (mas2). Its
+    uncertainty is a part of `covariance`; a prior on it is one on the square."""
 
     def value(self, name: str) -> float:
         """The value of a parameter by its name."""
@@ -89,17 +95,20 @@ def fit(
     free: tuple[int, ...],
     priors: Mapping[int, tuple[float, float]] | None = None,
     *,
+    squares: Sequence[int] = (),
     steps: int = _STEPS,
 ) -> Fit:
     """Minimise chi-square over the `free` parameters by damped Gauss-Newton steps.
 
     The damping is that of Marquardt (1963, J. SIAM 11, 431): along the diagonal of the normal
-    matrix. Gaussian `priors` count as further data.
+    matrix. Gaussian `priors` count as further data. Of the diameters with indices `squares` the
+    squares are fitted, signed as the diameters: small ones act on the data through them.
     """
     priors = {} if priors is None else dict(priors)
     values = np.array(start, dtype=float)
-    index = list(free)
-    white, jacobian = _linear(problem, scene, values, index, priors)
+    index, squares = [*free, *squares], list(squares)
+    values[squares] = _roots(_signed_squares(values[squares]))
+    white, jacobian = _linear(problem, scene, values, index, priors, squares)
     chi2 = float(white @ white)
     damping, settled = 1e-3, not index
     for _ in range(steps if index else 0):
@@ -111,8 +120,9 @@ def fit(
             damping *= 10
             continue
         trial = values.copy()
-        trial[index] += step
-        new_white, new_jacobian = _linear(problem, scene, trial, index, priors)
+        trial[list(free)] += step[: len(free)]
+        trial[squares] = _roots(_signed_squares(values[squares]) + step[len(free) :])
+        new_white, new_jacobian = _linear(problem, scene, trial, index, priors, squares)
         new = float(new_white @ new_white)
         if new <= chi2:
             settled = chi2 - new < _SETTLED * max(1.0, new) and damping < 1
@@ -125,19 +135,36 @@ def fit(
         if settled:
             break
     dof = problem.covariance.rank + len(priors) - len(index)
-    return Fit(
-        scene, values, tuple(index), chi2, dof, _inverse(jacobian.T @ jacobian), settled, priors
-    )
+    covariance = _inverse(jacobian.T @ jacobian)
+    errors = np.sqrt(np.diag(covariance))[len(free) :].tolist()
+    covariance = covariance[: len(free), : len(free)]
+    wide = dict(zip(squares, errors, strict=True))
+    return Fit(scene, values, tuple(free), chi2, dof, covariance, settled, priors, wide)
 
 
 def polish(problem: Problem, rough: Fit) -> Fit:
     """Go on from `rough` until the fit settles."""
-    return fit(problem, rough.scene, rough.values, rough.free, rough.priors)
+    return fit(
+        problem, rough.scene, rough.values, rough.free, rough.priors, squares=tuple(rough.squares)
+    )
 
 
-def _linear(problem, scene, values, index, priors) -> tuple[np.ndarray, np.ndarray]:
+def _signed_squares(diameters: np.ndarray) -> np.ndarray:
+    return diameters * np.abs(diameters)
+
+
+def _roots(squares: np.ndarray) -> np.ndarray:
+    """Diameters of signed `squares`, kept from 0."""
+    return np.where(squares < 0, -1.0, 1.0) * np.maximum(np.sqrt(np.abs(squares)), _SPOT)
+
+
+def _linear(problem, scene, values, index, priors, squares) -> tuple[np.ndarray, np.ndarray]:
     """Whitened residuals (rank + priors,) and the whitened Jacobian of the model."""
     predicted, jacobian = model(scene, values, problem.sampling, index)
+    if squares:
+        jacobian[:, -len(squares) :] /= 2 * np.abs(values[squares])
+        values = values.copy()
+        values[squares] = _signed_squares(values[squares])
     both = np.column_stack([problem.residual(predicted), jacobian])
     white = problem.covariance.whiten(both)
     if problem.weights is not None:

@@ -34,6 +34,9 @@ class Candidate:
     primary_diameter_error_mas: float
     companion_diameter_mas: float
     companion_diameter_error_mas: float
+    companion_diameter_prior_mas: float | None
+    """The square of the companion's diameter had a Gaussian prior of mean 0 and of the square of
+    this as its standard deviation; None where it had none."""
     error_scale: float
     chi2: float
     dof: int
@@ -93,6 +96,7 @@ class Candidate:
             "primary_diameter_err_mas": self.primary_diameter_error_mas,
             "companion_diameter_mas": self.companion_diameter_mas,
             "companion_diameter_err_mas": self.companion_diameter_error_mas,
+            "companion_diameter_prior_mas": self.companion_diameter_prior_mas,
             "covariance_xy_mas2": self.covariance_xy_mas2.tolist(),
             "error_scale": self.error_scale,
             "chi2": self.chi2,
@@ -207,6 +211,12 @@ def _candidate(
         return companion_name(what, companion)
 
     gain = null.chi2 - one.chi2
+    own = one.scene.names.index(name("diameter"))
+    diameter, error, prior = max(float(one.values[own]), 0.0), one.error(name("diameter")), None
+    if own in one.squares:
+        # By how much the diameter grows when its square does by one standard error.
+        error = float(np.sqrt(diameter**2 + one.squares[own])) - diameter
+        prior = float(np.sqrt(one.priors[own][1]))
     return Candidate(
         x_mas=one.value(name("x")),
         y_mas=one.value(name("y")),
@@ -215,8 +225,9 @@ def _candidate(
         contrast_error=one.error(name("contrast")) * scale,
         primary_diameter_mas=abs(one.value("primary_diameter")),
         primary_diameter_error_mas=one.error("primary_diameter") * scale,
-        companion_diameter_mas=abs(one.value(name("diameter"))),
-        companion_diameter_error_mas=one.error(name("diameter")) * scale,
+        companion_diameter_mas=diameter,
+        companion_diameter_error_mas=error * scale,
+        companion_diameter_prior_mas=prior,
         error_scale=scale,
         chi2=one.chi2,
         dof=one.dof,

@@ -55,8 +55,10 @@ def search(
         Of the primary; by default it is fitted where there are squared visibilities and 0
         elsewhere.
     companion_diameter : Quantity, optional
-        Of the companion; by default it is fitted where that gains a chi-square of 16 (4 sigma),
-        and the companion is a point elsewhere.
+        Of the companion; by default it is fitted. Unless it gains a chi-square of 16 (4 sigma) over
+        a point, its square has a Gaussian prior of mean 0, and as wide as the square of the
+        primary's diameter, or of that of a disc of a fifth of the primary's surface brightness
+        where that is smaller. The errors of position and contrast include what this leaves open.
     stars : Stars, optional
         Other shapes and parameters.
     errors : ErrorModel, optional

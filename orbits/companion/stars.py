@@ -27,7 +27,7 @@ class Stars:
     priors: Mapping[str, tuple[float, float]] = field(default_factory=dict)
     """Mean and standard deviation of the Gaussian prior of a parameter, which is then fitted."""
     may_resolve: bool = False
-    """Fit the companion's diameter where the data tell it from a point."""
+    """Fit the companion's diameter, within a prior where the data do not tell it from a point."""
     contrast_per_instrument: bool = False
     fibre_fwhm: float | None = None
     """mas; see `Scene`."""
