@@ -103,8 +103,8 @@ class Priors:
 def default_periods(positions: Positions | None, velocities: Velocities | None) -> Range:
     """The range of periods that is searched when none is given, d."""
     times = np.sort(np.concatenate([t.mjd for t in (positions, velocities) if t is not None]))
-    span = max(times[-1] - times[0], 1.0)
+    span = max(float(times[-1] - times[0]), 1.0)
     gaps = np.diff(times)
     gaps = gaps[gaps > 0.2]  # a night's exposures follow each other; the next night does not
     shortest = float(gaps.min()) if gaps.size else 1.0
-    return max(0.5, min(shortest, span / 10)), 1000.0 * float(span)
+    return max(0.5, min(shortest, span / 10)), 1000.0 * span
