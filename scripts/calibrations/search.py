@@ -10,6 +10,7 @@ import numpy as np
 
 from orbits.binary import Scene, model
 from orbits.companion.covariance import Covariance, ErrorModel
+from orbits.companion.epoch import SURFACE
 from orbits.companion.maps import Field
 from orbits.companion.search import Epoch, Stars, choose_grid, search
 from orbits.companion.significance import FalseAlarms, noise_maxima, scaled
@@ -45,7 +46,7 @@ def efficiency(epochs: int, rng: np.random.Generator) -> dict[str, np.ndarray]:
         if truth["contrast"] < 8 * floor[2]:
             weak += 1
             continue
-        # The bound counts the parameters that are fitted: of a point the diameter is not.
+        # The bound counts what is fitted: the diameters are not where the primary is a point.
         result = search(
             observation, field=FIELD * design.resolution * u.mas, errors=errors, noise_searches=0,
             diameter=None if truth["primary_diameter"] else 0 * u.mas,
@@ -79,15 +80,21 @@ FIELD = 8.0
 
 
 def random_binary(design: Design, rng: np.random.Generator) -> dict[str, float]:
-    """A pair anywhere in the field, beyond the resolution; contrasts from 0.003 to 0.9."""
+    """A pair anywhere in the field, beyond the resolution; contrasts from 0.003 to 0.9.
+
+    Half of the companions of resolved primaries are points, the others discs of the primary's
+    surface brightness.
+    """
     separation = design.resolution * rng.uniform(1.2, 0.9 * FIELD)
     angle = rng.uniform(0, 2 * np.pi)
     diameter = 0.0 if rng.random() < 0.3 else float(design.resolution * rng.uniform(0.2, 0.9))
+    contrast = float(np.exp(rng.uniform(np.log(0.003), np.log(0.9))))
     return {
         "x": separation * np.sin(angle),
         "y": separation * np.cos(angle),
-        "contrast": float(np.exp(rng.uniform(np.log(0.003), np.log(0.9)))),
+        "contrast": contrast,
         "primary_diameter": diameter,
+        "diameter": float(np.sqrt(contrast)) * diameter * rng.integers(2),
     }
 
 
@@ -103,15 +110,25 @@ def misses(candidate, truth: dict[str, float]) -> np.ndarray:
 def cramer_rao(design: Design, covariance: Covariance, truth: dict[str, float]) -> np.ndarray:
     """Least standard errors along and across the position angle (mas), and of the contrast.
 
-    From the Fisher matrix of all fitted parameters at the truth; the diameter of a point is fixed.
+    From the Fisher matrix of all fitted parameters at the truth, with the prior of the square of
+    the companion's diameter; beside a point nothing has a diameter.
     """
     scene = Scene()
-    names = ["x", "y", "contrast"] + ["primary_diameter"] * bool(truth["primary_diameter"])
+    primary = truth["primary_diameter"]
+    names = ["x", "y", "contrast"] + ["primary_diameter", "diameter"] * bool(primary)
+    # The square has a slope where the diameter has none.
+    truth = {**truth, "diameter": max(truth["diameter"], 1e-3)}
     reach = 1.2 * float(np.hypot(truth["x"], truth["y"]))
     sampling = Sampling.of(design.blank, radius=reach)
     free = [scene.names.index(name) for name in names]
     white = covariance.whiten(model(scene, scene.vector(truth), sampling, free)[1])
-    inverse = np.linalg.inv(white.T @ white)
+    fisher = white.T @ white
+    if primary:
+        slope = 2 * truth["diameter"]
+        fisher[-1] /= slope
+        fisher[:, -1] /= slope
+        fisher[-1, -1] += (primary**2 * min(1.0, SURFACE * truth["contrast"])) ** -2
+    inverse = np.linalg.inv(fisher)
     unit = np.array([truth["x"], truth["y"]]) / np.hypot(truth["x"], truth["y"])
     across = np.array([unit[1], -unit[0]])
     place = inverse[:2, :2]
