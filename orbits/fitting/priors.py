@@ -87,7 +87,7 @@ class Priors:
         return replace(cls(**made), **given)
 
     def to_json(self) -> dict:
-        """The densities in words and numbers."""
+        """The densities in words and numbers, of parameters that a fit does not use too."""
         words = {
             "period_d": {"log_uniform": list(self.period)},
             "semimajor_axis_mas": {"log_uniform": list(self.semimajor_axis)},
@@ -96,6 +96,13 @@ class Priors:
             "phase": "uniform",
             "k_kms": {"log_uniform": list(self.amplitude)},
             "gamma_kms": {"normal": [0.0, self.systemic]},
+            "zero_point_kms": {"normal": [0.0, self.zero_point]},
+            "drift_kms_per_year": {"normal": [0.0, self.drift]},
+            "position_jitter_mas": {"log_uniform": list(self.position_jitter)},
+            "velocity_jitter_kms": {"log_uniform": list(self.velocity_jitter)},
+            "outlier_fraction": {"uniform": [0.0, self.outlier_fraction]},
+            "scale": {"normal": [0.0, self.scale]},
+            "position_angle_zero_deg": {"normal": [0.0, self.position_angle_zero]},
         }
         return words | {name: {"normal": list(pair)} for name, pair in self.normal.items()}
 

@@ -30,10 +30,10 @@ def binary(**given):
 
 
 def seen(elements, count, rng, *, error=0.1, span=1500.0):
-    """Positions with error ellipses of 1 : 0.6 in random directions."""
+    """Positions with error ellipses of 1 : 0.6 in random directions; `error` may be one each."""
     mjd = np.sort(60000 + rng.uniform(0, span, count))
     x, y = elements.offsets(Time(mjd, format="mjd", scale="tdb"))
-    size = np.full(count, error)
+    size = np.broadcast_to(error, count)
     covariance = ellipse_covariance(size, 0.6 * size, rng.uniform(0, 180, count))
     noise = np.einsum("nij,nj->ni", np.linalg.cholesky(covariance), rng.normal(size=(count, 2)))
     return Positions(

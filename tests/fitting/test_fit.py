@@ -219,6 +219,32 @@ def test_hard_geometries(given):
         assert sum(solution.summary["argument_deg"][1:]) > 30.0
 
 
+def test_errors_of_wildly_different_size():
+    """From a microarcsecond to more than the orbit: the good nights decide."""
+    rng = np.random.default_rng(18)
+    solution = solve(seen(binary(), 16, rng, error=np.geomspace(1e-3, 30.0, 16)))
+    for name, truth in {"period_d": 104.0, "semimajor_axis_mas": 20.0}.items():
+        assert holds(solution, name, truth)
+
+
+def test_period_of_half_a_day():
+    rng = np.random.default_rng(19)
+    solution = solve(seen(binary(period=0.52), 16, rng, span=30.0), given={"period": (0.5, 100.0)})
+    assert holds(solution, "period_d", 0.52)
+
+
+def test_period_of_a_hundred_thousand_years():
+    """Twenty years of it are no orbit, and nothing pretends that they were."""
+    rng = np.random.default_rng(20)
+    slow = binary(period=1e5 * 365.25, semimajor_axis=5000.0)
+    solution = solve(seen(slow, 12, rng, span=7300.0), given={"period": (1000.0, 1e9)})
+    assert any("do not confine" in note for note in solution.account["notes"])
+    assert holds(solution, "period_d", 1e5 * 365.25)
+    # A line and its first bend leave the period open by far more than a tenth.
+    low, high = solution.samples["period_d"].quantile([0.16, 0.84])
+    assert high > 1.5 * low
+
+
 def test_order_of_the_rows_does_not_matter():
     rng = np.random.default_rng(16)
     positions = seen(binary(), 12, rng)
