@@ -29,7 +29,7 @@ def draw_field(result: SearchResult, *, columns: int = 1) -> "Figure":
     most of the field gain, the shading begins at the median.
     """
     wide = columns == 2
-    drawing = style.figure(columns, height_mm=86 if wide else 152)
+    drawing = style.figure(columns, height_mm=92 if wide else 158)
     grid = drawing.add_gridspec(1, 2) if wide else drawing.add_gridspec(2, 1)
     whole, close = drawing.add_subplot(grid[0]), drawing.add_subplot(grid[1])
     sigma = np.sqrt(np.maximum(result.maps.gain, 0.0)) / result.best.error_scale
