@@ -70,5 +70,6 @@ def mass_function(period, eccentricity, k):
 def amplitudes(period, eccentricity, inclination, primary, companion):
     """Velocity semi-amplitudes of primary and companion, km/s, from their masses."""
     total = primary + companion
-    scale = kepler_axis(period, total) * np.sin(inclination) / projected_axis(period, eccentricity, 1.0)
+    along = kepler_axis(period, total) * np.sin(inclination)
+    scale = along / projected_axis(period, eccentricity, 1.0)
     return scale * companion / total, scale * primary / total
