@@ -39,7 +39,8 @@ def eccentric_anomaly(mean_anomaly: np.ndarray, eccentricity: np.ndarray) -> np.
         raise ValueError(f"eccentricity must lie in [0, 1), got {eccentricity!r}")
     m, e = np.broadcast_arrays(np.asarray(mean_anomaly, dtype=np.float64), e)
     solution = np.empty(m.shape)
-    _solve_all(m.ravel(), e.ravel(), solution.reshape(-1))
+    # Copies, since a broadcast array of one element would otherwise be passed on as it is.
+    _solve_all(m.flatten(), e.flatten(), solution.reshape(-1))
     return solution
 
 

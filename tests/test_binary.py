@@ -90,6 +90,7 @@ def test_position_of_the_whole_scene_does_not_matter():
     moved = seen * np.exp(-2j * np.pi * MAS * (7.0 * sampling.u - 4.0 * sampling.v))[..., 0]
     change = bispectrum(moved, sampling) / bispectrum(seen, sampling)
     assert_allclose(change, 1, atol=1e-13)  # phases of a few turns, rounded at 1e-16 each
+    assert_allclose(np.abs(moved) ** 2, np.abs(seen) ** 2, rtol=1e-13)
 
 
 def test_scenes_with_a_centre_of_symmetry_have_closure_phase_0_or_pi():

@@ -34,7 +34,7 @@ ETA_CRB = visual(41.623, 1934.008, 0.2763, 0.907, 59.025, 23.717, 219.907)
 
 
 def test_meeus_example_57a():
-    """Meeus (1998), ch. 57: eta CrB at 1980.0; the digits of two independent transcriptions."""
+    """Meeus (1998), ch. 57: eta CrB at 1980.0; digits of two copies of its algorithm."""
     separation, angle = ETA_CRB.position(years(1980.0))
     assert_allclose(angle.to_value(u.deg), 318.42425648604, atol=1e-5)
     assert_allclose(separation.to_value(u.arcsec), 0.41101776646246, atol=1e-7)

@@ -125,7 +125,7 @@ def test_the_drawn_ellipse_has_the_published_apparent_eccentricity():
 def test_meeus_example_of_eta_coronae_borealis():
     """Meeus, Astronomical Algorithms (2nd ed. 1998), example 57.a: 318.42426 deg, 0.4110178 arcsec.
 
-    Both numbers are given to half of their last digit by two transcriptions of the book.
+    Both numbers are given to half of their last digit by two copies of its algorithm.
     """
     bundle = bundle_of(
         period=41.623,

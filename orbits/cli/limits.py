@@ -91,6 +91,9 @@ def limits(
     if system is not None:
         field = system.field if field is None else field
         diameter = system.diameter if diameter is None else diameter
+        shared_baselines = shared_baselines or system.shared_baselines
+        v2_calibration = v2_calibration or system.v2_calibration
+        t3_calibration = t3_calibration or system.t3_calibration
     paths = {} if output is None else _paths(output, several=len(observations) > 1)
     refuse_existing(*paths.values(), force=force)
     result = find(

@@ -148,10 +148,10 @@ def spectrum(
     sampling = Sampling.of(labelled, radius=reach, smearing=smearing)
     problem = Problem.of(labelled, sampling, covariance)
     found = fit(problem, scene, start, tuple(sorted((*shared, *ratios))))
-    return _result(observation, companion, found, ratios, level, edges, fix_place)
+    return _result(observation, found, ratios, level, edges, fix_place)
 
 
-def _result(observation, companion, found: Fit, ratios, level, edges, fixed) -> ContrastSpectrum:
+def _result(observation, found: Fit, ratios, level, edges, fixed) -> ContrastSpectrum:
     places = [found.free.index(index) for index in ratios]
     scale2 = max(1.0, found.reduced)
     covariance = level**2 * scale2 * found.covariance[np.ix_(places, places)]

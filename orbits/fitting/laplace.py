@@ -61,7 +61,7 @@ def _normal(data: Data, fits: Fits, row: int) -> Normal:
     information = _marginal(fits.information[row], kept, others)
     precision = pull[kept].T @ information @ pull[kept]
     precision += np.diag(_prior_precision(space, chart))
-    _nuisances(data, fits, row, names, mean, precision)
+    _nuisances(data, fits, names, mean, precision)
     covariance = np.linalg.inv(precision)
     covariance = (covariance + covariance.T) / 2
     _, log_determinant = np.linalg.slogdet(covariance)
@@ -149,7 +149,7 @@ def _prior_precision(space, chart) -> np.ndarray:
     return precision
 
 
-def _nuisances(data, fits, row, names, mean, precision) -> None:
+def _nuisances(data, fits, names, mean, precision) -> None:
     """Guesses for jitters and the share of outliers, which least squares treats as known."""
     places, speeds = data.tables.places, data.tables.speeds
     for labels, jitter, variance in (

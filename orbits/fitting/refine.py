@@ -233,7 +233,7 @@ def _k(unknowns, values):
     return values[:, unknowns["k_re"]] + 1j * values[:, unknowns["k_im"]]
 
 
-def model_sky(data, unknowns, values, *, derivatives: bool = True):
+def model_sky(data, unknowns, values):
     """North + i East (S, n) at the times of the positions, and its derivatives (S, n, p)."""
     time = data.tables.places[:, 0]
     R, *by_motion = turned_motion(time, values[:, 0], _k(unknowns, values), velocity=False)
@@ -293,7 +293,7 @@ def _position_residuals(data, unknowns, values, jitter):
 
     first, second = whiten(place.imag - places[:, 1], place.real - places[:, 2])
     square = first**2 + second**2 + np.log(determinant) - 2 * places[:, 6]
-    cost, weight = _choose(data, square, determinant)
+    cost, weight = _choose(data, square)
     root = np.sqrt(weight)
     jx, jy = np.moveaxis(jacobian.imag, 2, 0), np.moveaxis(jacobian.real, 2, 0)
     one, two = whiten(jx, jy)
@@ -304,7 +304,7 @@ def _position_residuals(data, unknowns, values, jitter):
     )
 
 
-def _choose(data, square, determinant):
+def _choose(data, square):
     """Cost (S,) and weight of each row (S, n): the best alternative, less the outliers."""
     nights = data.tables.place_labels[:, 0]
     starts = np.flatnonzero(np.diff(nights, prepend=-1))
@@ -363,7 +363,7 @@ def _prior_residuals(data, unknowns, values):
     return values[:, columns], jacobian
 
 
-def orbital_parallax(data, unknowns, values):
+def orbital_parallax(unknowns, values):
     """The parallax (S,) that both velocity curves and the sky imply, and d ln of it (S, p)."""
     from ..masses import orbital_parallax as parallax_of
 
@@ -392,7 +392,7 @@ def orbital_parallax(data, unknowns, values):
 
 
 def _parallax_residuals(data, unknowns, values):
-    found, slope = orbital_parallax(data, unknowns, values)
+    found, slope = orbital_parallax(unknowns, values)
     error = data.parallax.error
     return (
         ((found - data.parallax.value) / error)[:, None],

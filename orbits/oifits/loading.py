@@ -101,7 +101,7 @@ def _table(kind: type[Table], hdu: HDU, log: Log) -> Table:
     units: dict[str, str] = {}
     for column in columns(kind):
         if column.name not in found:
-            _missing(kind, column, label, log)
+            _missing(column, label, log)
             continue
         field = found[column.name]
         try:
@@ -177,7 +177,7 @@ def _values(content: BinTable, field: Field, column: Column, label: str, log: Lo
         limit = np.iinfo(np.int32)
         if values.min() < limit.min or values.max() > limit.max:
             raise Malformed(f"column {name} has numbers beyond 32 bits")
-    values = _shaped(values, field, column)
+    values = _shaped(values, column)
     if column.code == "E" and field.code == "D":
         log.note(label, f"column {name} is in double precision", "rounded to single precision")
     with np.errstate(over="ignore"):
@@ -220,7 +220,7 @@ def _logical(stored: np.ndarray, field: Field, label: str, log: Log) -> np.ndarr
     return true
 
 
-def _shaped(values: np.ndarray, field: Field, column: Column) -> np.ndarray:
+def _shaped(values: np.ndarray, column: Column) -> np.ndarray:
     nrow, repeat = values.shape
     if NWAVE not in column.shape:
         wanted = int(np.prod(column.shape, dtype=int))
@@ -241,7 +241,7 @@ def _texts(values: np.ndarray) -> np.ndarray:
     return np.array(cells, dtype=str) if cells else np.empty(0, dtype="U1")
 
 
-def _missing(kind: type[Table], column: Column, label: str, log: Log) -> None:
+def _missing(column: Column, label: str, log: Log) -> None:
     if column.optional or column.since == 2:
         return
     if column.fill is None:
