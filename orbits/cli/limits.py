@@ -6,6 +6,16 @@ from typing import TYPE_CHECKING, Annotated
 import typer
 
 from .frame import Force, Json, Seed, emit, say, warn
+from .night import (
+    Diameter,
+    FlipPhase,
+    HalfField,
+    IgnoreCorrelations,
+    SharedBaselines,
+    T3Calibration,
+    Target,
+    V2Calibration,
+)
 
 if TYPE_CHECKING:
     from ..companion.limits import Limits
@@ -29,28 +39,15 @@ def limits(
         list[Path],
         typer.Argument(help="OIFITS files, or one system file.", metavar="FILE...|SYSTEM.toml"),
     ],
-    target: Annotated[str | None, typer.Option(help="Name, where the files hold several.")] = None,
+    target: Target = None,
     night: Annotated[str | None, typer.Option(help="Date; else all nights together.")] = None,
-    field: Annotated[float | None, typer.Option(help="Half the side of the field, mas.")] = None,
-    diameter: Annotated[
-        float | None, typer.Option(help="Of the primary, mas; else fitted.")
-    ] = None,
-    shared_baselines: Annotated[
-        bool,
-        typer.Option("--shared-baselines", help="Closure phases share their baselines' noise."),
-    ] = False,
-    v2_calibration: Annotated[
-        float, typer.Option(min=0, help="Error of V2 common to all channels, as a part of V2.")
-    ] = 0.0,
-    t3_calibration: Annotated[
-        float, typer.Option(min=0, help="Closure-phase error common to all channels, deg.")
-    ] = 0.0,
-    ignore_correlations: Annotated[
-        bool, typer.Option("--ignore-correlations", help="Take all data for independent.")
-    ] = False,
-    flip_phase: Annotated[
-        bool, typer.Option("--flip-phase", help="The files have phases of the opposite sign.")
-    ] = False,
+    field: HalfField = None,
+    diameter: Diameter = None,
+    shared_baselines: SharedBaselines = False,
+    v2_calibration: V2Calibration = 0.0,
+    t3_calibration: T3Calibration = 0.0,
+    ignore_correlations: IgnoreCorrelations = False,
+    flip_phase: FlipPhase = False,
     confidence: Annotated[float, typer.Option(help="Of what chi-square excludes.")] = 0.9973,
     completeness: Annotated[float, typer.Option(help="Share of companions to be found.")] = 0.9,
     false_alarm: Annotated[float, typer.Option(help="Of what counts as found.")] = 0.01,

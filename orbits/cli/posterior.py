@@ -6,6 +6,17 @@ from typing import TYPE_CHECKING, Annotated
 import typer
 
 from .frame import Force, Json, Seed, emit, say, warn
+from .night import (
+    CompanionDiameter,
+    Diameter,
+    FlipPhase,
+    HalfField,
+    NightDate,
+    NightFiles,
+    T3Calibration,
+    Target,
+    V2Calibration,
+)
 
 if TYPE_CHECKING:
     from ..companion.posterior import EpochPosterior
@@ -14,27 +25,15 @@ _SHOWN = 10
 
 
 def posterior(
-    files: Annotated[
-        list[Path], typer.Argument(help="OIFITS files of one night.", metavar="FILE...")
-    ],
-    target: Annotated[str | None, typer.Option(help="Name, where the files hold several.")] = None,
-    night: Annotated[str | None, typer.Option(help="Date, where the files hold several.")] = None,
-    field: Annotated[float | None, typer.Option(help="Half the side of the field, mas.")] = None,
-    diameter: Annotated[
-        float | None, typer.Option(help="Of the primary, mas; else fitted.")
-    ] = None,
-    companion_diameter: Annotated[
-        float | None, typer.Option(help="Of the companion, mas; else fitted where it shows.")
-    ] = None,
-    v2_calibration: Annotated[
-        float, typer.Option(min=0, help="Error of V2 common to all channels, as a part of V2.")
-    ] = 0.0,
-    t3_calibration: Annotated[
-        float, typer.Option(min=0, help="Closure-phase error common to all channels, deg.")
-    ] = 0.0,
-    flip_phase: Annotated[
-        bool, typer.Option("--flip-phase", help="The files have phases of the opposite sign.")
-    ] = False,
+    files: NightFiles,
+    target: Target = None,
+    night: NightDate = None,
+    field: HalfField = None,
+    diameter: Diameter = None,
+    companion_diameter: CompanionDiameter = None,
+    v2_calibration: V2Calibration = 0.0,
+    t3_calibration: T3Calibration = 0.0,
+    flip_phase: FlipPhase = False,
     live_points: Annotated[int, typer.Option(min=50, help="Of nested sampling.")] = 200,
     output: Annotated[Path | None, typer.Option(help="Samples (ECSV).")] = None,
     positions: Annotated[

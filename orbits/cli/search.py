@@ -10,6 +10,19 @@ import typer
 from ..errors import NothingFound
 from ..files import refuse_existing
 from .frame import Force, Json, Seed, emit, say, warn
+from .night import (
+    CompanionDiameter,
+    Diameter,
+    FlipPhase,
+    HalfField,
+    IgnoreCorrelations,
+    NightDate,
+    NightFiles,
+    SharedBaselines,
+    T3Calibration,
+    Target,
+    V2Calibration,
+)
 
 if TYPE_CHECKING:
     from ..companion.result import Candidate, SearchResult
@@ -22,42 +35,25 @@ CLAIM = 0.01
 
 
 def search(
-    files: Annotated[
-        list[Path], typer.Argument(help="OIFITS files of one night.", metavar="FILE...")
-    ],
-    target: Annotated[str | None, typer.Option(help="Name, where the files hold several.")] = None,
-    night: Annotated[str | None, typer.Option(help="Date, where the files hold several.")] = None,
+    files: NightFiles,
+    target: Target = None,
+    night: NightDate = None,
     use: Annotated[
         list[str], typer.Option(help="Observable: v2, t3, t3amp or visamp; repeatable.")
     ] = ["v2", "t3"],  # noqa: B006 - typer copies it
-    field: Annotated[float | None, typer.Option(help="Half the side of the field, mas.")] = None,
+    field: HalfField = None,
     step: Annotated[float | None, typer.Option(help="Of the grid, mas.")] = None,
-    diameter: Annotated[
-        float | None, typer.Option(help="Of the primary, mas; else fitted.")
-    ] = None,
-    companion_diameter: Annotated[
-        float | None, typer.Option(help="Of the companion, mas; else fitted where it shows.")
-    ] = None,
+    diameter: Diameter = None,
+    companion_diameter: CompanionDiameter = None,
     companions: Annotated[int, typer.Option(min=1, max=2, help="How many to look for.")] = 1,
     fibre: Annotated[
         float | None, typer.Option(help="Full width at half maximum of the field of view, mas.")
     ] = None,
-    shared_baselines: Annotated[
-        bool,
-        typer.Option("--shared-baselines", help="Closure phases share their baselines' noise."),
-    ] = False,
-    v2_calibration: Annotated[
-        float, typer.Option(min=0, help="Error of V2 common to all channels, as a part of V2.")
-    ] = 0.0,
-    t3_calibration: Annotated[
-        float, typer.Option(min=0, help="Closure-phase error common to all channels, deg.")
-    ] = 0.0,
-    ignore_correlations: Annotated[
-        bool, typer.Option("--ignore-correlations", help="Take all data for independent.")
-    ] = False,
-    flip_phase: Annotated[
-        bool, typer.Option("--flip-phase", help="The files have phases of the opposite sign.")
-    ] = False,
+    shared_baselines: SharedBaselines = False,
+    v2_calibration: V2Calibration = 0.0,
+    t3_calibration: T3Calibration = 0.0,
+    ignore_correlations: IgnoreCorrelations = False,
+    flip_phase: FlipPhase = False,
     primary_shape: Annotated[str, typer.Option(help=SHAPES)] = "disc",
     companion_shape: Annotated[str, typer.Option(help=SHAPES)] = "disc",
     fix: Annotated[

@@ -7,6 +7,16 @@ import typer
 
 from ..errors import NothingFound
 from .frame import Force, Json, Seed, emit, say, warn
+from .night import (
+    Diameter,
+    FlipPhase,
+    HalfField,
+    NightDate,
+    NightFiles,
+    T3Calibration,
+    Target,
+    V2Calibration,
+)
 
 if TYPE_CHECKING:
     from ..companion.spectrum import ContrastSpectrum
@@ -17,30 +27,20 @@ CLAIM = 0.01
 
 
 def spectrum(
-    files: Annotated[
-        list[Path], typer.Argument(help="OIFITS files of one night.", metavar="FILE...")
-    ],
-    target: Annotated[str | None, typer.Option(help="Name, where the files hold several.")] = None,
-    night: Annotated[str | None, typer.Option(help="Date, where the files hold several.")] = None,
-    field: Annotated[float | None, typer.Option(help="Half the side of the field, mas.")] = None,
-    diameter: Annotated[
-        float | None, typer.Option(help="Of the primary, mas; else fitted.")
-    ] = None,
+    files: NightFiles,
+    target: Target = None,
+    night: NightDate = None,
+    field: HalfField = None,
+    diameter: Diameter = None,
     bins: Annotated[
         int | None, typer.Option(min=1, help="For each instrument; else every channel.")
     ] = None,
     fix_place: Annotated[
         bool, typer.Option("--fix-place", help="Take the place found for known exactly.")
     ] = False,
-    v2_calibration: Annotated[
-        float, typer.Option(min=0, help="Error of V2 common to all channels, as a part of V2.")
-    ] = 0.0,
-    t3_calibration: Annotated[
-        float, typer.Option(min=0, help="Closure-phase error common to all channels, deg.")
-    ] = 0.0,
-    flip_phase: Annotated[
-        bool, typer.Option("--flip-phase", help="The files have phases of the opposite sign.")
-    ] = False,
+    v2_calibration: V2Calibration = 0.0,
+    t3_calibration: T3Calibration = 0.0,
+    flip_phase: FlipPhase = False,
     output: Annotated[Path | None, typer.Option(help="Table (ECSV), with the covariance.")] = None,
     picture: Annotated[Path | None, typer.Option(help="A .png, .pdf or .svg file.")] = None,
     seed: Seed = 0,
