@@ -53,7 +53,7 @@ def _curve(axes: "Axes", limits: Limits, parallax: u.Quantity | None) -> None:
     axes.grid(True)
     axes.set_xlim(0, limits.field)
     axes.set_xlabel("separation (mas)")
-    axes.set_ylabel("contrast excluded")
+    axes.set_ylabel("contrast excluded (thick: median angle, thin: worst)")
     magnitude = axes.twinx()  # linear in magnitudes is logarithmic in contrast
     magnitude.set_ylim(*delta_magnitude(np.array(axes.get_ylim())))
     magnitude.set_ylabel("magnitudes fainter")
