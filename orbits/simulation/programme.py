@@ -1,7 +1,6 @@
 """Carry a scenario out: the nights that its array sees, and the velocities of its stars."""
 
 from collections.abc import Iterator
-from dataclasses import replace
 
 import astropy.units as u
 import numpy as np
@@ -42,15 +41,18 @@ def model(scenario: Scenario, observation: Observation) -> tuple[np.ndarray, np.
         now = (v2.mjd == mjd, t3.mjd == mjd)
         time = Time(tdb_of_utc(mjd), format="mjd", scale="tdb")
         x, y = (offset.to_value(u.mas) for offset in scenario.elements.offsets(time))
-        exposure = replace(observation, v2=v2.select(now[0]), t3=t3.select(now[1]))
-        seen[0][now[0]], seen[1][now[1]] = predict(
-            exposure,
+        # All of the night with the stars as they are now: how its baselines turn during an
+        # exposure, and blur it, is told by the others.
+        predicted = predict(
+            observation,
             x=float(x),
             y=float(y),
             contrast=light.contrast,
             diameter=light.companion_diameter,
             primary_diameter=light.primary_diameter,
         )
+        for kept, values, mine in zip(seen, predicted, now, strict=True):
+            kept[mine] = values[mine]
     return seen
 
 

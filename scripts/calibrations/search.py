@@ -88,17 +88,22 @@ def random_binary(design: Design, rng: np.random.Generator) -> dict[str, float]:
     Half of the companions of resolved primaries are points, the others discs of the primary's
     surface brightness.
     """
-    separation = design.resolution * rng.uniform(1.2, 0.9 * FIELD)
-    angle = rng.uniform(0, 2 * np.pi)
+    place = random_place(design, rng)
     diameter = 0.0 if rng.random() < 0.3 else float(design.resolution * rng.uniform(0.2, 0.9))
     contrast = float(np.exp(rng.uniform(np.log(0.003), np.log(0.9))))
     return {
-        "x": separation * np.sin(angle),
-        "y": separation * np.cos(angle),
+        **place,
         "contrast": contrast,
         "primary_diameter": diameter,
         "diameter": float(np.sqrt(contrast)) * diameter * rng.integers(2),
     }
+
+
+def random_place(design: Design, rng: np.random.Generator) -> dict[str, float]:
+    """A place anywhere in the field, beyond the resolution, mas."""
+    separation = design.resolution * rng.uniform(1.2, 0.9 * FIELD)
+    angle = rng.uniform(0, 2 * np.pi)
+    return {"x": separation * np.sin(angle), "y": separation * np.cos(angle)}
 
 
 def misses(candidate, truth: dict[str, float]) -> np.ndarray:
