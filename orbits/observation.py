@@ -5,8 +5,9 @@ as stored in OIFITS, and V(u, v) = integral I(x, y) exp(-2 pi i (u x + v y)) dx 
 The bispectrum is V(u1, v1) V(u2, v2) conj(V(u1 + u2, v1 + v2)).
 """
 
+from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Self
 
 import numpy as np
 
@@ -18,35 +19,95 @@ if TYPE_CHECKING:
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
-class Observable(Rows):
-    """One kind of datum of an epoch, flattened to the n data that are kept.
-
-    A datum is one row of an OIFITS table in one spectral channel.
-    """
+class Exposures(Rows):
+    """Baselines or triangles during one integration each: the rows of an OIFITS table."""
 
     legs: np.ndarray
-    """(n, k, 2): u east and v north of the baselines, m. k is 1 for quantities of a baseline,
+    """(r, k, 2): u east and v north of the baselines, m. k is 1 for quantities of a baseline,
     2 for those of a triangle (its sides A->B and B->C; the third, A->C, is their sum)."""
+    mjd: np.ndarray
+    """(r,) UTC."""
+    integration: np.ndarray
+    """(r,) integration time, s; 0 where unknown."""
+    stations: np.ndarray
+    """(r, k + 1) int: indices into `Observation.stations`; -1 where unknown."""
+    instrument: np.ndarray
+    """(r,) int: index into `Observation.instruments`."""
+
+    @property
+    def baselines(self) -> np.ndarray:
+        """(r,): length of the longest projected baseline of each, m."""
+        return np.hypot(*np.moveaxis(sides(self.legs), -1, 0)).max(axis=1)
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class Channels(Rows):
+    """Spectral channels, those of one instrument after those of another."""
+
     wavelength: np.ndarray
-    """(n,) effective wavelength, m."""
+    """(c,) effective wavelength, m."""
     bandwidth: np.ndarray
-    """(n,) effective width of the channel, m; 0 where unknown."""
+    """(c,) effective width of the channel, m; 0 where unknown."""
+    instrument: np.ndarray
+    """(c,) int: index into `Observation.instruments`."""
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class Observable:
+    """One kind of datum of an epoch, flattened to the n data that are kept.
+
+    A datum is one exposure in one spectral channel. What all data of an exposure or of a channel
+    share is stored once; the properties of the same names spread it over the data.
+    """
+
+    exposures: Exposures
+    channels: Channels
+    row: np.ndarray
+    """(n,) int: the exposure of each datum."""
+    channel: np.ndarray
+    """(n,) int: the channel of each datum."""
     value: np.ndarray
     """(n,) dimensionless, or rad for phases."""
     error: np.ndarray
     """(n,) one standard deviation, in the unit of `value`; > 0."""
-    mjd: np.ndarray
-    """(n,) UTC."""
-    integration: np.ndarray
-    """(n,) integration time, s; 0 where unknown."""
-    stations: np.ndarray
-    """(n, k + 1) int: indices into `Observation.stations`; -1 where unknown."""
-    row: np.ndarray
-    """(n,) int: the table row the datum came from, numbered through the observation."""
-    channel: np.ndarray
-    """(n,) int: spectral channel within its instrument."""
-    instrument: np.ndarray
-    """(n,) int: index into `Observation.instruments`."""
+
+    def __len__(self) -> int:
+        return len(self.value)
+
+    @property
+    def legs(self) -> np.ndarray:
+        """(n, k, 2): as `Exposures.legs`, m."""
+        return self.exposures.legs[self.row]
+
+    @property
+    def mjd(self) -> np.ndarray:
+        """(n,) UTC."""
+        return self.exposures.mjd[self.row]
+
+    @property
+    def integration(self) -> np.ndarray:
+        """(n,) integration time, s; 0 where unknown."""
+        return self.exposures.integration[self.row]
+
+    @property
+    def stations(self) -> np.ndarray:
+        """(n, k + 1) int: as `Exposures.stations`."""
+        return self.exposures.stations[self.row]
+
+    @property
+    def instrument(self) -> np.ndarray:
+        """(n,) int: index into `Observation.instruments`."""
+        return self.channels.instrument[self.channel]
+
+    @property
+    def wavelength(self) -> np.ndarray:
+        """(n,) effective wavelength, m."""
+        return self.channels.wavelength[self.channel]
+
+    @property
+    def bandwidth(self) -> np.ndarray:
+        """(n,) effective width of the channel, m; 0 where unknown."""
+        return self.channels.bandwidth[self.channel]
 
     @property
     def frequencies(self) -> np.ndarray:
@@ -56,28 +117,73 @@ class Observable(Rows):
     @property
     def baselines(self) -> np.ndarray:
         """(n,): length of the longest projected baseline of each datum, m."""
-        sides = self.legs
-        if sides.shape[1] == 2:
-            sides = np.concatenate([sides, sides.sum(axis=1, keepdims=True)], axis=1)
-        return np.hypot(sides[..., 0], sides[..., 1]).max(axis=1)
+        return self.exposures.baselines[self.row]
+
+    def select(self, keep: np.ndarray) -> Self:
+        """The data that `keep`, a boolean or index array, names."""
+        parts = {name: getattr(self, name)[keep] for name in ("row", "channel", "value", "error")}
+        return replace(self, **parts)
 
     @classmethod
-    def empty(cls, legs: int) -> "Observable":
-        """No data, for observables of `legs` independent baselines (1, or 2 for triangles)."""
-        none, whole = np.empty(0), np.empty(0, dtype=np.int64)
+    def filled(cls, exposures: Exposures, channels: Channels, *, value=0.0, error=1.0) -> Self:
+        """Every exposure in every channel, row by row.
+
+        Parameters
+        ----------
+        value, error : float or (r * c,) ndarray
+        """
+        rows, width = len(exposures), len(channels)
         return cls(
+            exposures=exposures,
+            channels=channels,
+            row=np.repeat(np.arange(rows, dtype=np.int32), width),
+            channel=np.tile(np.arange(width, dtype=np.int32), rows),
+            value=np.full(rows * width, value, dtype=float),
+            error=np.full(rows * width, error, dtype=float),
+        )
+
+    @classmethod
+    def concatenate(cls, parts: Sequence[Self]) -> Self:
+        """All data of `parts`, in their order; channels that all of them share stay the same."""
+        if len(parts) == 1:
+            return parts[0]
+        together = all(part.channels is parts[0].channels for part in parts)
+        spectra = parts[:1] if together else parts
+        rows = _starts([part.exposures for part in parts])
+        first = [0] * len(parts) if together else _starts([part.channels for part in parts])
+        return cls(
+            exposures=Exposures.concatenate([part.exposures for part in parts]),
+            channels=Channels.concatenate([part.channels for part in spectra]),
+            row=np.concatenate([p.row + n for p, n in zip(parts, rows, strict=True)]),
+            channel=np.concatenate([p.channel + n for p, n in zip(parts, first, strict=True)]),
+            value=np.concatenate([part.value for part in parts]),
+            error=np.concatenate([part.error for part in parts]),
+        )
+
+    @classmethod
+    def empty(cls, legs: int) -> Self:
+        """No data, for observables of `legs` independent baselines (1, or 2 for triangles)."""
+        none, whole = np.empty(0), np.empty(0, dtype=np.int32)
+        exposures = Exposures(
             legs=np.empty((0, legs, 2)),
-            wavelength=none,
-            bandwidth=none,
-            value=none,
-            error=none,
             mjd=none,
             integration=none,
-            stations=np.empty((0, legs + 1), dtype=np.int64),
-            row=whole,
-            channel=whole,
+            stations=np.empty((0, legs + 1), dtype=np.int32),
             instrument=whole,
         )
+        return cls.filled(exposures, Channels(wavelength=none, bandwidth=none, instrument=whole))
+
+
+def _starts(tables: Sequence[Rows]) -> list[int]:
+    """Where each of the tables begins when they stand one after the other."""
+    return [0, *np.cumsum([len(table) for table in tables[:-1]]).tolist()]
+
+
+def sides(legs: np.ndarray) -> np.ndarray:
+    """(..., 1 or 3, 2): all the baselines of legs (..., 1 or 2, 2); the third closes a triangle."""
+    if legs.shape[-2] == 1:
+        return legs
+    return np.concatenate([legs, legs.sum(axis=-2, keepdims=True)], axis=-2)
 
 
 OBSERVABLES = ("v2", "t3", "t3amp", "visamp", "visphi")

@@ -7,13 +7,14 @@ averaged over them (light of one channel interferes as one fringe). An integrati
 time: the squared visibility or bispectrum is averaged over it (frames are much shorter).
 """
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
 
 from .constants import DAY, MAS
-from .observation import Observable, Observation
+from .observation import Channels, Exposures, Observation, sides
 
 SAMPLED = ("v2", "t3", "t3amp", "visamp")
 """The observables of which there is a model, in the order in which data are stacked."""
@@ -77,83 +78,101 @@ class Sampling:
         right to `precision`; without `smearing` it is one.
         """
         tables = [getattr(observation, name) for name in SAMPLED]
-        legs, rates = zip(*(_sides(table) for table in tables), strict=True)
-        leg = np.concatenate([part.reshape(-1, 2) for part in legs])
-        rate = np.concatenate([part.reshape(-1, 2) for part in rates])
-        both = {
-            name: np.concatenate(
-                [
-                    np.repeat(getattr(table, name), part.shape[1])
-                    for table, part in zip(tables, legs, strict=True)
-                ]
-            )
-            for name in ("wavelength", "bandwidth", "integration", "instrument")
-        }
-        turned = (leg[:, 0] < 0) | ((leg[:, 0] == 0) & (leg[:, 1] < 0))
-        sign = np.where(turned, -1.0, 1.0)[:, None]
-        leg, drift = leg * sign, rate * sign * both["integration"][:, None]
-        if not smearing or 2 * np.pi * radius * MAS * _largest(drift, both) < _WORTH_SMEARING:
-            drift = np.zeros_like(drift)
-        key = np.column_stack(
-            [
-                np.round(leg / _SAME_BASELINE),
-                np.round(drift / _SAME_BASELINE),
-                both["wavelength"],
-                both["bandwidth"],
-                both["instrument"],
-            ]
-        )
-        first, which = _distinct(key)
-        channel = both["wavelength"][first], both["bandwidth"][first] * smearing
-        turn = np.pi * radius * MAS * _turns(leg[first], *channel)
-        band_nodes, band_weights = _legendre(turn, precision)
-        time_nodes, time_weights = _legendre(
-            np.pi * radius * MAS * _largest(drift[first], {"wavelength": channel[0]}), precision
-        )
-        wavelength = channel[0][:, None] + channel[1][:, None] * band_nodes / 2
-        moving = leg[first][:, None, :] + drift[first][:, None, :] * time_nodes[:, None] / 2
+        scale = np.pi * radius * MAS
+        channels, channel_of = _distinct_channels([table.channels for table in tables])
+        shortest = channels.wavelength.min(initial=np.inf)
+        still = _WORTH_SMEARING * shortest / (2 * scale) if smearing and scale else np.inf
+        lines = _Lines.of([table.exposures for table in tables], still=still)
+        # One sample for each line in each channel that any datum needs.
+        used = np.zeros((len(lines.leg), len(channels)), dtype=bool)
+        places = [
+            (line[table.row], column[table.channel][:, None])
+            for table, line, column in zip(tables, lines.number, channel_of, strict=True)
+        ]
+        for place in places:
+            used[place] = True
+        number = np.cumsum(used).reshape(used.shape) - 1
+        v2, t3, t3amp, visamp = (number[place] for place in places)
+        turned = [against[table.row] for table, against in zip(tables, lines.turned, strict=True)]
+        row, column = np.nonzero(used)
+        leg, drift = lines.leg[row], lines.drift[row]
+        wave, band = channels.wavelength[column], channels.bandwidth[column] * smearing
+        band_nodes, band_weights = _legendre(scale * _turns(leg, wave, band), precision)
+        time_nodes, time_weights = _legendre(scale * _largest(drift, wave), precision)
+        wavelength = wave[:, None] + band[:, None] * band_nodes / 2
+        moving = leg[:, None, :] + drift[:, None, :] * time_nodes[:, None] / 2
         frequency = moving[:, :, None, :] / wavelength[:, None, :, None]
-        ends = np.cumsum([part.shape[0] * part.shape[1] for part in legs])[:-1]
-        v2, t3, t3amp, visamp = np.split(which, ends)
         # The third side of a triangle closes it: it enters conjugated.
         third = np.array([False, False, True])
-        _, t3_turned, t3amp_turned, _ = np.split(turned, ends)
         return cls(
             u=frequency[..., 0],
             v=frequency[..., 1],
             wavelength=wavelength[:, None, :],
             time_weights=time_weights,
             band_weights=band_weights,
-            instrument=both["instrument"][first].astype(int),
-            v2=v2,
-            t3=t3.reshape(-1, 3),
-            turned=t3_turned.reshape(-1, 3) ^ third,
-            t3amp=t3amp.reshape(-1, 3),
-            t3amp_turned=t3amp_turned.reshape(-1, 3) ^ third,
-            visamp=visamp,
+            instrument=channels.instrument[column].astype(int),
+            v2=v2[:, 0],
+            t3=t3,
+            turned=turned[1] ^ third,
+            t3amp=t3amp,
+            t3amp_turned=turned[2] ^ third,
+            visamp=visamp[:, 0],
         )
 
 
-def _sides(table: Observable) -> tuple[np.ndarray, np.ndarray]:
-    """(n, 1 or 3, 2) baselines, m, and their rates of change, m/s."""
-    legs, rates = table.legs, _rates(table)
-    if legs.shape[1] == 2:
-        legs = np.concatenate([legs, legs.sum(axis=1, keepdims=True)], axis=1)
-        rates = np.concatenate([rates, rates.sum(axis=1, keepdims=True)], axis=1)
-    return legs, rates
+@dataclass(frozen=True, eq=False)
+class _Lines:
+    """The distinct baselines of several kinds of exposures, each in one sense only."""
+
+    leg: np.ndarray
+    """(b, 2) m; u > 0, or u = 0 and v >= 0."""
+    drift: np.ndarray
+    """(b, 2) how far it moves during an integration, m."""
+    number: list[np.ndarray]
+    """For each kind, (r, 1 or 3) which baseline each side is."""
+    turned: list[np.ndarray]
+    """For each kind, (r, 1 or 3) whether the side runs against it."""
+
+    @classmethod
+    def of(cls, kinds: Sequence[Exposures], *, still: float) -> "_Lines":
+        """The baselines; if none drifts by more than `still`, m, none is said to."""
+        legs = [sides(kind.legs) for kind in kinds]
+        drifts = [sides(_rates(kind)) * kind.integration[:, None, None] for kind in kinds]
+        leg, drift = (np.concatenate([p.reshape(-1, 2) for p in part]) for part in (legs, drifts))
+        if np.hypot(*drift.T).max(initial=0.0) < still:
+            drift = np.zeros_like(drift)
+        turned = (leg[:, 0] < 0) | ((leg[:, 0] == 0) & (leg[:, 1] < 0))
+        sign = np.where(turned, -1.0, 1.0)[:, None]
+        first, which = _distinct(np.round(np.hstack([leg, drift]) * sign / _SAME_BASELINE))
+        ends = np.cumsum([part.shape[0] * part.shape[1] for part in legs])[:-1]
+        number, against = (
+            [
+                flat.reshape(of.shape[:2])
+                for flat, of in zip(np.split(all_, ends), legs, strict=True)
+            ]
+            for all_ in (which, turned)
+        )
+        return cls((leg * sign)[first], (drift * sign)[first], number, against)
 
 
-def _rates(table: Observable) -> np.ndarray:
-    """How fast the baselines turn with the Earth, from rows of the same stations; else 0.
+def _distinct_channels(kinds: Sequence[Channels]) -> tuple[Channels, list[np.ndarray]]:
+    """The distinct channels of several observables, and for each of these which ones it has."""
+    every = Channels.concatenate(kinds)
+    key = np.column_stack([every.wavelength, every.bandwidth, every.instrument])
+    first, which = _distinct(key)
+    return every.select(first), np.split(which, np.cumsum([len(kind) for kind in kinds])[:-1])
+
+
+def _rates(exposures: Exposures) -> np.ndarray:
+    """(r, 1 or 2, 2) how fast the legs turn with the Earth, from rows of the same stations; else 0.
 
     OIFITS stores no rates, and station coordinates in circulation are unreliable; the rows tell.
     """
-    if not table.integration.any() or (table.stations < 0).any():
-        return np.zeros_like(table.legs)
-    _, first, row_of = np.unique(table.row, return_index=True, return_inverse=True)
-    mjd, legs = table.mjd[first], table.legs[first]
-    per_row = np.zeros_like(legs)
-    label = np.column_stack([table.stations[first], table.instrument[first]])
+    mjd, legs = exposures.mjd, exposures.legs
+    rates = np.zeros_like(legs)
+    if not exposures.integration.any() or (exposures.stations < 0).any():
+        return rates
+    label = np.column_stack([exposures.stations, exposures.instrument])
     _, group = np.unique(label, axis=0, return_inverse=True)
     for g in range(group.max() + 1):
         rows = np.flatnonzero(group.ravel() == g)
@@ -161,8 +180,8 @@ def _rates(table: Observable) -> np.ndarray:
         seconds = (mjd[rows] - mjd[rows[0]]) * DAY
         # Beyond two hours apart a straight line no longer follows the turning baseline.
         if rows.size > 1 and np.diff(seconds).min() > 0 and np.diff(seconds).max() < 7200:
-            per_row[rows] = np.gradient(legs[rows], seconds, axis=0)
-    return per_row[row_of.ravel()]
+            rates[rows] = np.gradient(legs[rows], seconds, axis=0)
+    return rates
 
 
 def _distinct(key: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -179,15 +198,13 @@ def _distinct(key: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
 
 def _turns(leg: np.ndarray, wavelength: np.ndarray, bandwidth: np.ndarray) -> float:
     """Largest change of spatial frequency across a channel, cycles/rad."""
-    if not len(leg):
-        return 0.0
     half = bandwidth / 2
-    return float((np.hypot(*leg.T) * bandwidth / (wavelength**2 - half**2)).max())
+    return float((np.hypot(*leg.T) * bandwidth / (wavelength**2 - half**2)).max(initial=0.0))
 
 
-def _largest(drift: np.ndarray, both: dict[str, np.ndarray]) -> float:
+def _largest(drift: np.ndarray, wavelength: np.ndarray) -> float:
     """Largest change of spatial frequency during an integration, cycles/rad."""
-    return float((np.hypot(*drift.T) / both["wavelength"]).max()) if len(drift) else 0.0
+    return float((np.hypot(*drift.T) / wavelength).max(initial=0.0))
 
 
 def _legendre(half_turn: float, precision: float) -> tuple[np.ndarray, np.ndarray]:

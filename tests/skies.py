@@ -6,28 +6,27 @@ import numpy as np
 
 from orbits.binary import Scene, model
 from orbits.companion.covariance import Covariance
-from orbits.observation import Observable, Observation
+from orbits.observation import Channels, Exposures, Observable, Observation
 from orbits.sampling import SAMPLED, Sampling
 
 
 def table(legs, wavelength, *, bandwidth=0.0, value=0.0, error=1.0, integration=0.0, mjd=0.0):
     """An `Observable` of rows `legs` (n, k, 2) in m, each in all channels `wavelength` (m)."""
     legs, wavelength = np.asarray(legs, float), np.atleast_1d(np.asarray(wavelength, float))
-    rows, channels = len(legs), wavelength.size
-    n = rows * channels
-    return Observable(
-        legs=np.repeat(legs, channels, axis=0),
-        wavelength=np.tile(wavelength, rows),
-        bandwidth=np.full(n, bandwidth, dtype=float),
-        value=np.full(n, value, dtype=float),
-        error=np.full(n, error, dtype=float),
-        mjd=np.repeat(np.zeros(rows) + np.asarray(mjd, float) if rows else np.empty(0), channels),
-        integration=np.full(n, integration, dtype=float),
-        stations=np.tile(np.arange(legs.shape[1] + 1), (n, 1)),
-        row=np.repeat(np.arange(rows), channels),
-        channel=np.tile(np.arange(channels), rows),
-        instrument=np.zeros(n, dtype=int),
+    rows = len(legs)
+    exposures = Exposures(
+        legs=legs,
+        mjd=np.zeros(rows) + np.asarray(mjd, float) if rows else np.empty(0),
+        integration=np.full(rows, integration, dtype=float),
+        stations=np.tile(np.arange(legs.shape[1] + 1), (rows, 1)),
+        instrument=np.zeros(rows, dtype=int),
     )
+    channels = Channels(
+        wavelength=wavelength,
+        bandwidth=np.full(wavelength.size, bandwidth, dtype=float),
+        instrument=np.zeros(wavelength.size, dtype=int),
+    )
+    return Observable.filled(exposures, channels, value=value, error=error)
 
 
 def epoch(v2_legs=(), t3_legs=(), wavelength=1.6e-6, **common):
@@ -56,24 +55,26 @@ def four_stations(*, exposures=1, channels=1, stations=4, wavelength=(1.5e-6, 1.
     waves = np.linspace(*wavelength, channels) if channels > 1 else np.mean(wavelength)
     pairs = [(i, j) for i in range(stations) for j in range(i + 1, stations)]
     triangles = [(i, j, k) for i, j in pairs for k in range(j + 1, stations)]
-    v2, t3 = [], []
+    sides, legs = [], []
     for exposure in range(exposures):
         angle = 0.35 * exposure
         turn = np.array([[np.cos(angle), -np.sin(angle)], [np.sin(angle), np.cos(angle)]])
         at = ground @ turn.T
-        mjd = 60000.0 + exposure / 24
-        v2.append(table([[at[j] - at[i]] for i, j in pairs], waves, error=0.01, mjd=mjd))
-        sides = [[at[j] - at[i], at[k] - at[j]] for i, j, k in triangles]
-        t3.append(table(sides, waves, error=np.radians(0.5), mjd=mjd))
-        for part, members in ((v2[-1], pairs), (t3[-1], triangles)):
-            part.stations[:] = np.repeat(members, np.size(waves), axis=0)
-            part.row[:] += exposure * 1000 + (500 if part is t3[-1] else 0)
+        sides += [[at[j] - at[i]] for i, j in pairs]
+        legs += [[at[j] - at[i], at[k] - at[j]] for i, j, k in triangles]
+    tables = {}
+    for name, rows, members, error in (
+        ("v2", sides, pairs, 0.01),
+        ("t3", legs, triangles, np.radians(0.5)),
+    ):
+        mjd = 60000.0 + np.repeat(np.arange(exposures), len(members)) / 24
+        tables[name] = table(rows, waves, error=error, mjd=mjd)
+        tables[name].exposures.stations[:] = np.tile(members, (exposures, 1))
     return Observation(
         target="test",
         instruments=("TEST",),
         stations=tuple("ABCDEFGH"[:stations]),
-        v2=Observable.concatenate(v2),
-        t3=Observable.concatenate(t3),
+        **tables,
     )
 
 

@@ -189,7 +189,7 @@ def test_contrast_follows_the_wavelength_and_the_instrument():
     sloped, _ = predict(observation, scene, x=4.0, contrast=0.1, slope=2.0)
     red, _ = predict(observation, scene, x=4.0, contrast=0.1 * (2.0 / 1.5) ** 2)
     assert_allclose(sloped[1::2], red[1::2], rtol=1e-13)
-    observation.v2.instrument[:] = 1
+    observation.v2.channels.instrument[:] = 1
     other, _ = predict(observation, Scene(instruments=2), x=4.0, contrast=0.1, ratio_1=0.5)
     assert_allclose(other, predict(observation, x=4.0, contrast=0.15)[0], rtol=1e-13)
 
@@ -205,7 +205,7 @@ def test_jacobian_is_the_slope_of_the_model():
     observation = epoch(
         v2_legs=BASELINES, t3_legs=TRIANGLES, wavelength=[1.5e-6, 1.7e-6], bandwidth=0.05e-6
     )
-    observation.v2.instrument[::3] = 1
+    observation.v2.channels.instrument[1] = 1
     observation = with_amplitudes(observation)
     scene = Scene(
         primary_shape="linear", companion_shape="power", companions=2, instruments=2,

@@ -13,6 +13,7 @@ from ..binary import Scene
 from ..errors import InputError
 from ..observation import Observable, Observation
 from ..oifits import T3, OIFile, Vis, Vis2, observations
+from ..oifits.flattening import channels, exposures
 from ..oifits.model import BaselineTable
 from ..oifits.observables import sound
 from ..oifits.selecting import target_ids
@@ -115,28 +116,16 @@ def _history(companion: Companion, *, put_in: bool) -> str:
 def _observation(file: OIFile, table: BaselineTable, rows: np.ndarray) -> Observation:
     """All data of some rows of a table, usable or not, but in channels of known wavelength."""
     spectrum = file.wavelength(table.insname)
-    channel = np.flatnonzero(sound(spectrum))
-    row = np.flatnonzero(rows)
-    wave, band = (
-        np.tile(a.astype(float)[channel], row.size) for a in (spectrum.eff_wave, spectrum.eff_band)
-    )
-    common = {
-        "legs": np.repeat(table.legs[row], channel.size, axis=0),
-        "wavelength": wave,
-        "bandwidth": np.where((band > 0) & (band < wave), band, 0.0),
-        "mjd": np.repeat(table.mjd[row], channel.size),
-        "integration": np.repeat(np.maximum(np.nan_to_num(table.int_time[row]), 0), channel.size),
-        "stations": np.repeat(table.sta_index[row], channel.size, axis=0),
-        "row": np.repeat(row, channel.size),
-        "channel": np.tile(channel, row.size),
-        "instrument": np.zeros(wave.size, dtype=int),
-    }
+    good = sound(spectrum)
+    table = table.select(rows, good)
+    seen = exposures(table, table.sta_index, 0)
+    spectral = channels([spectrum.select(good)])
     parts = {}
     for name, columns in _COLUMNS[type(table)].items():
-        value, error = (getattr(table, column)[row][:, channel].ravel() for column in columns)
+        value, error = (getattr(table, column).ravel() for column in columns)
         if name == "t3":
             value, error = np.radians(value), np.radians(error)
-        parts[name] = Observable(value=value, error=error, **common)
+        parts[name] = Observable.filled(seen, spectral, value=value, error=error)
     return Observation(target="", instruments=(table.insname,), **parts)
 
 

@@ -137,17 +137,23 @@ def spectrum(
     start = scene.vector({**own, "contrast": level})
     ratios = [scene.names.index(f"ratio_{k + 1}") for k in range(count)]
     start[ratios] = tilt - 1
-    shared = [
-        scene.names.index(name)
-        for name in _SHARED
-        if known.scene.names.index(name) in known.free and not (fix_place and name in ("x", "y"))
-    ]
+    replaced = {"contrast", "slope", *(("x", "y") if fix_place else ())}
+
+    def here(index: int) -> int:
+        return scene.names.index(known.scene.names[index])
+
+    shared = [here(i) for i in known.free if known.scene.names[i] not in replaced]
+    squares = [here(i) for i in known.squares]
+    priors = {
+        here(i): prior for i, prior in known.priors.items() if here(i) in (*shared, *squares)
+    }
     reach = 1.2 * companion.separation_mas
     still = Sampling.of(observation, radius=0.0, smearing=smearing)
     covariance = Covariance.of(observation, still, errors)
     sampling = Sampling.of(labelled, radius=reach, smearing=smearing)
     problem = Problem.of(labelled, sampling, covariance)
-    found = fit(problem, scene, start, tuple(sorted((*shared, *ratios))))
+    free = tuple(sorted((*shared, *ratios)))
+    found = fit(problem, scene, start, free, priors, squares=squares)
     return _result(observation, found, ratios, level, edges, fix_place)
 
 
@@ -179,7 +185,7 @@ def _labelled(
 ) -> tuple[Observation, list[tuple[float, float, str]]]:
     """The data with the number of their bin, from 1, as instrument; the bins' wavelengths."""
     tables = {name: getattr(observation, name) for name in SAMPLED}
-    label = {name: np.zeros(len(table), dtype=int) for name, table in tables.items()}
+    label = {name: np.zeros(len(table.channels), dtype=int) for name, table in tables.items()}
     edges: list[tuple[float, float, str]] = []
     for number, instrument in enumerate(observation.instruments):
         mine = {name: table.instrument == number for name, table in tables.items()}
@@ -192,13 +198,16 @@ def _labelled(
             )
         for group in np.array_split(channels, channels.size if bins is None else bins):
             for name, table in tables.items():
-                label[name][mine[name] & np.isin(table.wavelength, group)] = len(edges) + 1
+                here = table.channels.instrument == number
+                here &= np.isin(table.channels.wavelength, group)
+                label[name][here] = len(edges) + 1
             members = np.isin(waves, group)
             band = _every(tables, mine, "bandwidth")[members]
             width = (waves[members] + band / 2).max() - (waves[members] - band / 2).min()
             edges.append((float(waves[members].mean()), float(width), instrument))
     parts: dict[str, Observable] = {
-        name: replace(table, instrument=label[name]) for name, table in tables.items()
+        name: replace(table, channels=replace(table.channels, instrument=label[name]))
+        for name, table in tables.items()
     }
     return replace(observation, **parts), edges
 

@@ -6,6 +6,7 @@ become a `Header`, data stay bytes. A size is believed only as far as the file g
 
 import gzip
 import math
+import mmap
 import os
 from collections.abc import Iterator
 from dataclasses import dataclass
@@ -21,6 +22,8 @@ MAX_HEADER_BLOCKS = 2000  # 72 000 cards; a header without END must not swallow 
 MAX_HDUS = 20_000
 PIECE = 2**26
 """Bytes that are decompressed at a time."""
+LARGE = 2**20
+"""Bytes of data from which on they are mapped into memory instead of copied there."""
 
 
 @dataclass(frozen=True)
@@ -31,7 +34,7 @@ class HDU:
     """0 is the primary HDU."""
     header: Header
     raw_header: bytes
-    data: bytes
+    data: bytes | memoryview
     """Without the padding to whole blocks."""
 
     @property
@@ -47,7 +50,7 @@ class HDU:
     @property
     def raw(self) -> bytes:
         """The bytes of the HDU as they stand in a file."""
-        return self.raw_header + self.data + b"\0" * (-len(self.data) % BLOCK)
+        return self.raw_header + bytes(self.data) + b"\0" * (-len(self.data) % BLOCK)
 
 
 def read_hdus(path: Path) -> Iterator[HDU]:
@@ -91,7 +94,7 @@ def _hdus(path: Path, handle) -> Iterator[HDU]:
     raise InputError(f"{path}: more than {MAX_HDUS} HDUs")
 
 
-def _read(handle, size: int) -> bytes | None:
+def _read(handle, size: int) -> bytes | memoryview | None:
     """`size` bytes; None if there are fewer, found out without asking for memory beyond them."""
     if isinstance(handle, gzip.GzipFile):
         pieces, left = [], size
@@ -101,9 +104,17 @@ def _read(handle, size: int) -> bytes | None:
                 return None
             left -= len(pieces[-1])
         return b"".join(pieces)
-    if size > os.fstat(handle.fileno()).st_size - handle.tell():
+    start = handle.tell()
+    if size > os.fstat(handle.fileno()).st_size - start:
         return None
-    return handle.read(size)
+    if size < LARGE:
+        return handle.read(size)
+    before = start % mmap.ALLOCATIONGRANULARITY  # a map starts at a whole page
+    pages = mmap.mmap(
+        handle.fileno(), before + size, offset=start - before, access=mmap.ACCESS_READ
+    )
+    handle.seek(start + size)
+    return memoryview(pages)[before:]
 
 
 def _read_header(path: Path, handle, number: int) -> bytes | None:

@@ -107,7 +107,8 @@ def read_epochs(
     for file in files:
         file.problems += check(file)
     file = join(files)
-    file.problems += check_together(file)
+    if len(files) > 1:
+        file.problems += check_together(file)
     if strict:
         refuse_suspicious(file.problems)
     file = select(file, selection, target=target)

@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING, Self
 
 import numpy as np
 
-from ..observation import OBSERVABLES, Observable, Observation
+from ..observation import OBSERVABLES, Channels, Exposures, Observable, Observation
 from .correlation import Numbers, mended
 from .model import BaselineTable, OIFile, Wavelength
 from .observables import KINDS, ErrorBars, Kind, sound, usable
@@ -23,29 +23,22 @@ class Share:
     table: BaselineTable
     keep: np.ndarray
     """(nrow, nwave) bool: the data that are used."""
-    rows: np.ndarray
-    """(nrow,) number of each row through all tables of the observable."""
 
     def select(self, rows: np.ndarray) -> Self:
         """Only these rows, a boolean array."""
         if rows.all():
             return self
-        return replace(
-            self, table=self.table.select(rows), keep=self.keep[rows], rows=self.rows[rows]
-        )
+        return replace(self, table=self.table.select(rows), keep=self.keep[rows])
 
 
 def shares(file: OIFile, ids: list[int], observables: Sequence[str]) -> list[Share]:
     """What each table of `file` gives of each of the observables, for targets with these ids."""
     found = []
     for name in OBSERVABLES:
-        first = 0
         for table in file.of(KINDS[name].table) if name in observables else ():
             keep = usable(table, KINDS[name]) & sound(file.wavelength(table.insname))
             keep &= np.isin(table.target_id, ids)[:, None]
-            rows = np.arange(first, first + len(table), dtype=np.int32)
-            found.append(Share(KINDS[name], table, keep, rows))
-            first += len(table)
+            found.append(Share(KINDS[name], table, keep))
     return found
 
 
@@ -55,20 +48,18 @@ def observation(
     """The shares of one night as an observation, with the instruments and stations they involve."""
     used = {share.table.insname for share in given}
     sources = {share.table.file for share in given}
-    instruments = tuple(w.insname for w in file.wavelengths if w.insname in used)
+    spectra = _Spectra([w for w in file.wavelengths if w.insname in used])
     stations = _Stations(file, given)
     parts: dict[str, Observable] = {}
     for name in OBSERVABLES:
         flat = [
-            _flat(share, file.wavelength(share.table.insname), instruments, stations, errors)
-            for share in given
-            if share.kind.name == name
+            _flat(share, spectra, stations, errors) for share in given if share.kind.name == name
         ]
         if flat:
-            parts[name] = flat[0] if len(flat) == 1 else Observable.concatenate(flat)
+            parts[name] = Observable.concatenate(flat)
     return Observation(
         target=target,
-        instruments=instruments,
+        instruments=spectra.names,
         stations=tuple(stations.names),
         correlation=_correlation(file, given),
         files=tuple(name for name in file.files if name in sources),
@@ -78,43 +69,68 @@ def observation(
 
 
 def _flat(
-    share: Share,
-    spectrum: Wavelength,
-    instruments: tuple[str, ...],
-    stations: "_Stations",
-    errors: ErrorBars,
+    share: Share, spectra: "_Spectra", stations: "_Stations", errors: ErrorBars
 ) -> Observable:
     table, kind, keep = share.table, share.kind, share.keep
-    count = np.count_nonzero(keep, axis=1)
-    value, error = table[kind.value][keep], table[kind.error][keep]
+    number = spectra.names.index(table.insname)
+    value, error = table[kind.value], table[kind.error]
+    if keep.all():
+        value, error = value.ravel(), error.ravel()  # views
+    else:
+        value, error = value[keep], error[keep]
     if kind.phase:
-        value = np.radians(value - 360.0 * np.round(value / 360.0))
-        error = np.radians(error)
-    wave, band = (a.astype(np.float64) for a in (spectrum.eff_wave, spectrum.eff_band))
-    band = np.where((band > 0) & (band < wave), band, 0.0)
-    time = np.where(table.int_time > 0, table.int_time, 0.0)
-    number = instruments.index(table.insname)
-
-    # Without arrays of indices, which would be as large as the data.
-    def by_row(values: np.ndarray) -> np.ndarray:
-        return np.repeat(values, count, axis=0)
-
-    def by_channel(values: np.ndarray) -> np.ndarray:
-        return np.broadcast_to(values, keep.shape)[keep]
-
+        value, error = np.radians(within_a_turn(value)), np.radians(error)
+    # Indices of 64 bits would be as large as the data.
+    rows = np.arange(len(table), dtype=np.int32)
+    width = np.arange(keep.shape[1], dtype=np.int32) + spectra.first[number]
     return Observable(
-        legs=by_row(table.legs),
-        wavelength=by_channel(wave),
-        bandwidth=by_channel(band),
+        exposures=exposures(table, stations.of(table), number),
+        channels=spectra.channels,
+        row=np.repeat(rows, np.count_nonzero(keep, axis=1)),
+        channel=np.broadcast_to(width, keep.shape)[keep],
         value=value,
         error=errors.apply(kind.name, error),
-        mjd=by_row(table.mjd),
-        integration=by_row(time),
-        stations=by_row(stations.of(table)),
-        row=by_row(share.rows),
-        channel=by_channel(np.arange(len(spectrum), dtype=np.int32)),
-        instrument=np.full(value.size, number, dtype=np.int16),
     )
+
+
+def within_a_turn(degrees: np.ndarray) -> np.ndarray:
+    """Phases brought into -180 to 180 deg."""
+    if not degrees.size or (degrees.min() >= -180 and degrees.max() <= 180):
+        return degrees
+    return degrees - 360.0 * np.round(degrees / 360.0)
+
+
+def exposures(table: BaselineTable, stations: np.ndarray, instrument: int) -> Exposures:
+    """The rows of a table, for stations (nrow, k + 1) and an instrument of these numbers."""
+    return Exposures(
+        legs=table.legs,
+        mjd=table.mjd,
+        integration=np.where(table.int_time > 0, table.int_time, 0.0),
+        stations=stations,
+        instrument=np.full(len(table), instrument, dtype=np.int16),
+    )
+
+
+def channels(spectra: Sequence[Wavelength]) -> Channels:
+    """The channels of spectral set-ups, one after the other; bands wider than sense as unknown."""
+    wave, band = (
+        np.concatenate([w[name].astype(np.float64) for w in spectra])
+        for name in ("EFF_WAVE", "EFF_BAND")
+    )
+    return Channels(
+        wavelength=wave,
+        bandwidth=np.where((band > 0) & (band < wave), band, 0.0),
+        instrument=np.repeat(np.arange(len(spectra)), [len(w) for w in spectra]),
+    )
+
+
+class _Spectra:
+    """The spectral set-ups that take part, and where the channels of each begin."""
+
+    def __init__(self, spectra: Sequence[Wavelength]) -> None:
+        self.names = tuple(w.insname for w in spectra)
+        self.channels = channels(spectra)
+        self.first = np.cumsum([0, *(len(w) for w in spectra)], dtype=np.int32)
 
 
 class _Stations:

@@ -15,6 +15,7 @@ from typing import Any, ClassVar
 
 import numpy as np
 
+from ..observation import sides
 from ..problems import Problem
 from .schema import NWAVE, OPEN, Table, column, keyword
 
@@ -110,10 +111,8 @@ class BaselineTable(DataTable):
     @property
     def sides(self) -> np.ndarray:
         """(nrow, 1 or 3): lengths of all the projected baselines, m."""
-        legs = self.legs
-        if legs.shape[1] == 2:
-            legs = np.concatenate([legs, legs.sum(axis=1, keepdims=True)], axis=1)
-        return np.hypot(legs[..., 0], legs[..., 1])
+        every = sides(self.legs)
+        return np.hypot(every[..., 0], every[..., 1])
 
 
 @dataclass(kw_only=True, eq=False)

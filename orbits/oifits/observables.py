@@ -16,6 +16,10 @@ OLDEST_MJD, YOUNGEST_MJD = 10_000.0, 100_000.0
 """1886 and 2132: no star was measured by interferometry before, and this is not for ever."""
 
 
+ENOUGH = 100_000
+"""So many data tell what is typical of a table of any length."""
+
+
 @dataclass(frozen=True)
 class Kind:
     """Where an observable of an `Observation` is found in the tables."""
@@ -77,7 +81,9 @@ class ErrorBars:
 
     def apply(self, name: str, error: np.ndarray) -> np.ndarray:
         """The errors (rad for phases) of the observable `name` after these changes."""
-        return np.maximum(error * self.scale.get(name, 1.0), self._floor(name))
+        if name in self.scale:
+            error = error * self.scale[name]
+        return np.maximum(error, self._floor(name)) if name in self.floor else error
 
     def _floor(self, name: str) -> float:
         unit = u.rad if KINDS[name].phase else u.dimensionless_unscaled
@@ -97,7 +103,8 @@ def usable(table: BaselineTable, kind: Kind) -> np.ndarray:
     keep &= error < np.inf
     keep &= np.isfinite(value)
     keep &= (timed(table) & (table.sides < LONGEST).all(axis=1))[:, None]
-    if kind.name == "t3amp" and unnormalised(table, keep):
+    some = sampled(keep)
+    if kind.name == "t3amp" and unnormalised(value[some][keep[some]], error[some][keep[some]]):
         keep[:] = False
     return keep
 
@@ -112,10 +119,15 @@ def sound(spectrum: Wavelength) -> np.ndarray:
     return (spectrum.eff_wave >= SHORTEST_WAVE) & (spectrum.eff_wave <= LONGEST_WAVE)
 
 
-def unnormalised(table: T3, keep: np.ndarray) -> bool:
+def sampled(data: np.ndarray) -> slice:
+    """Rows that tell what is typical of a table of any length: `ENOUGH` data (nrow, nwave)."""
+    return slice(None, None, 1 + data.size // ENOUGH)
+
+
+def unnormalised(amplitude: np.ndarray, error: np.ndarray) -> bool:
     """Whether triple amplitudes are in other units than those of a visibility.
 
     Noise lifts few data above 1 by three times their error; a wrong scale lifts many.
     """
-    above = table.t3amp[keep] > 1 + 3 * table.t3amperr[keep]
+    above = amplitude > 1 + 3 * error
     return bool(above.mean() > 0.1) if above.size else False

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from ..observation import Observable, Observation
+from ..observation import Exposures, Observation
 from ..oifits import T3, Corr, OIFile, Target, Vis2, Wavelength
 from ..oifits import Array as OIArray
 from ..times import date_of_utc
@@ -28,7 +28,7 @@ def night_file(
     data = [
         Vis2(
             **common,
-            **_rows(v2, channels, ("ucoord", "vcoord")),
+            **_rows(v2.exposures, ("ucoord", "vcoord")),
             vis2data=v2.value.reshape(-1, channels),
             vis2err=v2.error.reshape(-1, channels),
             corrindx_vis2data=1 + np.arange(0, n_v2, channels) if linked else None,
@@ -40,7 +40,7 @@ def night_file(
         data.append(
             T3(
                 **common,
-                **_rows(t3, channels, ("u1coord", "v1coord", "u2coord", "v2coord")),
+                **_rows(t3.exposures, ("u1coord", "v1coord", "u2coord", "v2coord")),
                 t3phi=np.degrees(t3.value).reshape(-1, channels),
                 t3phierr=np.degrees(t3.error).reshape(-1, channels),
                 corrindx_t3phi=1 + n_v2 + np.arange(0, len(t3), channels) if linked else None,
@@ -73,15 +73,14 @@ def night_file(
     )
 
 
-def _rows(table: Observable, channels: int, names: tuple[str, ...]) -> dict[str, np.ndarray]:
+def _rows(exposures: Exposures, names: tuple[str, ...]) -> dict[str, np.ndarray]:
     """The columns that have one value a row."""
-    first = table.select(np.arange(0, len(table), channels))
     return {
-        "target_id": np.ones(len(first)),
-        "mjd": first.mjd,
-        "int_time": first.integration,
-        "sta_index": first.stations + 1,
-        **dict(zip(names, first.legs.reshape(len(first), -1).T, strict=True)),
+        "target_id": np.ones(len(exposures)),
+        "mjd": exposures.mjd,
+        "int_time": exposures.integration,
+        "sta_index": exposures.stations + 1,
+        **dict(zip(names, exposures.legs.reshape(len(exposures), -1).T, strict=True)),
     }
 
 

@@ -5,7 +5,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from ..observation import Observable, Observation
+from ..observation import Channels, Exposures, Observable, Observation
 from .array import Array
 
 
@@ -59,15 +59,21 @@ def blank_night(
     sides = at[:, pairs[:, 1]] - at[:, pairs[:, 0]]
     first = at[:, triangles[:, 1]] - at[:, triangles[:, 0]]
     second = at[:, triangles[:, 2]] - at[:, triangles[:, 1]]
-    common = {"spectrum": spectrum, "mjd": np.asarray(mjd, float), "integration": integration}
-    v2 = _blank(sides[:, :, None], pairs, first_row=0, **common)
+    channels = Channels(
+        wavelength=spectrum.wavelength,
+        bandwidth=spectrum.bandwidth,
+        instrument=np.zeros(len(spectrum.wavelength), dtype=int),
+    )
+    when = np.asarray(mjd, float)
     legs = np.stack([first, second], axis=2)
+    v2 = _exposures(sides[:, :, None], pairs, when, integration)
+    t3 = _exposures(legs, triangles, when, integration)
     return Observation(
         target=target,
         instruments=(spectrum.name,),
         stations=array.stations,
-        v2=v2,
-        t3=_blank(legs, triangles, first_row=sides[..., 0].size, **common),
+        v2=Observable.filled(v2, channels),
+        t3=Observable.filled(t3, channels),
     )
 
 
@@ -97,29 +103,22 @@ def observe(
     return replace(filled, correlation=_row_correlation(filled, v2_shared, phase_shared))
 
 
-def _blank(legs, stations, *, spectrum, mjd, integration, first_row) -> Observable:
-    """Spread rows (exposures x baselines or triangles) over the channels of `spectrum`."""
-    exposures, combinations = legs.shape[:2]
-    rows, channels = exposures * combinations, len(spectrum.wavelength)
-    n = rows * channels
-    return Observable(
-        legs=np.repeat(legs.reshape(rows, *legs.shape[2:]), channels, axis=0),
-        wavelength=np.tile(spectrum.wavelength, rows),
-        bandwidth=np.tile(spectrum.bandwidth, rows),
-        value=np.zeros(n),
-        error=np.ones(n),
-        mjd=np.repeat(mjd, combinations * channels),
-        integration=np.full(n, float(integration)),
-        stations=np.repeat(np.tile(stations, (exposures, 1)), channels, axis=0),
-        row=np.repeat(first_row + np.arange(rows), channels),
-        channel=np.tile(np.arange(channels), rows),
-        instrument=np.zeros(n, dtype=np.int64),
+def _exposures(legs, stations, mjd, integration) -> Exposures:
+    """Moments times baselines or triangles, in this order."""
+    moments, combinations = legs.shape[:2]
+    rows = moments * combinations
+    return Exposures(
+        legs=legs.reshape(rows, *legs.shape[2:]),
+        mjd=np.repeat(mjd, combinations),
+        integration=np.full(rows, float(integration)),
+        stations=np.tile(stations, (moments, 1)),
+        instrument=np.zeros(rows, dtype=int),
     )
 
 
 def _noisy(blank, value, alone, shared, rng) -> Observable:
-    rows, which = np.unique(blank.row, return_inverse=True)
-    noise = alone * rng.standard_normal(len(value)) + shared * rng.standard_normal(len(rows))[which]
+    rows = len(blank.exposures)
+    noise = alone * rng.standard_normal(len(value)) + shared * rng.standard_normal(rows)[blank.row]
     return replace(blank, value=value + noise, error=np.hypot(alone, shared))
 
 
@@ -127,8 +126,7 @@ def _row_correlation(filled: Observation, v2_shared, phase_shared):
     """Correlation of all data, V2 before closure phases: shared errors link channels of a row."""
     from scipy import sparse
 
-    row = np.concatenate([filled.v2.row, filled.t3.row])
+    row = np.concatenate([filled.v2.row, filled.t3.row + len(filled.v2.exposures)])
     part = np.concatenate([v2_shared / filled.v2.error, phase_shared / filled.t3.error])
-    rows, which = np.unique(row, return_inverse=True)
-    link = sparse.csr_array((part, (np.arange(len(row)), which)), shape=(len(row), len(rows)))
+    link = sparse.csr_array((part, (np.arange(len(row)), row)))
     return sparse.csr_array(link @ link.T + sparse.diags_array(1 - part**2))

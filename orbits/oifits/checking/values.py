@@ -1,21 +1,17 @@
 """Checks of the numbers measured, and of their errors."""
 
-from collections.abc import Iterator
-
 import numpy as np
 
 from ...problems import Log
 from ..model import T3, BaselineTable, OIFile
-from ..observables import KINDS, Kind, sound, unnormalised, usable
+from ..observables import ENOUGH, KINDS, Kind, sampled, sound, unnormalised, usable
 
 TOO_SMALL = 30.0
 """Scatter over error beyond which errors are called far too small: one and a half decades."""
 ROUGH = 300.0
 """The same for the scatter between channels, to which a companion far out contributes: bright ones
 make neighbouring closure phases differ by tens of degrees, hundreds of times the best errors."""
-SAMPLE = 100_000
-"""So many data tell what is typical of a table of any length."""
-BEST_V2, BEST_PHASE = 1e-6, 1e-4
+BEST = {"v2": 1e-6, "t3": 1e-4}
 """Errors (of V2; of closure phase, deg) that no interferometer has come near."""
 SHORT_TIME = 15 / 1440
 """Two measurements of a baseline within this time, d, are repetitions of each other."""
@@ -25,6 +21,8 @@ def errors(file: OIFile, log: Log) -> None:
     """Errors are positive and finite."""
     for table in file.data:
         for value, error, _ in table.measured if len(table) else ():
+            if table[error].min() > 0 and table[error].max() < np.inf:
+                continue
             counted = ~table.flag & ~np.isnan(table[value])
             for what, bad in (
                 ("negative", table[error] < 0),
@@ -49,6 +47,8 @@ def missing_values(file: OIFile, log: Log) -> None:
     """Data and errors that are not flagged are numbers."""
     for table in file.data:
         for value, error, _ in table.measured if len(table) else ():
+            if np.isfinite(table[value]).all() and not np.isnan(table[error]).any():
+                continue
             nan = np.isnan(table[value]) | np.isnan(table[error])
             nan &= ~table.flag
             if not nan.any():
@@ -66,100 +66,114 @@ def missing_values(file: OIFile, log: Log) -> None:
                 )
 
 
-def range_of_v2(file: OIFile, log: Log) -> None:
-    """Squared visibilities lie between -0.1 and 1.1, but for three times their error."""
-    for table, kind, keep in _usable(file, "v2"):
-        margin = 3 * table[kind.error]
-        value = table[kind.value]
-        far = keep & ((value - margin > 1.1) | (value + margin < -0.1))
-        if far.any():
-            log.suspicious(
-                table.label,
-                f"column {kind.value} is far outside 0 to 1 in {_where(far)}, "
-                f"such as {value[far][0]:.3g} +- {table[kind.error][far][0]:.2g}",
-                "used; is it calibrated?",
-            )
-
-
-def amplitudes(file: OIFile, log: Log) -> None:
-    """Triple amplitudes and amplitudes are normalised."""
+def triple_amplitudes(file: OIFile, log: Log) -> None:
+    """Triple amplitudes are normalised."""
     for table in file.of(T3):
-        keep = ~table.flag & (table.t3amperr > 0) & np.isfinite(table.t3amp)
-        if unnormalised(table, keep):
+        some = sampled(table.flag)
+        keep = ~table.flag[some] & (table.t3amperr[some] > 0) & np.isfinite(table.t3amp[some])
+        amplitude = table.t3amp[some][keep]
+        if unnormalised(amplitude, table.t3amperr[some][keep]):
             log.suspicious(
                 table.label,
-                f"column T3AMP is not normalised (median {np.median(table.t3amp[keep]):.3g})",
+                f"column T3AMP is not normalised (median {np.median(amplitude):.3g})",
                 "amplitudes left out, closure phases used",
             )
-        elif keep.any() and not table.t3amp[keep].any():
+        elif amplitude.size and not amplitude.any() and not np.nan_to_num(table.t3amp).any():
             log.note(table.label, "column T3AMP is 0 throughout", "do not ask for it")
-    for table, kind, keep in _usable(file, "visamp"):
-        typical = float(np.median(table.visamp[keep])) if keep.any() else 0.0
-        if typical > 2 and (table.amptyp or "absolute").lower() == "absolute":
-            log.suspicious(
-                table.label,
-                f"column {kind.value} is no normalised visibility (median {typical:.3g})",
-                "do not ask for it as one",
-            )
 
 
-def phases_in_radians(file: OIFile, log: Log) -> None:
+def data_in_use(file: OIFile, log: Log) -> None:
+    """What each observable should look like, of the data that are used."""
+    for name, judges in JUDGES.items():
+        kind = KINDS[name]
+        for table in file.of(kind.table):
+            keep = usable(table, kind) & sound(file.wavelength(table.insname))
+            for judge in judges if keep.any() else ():
+                judge(table, kind, keep, log)
+
+
+def range_of_v2(table: BaselineTable, kind: Kind, keep: np.ndarray, log: Log) -> None:
+    """Squared visibilities lie between -0.1 and 1.1, but for three times their error."""
+    value = table[kind.value]
+    if value.min() >= -0.1 and value.max() <= 1.1:
+        return
+    margin = 3 * table[kind.error]
+    far = keep & ((value - margin > 1.1) | (value + margin < -0.1))
+    if far.any():
+        log.suspicious(
+            table.label,
+            f"column {kind.value} is far outside 0 to 1 in {_where(far)}, "
+            f"such as {value[far][0]:.3g} +- {table[kind.error][far][0]:.2g}",
+            "used; is it calibrated?",
+        )
+
+
+def amplitudes(table: BaselineTable, kind: Kind, keep: np.ndarray, log: Log) -> None:
+    """Amplitudes that are called those of a visibility are about as large as one."""
+    typical = float(np.median(table.visamp[keep]))
+    if typical > 2 and (table.amptyp or "absolute").lower() == "absolute":
+        log.suspicious(
+            table.label,
+            f"column {kind.value} is no normalised visibility (median {typical:.3g})",
+            "do not ask for it as one",
+        )
+
+
+def phases_in_radians(table: BaselineTable, kind: Kind, keep: np.ndarray, log: Log) -> None:
     """Closure phases that fill the circle fill it to 180, not to pi.
 
     A hundred phases with a spread of 1.3 or more that all stay below pi are drawn from the
     circle in radians: of as many normal deviates of that spread one or two would lie beyond.
     """
-    for table, kind, keep in _usable(file, "t3"):
-        phase = table[kind.value][keep]
-        if phase.size < 100:
-            continue
-        if np.abs(phase).max() <= np.pi * (1 + 1e-6) and np.sqrt(np.mean(phase**2)) > 1.3:
+    phase = table[kind.value]
+    some = sampled(keep)
+    if (np.abs(phase[some][keep[some]]) > np.pi * (1 + 1e-6)).any():
+        return
+    phase = phase[keep]
+    if phase.size < 100:
+        return
+    if np.abs(phase).max() <= np.pi * (1 + 1e-6) and np.sqrt(np.mean(phase**2)) > 1.3:
+        log.suspicious(
+            table.label,
+            "column T3PHI fills -3.14 to 3.14: it looks like radians",
+            "used as degrees; if it is in radians, state that in TUNIT",
+        )
+
+
+def useless_phases(table: BaselineTable, kind: Kind, keep: np.ndarray, log: Log) -> None:
+    """Closure phases are known to better than a radian or so."""
+    vague = keep & (table[kind.error] > 60)
+    if vague.any():
+        log.note(
+            table.label,
+            f"column {kind.error} exceeds 60 deg in {_where(vague)}",
+            "used; such phases tell next to nothing",
+        )
+
+
+def tiny_errors(table: BaselineTable, kind: Kind, keep: np.ndarray, log: Log) -> None:
+    """Errors are not better than any instrument's, nor than the scatter of the data."""
+    some = sampled(keep)
+    typical = float(np.median(table[kind.error][some][keep[some]])) if keep[some].any() else np.inf
+    if typical < BEST[kind.name]:
+        log.suspicious(
+            table.label,
+            f"column {kind.error} is typically {typical:.1g}: no instrument is so precise",
+            "used as it is; scale it, or set a floor",
+        )
+        return
+    for ratio, limit, between in (
+        (_scatter(table, kind, keep), TOO_SMALL, "repeated measurements"),
+        (_roughness(table, kind, keep), ROUGH, "neighbouring channels"),
+    ):
+        if ratio > limit:
             log.suspicious(
                 table.label,
-                "column T3PHI fills -3.14 to 3.14: it looks like radians",
-                "used as degrees; if it is in radians, state that in TUNIT",
+                f"column {kind.error} is {ratio:.0f} times smaller than the scatter "
+                f"between {between}",
+                "used as it is; scale it, or set a floor",
             )
-
-
-def useless_phases(file: OIFile, log: Log) -> None:
-    """Closure phases are known to better than a radian or so."""
-    for table, kind, keep in _usable(file, "t3"):
-        vague = keep & (table[kind.error] > 60)
-        if vague.any():
-            log.note(
-                table.label,
-                f"column {kind.error} exceeds 60 deg in {_where(vague)}",
-                "used; such phases tell next to nothing",
-            )
-
-
-def tiny_errors(file: OIFile, log: Log) -> None:
-    """Errors are not better than any instrument's, nor than the scatter of the data."""
-    for name, best in (("v2", BEST_V2), ("t3", BEST_PHASE)):
-        for table, kind, keep in _usable(file, name):
-            if not keep.any():
-                continue
-            error = table[kind.error][keep]
-            typical = float(np.median(error[:: 1 + error.size // SAMPLE]))
-            if typical < best:
-                log.suspicious(
-                    table.label,
-                    f"column {kind.error} is typically {typical:.1g}: no instrument is so precise",
-                    "used as it is; scale it, or set a floor",
-                )
-                continue
-            for ratio, limit, between in (
-                (_scatter(table, kind, keep), TOO_SMALL, "repeated measurements"),
-                (_roughness(table, kind, keep), ROUGH, "neighbouring channels"),
-            ):
-                if ratio > limit:
-                    log.suspicious(
-                        table.label,
-                        f"column {kind.error} is {ratio:.0f} times smaller than the scatter "
-                        f"between {between}",
-                        "used as it is; scale it, or set a floor",
-                    )
-                    break
+            break
 
 
 def _scatter(table: BaselineTable, kind: Kind, keep: np.ndarray) -> float:
@@ -168,8 +182,8 @@ def _scatter(table: BaselineTable, kind: Kind, keep: np.ndarray) -> float:
     order = np.lexsort((table.mjd, *key.T))
     now, then = order[1:], order[:-1]
     repeats = (key[now] == key[then]).all(axis=1) & (table.mjd[now] - table.mjd[then] < SHORT_TIME)
-    # A thousand pairs tell the typical scatter of a table of any length.
-    chosen = np.flatnonzero(repeats)[:: 1 + np.count_nonzero(repeats) // 1000]
+    chosen = np.flatnonzero(repeats)
+    chosen = chosen[:: 1 + chosen.size * keep.shape[1] // ENOUGH]
     now, then = now[chosen], then[chosen]
     both = keep[now] & keep[then]
     if np.count_nonzero(both) < 20:
@@ -183,7 +197,7 @@ def _roughness(table: BaselineTable, kind: Kind, keep: np.ndarray) -> float:
     """Median ratio of second difference and its error, for channels and both their neighbours."""
     if keep.shape[1] < 3:
         return 0.0
-    rows = slice(None, None, 1 + keep.size // SAMPLE)
+    rows = sampled(keep)
     value, error, keep = table[kind.value][rows], table[kind.error][rows], keep[rows]
     three = keep[:, :-2] & keep[:, 1:-1] & keep[:, 2:]
     if np.count_nonzero(three) < 4:  # of which one wild datum cannot be the median
@@ -204,13 +218,6 @@ def _typical(difference: np.ndarray, sigma: np.ndarray, kind: Kind) -> float:
     return float(np.median(np.abs(difference) / sigma)) / 0.6745  # median of |normal deviate|
 
 
-def _usable(file: OIFile, name: str) -> Iterator[tuple[BaselineTable, Kind, np.ndarray]]:
-    """Each table with an observable, and which of its data are used."""
-    kind = KINDS[name]
-    for table in file.of(kind.table):
-        yield table, kind, usable(table, kind) & sound(file.wavelength(table.insname))
-
-
 def _where(bad: np.ndarray) -> str:
     """How many data, and which is the first."""
     row, channel = np.unravel_index(int(np.argmax(bad)), bad.shape)
@@ -219,13 +226,9 @@ def _where(bad: np.ndarray) -> str:
     return first if count == 1 else f"{count} data (first: {first})"
 
 
-CHECKS = (
-    errors,
-    nothing_left,
-    missing_values,
-    range_of_v2,
-    amplitudes,
-    phases_in_radians,
-    useless_phases,
-    tiny_errors,
-)
+JUDGES = {
+    "v2": (range_of_v2, tiny_errors),
+    "t3": (phases_in_radians, useless_phases, tiny_errors),
+    "visamp": (amplitudes,),
+}
+CHECKS = (errors, nothing_left, missing_values, triple_amplitudes, data_in_use)
