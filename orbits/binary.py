@@ -218,7 +218,8 @@ def model(
     Returns
     -------
     data : ndarray of shape (n,)
-        Squared visibilities, closure phases (rad), triple amplitudes, visibility amplitudes.
+        Squared visibilities, closure phases (rad), triple amplitudes, visibility amplitudes and
+        phases (rad, about the primary's place).
     jacobian : ndarray of shape (n, len(free))
         Derivatives by the parameters whose indices are `free`.
     """
@@ -228,15 +229,15 @@ def model(
     v2 = (np.abs(own) ** 2) @ weights
     v2_by = 2 * (np.conj(own) * own_by).real @ weights
     triple, triple_by = _triple(seen, by, sampling.t3, sampling.turned, weights)
-    # d arg T = Im(dT / T); at an exact null the phase has no derivative.
-    power = np.abs(triple) ** 2
-    t3_by = (np.conj(triple) * triple_by).imag / np.where(power > 0, power, 1.0)
+    t3, t3_by = _phase(triple, triple_by)
     product, product_by = _triple(seen, by, sampling.t3amp, sampling.t3amp_turned, weights)
     t3amp, t3amp_by = _modulus(product, product_by)
     visamp, visamp_by = _modulus(seen[sampling.visamp], by[:, sampling.visamp])
+    visphi, visphi_by = _phase(seen[sampling.visphi] @ weights, by[:, sampling.visphi] @ weights)
+    sense = np.where(sampling.visphi_turned, -1.0, 1.0)
     return (
-        np.concatenate([v2, np.angle(triple), t3amp, visamp @ weights]),
-        np.concatenate([v2_by, t3_by, t3amp_by, visamp_by @ weights], axis=1).T,
+        np.concatenate([v2, t3, t3amp, visamp @ weights, sense * visphi]),
+        np.concatenate([v2_by, t3_by, t3amp_by, visamp_by @ weights, sense * visphi_by], axis=1).T,
     )
 
 
@@ -245,6 +246,12 @@ def _triple(seen, by, samples, turned, weights) -> tuple[np.ndarray, np.ndarray]
     a, b, c = np.moveaxis(sides(seen, samples, turned), 1, 0)
     a_by, b_by, c_by = np.moveaxis(sides(by, samples, turned), 2, 0)
     return (a * b * c) @ weights, (a_by * b * c + a * b_by * c + a * b * c_by) @ weights
+
+
+def _phase(value: np.ndarray, by: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Phase of complex `value` and its derivatives, Im(dz / z); at an exact null it has none."""
+    power = np.abs(value) ** 2
+    return np.angle(value), (np.conj(value) * by).imag / np.where(power > 0, power, 1.0)
 
 
 def _modulus(value: np.ndarray, by: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

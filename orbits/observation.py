@@ -208,8 +208,10 @@ class Observation:
     visamp: Observable = field(default_factory=lambda: Observable.empty(1))
     """Visibility amplitudes; empty unless asked for."""
     visphi: Observable = field(default_factory=lambda: Observable.empty(1))
-    """Visibility phases, rad, differential or absolute as the instrument makes them; empty unless
-    asked for."""
+    """Visibility phases, rad; empty unless asked for. Their mean in each exposure, and their slope
+    over wavenumber, mean nothing."""
+    phase_order: int = 0
+    """Order of the polynomials in wavelength that were taken out of `visphi` besides."""
     correlation: "csr_array | None" = None
     """Correlation matrix of all data, stacked in the order of `OBSERVABLES` (V2, closure phases,
     then whatever else was asked for); None if the data are independent."""

@@ -14,10 +14,9 @@ from functools import cached_property
 import numpy as np
 
 from .constants import DAY, MAS
-from .observation import Channels, Exposures, Observation, sides
+from .observation import OBSERVABLES, Channels, Exposures, Observation, sides
 
-SAMPLED = ("v2", "t3", "t3amp", "visamp")
-"""The observables of which there is a model, in the order in which data are stacked."""
+SAMPLED = OBSERVABLES
 _SAME_BASELINE = 1e-6
 """m; sides that agree to this are one: 1e-5 of a turn at 1 arcsec and 0.5 um."""
 _MOST_NODES = 40
@@ -53,6 +52,10 @@ class Sampling:
     """(n_t3amp, 3) as `turned`."""
     visamp: np.ndarray
     """(n_visamp,) the sample of each visibility amplitude."""
+    visphi: np.ndarray
+    """(n_visphi,) the sample of each visibility phase."""
+    visphi_turned: np.ndarray
+    """(n_visphi,) True where it is the phase of the conjugate of its sample."""
 
     def __len__(self) -> int:
         return len(self.u)
@@ -92,7 +95,7 @@ class Sampling:
         for place in places:
             used[place] = True
         number = np.cumsum(used).reshape(used.shape) - 1
-        v2, t3, t3amp, visamp = (number[place] for place in places)
+        v2, t3, t3amp, visamp, visphi = (number[place] for place in places)
         turned = [against[table.row] for table, against in zip(tables, lines.turned, strict=True)]
         row, column = np.nonzero(used)
         leg, drift = lines.leg[row], lines.drift[row]
@@ -117,6 +120,8 @@ class Sampling:
             t3amp=t3amp,
             t3amp_turned=turned[2] ^ third,
             visamp=visamp[:, 0],
+            visphi=visphi[:, 0],
+            visphi_turned=turned[4][:, 0],
         )
 
 

@@ -78,12 +78,13 @@ def four_stations(*, exposures=1, channels=1, stations=4, wavelength=(1.5e-6, 1.
     )
 
 
-def with_amplitudes(blank):
-    """`blank` with triple and visibility amplitudes where it has closure phases and V2."""
+def with_all_observables(blank):
+    """`blank` with amplitudes and phases of triangles and baselines where it has others of them."""
     return replace(
         blank,
         t3amp=replace(blank.t3, error=np.full(len(blank.t3), 0.02)),
         visamp=replace(blank.v2, error=np.full(len(blank.v2), 0.01)),
+        visphi=replace(blank.v2, error=np.full(len(blank.v2), np.radians(0.5))),
     )
 
 
@@ -99,6 +100,13 @@ def fill(blank, rng=None, scene=None, *, errors=None, **values):
     for name in SAMPLED:
         table = getattr(blank, name)
         value = data[first : first + len(table)]
-        tables[name] = replace(table, value=wrapped(value) if name == "t3" else value)
+        phase = name in ("t3", "visphi")
+        tables[name] = replace(table, value=wrapped(value) if phase else value)
         first += len(table)
     return replace(blank, **tables)
+
+
+def offset_in_sigma(candidate, x, y):
+    """How far a solution lies from (x, y), mas, in units of its error ellipse."""
+    d = np.array([candidate.x_mas - x, candidate.y_mas - y])
+    return np.sqrt(d @ np.linalg.solve(candidate.covariance_xy_mas2, d))

@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 from numpy.testing import assert_allclose
-from skies import epoch, with_amplitudes, wrapped
+from skies import epoch, with_all_observables, wrapped
 
 from orbits.binary import Scene, bispectrum, model, predict
 from orbits.constants import MAS
@@ -123,14 +123,21 @@ def test_exchanging_the_stars_changes_nothing():
 
 
 def test_amplitudes_are_moduli_of_what_phases_are_angles_of():
-    observation = with_amplitudes(epoch(v2_legs=BASELINES, t3_legs=TRIANGLES))
+    """And the phases of baselines are those of the Fourier sum over two points."""
+    observation = with_all_observables(epoch(v2_legs=BASELINES, t3_legs=TRIANGLES))
     scene = Scene()
     values = scene.vector({"x": 2.0, "y": 5.0, "contrast": 0.4, "primary_diameter": 1.0})
     sampling = Sampling.of(observation, radius=10.0)
-    v2, t3, t3amp, visamp = np.split(model(scene, values, sampling)[0], [5, 8, 11])
+    every = model(scene, values, sampling)[0]
+    v2, t3, t3amp, visamp, _ = np.split(every, [5, 8, 11, 16])
     triple = bispectrum(scene.visibility(values, sampling)[0], sampling)
     assert_allclose(t3amp * np.exp(1j * t3), triple, atol=1e-15)
     assert_allclose(visamp**2, v2, atol=1e-15)
+    values = scene.vector({"x": 2.0, "y": 5.0, "contrast": 0.4})
+    u, v = observation.visphi.frequencies[:, 0].T
+    fringe = 1 + 0.4 * np.exp(-2j * np.pi * (2.0 * u + 5.0 * v) * MAS)
+    got = model(scene, values, sampling)[0][16:]
+    assert_allclose(wrapped(got - np.angle(fringe)), 0, atol=1e-13)
 
 
 def test_background_lowers_the_contrast_of_the_fringes():
@@ -206,7 +213,7 @@ def test_jacobian_is_the_slope_of_the_model():
         v2_legs=BASELINES, t3_legs=TRIANGLES, wavelength=[1.5e-6, 1.7e-6], bandwidth=0.05e-6
     )
     observation.v2.channels.instrument[1] = 1
-    observation = with_amplitudes(observation)
+    observation = with_all_observables(observation)
     scene = Scene(
         primary_shape="linear", companion_shape="power", companions=2, instruments=2,
         reference=1.6e-6, fibre_fwhm=80.0,

@@ -39,7 +39,7 @@ def search(
     target: Target = None,
     night: NightDate = None,
     use: Annotated[
-        list[str], typer.Option(help="Observable: v2, t3, t3amp or visamp; repeatable.")
+        list[str], typer.Option(help="Observable: v2, t3, t3amp, visamp or visphi; repeatable.")
     ] = ["v2", "t3"],  # noqa: B006 - typer copies it
     field: HalfField = None,
     step: Annotated[float | None, typer.Option(help="Of the grid, mas.")] = None,
@@ -235,6 +235,7 @@ def _counts(result: "SearchResult") -> str:
         (result.n_t3, "closure phases"),
         (result.n_t3amp, "triple amplitudes"),
         (result.n_visamp, "visibility amplitudes"),
+        (result.n_visphi, "visibility phases"),
     ]
     return " and ".join(f"{count} {name}" for count, name in kinds if count)
 

@@ -4,16 +4,19 @@ C = S + U U^T: S is block-diagonal (errors, and correlations between a few data 
 closure phases that share baselines), U has a column for each error that many data have in common,
 such as a calibration that is wrong by the same amount in all channels of a baseline. The inverse is
 that of S less a term of the rank of U (Woodbury), so a map with it costs a few transforms more.
+
+The phase of a single baseline holds the piston of the atmosphere, or refers to other channels of
+its row: of the phases of an exposure only what is left beside a mean and a slope is measured.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import sparse
 
 from ..errors import InputError
-from ..observation import Observable, Observation
-from ..sampling import SAMPLED, Sampling
+from ..observation import OBSERVABLES, Observable, Observation
+from ..sampling import Sampling
 
 _SINGULAR = 1e-8
 """Eigenvalues of a correlation block below this part of the largest are taken for zero: sets of
@@ -41,23 +44,25 @@ class ErrorModel:
 
 @dataclass(frozen=True, eq=False)
 class Covariance:
-    """Covariance of n data, of rank `rank`. "Whitened" data have uncorrelated errors of 1."""
+    """Covariance of n data, which become m "whitened" ones with uncorrelated errors of 1."""
 
     whitener: sparse.csr_array
-    """(rank, n): turns errors of covariance S into unit white noise."""
+    """(m, n): turns errors of covariance S into unit white noise."""
     shaper: sparse.csr_array
-    """(n, rank): turns unit white noise into errors of covariance S."""
+    """(n, m): turns unit white noise into errors of covariance S."""
     common: np.ndarray
     """(n, k): U."""
     directions: np.ndarray
-    """(rank, k): orthonormal directions of U among whitened data."""
+    """(m, k): orthonormal directions of U among whitened data."""
     excess: np.ndarray
     """(k,): variance along `directions` that U adds to the 1 of S."""
+    free: np.ndarray
+    """(m, f): orthonormal directions of whitened data about which nothing was measured."""
 
     @property
     def rank(self) -> int:
         """Number of independent data."""
-        return self.whitener.shape[0]
+        return self.whitener.shape[0] - self.free.shape[1]
 
     @classmethod
     def of(
@@ -67,7 +72,7 @@ class Covariance:
         errors: ErrorModel | None = None,
         v2: np.ndarray | None = None,
     ) -> "Covariance":
-        """Covariance of the data of `observation`, stacked in the order of `sampling.SAMPLED`.
+        """Covariance of the data of `observation`, stacked in the order of `OBSERVABLES`.
 
         `v2` (n_v2,) are the squared visibilities of which a calibration error is a part: those of
         a model, since noisy ones draw a fit to the low side (Peelle's puzzle; D'Agostini 1994,
@@ -79,11 +84,12 @@ class Covariance:
             If the correlations that the files list cannot be those of any errors.
         """
         errors = ErrorModel() if errors is None else errors
-        sigma = np.concatenate([getattr(observation, name).error for name in SAMPLED])
+        sigma = np.concatenate([getattr(observation, name).error for name in OBSERVABLES])
         return cls.build(
             sigma,
             _correlation(observation, sampling, errors),
             _common(observation, errors, observation.v2.value if v2 is None else v2),
+            _pistons(observation),
             name=observation.target,
         )
 
@@ -93,40 +99,59 @@ class Covariance:
         sigma: np.ndarray,
         correlation: sparse.sparray | None = None,
         common: np.ndarray | None = None,
+        free: np.ndarray | None = None,
         *,
         name: str = "data",
     ) -> "Covariance":
-        """From errors (n,), a correlation matrix (n, n) (None: independent), and U (n, k)."""
+        """From errors (n,), a correlation matrix (n, n) (None: independent), and U (n, k).
+
+        The columns of `free` (n, f) can be added to the data without anyone's noticing.
+        """
         n = len(sigma)
         whitener, shaper = _factors(sigma, correlation, name)
         common = np.empty((n, 0)) if common is None else common
         directions, size, _ = np.linalg.svd(whitener @ common, full_matrices=False)
         keep = size > _SINGULAR * size.max(initial=1.0)
-        return cls(whitener, shaper, common, directions[:, keep], size[keep] ** 2)
+        tame = cls(
+            whitener, shaper, common, directions[:, keep], size[keep] ** 2,
+            np.empty((whitener.shape[0], 0)),
+        )  # fmt: skip
+        if free is None or not free.size:
+            return tame
+        return replace(tame, free=_orthonormal(tame.whiten(free)))
 
     def whiten(self, data: np.ndarray) -> np.ndarray:
-        """(rank, ...) whitened form of `data` (n, ...)."""
-        return self._tame(self.whitener @ data)
+        """(m, ...) whitened form of `data` (n, ...)."""
+        return self._bound(self._tame(self.whitener @ data))
 
     def back(self, white: np.ndarray) -> np.ndarray:
         """(n, ...) the adjoint of `whiten`: weights of the data from weights of whitened data."""
-        return self.whitener.T @ self._tame(white)
+        return self.whitener.T @ self._tame(self._bound(white))
 
     def draw(self, rng: np.random.Generator) -> np.ndarray:
         """(n,) one realisation of the errors."""
-        white = self.shaper @ rng.standard_normal(self.rank)
+        white = self.shaper @ rng.standard_normal(self.shaper.shape[1])
         return white + self.common @ rng.standard_normal(self.common.shape[1])
+
+    def white_noise(self, rng: np.random.Generator, count: int) -> np.ndarray:
+        """(m, count) realisations of whitened errors."""
+        return self._bound(rng.standard_normal((self.whitener.shape[0], count)))
 
     @property
     def removed(self) -> np.ndarray:
-        """(k, n) rows z such that the inverse of C is that of S less the sum of z^T z."""
+        """(k + f, n) rows z such that the inverse of C is that of S less the sum of z^T z."""
         part = np.sqrt(self.excess / (1 + self.excess))
-        return (self.whitener.T @ (self.directions * part)).T
+        rows = [self.directions * part, self._tame(self.free)]
+        return (self.whitener.T @ np.concatenate(rows, axis=1)).T
 
     @property
     def dense(self) -> np.ndarray:
         """(n, n) the covariance itself, for small sets and tests."""
         return (self.shaper @ self.shaper.T).toarray() + self.common @ self.common.T
+
+    def _bound(self, white: np.ndarray) -> np.ndarray:
+        """Take out what lies along the directions about which nothing was measured."""
+        return white - self.free @ (self.free.T @ white) if self.free.size else white
 
     def _tame(self, white: np.ndarray) -> np.ndarray:
         """Divide the deviation along each common direction by its size."""
@@ -195,7 +220,7 @@ def _correlation(observation, sampling, errors) -> sparse.sparray | None:
     listed = observation.correlation if errors.correlated else None
     if not errors.shared_baselines or not len(observation.t3):
         return listed
-    sizes = [len(getattr(observation, name)) for name in SAMPLED]
+    sizes = [len(getattr(observation, name)) for name in OBSERVABLES]
     n = sum(sizes)
     blocks = [sparse.eye_array(size) for size in sizes]
     blocks[1] = _shared_baselines(observation.t3, sampling)
@@ -221,9 +246,31 @@ def _shared_baselines(t3: Observable, sampling: Sampling) -> sparse.csr_array:
     return sparse.csr_array(through @ through.T) / 3
 
 
+def _orthonormal(columns: np.ndarray) -> np.ndarray:
+    """(m, f) orthonormal basis of the span of `columns` (m, p)."""
+    directions, size, _ = np.linalg.svd(columns, full_matrices=False)
+    directions[~columns.any(axis=1)] = 0.0  # but for rounding they are
+    return directions[:, size > _SINGULAR * size.max()]
+
+
+def _pistons(observation: Observation) -> np.ndarray:
+    """(n, f) what the phases of each exposure may have in common: mean, slopes, polynomials."""
+    table = observation.visphi
+    n = sum(len(getattr(observation, name)) for name in OBSERVABLES)
+    if not len(table):
+        return np.empty((n, 0))
+    wave = table.wavelength / table.wavelength.mean()
+    shapes = [wave**power for power in (0, -1, *range(1, observation.phase_order + 1))]
+    rows, row = np.unique(table.row, return_inverse=True)
+    columns = np.zeros((n, len(shapes), len(rows)))
+    for place, shape in enumerate(shapes):
+        columns[n - len(table) + np.arange(len(table)), place, row] = shape
+    return columns.reshape(n, -1)
+
+
 def _common(observation: Observation, errors: ErrorModel, v2: np.ndarray) -> np.ndarray:
     """(n, k) one column for each baseline, and each triangle, of a night."""
-    n2, n = len(observation.v2), sum(len(getattr(observation, name)) for name in SAMPLED)
+    n2, n = len(observation.v2), sum(len(getattr(observation, name)) for name in OBSERVABLES)
     columns = []
     for table, first, scale in (
         (observation.v2, 0, errors.v2_calibration * np.abs(v2)),

@@ -47,8 +47,6 @@ class Epoch:
         count: int,
         smearing: bool,
     ):
-        # There is no model of phases that depend on an instrument's own reference.
-        observation = observation.select(visphi=np.zeros(len(observation.visphi), dtype=bool))
         self.observation, self.stars, self.grid, self.smearing = observation, stars, grid, smearing
         self.scene = scene_of(observation, stars, count)
         self.before = scene_of(observation, stars, count - 1)
@@ -168,6 +166,7 @@ class Epoch:
             n_t3=len(self.observation.t3),
             n_t3amp=len(self.observation.t3amp),
             n_visamp=len(self.observation.visamp),
+            n_visphi=len(self.observation.visphi),
             best=kept[0],
             alternatives=kept[1:],
             kept_chi2=KEPT,

@@ -26,9 +26,11 @@ class Problem:
     """Data with their covariance and samples: all that a fit of any scene needs."""
 
     data: np.ndarray
-    """(n,) stacked in the order of `sampling.SAMPLED`; closure phases in rad."""
-    phases: slice
-    """Which of them are phases."""
+    """(n,) stacked in the order of `OBSERVABLES`; phases in rad."""
+    closure_phases: slice
+    """Which of them are closure phases."""
+    exposure: np.ndarray
+    """(n_visphi,) the exposure of each of the last data, phases of baselines."""
     sampling: Sampling
     covariance: Covariance
     weights: np.ndarray | None = None
@@ -39,14 +41,24 @@ class Problem:
         """The data of `observation`."""
         data = np.concatenate([getattr(observation, name).value for name in SAMPLED])
         first = len(observation.v2)
-        phases = slice(first, first + len(observation.t3))
-        return cls(data, phases, sampling, covariance)
+        closure_phases = slice(first, first + len(observation.t3))
+        return cls(data, closure_phases, observation.visphi.row, sampling, covariance)
 
     def residual(self, predicted: np.ndarray) -> np.ndarray:
-        """(n,) data minus `predicted`, closure phases wrapped into [-pi, pi)."""
+        """(n,) data minus `predicted`; phases wrapped, those of baselines about their mean.
+
+        The mean phase of an exposure is not measured (`Covariance`), so that taking one out costs
+        nothing, and keeps the others clear of half a turn.
+        """
         difference = self.data - predicted
-        phase = difference[self.phases]
-        difference[self.phases] = (phase + np.pi) % (2 * np.pi) - np.pi
+        phase = difference[self.closure_phases]
+        difference[self.closure_phases] = (phase + np.pi) % (2 * np.pi) - np.pi
+        if self.exposure.size:
+            turn = np.exp(1j * difference[-self.exposure.size :])
+            mean = np.bincount(self.exposure, turn.real) + 1j * np.bincount(
+                self.exposure, turn.imag
+            )
+            difference[-self.exposure.size :] = np.angle(turn * np.conj(mean[self.exposure]))
         return difference
 
 

@@ -93,7 +93,7 @@ def remove(observation: Observation, companion: Companion, *, smearing: bool = T
 def exchange(
     observation: Observation, old: View, new: View, *, smearing: bool = True
 ) -> Observation:
-    """`observation` as if the scene `new` stood where `old` does; VISPHI, not modelled, stays."""
+    """`observation` as if the scene `new` stood where `old` does."""
     sampling = Sampling.of(observation, radius=max(old.reach, new.reach), smearing=smearing)
     before, after = (model(view.scene, view.values, sampling)[0] for view in (old, new))
     changes, first = {}, 0
@@ -101,7 +101,7 @@ def exchange(
         table = getattr(observation, name)
         own = slice(first, first + len(table))
         first += len(table)
-        if name == "t3":
+        if name in ("t3", "visphi"):
             phase = table.value + after[own] - before[own]
             changes[name] = replace(table, value=(phase + np.pi) % (2 * np.pi) - np.pi)
         else:

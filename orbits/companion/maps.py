@@ -79,7 +79,8 @@ class Field:
         )
         data, jacobian = model(null.scene, null.values, self.sampling, null.free)
         self.problem = Problem.of(observation, self.sampling, covariance)
-        self.residual = covariance.whiten(self.problem.residual(data))
+        self.null_residual = self.problem.residual(data)
+        self.residual = covariance.whiten(self.null_residual)
         self.nuisance = _orthonormal(covariance.whiten(jacobian))
         visibility, _ = null.scene.visibility(null.values, self.sampling)
         self.visibility, self.flux = visibility, scene_flux(null)
@@ -120,6 +121,10 @@ class Field:
         """Whitened data (rank, ...) without what the nuisance parameters can explain."""
         return white - self.nuisance @ (self.nuisance.T @ white)
 
+    def noise(self, rng: np.random.Generator, count: int) -> np.ndarray:
+        """(rank, count) projected whitened residuals of data without a companion."""
+        return self.project(self.covariance.white_noise(rng, count))
+
     def waves(self, white: np.ndarray) -> np.ndarray:
         """(k, m) coefficients of the maps of N for projected whitened data (rank, k)."""
         return self.response.coefficients(self.covariance.back(white).T)
@@ -159,8 +164,9 @@ class Field:
         # The companion's light dilutes what a change of the primary does to V2.
         jacobian[: len(self.sampling.v2)] /= (1 + contrast / self.flux) ** 2
         residual = bright_residual(
-            self.sampling, visibility, self.flux, self.companion, contrast, self.problem.data
-        )
+            self.sampling, visibility, self.flux, self.companion, contrast,
+            self.problem.data, self.null_residual,
+        )  # fmt: skip
         nuisance = _orthonormal(self.covariance.whiten(jacobian))
         removed = np.concatenate([self.covariance.removed, self.covariance.back(nuisance).T])
         return residual.square(self.grid, self._precision, removed)

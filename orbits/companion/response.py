@@ -59,16 +59,19 @@ class Response:
             v.append(self.v[j] + sign * self.v[i])
             coefficients.append(part.data / np.where(i == j, 2, 1))
         total = grid.sum(np.concatenate(u), np.concatenate(v), np.concatenate(coefficients))
-        for part in self._sums(grid, removed):
+        waves = self.coefficients(removed)
+        # What does not depend on the position needs no transform.
+        still = ~waves[:, 1:].any(axis=1)
+        total -= (waves[still, 0].real ** 2).sum()
+        for part in self._sums(grid, waves[~still]):
             total -= part**2
         return total
 
-    def _sums(self, grid: Grid, weights: np.ndarray):
-        """Yield the map of each weighted sum of the data, `weights` (k, n)."""
-        if not len(weights):
+    def _sums(self, grid: Grid, waves: np.ndarray):
+        """Yield the map of each sum of waves, (k, m) coefficients."""
+        if not len(waves):
             return
         transform = grid.transform(self.u, self.v)
-        waves = self.coefficients(weights)
         for start in range(0, len(waves), 2):
             yield from transform(waves[start : start + 2])
 
@@ -106,7 +109,12 @@ def faint_response(
     visamp.constant(-(modulus @ weights) / flux)
     direction = np.conj(own) / np.where(modulus > 0, modulus, 1.0)
     visamp.waves(sampling.visamp, direction * weights / flux)
-    return _response(sampling, v2, t3, t3amp, visamp)
+    visphi = _Entries(sampling, shape, first=visamp.end(len(sampling.visamp)))
+    own = visibility[sampling.visphi] @ weights
+    sense = np.where(sampling.visphi_turned, -1.0, 1.0)
+    angle = -1j * sense * np.conj(own) / (np.abs(own) ** 2 + _NULL**2) / flux
+    visphi.waves(sampling.visphi, angle[:, None] * weights)
+    return _response(sampling, v2, t3, t3amp, visamp, visphi)
 
 
 def _logarithmic(visibility, samples, turned, weights) -> tuple[np.ndarray, np.ndarray]:
@@ -127,13 +135,15 @@ def bright_residual(
     companion: tuple[str, float],
     contrast: float,
     data: np.ndarray,
+    null: np.ndarray,
 ) -> Response:
     """Data minus the model of a binary of fixed contrast, for stacked `data` (n,).
 
     Exact for V2 where smearing does not matter. A bispectrum enters as its part across the observed
     closure phase over its root-mean-square modulus, and amplitudes as their parts along the phase
     of the scene so far: residuals to first order, which a map needs to point at the peaks; the
-    exact model judges those.
+    exact model judges those. Phases of single baselines, whose zero is unknown, take no part: they
+    stay at `null` (n,), the residuals of the scene so far.
     """
     shape, weights = _companion(sampling, *companion), sampling.time_weights
     first = (flux * visibility) @ weights  # (m,)
@@ -155,10 +165,13 @@ def bright_residual(
     t3amp.pair(sampling.t3amp, sampling.t3amp_turned, pair, along, contrast, weights)
     visamp = _Entries(sampling, shape, first=t3amp.end(len(sampling.t3amp)))
     own = first[sampling.visamp]
-    visamp.constant(data[visamp.first :] - np.abs(own) / total)
+    end = visamp.end(len(own))
+    visamp.constant(data[visamp.first : end] - np.abs(own) / total)
     direction = np.exp(-1j * np.angle(own))
     visamp.waves(sampling.visamp, -contrast * direction[:, None] * weights / total)
-    return _response(sampling, v2, t3, t3amp, visamp)
+    visphi = _Entries(sampling, shape, first=end)
+    visphi.constant(null[end:])
+    return _response(sampling, v2, t3, t3amp, visamp, visphi)
 
 
 @dataclass(frozen=True, eq=False)

@@ -124,6 +124,7 @@ class SearchResult:
     n_t3: int
     n_t3amp: int
     n_visamp: int
+    n_visphi: int
     best: Candidate
     alternatives: tuple[Candidate, ...]
     """Other solutions that the data allow, the best first."""
@@ -153,6 +154,7 @@ class SearchResult:
             "n_t3": self.n_t3,
             "n_t3amp": self.n_t3amp,
             "n_visamp": self.n_visamp,
+            "n_visphi": self.n_visphi,
             "best": self.best.to_json(),
             "alternatives": [one.to_json() for one in self.alternatives],
             "alternatives_within_chi2": self.kept_chi2,

@@ -89,7 +89,7 @@ def noise_maxima(
     with progress.task("searching noise", count) as tick:
         while len(maxima) < count:
             k = min(2 * batch, count - len(maxima))
-            white = field.project(rng.standard_normal((field.covariance.rank, k)))
+            white = field.noise(rng, k)
             n = transform(field.waves(white))
             chi2 = (white**2).sum(axis=0)
             found = [

@@ -144,9 +144,7 @@ def spectrum(
 
     shared = [here(i) for i in known.free if known.scene.names[i] not in replaced]
     squares = [here(i) for i in known.squares]
-    priors = {
-        here(i): prior for i, prior in known.priors.items() if here(i) in (*shared, *squares)
-    }
+    priors = {here(i): prior for i, prior in known.priors.items() if here(i) in (*shared, *squares)}
     reach = 1.2 * companion.separation_mas
     still = Sampling.of(observation, radius=0.0, smearing=smearing)
     covariance = Covariance.of(observation, still, errors)

@@ -68,7 +68,7 @@ class Stack:
             k = min(2 * _BATCH, count - start)
             total, chi2 = np.zeros((k, self.grid.side, self.grid.side)), np.zeros(k)
             for field, scale, plan in zip(self.fields, self.scale, plans, strict=True):
-                white = field.project(rng.standard_normal((field.covariance.rank, k)))
+                white = field.noise(rng, k)
                 total += plan(field.waves(white)) * (field.beam / scale)
                 chi2 += (white**2).sum(axis=0)
             yield from zip(total * self.normalisation, chi2, strict=True)

@@ -7,8 +7,9 @@ from typing import TYPE_CHECKING, Self
 import numpy as np
 
 from ..observation import OBSERVABLES, Channels, Exposures, Observable, Observation
+from . import references
 from .correlation import Numbers, mended
-from .model import BaselineTable, OIFile, Wavelength
+from .model import BaselineTable, OIFile, Vis, Wavelength
 from .observables import KINDS, ErrorBars, Kind, sound, usable
 
 if TYPE_CHECKING:
@@ -61,6 +62,7 @@ def observation(
         target=target,
         instruments=spectra.names,
         stations=tuple(stations.names),
+        phase_order=max((_order(s.table) for s in given if s.kind.name == "visphi"), default=0),
         correlation=_correlation(file, given),
         files=tuple(name for name in file.files if name in sources),
         problems=tuple(file.problems),
@@ -80,6 +82,9 @@ def _flat(
         value, error = value[keep], error[keep]
     if kind.phase:
         value, error = np.radians(within_a_turn(value)), np.radians(error)
+    if kind.name == "visphi":
+        factor = np.repeat(references.scale(table), np.count_nonzero(keep, axis=1))
+        value, error = value * factor, error * factor
     # Indices of 64 bits would be as large as the data.
     rows = np.arange(len(table), dtype=np.int32)
     width = np.arange(keep.shape[1], dtype=np.int32) + spectra.first[number]
@@ -91,6 +96,11 @@ def _flat(
         value=value,
         error=errors.apply(kind.name, error),
     )
+
+
+def _order(table: Vis) -> int:
+    """Order of the polynomial in wavelength that was taken out of the phases of `table`."""
+    return max(table.phiorder or 0, 0) if references.is_differential(table) else 0
 
 
 def within_a_turn(degrees: np.ndarray) -> np.ndarray:

@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 from numpy.testing import assert_allclose
-from skies import fill, four_stations, with_amplitudes
+from skies import fill, four_stations, with_all_observables
 
 from orbits.binary import Scene, model
 from orbits.companion.covariance import Covariance, ErrorModel
@@ -12,20 +12,21 @@ from orbits.companion.grid import Grid
 from orbits.companion.maps import Field, scene_flux
 from orbits.companion.response import bright_residual, faint_response
 from orbits.constants import MAS
-from orbits.sampling import SAMPLED, Sampling
+from orbits.observation import OBSERVABLES
+from orbits.sampling import Sampling
 
 
 @pytest.fixture
 def observation(rng):
     """Four stations, three exposures, five channels, all observables; a resolved star and noise."""
-    blank = with_amplitudes(four_stations(exposures=3, channels=5))
+    blank = with_all_observables(four_stations(exposures=3, channels=5))
     return fill(blank, rng, primary_diameter=1.4)
 
 
 def prepared(observation, errors=None, *, half=20, step=1.7, bandwidth=None):
     if bandwidth is not None:
-        for table in (getattr(observation, name) for name in SAMPLED):
-            table.bandwidth[:] = bandwidth
+        for table in (getattr(observation, name) for name in OBSERVABLES):
+            table.channels.bandwidth[:] = bandwidth
     sampling = Sampling.of(observation, radius=0.0)
     covariance = Covariance.of(observation, sampling, errors)
     star = Scene(companions=0)
@@ -50,11 +51,25 @@ def test_sum_of_waves_is_the_sum(rng):
     assert_allclose(both[2], -fast, atol=1e-5)
 
 
-def direct(field, x, y):
+def pistons(observation):
+    """A phase, and one that goes with the wavenumber, for each exposure of a single baseline."""
+    table, n = observation.visphi, sum(len(getattr(observation, name)) for name in OBSERVABLES)
+    columns = []
+    for row in range(len(table.exposures)):
+        column = np.zeros(n)
+        column[n - len(table) :] = table.row == row
+        columns.append(column)
+        columns.append(column.copy())
+        columns[-1][n - len(table) :] /= table.wavelength * 1e6
+    return np.column_stack(columns)
+
+
+def direct(observation, field, x, y):
     """N, D and gain at single positions, with dense matrices and no transform."""
     s = field.response.at(x, y)
     c = np.linalg.inv(field.covariance.dense)
     g = model(field.null.scene, field.null.values, field.sampling, field.null.free)[1]
+    g = np.column_stack([g, pistons(observation)])
     p = c - c @ g @ np.linalg.inv(g.T @ c @ g) @ g.T @ c
     r = field.problem.residual(model(field.null.scene, field.null.values, field.sampling)[0])
     return s @ p @ r, np.einsum("pi,ij,pj->p", s, p, s)
@@ -72,7 +87,7 @@ def test_faint_maps_equal_the_direct_evaluation(observation, rng, errors, bandwi
     field = prepared(observation, errors, bandwidth=bandwidth)
     maps, grid = field.faint(), field.grid
     rows, columns = rng.integers(0, grid.side, (2, 60))
-    n, d = direct(field, grid.axis[columns], grid.axis[rows])
+    n, d = direct(observation, field, grid.axis[columns], grid.axis[rows])
     assert_allclose(field.sensitivity[rows, columns], d, atol=1e-6 * field.sensitivity.max())
     contrast = np.clip(n / d, 0, 1)
     gain = contrast * (2 * n - contrast * d)
@@ -93,9 +108,9 @@ def test_response_to_a_faint_companion_is_the_slope_of_the_model(observation):
     rise = (lit - dark) / 1e-6
     slope = field.response.at(np.array([x]), np.array([y]))[0]
     # Closure phases are held back where the primary is nearly resolved out, by (0.02 / V)^2.
-    ends = np.cumsum([len(getattr(observation, name)) for name in SAMPLED])[:-1]
+    ends = np.cumsum([len(getattr(observation, name)) for name in OBSERVABLES])[:-1]
     pairs = zip(np.split(slope, ends), np.split(rise, ends), strict=True)
-    for (got, exact), tolerance in zip(pairs, (1e-4, 0.05, 0.01, 1e-4), strict=True):
+    for (got, exact), tolerance in zip(pairs, (1e-4, 0.05, 0.01, 1e-4, 0.05), strict=True):
         assert_allclose(got, exact, rtol=tolerance, atol=tolerance)
 
 
@@ -104,13 +119,16 @@ def test_bright_residual_is_the_exact_one_for_squared_visibilities(observation, 
     sampling = Sampling.of(observation, radius=0.0)
     star = Scene(companions=0)
     seen, _ = star.visibility(star.vector({"primary_diameter": 1.4}), sampling)
-    data = np.concatenate([getattr(observation, name).value for name in SAMPLED])
-    response = bright_residual(sampling, seen, 1.0, ("disc", 0.7), contrast, data)
+    data = np.concatenate([getattr(observation, name).value for name in OBSERVABLES])
+    null = np.linspace(-1, 1, len(data))
+    response = bright_residual(sampling, seen, 1.0, ("disc", 0.7), contrast, data, null)
     values = {"primary_diameter": 1.4, "x": 6.0, "y": 2.5, "diameter": 0.7, "contrast": contrast}
     exact = model(Scene(), Scene().vector(values), sampling)[0]
     n = len(observation.v2)
     got = response.at(np.array([6.0]), np.array([2.5]))[0]
     assert_allclose(got[:n], (data - exact)[:n], atol=1e-12)
+    # Phases of baselines take no part.
+    assert_allclose(got[-n:], null[-n:])
 
 
 def test_bright_residual_of_closure_phases_is_the_bispectrum_across_the_data(observation):
@@ -122,9 +140,11 @@ def test_bright_residual_of_closure_phases_is_the_bispectrum_across_the_data(obs
     exact = model(Scene(), Scene().vector(values), sampling)[0]
     n, end = len(observation.v2), len(observation.v2) + len(observation.t3)
     at = np.array([6.0]), np.array([2.5])
-    zero = bright_residual(sampling, seen, 1.0, ("point", 0.0), 0.6, exact).at(*at)[0]
+    zero = bright_residual(sampling, seen, 1.0, ("point", 0.0), 0.6, exact, 0 * exact).at(*at)[0]
     assert_allclose(zero[n:end], 0, atol=1e-12)
-    moved = bright_residual(sampling, seen, 1.0, ("point", 0.0), 0.6, exact + 0.3).at(*at)[0]
+    moved = bright_residual(sampling, seen, 1.0, ("point", 0.0), 0.6, exact + 0.3, 0 * exact).at(
+        *at
+    )[0]
     assert (moved[n:end] > 0).all()
 
 

@@ -3,7 +3,8 @@
 import numpy as np
 
 from ...problems import Log
-from ..model import T3, BaselineTable, OIFile
+from .. import references
+from ..model import T3, BaselineTable, OIFile, Vis
 from ..observables import ENOUGH, KINDS, Kind, sampled, sound, unnormalised, usable
 
 TOO_SMALL = 30.0
@@ -119,6 +120,18 @@ def amplitudes(table: BaselineTable, kind: Kind, keep: np.ndarray, log: Log) -> 
         )
 
 
+def references_of_phases(table: Vis, kind: Kind, keep: np.ndarray, log: Log) -> None:
+    """Differential phases refer to the same channels, or to all others."""
+    other = ~references.understood(table)
+    if other.any():
+        log.note(
+            table.label,
+            f"column VISREFMAP gives each channel another reference in {np.count_nonzero(other)} "
+            f"rows (first: row {int(np.argmax(other)) + 1})",
+            "VISPHI, if asked for, is used as if the reference were common to all channels",
+        )
+
+
 def phases_in_radians(table: BaselineTable, kind: Kind, keep: np.ndarray, log: Log) -> None:
     """Closure phases that fill the circle fill it to 180, not to pi.
 
@@ -230,5 +243,6 @@ JUDGES = {
     "v2": (range_of_v2, tiny_errors),
     "t3": (phases_in_radians, useless_phases, tiny_errors),
     "visamp": (amplitudes,),
+    "visphi": (references_of_phases,),
 }
 CHECKS = (errors, nothing_left, missing_values, triple_amplitudes, data_in_use)

@@ -1,0 +1,44 @@
+"""Differential phases: which channels each channel of a row is referred to (VISREFMAP).
+
+The phase of a channel against the mean of all N - 1 others is N / (N - 1) times its phase against
+the mean of all N; against channels that are the same for all it differs by a constant. Beside a
+free mean for every row the two are one, up to that factor.
+"""
+
+import numpy as np
+
+from .model import Vis
+
+
+def is_differential(table: Vis) -> bool:
+    """Whether the phases are said to be differential."""
+    return (table.phityp or "").strip().lower() == "differential"
+
+
+def scale(table: Vis) -> np.ndarray:
+    """(nrow,) what brings the phases of each row to a reference common to all its channels."""
+    channels = table.visphi.shape[1]
+    others = _to_all_others(table) if _mapped(table) else np.zeros(len(table), dtype=bool)
+    return np.where(others, (channels - 1) / channels, 1.0)
+
+
+def understood(table: Vis) -> np.ndarray:
+    """(nrow,) whether the reference is one that `scale` allows for.
+
+    The standard leaves open which axis of VISREFMAP is the channel and which its reference; the
+    answer holds for either.
+    """
+    if not _mapped(table):
+        return np.ones(len(table), dtype=bool)
+    known = table.visrefmap
+    same = (known == known[:, :1]).all(axis=(1, 2)) | (known == known[:, :, :1]).all(axis=(1, 2))
+    return same | _to_all_others(table)
+
+
+def _mapped(table: Vis) -> bool:
+    return is_differential(table) and table.visrefmap is not None and table.visphi.shape[1] > 1
+
+
+def _to_all_others(table: Vis) -> np.ndarray:
+    """(nrow,) whether each channel is referred to all but itself."""
+    return (table.visrefmap != np.eye(table.visphi.shape[1], dtype=bool)).all(axis=(1, 2))
