@@ -68,10 +68,18 @@ class BinTable:
             raise Malformed(f"it has {len(hdu.data)} bytes, too few for {self.nrow} rows")
         self._bytes = np.frombuffer(hdu.data, dtype=np.uint8)[: self.nrow * self.row_bytes]
         self._bytes = self._bytes.reshape(self.nrow, self.row_bytes)
+        start = header.get("THEAP")
+        regular = isinstance(start, int) and self._bytes.size <= start <= len(hdu.data)
+        self._heap = hdu.data[start if regular else self._bytes.size :]
 
     def raw(self, field: Field) -> np.ndarray:
         """(nrow, width) uint8: the bytes of a column."""
         return self._bytes[:, field.offset : field.offset + field.width]
+
+    @property
+    def heap(self) -> bytes:
+        """What columns of varying length point into; empty without such columns."""
+        return bytes(self._heap) if any(field.code in "PQ" for field in self.fields) else b""
 
     def values(self, field: Field) -> np.ndarray:
         """(nrow, repeat) in the file's own type, or scaled where it says so; text as (nrow,) bytes.

@@ -28,7 +28,7 @@ from .units import factor
 
 STRUCTURAL = {
     "XTENSION", "SIMPLE", "BITPIX", "NAXIS", "NAXIS1", "NAXIS2", "PCOUNT", "GCOUNT", "TFIELDS",
-    "EXTNAME", "EXTVER", "EXTEND", "OI_REVN", "CHECKSUM", "DATASUM", "END", "",
+    "THEAP", "EXTNAME", "EXTVER", "EXTEND", "OI_REVN", "CHECKSUM", "DATASUM", "END", "",
 }  # fmt: skip
 COMPATIBLE = {
     "L": "LBIJ", "I": "IJBK", "J": "IJBK", "E": "EDIJBK", "D": "EDIJBK", "C": "CM", "A": "A",
@@ -120,6 +120,7 @@ def _table(kind: type[Table], hdu: HDU, log: Log) -> Table:
             **values,
             units=units,
             extra=extra,
+            heap=content.heap,
             cards=_cards(kind, hdu),
             file=log.file,
             hdu=hdu.number,
@@ -145,8 +146,6 @@ def _sorted_out(
             name = meant
         if name in known and name not in found:
             found[name] = field
-        elif field.code in "PQ":
-            log.note(label, f"column {field.name} has rows of varying length", "it is not kept")
         else:
             name = field.name if field.name not in extra else f"{field.name} {len(extra)}"
             extra[name] = ExtraColumn(field.cards, np.array(content.raw(field)))

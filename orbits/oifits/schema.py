@@ -105,6 +105,8 @@ class Table:
     units: dict[str, str] = field(default_factory=dict)
     """Units of the columns whose unit the standard leaves open, by column name."""
     extra: dict[str, ExtraColumn] = field(default_factory=dict)
+    heap: bytes = b""
+    """What columns of varying length among `extra` point into."""
     cards: list[tuple[str, object, str]] = field(default_factory=list)
     """Header cards the standard does not know: (keyword, value, comment)."""
     file: str | None = None

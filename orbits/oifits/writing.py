@@ -42,6 +42,8 @@ def write(file: OIFile, path: str | Path, *, force: bool = False) -> None:
             versions[table.extname] = versions.get(table.extname, 0) + 1
             header, records = _encode(table, versions[table.extname])
             data = records.view(np.uint8) if records.size else np.empty(0, np.uint8)
+            if table.heap:
+                data = np.concatenate([data, np.frombuffer(table.heap, dtype=np.uint8)])
             handle.write(_sealed(header, data))
             handle.write(data)
             handle.write(b"\0" * (-data.size % BLOCK))
@@ -104,7 +106,7 @@ def _encode(table: Table, version: int) -> tuple[fits.Header, np.ndarray]:
     header = fits.Header()
     header["XTENSION"], header["BITPIX"], header["NAXIS"] = "BINTABLE", 8, 2
     header["NAXIS1"], header["NAXIS2"] = records.dtype.itemsize, len(table)
-    header["PCOUNT"], header["GCOUNT"], header["TFIELDS"] = 0, 1, len(forms)
+    header["PCOUNT"], header["GCOUNT"], header["TFIELDS"] = len(table.heap), 1, len(forms)
     header["EXTNAME"], header["EXTVER"] = table.extname, version
     header["OI_REVN"] = table.revision
     for keyword in keywords(type(table)):

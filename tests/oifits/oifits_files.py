@@ -263,6 +263,7 @@ def assert_same_table(a, b) -> None:
         assert a[keyword.name] == b[keyword.name], keyword.name
     assert a.units == b.units
     assert a.cards == b.cards
+    assert a.heap == b.heap
     assert {n: (e.cards, e.raw.tobytes()) for n, e in a.extra.items()} == {
         n: (e.cards, e.raw.tobytes()) for n, e in b.extra.items()
     }

@@ -34,6 +34,28 @@ def test_a_file_with_everything_comes_back_bit_for_bit(rng, tmp_path):
     make.assert_same(first, load(tmp_path / "again.fits"))
 
 
+def test_columns_of_varying_length_are_kept(rng, tmp_path):
+    """As astropy writes and reads them, whole and after a selection of rows."""
+    make.full(rng).write(tmp_path / "plain.fits")
+    marks = [np.arange(n, dtype=np.float32) for n in (3, 0, 7, 1, 2, 5)]
+    with fits.open(tmp_path / "plain.fits") as opened:
+        number = opened.index_of("OI_VIS2")
+        column = fits.Column("MARKS", format="PE()", array=np.array(marks, dtype=object))
+        header = opened[number].header
+        with_marks = fits.BinTableHDU.from_columns(opened[number].columns + column, header)
+        opened[number] = with_marks
+        opened.writeto(tmp_path / "marked.fits")
+    file = load(tmp_path / "marked.fits")
+    file.write(tmp_path / "whole.fits")
+    table = file.of(Vis2)[0]
+    file.data[file.data.index(table)] = table.select(np.array([5, 2]))
+    file.write(tmp_path / "part.fits")
+    for name, rows in (("whole", range(6)), ("part", (5, 2))):
+        with fits.open(tmp_path / f"{name}.fits", checksum=True) as opened:
+            got = opened["OI_VIS2"].data["MARKS"]
+            assert [part.tolist() for part in got] == [marks[row].tolist() for row in rows]
+
+
 def test_a_gzipped_file_reads_like_the_plain_one(rng, tmp_path):
     import gzip
 
