@@ -1,5 +1,6 @@
 """nodeline orbit: elements and masses of a system."""
 
+import sys
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
@@ -27,21 +28,26 @@ def orbit(
         bool, typer.Option("--pictures", help="Also draw the joint distribution and the scan.")
     ] = False,
     cores: Annotated[
-        int, typer.Option(min=1, help="Threads for the scan; the result is the same.")
+        int, typer.Option(min=1, help="Threads; the result is the same for any number.")
     ] = 1,
     seed: Seed = 0,
     force: Force = False,
     json: Json = False,
 ) -> None:
-    """Fit the orbit of a system to its positions, velocities and parallax."""
+    """Fit the orbit of a system to its positions, velocities and parallax.
+
+    The same command continues a fit that was interrupted.
+    """
     import numpy as np
 
     from ..files import refuse_existing
     from ..fitting.comparison import CHANGES
     from ..fitting.comparison import compare as weigh
     from ..fitting.engine import fit
+    from ..fitting.pieces import Kept
     from ..fitting.solution import outputs
     from ..progress import Bar
+    from ..provenance import record
     from ..system import read_system
 
     names = [name.strip() for name in compare.split(",")] if compare else []
@@ -53,6 +59,7 @@ def orbit(
     refuse_existing(*outputs(given.results), *drawn, force=force)
     positions, velocities = read_data(given)
     model, priors = read_settings(given, positions, velocities)
+    kept = Kept(given.results / "unfinished", lambda text: print(text, file=sys.stderr))
 
     def solve(model: "Model") -> "Solution":
         return fit(
@@ -66,11 +73,26 @@ def orbit(
             cores=cores,
             rng=np.random.default_rng(seed),
             progress=Bar(),
+            keep=kept,
         )
 
-    solution = solve(model)
-    hypotheses = weigh(names, model, solve, solution) if names else []
+    try:
+        solution = solve(model)
+        hypotheses = weigh(names, model, solve, solution) if names else []
+    except KeyboardInterrupt:
+        print("what is finished is kept; the same command continues from there", file=sys.stderr)
+        raise
     solution.write(given.results, force=force)
+    kept.clear()
+    options = f" --compare {','.join(names)}" if names else ""
+    tables = [given.results / "positions.ecsv"] if given.nights else []
+    record(
+        given.results,
+        "orbit",
+        command=f"nodeline orbit {given.path.name} --seed {seed}{options}",
+        seed=seed,
+        inputs=(given.path, *given.positions, *tables, *given.velocities),
+    )
     if pictures:
         from ..plots.joint import draw_joint
         from ..plots.periods import draw_periods

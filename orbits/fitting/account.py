@@ -12,18 +12,16 @@ from .likelihood import (
     position_densities,
     velocity_shape,
 )
-from .proposal import Proposal, Target, responsibilities
+from .proposal import Proposal
 from .space import K1, K2, from_chart, to_chart
+from .target import Target
 
 SEPARATE = 4.0
 """Two densities whose centres lie this many of their standard deviations apart are two solutions,
 unless others bridge the gap."""
 
-DISAGREE = 4.0
-"""Standard errors beyond which two estimates of the evidence cannot both be right."""
-
-Estimate = tuple[float, float]
-"""A value and its standard error."""
+VAGUE = 0.5
+"""Standard deviation of ln of a quantity from which the data do no more than bound it."""
 
 
 def solutions_of(target: Target, points: np.ndarray) -> np.ndarray:
@@ -31,7 +29,7 @@ def solutions_of(target: Target, points: np.ndarray) -> np.ndarray:
     if len(target.proposal) == 0:
         return np.zeros(len(points), dtype=int)
     groups = _groups(target.data, target.proposal)
-    share, _, _ = responsibilities(target, points)
+    share, _, _ = target.responsibilities(points)
     label = groups[np.argmax(share, axis=1)]
     counts = np.bincount(label, minlength=groups.max() + 1)
     rank = np.empty_like(counts)
@@ -166,7 +164,8 @@ def undetermined(data: Data, points: np.ndarray) -> list[str]:
 
     On the scale where its prior is uniform from 0 to 1, a quantity counts as undetermined if its
     standard deviation exceeds 0.2 (that of the prior is 0.29), or if the samples come nearer to an
-    end than a quarter of it (other than at e = 0 and at i = 0 or 180 deg).
+    end than a quarter of it (other than at e = 0 and at i = 0 or 180 deg). However wide the prior,
+    so does a positive quantity whose logarithm is uncertain by more than VAGUE.
     """
     told = []
     space = data.space
@@ -176,7 +175,8 @@ def undetermined(data: Data, points: np.ndarray) -> list[str]:
             continue
         part = (points[:, i] - space.low[i]) / (space.high[i] - space.low[i])
         ends = name not in ("cos_inclination", "outlier_fraction")
-        if part.std() > 0.2 or (ends and _touches(part, low=True, high=True)):
+        vague = name.startswith("log_") and points[:, i].std() > VAGUE
+        if part.std() > 0.2 or vague or (ends and _touches(part, low=True, high=True)):
             told.append(_NAMES.get(name) or data.nuisances.get(name, name))
     if "h_x" in space.names:
         i, j = space.names.index("h_x"), space.names.index("h_y")
@@ -212,17 +212,6 @@ _NAMES = {
     "log_k2": "k2_kms",
     "outlier_fraction": "outlier_fraction",
 }
-
-
-def disagreement(one: Estimate, other: Estimate) -> list[str]:
-    """A sentence where nested sampling and plain draws find different ln of the evidence."""
-    if abs(one[0] - other[0]) < DISAGREE * math.hypot(one[1], other[1]):
-        return []
-    return [
-        f"Nested sampling found ln evidence {one[0]:.2f} +- {one[1]:.2f}, plain draws of its "
-        f"proposal {other[0]:.2f} +- {other[1]:.2f}: weights of solutions and odds are no surer "
-        "than that; more live points help."
-    ]
 
 
 def notes(data: Data, *, confined: bool) -> list[str]:

@@ -11,7 +11,8 @@ from dataclasses import replace
 import numpy as np
 
 from .data import Data
-from .proposal import PRIOR_SHARE, Proposal, Target, responsibilities
+from .proposal import PRIOR_SHARE, Proposal
+from .target import Target
 
 DRAWS = 3000
 ROUNDS = 8
@@ -25,8 +26,8 @@ MOST = 48
 """Components at most."""
 
 
-def adapt(data: Data, proposal: Proposal, rng: np.random.Generator) -> tuple[Proposal, float]:
-    """The adapted mixture, and the efficiency (sum w)^2 / (n sum w^2) of draws from it."""
+def adapt(data: Data, proposal: Proposal, rng: np.random.Generator) -> Proposal:
+    """The adapted mixture: the one whose draws had the best efficiency (sum w)^2 / (n sum w^2)."""
     best, efficiency = _converge(data, proposal, rng)
     for _ in range(SPLITS):
         if efficiency > POOR or 2 * len(best.weight) > MOST:
@@ -34,7 +35,7 @@ def adapt(data: Data, proposal: Proposal, rng: np.random.Generator) -> tuple[Pro
         finer, new = _converge(data, _split(data, best, rng), rng)
         if new > efficiency:
             best, efficiency = finer, new
-    return best, efficiency
+    return best
 
 
 def _converge(data, proposal, rng) -> tuple[Proposal, float]:
@@ -85,7 +86,7 @@ def _updated(target: Target, points: np.ndarray, weight: np.ndarray) -> Proposal
     count, size = proposal.mean.shape
     if len(points) == 0:
         return proposal
-    share, inverse_square, offsets = responsibilities(target, points)
+    share, inverse_square, offsets = target.responsibilities(points)
     share *= weight[:, None]
     total = share.sum(axis=0)
     mean, covariance = proposal.mean.copy(), proposal.covariance.copy()
@@ -113,7 +114,7 @@ def _split(data: Data, proposal: Proposal, rng) -> Proposal:
     points, weight, _ = _weighted(target, rng)
     if len(points) == 0:
         return proposal
-    share, _, offsets = responsibilities(target, points)
+    share, _, offsets = target.responsibilities(points)
     share *= weight[:, None]
     total = share.sum(axis=0)
     rows, centres, shrink = [], [], []

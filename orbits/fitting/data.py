@@ -8,7 +8,8 @@ from ..constants import JULIAN_YEAR
 from ..positions import Positions
 from ..system import Parallax
 from ..velocities import Velocities
-from .likelihood import BOUNDED, DERIVED, NO_PARALLAX, Tables
+from .knowledge import NEED_PARALLAX, combined, rows_of
+from .likelihood import BOUNDED, DERIVED, FREE, NO_PARALLAX, Tables
 from .model import Model
 from .priors import Priors
 from .space import Space, make_space
@@ -32,6 +33,8 @@ class Data:
     """What the columns of the design stand for."""
     design_scales: np.ndarray
     """(q,) the standard deviations of their priors."""
+    design_means: np.ndarray
+    """(q,) the means of their priors, which the tables have taken off the velocities."""
 
     @property
     def nuisances(self) -> dict[str, str]:
@@ -43,6 +46,11 @@ class Data:
         return names | _label(
             self.space, self.tables.speed_labels, self.velocities, "velocity_jitter{}_kms"
         )
+
+    @property
+    def fingerprint(self) -> tuple:
+        """All that a fit depends on here."""
+        return tuple(self.tables), self.priors, self.model, self.space.names, self.reference
 
     @property
     def nights(self) -> int:
@@ -63,13 +71,16 @@ def make_data(
     position_names = _instruments(positions)
     velocity_names = _instruments(velocities)
     stars = set() if velocities is None else set(velocities.star.tolist())
+    parallax_term = _parallax_term(parallax, positions, stars, priors)
     space = make_space(
         priors,
         positions=positions is not None,
         k1=0 in stars or (1 in stars and 2 in stars),
         k2=1 in stars or 2 in stars,
+        sum_alone=stars == {2},
         circular=model.circular,
         outliers=model.outliers and positions is not None,
+        parallax=parallax_term[0] == FREE,
         position_jitters=len(position_names) if model.position_jitter else 0,
         velocity_jitters=len(velocity_names) if model.velocity_jitter else 0,
         scales=sum(name in model.scale for name in position_names),
@@ -78,6 +89,8 @@ def make_data(
     positions, places, place_labels = _places(positions, reference, space, model, position_names)
     velocities, speeds, speed_labels = _speeds(velocities, reference, space, velocity_names)
     names, scales, design = _design(velocities, reference, priors, model, velocity_names)
+    means, scales, constant = combined(names, scales, priors.normal)
+    speeds[:, 1] -= design @ means
     return Data(
         space=space,
         priors=priors,
@@ -95,10 +108,13 @@ def make_data(
             speeds=speeds,
             speed_labels=speed_labels,
             design=design * scales,
-            parallax=_parallax_term(parallax, positions, stars),
+            parallax=parallax_term,
+            knowledge=rows_of(priors.normal, reference),
+            constant=constant,
         ),
         design_names=names,
         design_scales=scales,
+        design_means=means,
     )
 
 
@@ -186,12 +202,20 @@ def _design(velocities, reference, priors, model, names):
     return tuple(labels), np.array(scales), np.column_stack(columns)
 
 
-def _parallax_term(parallax, positions, stars) -> np.ndarray:
-    """How a measured parallax enters; without velocities or positions it meets no other datum."""
-    if parallax is None or positions is None or not stars:
+def _parallax_term(parallax, positions, stars, priors) -> np.ndarray:
+    """How a measured parallax enters.
+
+    With both velocity curves it meets the orbital one, with one of them it is bounded, without it
+    meets no other datum; knowledge of a mass makes it an axis in the last two cases.
+    """
+    if parallax is None or positions is None:
         return np.array([NO_PARALLAX, 1.0, 1.0])
-    both = 2 in stars or len(stars) == 2
-    kind = DERIVED if both else BOUNDED
+    if 2 in stars or len(stars) == 2:
+        kind = DERIVED
+    elif NEED_PARALLAX & priors.normal.keys():
+        kind = FREE
+    else:
+        kind = BOUNDED if stars else NO_PARALLAX
     return np.array([kind, parallax.value, parallax.error])
 
 

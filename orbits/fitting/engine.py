@@ -9,20 +9,19 @@ from ..positions import Positions
 from ..progress import SILENT, Silent
 from ..system import Parallax
 from ..velocities import Velocities
-from .account import Estimate, chi_square, disagreement, nights, notes, solutions_of, undetermined
 from .adaptation import adapt
 from .data import Data, make_data
+from .explore import Work, explore
 from .knowledge import check_knowledge
 from .laplace import normals
-from .linear import LinearTarget
 from .model import Model
-from .nested import sample
-from .posterior import equal_weight, sample_table
+from .outcome import solution_of
+from .pieces import FORGOTTEN, Forgotten, fingerprint
 from .priors import Priors
-from .proposal import Proposal, Target
+from .proposal import Proposal
 from .refine import refine
 from .scan import Scan, doubtful, scan
-from .solution import Solution, summarise, summarise_json
+from .solution import Solution
 
 STARTS = 40
 """Minima of the scan that are refined."""
@@ -32,12 +31,6 @@ SOLUTIONS = 16
 """Solutions that the proposal may hold."""
 NEGLIGIBLE = 16.0
 """A solution whose ln evidence is lower by this much than the best is not kept."""
-TRUSTED = 0.15
-"""Efficiency below which the adapted proposal may have missed a part of the posterior: the data do
-not confine the orbit, and the prior takes over, but for what is linear in the data."""
-CHECKS = 10_000
-LINEAR_CHECKS = 200_000
-"""Draws of the proposal that check the evidence; many where it is wide."""
 
 
 def fit(
@@ -52,6 +45,7 @@ def fit(
     cores: int = 1,
     rng: np.random.Generator,
     progress: Silent = SILENT,
+    keep: Forgotten = FORGOTTEN,
 ) -> Solution:
     """Fit an orbit to positions, velocities or both, and sample its posterior.
 
@@ -66,7 +60,9 @@ def fit(
     live_points
         Live points of the nested sampling; the number of samples grows with it.
     cores
-        Threads for the scan. The result does not depend on it.
+        Threads. The result does not depend on it.
+    keep
+        Where finished pieces are kept, for a fit that is interrupted: see `pieces.Kept`.
 
     Raises
     ------
@@ -80,30 +76,28 @@ def fit(
     data = make_data(positions, velocities, parallax, priors, model or Model())
     check_knowledge(data)
     _require_enough(data)
-    found = scan(data, cores=cores, rng=rng, progress=progress)
-    target, efficiency = propose(data, found, rng)
-    run = sample(target, live_points=live_points, rng=rng, progress=progress)
-    return _solution(data, found, target, efficiency, run, name, rng, begin)
+    # Each piece has random numbers of its own, whether the others are made now or were before.
+    seeds = rng.integers(2**63, size=4)
+    own = [np.random.default_rng(seed) for seed in seeds]
+    pieces = keep.of(fingerprint(data.fingerprint, live_points, seeds))
+    found = pieces.take(
+        "scan", Scan, lambda: scan(data, cores=cores, rng=own[0], progress=progress)
+    )
+    adapted = pieces.take("proposal", Proposal, lambda: propose(data, found, own[1]))
+    work = Work(live_points=live_points, cores=cores, progress=progress, pieces=pieces)
+    explored = explore(data, adapted, work, own[2])
+    solution = solution_of(data, explored, found, name=name, rng=own[3])
+    solution.account["seconds"] = time.monotonic() - begin
+    return solution
 
 
-def propose(data: Data, found: Scan, rng: np.random.Generator) -> tuple[Target, float]:
-    """The adapted proposal around the solutions that the scan leads to, and its efficiency.
-
-    Where that is too low to be trusted, the proposal is the prior, with the Thiele-Innes constants
-    drawn as the data want them if the positions are simple enough for that.
-    """
+def propose(data: Data, found: Scan, rng: np.random.Generator) -> Proposal:
+    """The adapted mixture around the solutions that the scan leads to."""
     most = DOUBTFUL_STARTS if doubtful(data) else STARTS
     fits = refine(data, found, most=most, rng=rng)
     solutions = sorted(normals(data, fits), key=lambda s: -s.log_weight)
     kept = [s for s in solutions if s.log_weight > solutions[0].log_weight - NEGLIGIBLE]
-    proposal, efficiency = adapt(
-        data, Proposal.around(kept[:SOLUTIONS], data.space.dimensions), rng
-    )
-    if efficiency < TRUSTED:
-        if LinearTarget.suits(data):
-            return LinearTarget(data), efficiency
-        proposal = Proposal.prior(data.space.dimensions)
-    return Target(data, proposal), efficiency
+    return adapt(data, Proposal.around(kept[:SOLUTIONS], data.space.dimensions), rng)
 
 
 def _require_enough(data: Data) -> None:
@@ -135,69 +129,3 @@ def _moves(data: Data) -> bool:
     mean = np.linalg.solve(weight.sum(axis=0), np.einsum("nij,nj->i", weight, xy))
     square = np.einsum("ni,nij,nj->", xy - mean, weight, xy - mean)
     return bool(chi2.sf(square, 2 * len(xy) - 2) < 0.0027)
-
-
-def _solution(data, found, target, efficiency, run, name, rng, begin) -> Solution:
-    import pandas as pd
-
-    chosen = equal_weight(run, rng)
-    points = run.points[chosen]
-    label = solutions_of(target, points)
-    order = np.argsort(label, kind="stable")
-    points, label = points[order], label[order]
-    parts = [points[label == k] for k in range(label.max() + 1)]
-    samples = pd.concat([sample_table(data, part, rng) for part in parts], ignore_index=True)
-    samples.insert(0, "solution", label)
-    top = int(np.argmax(target.log_likelihood(points)))
-    best = samples.drop(columns="solution").iloc[top].to_dict()
-    account = {
-        "log_evidence": run.log_evidence,
-        "log_evidence_err": run.log_evidence_error,
-        "effective_samples": run.effective_samples,
-        "likelihood_calls": run.calls,
-        "proposal_efficiency": efficiency,
-        **chi_square(data, points[top]),
-        "solutions": [
-            {
-                "weight": float((label == k).mean()),
-                "log_evidence": run.log_evidence + float(np.log((label == k).mean())),
-                "elements": summarise_json(summarise(samples[label == k])),
-            }
-            for k in range(len(parts))
-        ],
-        "undetermined": undetermined(data, points[label == label[0]]),
-        "nights": nights(data, points),
-        "model": {k: v for k, v in vars(data.model).items() if v},
-        "priors": data.priors.to_json(),
-        "notes": notes(data, confined=len(target.proposal) > 0),
-    }
-    check = _check(target, rng)
-    if check is not None:
-        account["log_evidence_check"] = {"value": check[0], "error": check[1]}
-        account["notes"] += disagreement((run.log_evidence, run.log_evidence_error), check)
-    account["seconds"] = time.monotonic() - begin
-    return Solution(
-        name=name,
-        samples=samples,
-        best={key: float(value) for key, value in best.items()},
-        account=account,
-        positions=data.positions,
-        velocities=data.velocities,
-        scan=pd.DataFrame({"period_d": found.period, "chi2": found.chi2.min(axis=1)}),
-    )
-
-
-def _check(target: Target, rng: np.random.Generator) -> Estimate | None:
-    """A second estimate of the evidence, where plain draws of the proposal can give one."""
-    if isinstance(target, LinearTarget):
-        return importance(target, rng, LINEAR_CHECKS)
-    return importance(target, rng, CHECKS) if len(target.proposal) else None
-
-
-def importance(target: Target, rng: np.random.Generator, count: int) -> Estimate:
-    """ln evidence and its error from plain draws of the proposal: it checks the nested sampling."""
-    log_weight = target.log_weight(target.draw(count, rng))
-    most = log_weight.max()
-    weight = np.exp(log_weight - most)
-    error = weight.std() / weight.mean() / np.sqrt(count)
-    return float(most + np.log(weight.mean())), float(error)

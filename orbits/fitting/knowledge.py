@@ -1,64 +1,101 @@
-"""Further knowledge of any quantity of the results, taken as an independent measurement of it."""
+"""Further knowledge of quantities of the results, each taken as an independent measurement.
+
+The likelihood is multiplied by a normal density of each quantity; the prior of the parameters
+stays what it is, so that the evidence is that of the data together with the knowledge.
+"""
+
+import math
+from collections.abc import Mapping
+from typing import TYPE_CHECKING
 
 import numpy as np
 
-from .. import masses
+from ..compiled import compiled
 from ..errors import InputError
-from .data import Data
+from .derived import NAMES, derive, derived
+from .space import K1, K2, PARALLAX, PERIOD
 
-ANGLES = ("inclination_deg", "node_deg", "argument_deg")
+if TYPE_CHECKING:
+    from .data import Data
+
+NEXT = "next_periastron_mjd"
+"""The same as the periastron, whole periods later."""
+NEED_PARALLAX = frozenset({"parallax_mas", "total_msun", "primary_msun", "companion_msun",
+                           "mass_ratio", "semimajor_axis_au"})  # fmt: skip
+"""Quantities that a parallax gives where the velocities of one star at most are known."""
+ANGLES = frozenset({"inclination_deg", "node_deg", "argument_deg"})
+PLAIN, ANGLE, DATE = range(3)
+ROOT_2PI = math.sqrt(2 * math.pi)
 
 
-def log_knowledge(data: Data, points: np.ndarray) -> np.ndarray:
-    """(S,) ln of the normal densities that `priors.normal` puts on quantities of the points."""
-    total = np.zeros(len(points))
-    values = quantities(data, points)
-    for name, (mean, error) in data.priors.normal.items():
-        difference = values[name] - mean
-        if name in ANGLES:
-            # Without velocities node and argument are known up to half a turn of both.
-            turn = 180.0 if name != "inclination_deg" and not data.space.has_velocities else 360.0
-            difference = (difference + turn / 2) % turn - turn / 2
-        total -= 0.5 * (difference / error) ** 2 + np.log(error) + 0.5 * np.log(2 * np.pi)
+def rows_of(normal: Mapping[str, tuple[float, float]], reference: float) -> np.ndarray:
+    """(k, 4) index among NAMES, kind, mean and standard deviation of what is known."""
+    rows = []
+    for name, (mean, error) in normal.items():
+        if name in ("periastron_mjd", NEXT):
+            rows.append((NAMES.index("periastron_mjd"), DATE, mean - reference, error))
+        elif name in NAMES:
+            rows.append((NAMES.index(name), ANGLE if name in ANGLES else PLAIN, mean, error))
+    return np.array(rows, dtype=float).reshape(-1, 4)
+
+
+def combined(names: tuple[str, ...], scales: np.ndarray, normal) -> tuple:
+    """Means and deviations of zero points and drift, and ln of the constant factor.
+
+    The product of the prior, normal about 0, and of what is known is a normal density again.
+    """
+    means, scales, constant = np.zeros(len(names)), scales.copy(), 0.0
+    for i, name in enumerate(names):
+        if name in normal:
+            value, error = normal[name]
+            total = math.hypot(scales[i], error)
+            constant -= 0.5 * (value / total) ** 2 + math.log(total * ROOT_2PI)
+            means[i] = value * (scales[i] / total) ** 2
+            scales[i] *= error / total
+    return means, scales, constant
+
+
+@compiled
+def log_knowledge(point, columns, parallax, rows):
+    """ln of the product of the normal densities `rows` (k, 4) at a point.
+
+    Positions alone leave node and argument open by half a turn of both: the mean of the two counts.
+    """
+    measured = math.nan
+    if columns[PARALLAX] >= 0:
+        measured = parallax[1] + parallax[2] * point[columns[PARALLAX]]
+    values = np.empty(len(NAMES))
+    total = _log_densities(point, columns, measured, 0.0, rows, values)
+    if columns[K1] >= 0 or columns[K2] >= 0:
+        return total
+    other = _log_densities(point, columns, measured, math.pi, rows, values)
+    most = max(total, other)
+    return most + math.log((math.exp(total - most) + math.exp(other - most)) / 2)
+
+
+@compiled
+def _log_densities(point, columns, parallax, turn, rows, values):
+    derive(point, columns, parallax, turn, values)
+    total = 0.0
+    for row in range(rows.shape[0]):
+        difference, error = values[int(rows[row, 0])] - rows[row, 2], rows[row, 3]
+        if rows[row, 1] != PLAIN:  # the nearest of all turns, or passages
+            cycle = 360.0 if rows[row, 1] == ANGLE else math.exp(point[columns[PERIOD]])
+            difference -= cycle * np.rint(difference / cycle)
+        total -= 0.5 * (difference / error) ** 2 + math.log(error * ROOT_2PI)
     return total
 
 
-def quantities(data: Data, points: np.ndarray) -> dict[str, np.ndarray]:
-    """The quantities (S,) that each point fixes by itself, by their names in the results."""
-    axes = {name: points[:, i] for i, name in enumerate(data.space.names)}
-    e, phase = np.zeros(len(points)), np.zeros(len(points))
-    if "h_x" in axes:
-        e = axes["h_x"] ** 2 + axes["h_y"] ** 2
-        phase = np.arctan2(axes["h_y"], axes["h_x"])
-    period = np.exp(axes["log_period"])
-    made = {
-        "period_d": period,
-        "eccentricity": e,
-        "argument_deg": np.degrees(axes["longitude"] - phase),
-    }
-    for name, axis in (("k1_kms", "log_k1"), ("k2_kms", "log_k2")):
-        if axis in axes:
-            made[name] = np.exp(axes[axis])
-    if data.positions is None:
-        return made
-    inclination = np.arccos(np.clip(axes["cos_inclination"], -1, 1))
-    axis = np.exp(axes["log_axis"])
-    made["semimajor_axis_mas"] = axis
-    made["inclination_deg"], made["node_deg"] = np.degrees(inclination), np.degrees(axes["node"])
-    if "k1_kms" in made and "k2_kms" in made:
-        k1, k2 = made["k1_kms"], made["k2_kms"]
-        one, two = masses.double_lined_masses(period, e, inclination, k1, k2)
-        made |= {"primary_msun": one, "companion_msun": two, "total_msun": one + two}
-        made["mass_ratio"] = two / one
-        made["parallax_mas"] = masses.orbital_parallax(period, e, inclination, k1, k2, axis)
-    return made
-
-
-def check_knowledge(data: Data) -> None:
-    """Raise InputError for knowledge of a quantity that the points do not fix."""
-    known = quantities(data, np.full((1, data.space.dimensions), 0.1))
+def check_knowledge(data: "Data") -> None:
+    """Raise InputError for knowledge of a quantity that the data do not give."""
+    space = data.space
+    parallax = np.nan if data.parallax is None else data.parallax.value
+    point = np.full((1, space.dimensions), 0.1)
+    (values,) = derived(point, space.columns, np.array([parallax]), np.zeros(1))
+    given = [name for name, value in zip(NAMES, values, strict=True) if np.isfinite(value)]
+    given += [NEXT, *data.design_names]
     for name in data.priors.normal:
-        if name not in known:
+        if name not in given:
             raise InputError(
-                f"priors.normal: {name!r} is not among what these data fix: {', '.join(known)}"
+                f"priors.normal: {name!r} is not among what these data give: {', '.join(given)}"
             )

@@ -13,17 +13,19 @@ import numpy as np
 from ..compiled import compiled
 from ..constants import KMS_IN_AU_PER_DAY
 from ..kepler import solve
-from .space import AXIS, COS_I, H_X, H_Y, K1, K2, LONGITUDE, NODE, OUTLIERS, PERIOD
+from .derived import eccentricity_and_phase
+from .knowledge import log_knowledge
+from .space import AXIS, COS_I, K1, K2, LONGITUDE, NODE, OUTLIERS, PARALLAX, PERIOD
 
 LOG_2PI = math.log(2 * math.pi)
-NO_PARALLAX, DERIVED, BOUNDED = range(3)
+NO_PARALLAX, DERIVED, BOUNDED, FREE = range(4)
 
 
 class Tables(NamedTuple):
     """The data as plain arrays, their rows in the order of time."""
 
     columns: np.ndarray
-    """(10,) int: where the axes of `space.AXES` stand in a point; -1 where absent."""
+    """(12,) int: where the axes of `space.AXES` stand in a point; -1 where absent."""
     places: np.ndarray
     """(n, 7) positions: time, x, y, covariance xx, xy, yy, ln weight; a night's rows together."""
     place_labels: np.ndarray
@@ -39,7 +41,11 @@ class Tables(NamedTuple):
     design: np.ndarray
     """(m, q) columns of zero points and drift, times the standard deviations of their priors."""
     parallax: np.ndarray
-    """(3,) how the parallax enters (NO_PARALLAX, DERIVED, BOUNDED), its value and error, mas."""
+    """(3,) how the parallax enters (NO_PARALLAX ... FREE), its value and error, mas."""
+    knowledge: np.ndarray
+    """(k, 4) what is known beforehand; see `knowledge.log_knowledge`."""
+    constant: float
+    """ln of what knowledge of zero points and drift adds to the likelihood everywhere."""
 
 
 @compiled
@@ -54,16 +60,9 @@ def log_likelihood(point, tables):
         )
     if tables.parallax[0] > 0:
         total += _parallax(point, tables.columns, tables.parallax)
-    return total
-
-
-@compiled
-def eccentricity_and_phase(point, columns):
-    """Eccentricity, and mean anomaly at the reference time."""
-    if columns[H_X] < 0:
-        return 0.0, 0.0
-    hx, hy = point[columns[H_X]], point[columns[H_Y]]
-    return hx * hx + hy * hy, math.atan2(hy, hx)
+    if tables.knowledge.shape[0]:
+        total += log_knowledge(point, tables.columns, tables.parallax, tables.knowledge)
+    return total + tables.constant
 
 
 @compiled
@@ -241,8 +240,13 @@ def largest_parallax(point, columns):
 
 @compiled
 def _parallax(point, columns, parallax):
-    bound, value, error = largest_parallax(point, columns), parallax[1], parallax[2]
-    if parallax[0] == 1:
+    value, error = parallax[1], parallax[2]
+    single = columns[K1] >= 0 or columns[K2] >= 0
+    bound = largest_parallax(point, columns) if single else math.inf
+    if parallax[0] == FREE:
+        inside = 0 < value + error * point[columns[PARALLAX]] < bound
+        return -math.log(_normal_below(value / error)) if inside else -math.inf
+    if parallax[0] == DERIVED:
         z = (bound - value) / error
         return -0.5 * z * z - math.log(error) - 0.5 * LOG_2PI
     # The share of the prior of the parallax, the measurement, for which both masses are positive.

@@ -15,9 +15,11 @@ import numpy as np
 
 from ..compiled import compiled
 from .data import Data
-from .likelihood import anomaly, eccentricity_and_phase, factor, log_likelihood
-from .proposal import PRIOR_SHARE, Proposal, Target
-from .space import AXIS, COS_I, LONGITUDE, NODE, PERIOD, allowed, from_prior
+from .derived import eccentricity_and_phase
+from .deviate import deviate
+from .likelihood import anomaly, factor
+from .proposal import PRIOR_SHARE
+from .space import AXIS, COS_I, LONGITUDE, NODE, PERIOD, from_prior
 
 RATIO = 3.0
 """Of the scales of neighbouring normal densities."""
@@ -25,34 +27,18 @@ ROUNDING = 1e-13
 """Share of the largest information below which it is lost in rounding."""
 
 
-class LinearTarget(Target):
-    """The problem as seen from a proposal that is the prior but for the Thiele-Innes constants."""
+def suits(data: Data) -> bool:
+    """Whether there are positions alone, those of two nights at least beyond doubt."""
+    if data.velocities is not None or data.model.outliers:
+        return False
+    return int((np.bincount(data.tables.place_labels[:, 0]) == 1).sum()) >= 2
 
-    def __init__(self, data: Data) -> None:
-        super().__init__(data, Proposal.prior(data.space.dimensions))
-        low, high = data.priors.semimajor_axis
-        count = 2 + math.ceil(math.log(high / low) / math.log(RATIO))
-        self.scales = np.geomspace(low / RATIO, high, count)
 
-    @staticmethod
-    def suits(data: Data) -> bool:
-        """Whether the positions are linear in the constants: no velocities, no doubts."""
-        simple = data.nights == len(data.tables.places) and not data.model.outliers
-        return data.velocities is None and simple
-
-    def place(self, cube: np.ndarray) -> np.ndarray:
-        """(S, d) points from (S, d + 1) uniform numbers, the first choosing the component."""
-        from scipy.special import ndtri
-
-        points = np.empty((cube.shape[0], cube.shape[1] - 1))
-        _place_all(cube, ndtri(cube), self.scales, self.tables, self.region, points)
-        return points
-
-    def log_weight(self, points: np.ndarray) -> np.ndarray:
-        """(S,) ln(likelihood * prior / proposal); -inf where the prior is 0."""
-        out = np.empty(len(points))
-        _log_weights(points, self.scales, self.tables, self.region, out)
-        return self._with_knowledge(points, out)
+def scales_of(data: Data) -> np.ndarray:
+    """(K,) scales, mas, of the normal densities that make up the prior of the constants."""
+    low, high = data.priors.semimajor_axis
+    count = 2 + math.ceil(math.log(high / low) / math.log(RATIO))
+    return np.geomspace(low / RATIO, high, count)
 
 
 @compiled
@@ -68,6 +54,10 @@ def _conditional(point, scales, tables, share, mean, root):
     information, vector = np.zeros((4, 4)), np.zeros(4)
     north, east = np.empty(4), np.empty(4)
     for row in range(places.shape[0]):
+        night = labels[row, 0]
+        before, after = max(row - 1, 0), min(row + 1, places.shape[0] - 1)
+        if (row > 0 and labels[before, 0] == night) or (after > row and labels[after, 0] == night):
+            continue  # one of several alternatives
         E = anomaly(places[row, 0], motion, phase, e)
         X, Y = math.cos(E) - e, minor * math.sin(E)
         re, im = (X * turn_c + Y * turn_s) / 2, (Y * turn_c - X * turn_s) / 2
@@ -123,63 +113,57 @@ def _back(root, vector):
 
 
 @compiled
-def _place_all(cube, deviates, scales, tables, region, points):
+def place_linear(cube, scales, tables, region, point):
+    """Write the draw (d,) that d + 1 uniform numbers stand for.
+
+    The first number chooses the component, the prior alone where it is small.
+    """
     columns, count = region.columns, scales.size
+    from_prior(cube[1:], region, point)
+    if cube[0] < PRIOR_SHARE:
+        return
     share, mean, root = np.empty(count), np.empty((count, 4)), np.empty((count, 4, 4))
+    _conditional(point, scales, tables, share, mean, root)
+    left, k = (cube[0] - PRIOR_SHARE) / (1 - PRIOR_SHARE), 0
+    while k < count - 1 and left > share[k]:
+        left -= share[k]
+        k += 1
     offset = np.empty(4)
-    for s in range(points.shape[0]):
-        from_prior(cube[s, 1:], deviates[s, 1:], region, points[s])
-        if cube[s, 0] < PRIOR_SHARE:
-            continue
-        _conditional(points[s], scales, tables, share, mean, root)
-        left, k = (cube[s, 0] - PRIOR_SHARE) / (1 - PRIOR_SHARE), 0
-        while k < count - 1 and left > share[k]:
-            left -= share[k]
-            k += 1
-        for a, axis in enumerate((AXIS, COS_I, LONGITUDE, NODE)):
-            offset[a] = deviates[s, columns[axis] + 1]
-        _back(root[k], offset)
-        offset += mean[k]
-        p, n = math.hypot(offset[0], offset[1]), math.hypot(offset[2], offset[3])
-        plus, minus = math.atan2(offset[1], offset[0]), math.atan2(offset[3], offset[2])
-        points[s, columns[AXIS]] = math.log((p + n) / 2)
-        points[s, columns[COS_I]] = (p - n) / (p + n)
-        points[s, columns[LONGITUDE]] = (plus + minus) / 2
-        points[s, columns[NODE]] = (plus - minus) / 2
+    for a, axis in enumerate((AXIS, COS_I, LONGITUDE, NODE)):
+        offset[a] = deviate(cube[columns[axis] + 1])
+    _back(root[k], offset)
+    offset += mean[k]
+    p, n = math.hypot(offset[0], offset[1]), math.hypot(offset[2], offset[3])
+    plus, minus = math.atan2(offset[1], offset[0]), math.atan2(offset[3], offset[2])
+    point[columns[AXIS]] = math.log((p + n) / 2)
+    point[columns[COS_I]] = (p - n) / (p + n)
+    point[columns[LONGITUDE]] = (plus + minus) / 2
+    point[columns[NODE]] = (plus - minus) / 2
 
 
 @compiled
-def _log_weights(points, scales, tables, region, out):
+def linear_ratio(point, scales, tables, region):
+    """ln of the proposal's density over the prior's at an allowed point."""
     columns, count = region.columns, scales.size
     share, mean, root = np.empty(count), np.empty((count, 4)), np.empty((count, 4, 4))
+    _conditional(point, scales, tables, share, mean, root)
+    a, cosine = math.exp(point[columns[AXIS]]), point[columns[COS_I]]
+    plus = point[columns[LONGITUDE]] + point[columns[NODE]]
+    minus = point[columns[LONGITUDE]] - point[columns[NODE]]
     offset = np.empty(4)
-    lengths = region.high - region.low
-    # 1 / the prior density in ln a, cos i, longitude and node.
-    room = 1.0
+    offset[0], offset[1] = a * (1 + cosine) * math.cos(plus), a * (1 + cosine) * math.sin(plus)
+    offset[2], offset[3] = a * (1 - cosine) * math.cos(minus), a * (1 - cosine) * math.sin(minus)
+    density = 0.0
+    for k in range(count):
+        log_density = -2 * math.log(2 * math.pi)
+        for i in range(4):
+            value = 0.0
+            for j in range(i, 4):
+                value += root[k, j, i] * (offset[j] - mean[k, j])
+            log_density += math.log(root[k, i, i]) - 0.5 * value * value
+        density += share[k] * math.exp(log_density)
+    # 1 / the prior density in ln a, cos i, longitude and node, and of those in (p, n).
+    room = 4 * a**4 * (1 - cosine) * (1 + cosine)
     for axis in (AXIS, COS_I, LONGITUDE, NODE):
-        room *= lengths[columns[axis]]
-    for s in range(points.shape[0]):
-        if not allowed(points[s], region):
-            out[s] = -math.inf
-            continue
-        _conditional(points[s], scales, tables, share, mean, root)
-        a, cosine = math.exp(points[s, columns[AXIS]]), points[s, columns[COS_I]]
-        plus = points[s, columns[LONGITUDE]] + points[s, columns[NODE]]
-        minus = points[s, columns[LONGITUDE]] - points[s, columns[NODE]]
-        offset[0], offset[1] = a * (1 + cosine) * math.cos(plus), a * (1 + cosine) * math.sin(plus)
-        offset[2], offset[3] = (
-            a * (1 - cosine) * math.cos(minus),
-            a * (1 - cosine) * math.sin(minus),
-        )
-        density = 0.0
-        for k in range(count):
-            log_density = -2 * math.log(2 * math.pi)
-            for i in range(4):
-                value = 0.0
-                for j in range(i, 4):
-                    value += root[k, j, i] * (offset[j] - mean[k, j])
-                log_density += math.log(root[k, i, i]) - 0.5 * value * value
-            density += share[k] * math.exp(log_density)
-        volume = 4 * a**4 * (1 - cosine) * (1 + cosine)
-        ratio = PRIOR_SHARE + (1 - PRIOR_SHARE) * density * volume * room
-        out[s] = log_likelihood(points[s], tables) - math.log(ratio)
+        room *= region.high[columns[axis]] - region.low[columns[axis]]
+    return math.log(PRIOR_SHARE + (1 - PRIOR_SHARE) * density * room)

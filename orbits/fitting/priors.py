@@ -45,7 +45,12 @@ class Priors:
     position_angle_zero: float = 1.0
     """Standard deviation of an instrument's error of orientation, deg."""
     normal: Mapping[str, tuple[float, float]] = field(default_factory=dict)
-    """Further knowledge: mean and standard deviation of any quantity of the results."""
+    """Further knowledge: mean and standard deviation of elements, masses and other results.
+
+    Each multiplies the likelihood by a normal density, as a measurement of its own would: ln of the
+    evidence then is that of the data and this knowledge together. The densities above stay as they
+    are, also where they and the normal one concern the same quantity.
+    """
 
     def __post_init__(self) -> None:
         for name in ("period", "semimajor_axis", "amplitude", "position_jitter", "velocity_jitter"):

@@ -16,11 +16,9 @@ from typing import NamedTuple
 import numpy as np
 
 from ..compiled import compiled
-from .data import Data
-from .knowledge import log_knowledge
+from .deviate import deviate
 from .laplace import Normal
-from .likelihood import log_likelihood
-from .space import allowed, from_chart, from_prior, to_chart
+from .space import Space, from_chart, from_prior, to_chart
 
 PRIOR_SHARE = 0.1
 """Weight of the prior in the mixture."""
@@ -89,105 +87,55 @@ class Mixture(NamedTuple):
     """(charts, d) bool."""
 
 
-class Target:
-    """The problem as seen from a proposal: where to draw, and what each draw weighs."""
-
-    def __init__(self, data: Data, proposal: Proposal) -> None:
-        space = data.space
-        self.data, self.proposal = data, proposal
-        self.region, self.tables = space.region, data.tables
-        roots = np.linalg.cholesky(proposal.covariance)
-        log_determinants = 2 * np.log(np.einsum("jii->ji", roots)).sum(axis=1)
-        self.mixture = Mixture(
-            prior_weight=proposal.prior_weight,
-            edges=np.cumsum(proposal.weight),
-            offsets=np.log(proposal.weight)
-            - 0.5 * (log_determinants + space.dimensions * math.log(2 * math.pi))
-            - np.array([space.log_density(int(chart)) for chart in proposal.chart]),
-            charts=proposal.chart,
-            means=proposal.mean,
-            roots=roots,
-            inverses=np.linalg.inv(roots),
-            periodic=np.array([space.periodic(chart) for chart in range(3)]),
-        )
-
-    def draw(self, count: int, rng: np.random.Generator) -> np.ndarray:
-        """(count, d) points drawn from the proposal; NaN for draws off the chart."""
-        return self.place(rng.uniform(size=(count, self.data.space.dimensions + 1)))
-
-    def place(self, cube: np.ndarray) -> np.ndarray:
-        """(S, d) points from (S, d + 1) uniform numbers, the first choosing the component."""
-        from scipy.special import ndtri
-
-        points = np.empty((cube.shape[0], cube.shape[1] - 1))
-        _place_all(cube, ndtri(cube), self.mixture, self.region, points)
-        return points
-
-    def log_weight(self, points: np.ndarray) -> np.ndarray:
-        """(S,) ln(likelihood * prior / proposal); -inf where the prior is 0."""
-        out = np.empty(len(points))
-        _log_weights(points, self.tables, self.mixture, self.region, out)
-        return self._with_knowledge(points, out)
-
-    def log_likelihood(self, points: np.ndarray) -> np.ndarray:
-        """(S,) ln of the likelihood and further knowledge; -inf where the prior is 0."""
-        out = np.empty(len(points))
-        _log_likelihoods(points, self.tables, self.region, out)
-        return self._with_knowledge(points, out)
-
-    def _with_knowledge(self, points: np.ndarray, out: np.ndarray) -> np.ndarray:
-        if self.data.priors.normal:
-            ok = np.isfinite(out)
-            out[ok] += log_knowledge(self.data, points[ok])
-        return out
+def mixture_of(proposal: Proposal, space: Space) -> Mixture:
+    """The same for compiled functions."""
+    roots = np.linalg.cholesky(proposal.covariance)
+    log_determinants = 2 * np.log(np.einsum("jii->ji", roots)).sum(axis=1)
+    return Mixture(
+        prior_weight=proposal.prior_weight,
+        edges=np.cumsum(proposal.weight),
+        offsets=np.log(proposal.weight)
+        - 0.5 * (log_determinants + space.dimensions * math.log(2 * math.pi))
+        - np.array([space.log_density(int(chart)) for chart in proposal.chart]),
+        charts=proposal.chart,
+        means=proposal.mean,
+        roots=roots,
+        inverses=np.linalg.inv(roots),
+        periodic=np.array([space.periodic(chart) for chart in range(3)]),
+    )
 
 
-def responsibilities(target: Target, points: np.ndarray):
-    """Each component's share (S, J) of the proposal at allowed points; see `_responsibilities`.
+@compiled
+def place_in_mixture(cube, mixture, region, point):
+    """Write the draw (d,) that d + 1 uniform numbers stand for; NaN off the chart.
 
-    Returns the shares, the mean 1 / width^2 (S, J) of each component, and the points (S, J, d) in
-    the component's chart, less its mean.
+    The first number chooses the component, the prior where it falls to none.
     """
-    count, size = target.proposal.mean.shape
-    share, inverse_square = np.empty((len(points), count)), np.empty((len(points), count))
-    offsets = np.empty((len(points), count, size))
-    _responsibilities(points, target.mixture, target.region, share, inverse_square, offsets)
-    return share, inverse_square, offsets
+    size, first = point.size, cube[0]
+    j = np.searchsorted(mixture.edges, first, side="right")
+    if j >= mixture.edges.size:
+        from_prior(cube[1:], region, point)
+        return
+    # The place within the component's interval chooses between its two widths.
+    start = mixture.edges[j - 1] if j else 0.0
+    part = (first - start) / (mixture.edges[j] - start)
+    width = WIDTHS[0] if part < WIDTH_SHARES[0] else WIDTHS[1]
+    chart = mixture.charts[j]
+    deviates, coordinates = np.empty(size), np.empty(size)
+    for a in range(size):
+        deviates[a] = width * deviate(cube[a + 1])
+        offset = 0.0
+        for b in range(a + 1):
+            offset += mixture.roots[j, a, b] * deviates[b]
+        if mixture.periodic[chart, a] and abs(offset) > math.pi:
+            point[:] = math.nan
+            return
+        coordinates[a] = mixture.means[j, a] + offset
+    from_chart(coordinates, chart, region.columns, point)
 
 
 @compiled
-def _place_all(cube, deviates, mixture, region, points):
-    """Draws from the prior, and from the normal densities where the first number falls to one."""
-    size = points.shape[1]
-    coordinates = np.empty(size)
-    for s in range(points.shape[0]):
-        first = cube[s, 0]
-        j = np.searchsorted(mixture.edges, first, side="right")
-        if j >= mixture.edges.size:
-            from_prior(cube[s, 1:], deviates[s, 1:], region, points[s])
-            continue
-        # The place within the component's interval chooses between its two widths.
-        start = mixture.edges[j - 1] if j else 0.0
-        part = (first - start) / (mixture.edges[j] - start)
-        width = WIDTHS[0] if part < WIDTH_SHARES[0] else WIDTHS[1]
-        chart = mixture.charts[j]
-        good = True
-        for a in range(size):
-            offset = 0.0
-            for b in range(a + 1):
-                offset += mixture.roots[j, a, b] * deviates[s, b + 1]
-            offset *= width
-            if mixture.periodic[chart, a] and abs(offset) > math.pi:
-                good = False
-            coordinates[a] = mixture.means[j, a] + offset
-        if good:
-            from_chart(coordinates, chart, region.columns, points[s])
-        else:
-            points[s] = math.nan
-
-
-@compiled
-def _log_terms(point, mixture, region, places, terms):
+def log_terms(point, mixture, region, places, terms):
     """Write ln(weight * density / prior) of each component and width (J, 2) at a point.
 
     `places` (J, d) takes the coordinates of the point in each component's chart, less its mean.
@@ -217,7 +165,8 @@ def _log_terms(point, mixture, region, places, terms):
 
 
 @compiled
-def _log_total(prior_weight, terms):
+def log_total(prior_weight, terms):
+    """ln of the proposal's density over the prior's, from its `log_terms`."""
     most = math.log(prior_weight)
     for j in range(terms.shape[0]):
         most = max(most, terms[j, 0], terms[j, 1])
@@ -228,31 +177,10 @@ def _log_total(prior_weight, terms):
 
 
 @compiled
-def _log_weights(points, tables, mixture, region, out):
+def mixture_ratio(point, mixture, region):
+    """ln of the proposal's density over the prior's at an allowed point."""
+    if mixture.means.shape[0] == 0:
+        return 0.0
     places, terms = np.empty_like(mixture.means), np.empty((mixture.means.shape[0], 2))
-    for s in range(points.shape[0]):
-        if allowed(points[s], region):
-            _log_terms(points[s], mixture, region, places, terms)
-            out[s] = log_likelihood(points[s], tables) - _log_total(mixture.prior_weight, terms)
-        else:
-            out[s] = -math.inf
-
-
-@compiled
-def _log_likelihoods(points, tables, region, out):
-    for s in range(points.shape[0]):
-        out[s] = log_likelihood(points[s], tables) if allowed(points[s], region) else -math.inf
-
-
-@compiled
-def _responsibilities(points, mixture, region, share, inverse_square, places):
-    """Each component's share (S, J) of the proposal's density, and its mean 1 / width^2."""
-    terms = np.empty((mixture.means.shape[0], 2))
-    for s in range(points.shape[0]):
-        _log_terms(points[s], mixture, region, places[s], terms)
-        total = _log_total(mixture.prior_weight, terms)
-        for j in range(mixture.means.shape[0]):
-            narrow, wide = math.exp(terms[j, 0] - total), math.exp(terms[j, 1] - total)
-            share[s, j] = narrow + wide
-            both = max(narrow + wide, 1e-300)
-            inverse_square[s, j] = (narrow / WIDTHS[0] ** 2 + wide / WIDTHS[1] ** 2) / both
+    log_terms(point, mixture, region, places, terms)
+    return log_total(mixture.prior_weight, terms)

@@ -10,10 +10,12 @@ cos_inclination
 longitude        m + argument of periastron (the argument of latitude of a circular orbit)
 node             position angle of the node; both rad
 log_k1, log_k2   ln of the velocity semi-amplitudes in km/s
+parallax         where masses that need it are known beforehand: its deviation from the measured
+                 one, in units of the error
 further          nuisances: ln of jitters, the share of outliers, and calibration errors in units
                  of their prior's standard deviation
 
-The prior is uniform in all of these (normal for calibration errors), because a uniform
+The prior is uniform in all of these (normal for parallax and calibration errors), because a uniform
 eccentricity and phase fill the disc of (h_x, h_y) evenly. Two charts serve positions without
 velocities, where node and longitude lose their meaning for orbits seen face-on. The chart
 "direct" replaces (cos i, longitude, node) by u = sqrt(1 - cos i) exp(i (longitude - node)) and
@@ -28,12 +30,13 @@ from typing import NamedTuple
 import numpy as np
 
 from ..compiled import compiled
+from .deviate import deviate
 from .priors import Priors
 
 PLAIN, DIRECT, RETROGRADE = range(3)
 
 # Where the compiled functions look up the axes; -1 stands for an axis that is absent.
-PERIOD, H_X, H_Y, AXIS, COS_I, LONGITUDE, NODE, K1, K2, OUTLIERS = range(10)
+PERIOD, H_X, H_Y, AXIS, COS_I, LONGITUDE, NODE, K1, K2, OUTLIERS, PARALLAX, SUM = range(12)
 AXES = (
     "log_period",
     "h_x",
@@ -45,6 +48,7 @@ AXES = (
     "log_k1",
     "log_k2",
     "outlier_fraction",
+    "parallax",
 )
 
 
@@ -59,6 +63,8 @@ class Space:
     """(d,) upper ends; for h_x and h_y the radius of the disc's outer edge."""
     eccentricity: tuple[float, float]
     has_velocities: bool
+    sum_alone: bool
+    """log_k2 stands for K1 + K2: all velocities are differences."""
 
     @property
     def dimensions(self) -> int:
@@ -67,8 +73,9 @@ class Space:
 
     @property
     def columns(self) -> np.ndarray:
-        """(10,) int: where each of AXES stands in a point; -1 where absent."""
-        return np.array([self.names.index(a) if a in self.names else -1 for a in AXES])
+        """(12,) int: where each of AXES stands in a point, -1 where absent; SUM is a flag."""
+        places = [self.names.index(a) if a in self.names else -1 for a in AXES]
+        return np.array([*places, 1 if self.sum_alone else -1])
 
     @property
     def charts(self) -> tuple[int, ...]:
@@ -131,8 +138,10 @@ def make_space(
     positions: bool,
     k1: bool,
     k2: bool,
+    sum_alone: bool,
     circular: bool,
     outliers: bool,
+    parallax: bool,
     position_jitters: int,
     velocity_jitters: int,
     scales: int,
@@ -156,6 +165,8 @@ def make_space(
         axes["log_k2"] = _logs(priors.amplitude)
     if outliers:
         axes["outlier_fraction"] = (0.0, priors.outlier_fraction)
+    if parallax:
+        axes["parallax"] = (-math.inf, math.inf)
     for i in range(position_jitters):
         axes[f"log_position_jitter_{i}"] = _logs(priors.position_jitter)
     for i in range(velocity_jitters):
@@ -171,6 +182,7 @@ def make_space(
         high=high,
         eccentricity=priors.eccentricity,
         has_velocities=velocities,
+        sum_alone=sum_alone,
     )
 
 
@@ -233,12 +245,12 @@ def allowed(point, region):
 
 
 @compiled
-def from_prior(uniform, deviates, region, point):
-    """Write the point of the prior that d uniform numbers, or their normal deviates, stand for."""
+def from_prior(uniform, region, point):
+    """Write the point of the prior that d uniform numbers stand for."""
     i, j = region.columns[H_X], region.columns[H_Y]
     for k in range(point.size):
         if region.normal[k]:
-            point[k] = deviates[k]
+            point[k] = deviate(uniform[k])
         else:
             point[k] = region.low[k] + (region.high[k] - region.low[k]) * uniform[k]
     if i >= 0:

@@ -15,10 +15,11 @@ from orbits import Model, Parallax, Priors
 from orbits.fitting.data import make_data
 from orbits.fitting.laplace import Normal
 from orbits.fitting.posterior import sample_table
-from orbits.fitting.proposal import Proposal, Target
-from orbits.fitting.refine import Unknowns, evaluate
+from orbits.fitting.proposal import Proposal
+from orbits.fitting.residuals import Unknowns, evaluate
 from orbits.fitting.scan import linear_solution, scan
 from orbits.fitting.space import DIRECT, RETROGRADE, from_chart, to_chart
+from orbits.fitting.target import Target
 
 PRIORS = Priors(
     period=(50.0, 200.0),
@@ -51,7 +52,7 @@ def elements_of(data, point):
 
 
 def prior_target(data):
-    return Target(data, Proposal.prior(data.space.dimensions))
+    return Target.prior(data)
 
 
 def test_positions_with_alternatives_and_outliers(rng):

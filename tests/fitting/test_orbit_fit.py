@@ -189,7 +189,7 @@ def test_further_knowledge_is_used():
     solution = solve(seen(binary(), 12, rng), given=given)
     _, plus, minus = solution.summary["inclination_deg"]
     assert_allclose([plus, minus], 0.01, rtol=0.2)  # a 68 % interval from about 700 samples
-    with pytest.raises(InputError, match="not among what these data fix"):
+    with pytest.raises(InputError, match="not among what these data give"):
         solve(seen(binary(), 12, rng), given=PERIODS | {"normal": {"k1_kms": (1.0, 1.0)}})
 
 

@@ -91,7 +91,7 @@ def test_unusable_input(system, orbit, tmp_path):
     assert "period needs a range" in err
     code, err = failing(SYSTEM + "[priors.normal]\nheight = [1, 1]\n")
     assert code == 3
-    assert "'height' is not among what these data fix" in err
+    assert "'height' is not among what these data give" in err
     code, err = failing('name = "empty"\n')
     assert code == 3
     assert "no nights, positions or velocities" in err

@@ -6,9 +6,9 @@ from made_binaries import binary, seen
 from numpy.testing import assert_allclose
 
 from orbits import Model, Priors, fit
-from orbits.fitting.account import disagreement
 from orbits.fitting.data import make_data
-from orbits.fitting.linear import LinearTarget
+from orbits.fitting.evidence import Estimate, disagreement
+from orbits.fitting.target import Target
 
 
 def short_arc(seed, *, count=5, error=3.0):
@@ -50,7 +50,7 @@ def drawn_from_the_prior(positions, priors, count, rng):
 def test_proposal_is_a_density(model):
     """The mean of prior / proposal over draws of the proposal is 1, within 5 errors."""
     positions, priors = short_arc(61)
-    target = LinearTarget(make_data(positions, None, None, priors, model))
+    target = Target.prior(make_data(positions, None, None, priors, model), linear=True)
     points = target.draw(20_000, np.random.default_rng(1))
     log_likelihood = target.log_likelihood(points)
     ok = np.isfinite(log_likelihood)
@@ -86,7 +86,11 @@ def test_short_arc_agrees_with_plain_draws_of_the_prior():
 
 def test_estimates_of_the_evidence_that_disagree_are_said():
     """0.5 apart: 5 standard errors of 0.06 and 0.08 together, but 3.5 of 0.1 and 0.1."""
-    assert disagreement((-11.7, 0.1), (-12.2, 0.1)) == []
-    (said,) = disagreement((-11.7, 0.06), (-12.2, 0.08))
+
+    def estimate(value, error):
+        return Estimate(value=value, error=error, efficiency=0.5)
+
+    assert disagreement(estimate(-11.7, 0.1), estimate(-12.2, 0.1)) == []
+    (said,) = disagreement(estimate(-11.7, 0.06), estimate(-12.2, 0.08))
     assert "-11.70 +- 0.06" in said
     assert "-12.20 +- 0.08" in said

@@ -1,0 +1,96 @@
+"""Sample the posterior: from the solutions found, or from all that the priors allow.
+
+A proposal that suits the posterior badly may have missed a part of it. All that the priors allow
+is then searched as well, and what finds more evidence counts, since what misses a part finds less.
+"""
+
+from collections.abc import Sequence
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..progress import SILENT, Silent
+from .data import Data
+from .evidence import Estimate, disagreement, exceeds, importance
+from .linear import suits
+from .merging import Run, merge
+from .nested import Part, sample
+from .pieces import FORGOTTEN, Forgotten
+from .proposal import Proposal
+from .target import Target
+
+RUNS = 8
+"""Runs of nested sampling, which share the live points."""
+TRUSTED = 0.15
+"""Efficiency below which the adapted proposal may have missed a part of the posterior."""
+CHECKS, MANY_CHECKS = 20_000, 200_000
+"""Draws of the proposal that check the evidence; many where it is wide."""
+SURE = 0.3
+"""Error of ln evidence by draws above which a few of them rule it, and the error too."""
+
+
+@dataclass(frozen=True, kw_only=True)
+class Work:
+    """How the work is done: with what effort, on how many cores, told to whom, kept where."""
+
+    live_points: int
+    cores: int = 1
+    progress: Silent = SILENT
+    pieces: Forgotten = FORGOTTEN
+
+
+@dataclass(frozen=True, kw_only=True)
+class Exploration:
+    """The target that was sampled, the samples, and how its evidence was checked."""
+
+    target: Target
+    run: Run
+    check: Estimate
+    """The same evidence by plain draws of a proposal."""
+    notes: Sequence[str] = ()
+
+
+def explore(data: Data, adapted: Proposal, work: Work, rng: np.random.Generator) -> Exploration:
+    """Sample the posterior with the adapted mixture, and without it if it cannot be trusted."""
+    own = [np.random.default_rng(seed) for seed in rng.integers(2**63, size=5)]
+    target = Target(data, adapted)
+    check = importance(target, own[0], CHECKS)
+    if check.efficiency >= TRUSTED:
+        run = _run(target, "solutions", work, own[1])
+        said = disagreement(run.estimate, check)
+        return Exploration(target=target, run=run, check=check, notes=said)
+    check = importance(target, own[2], MANY_CHECKS)
+    wide = Target.prior(data, linear=suits(data))
+    run = _run(wide, "priors", work, own[3])
+    if check.error < SURE and exceeds(check, run.estimate):
+        solutions = _run(target, "solutions", work, own[1])
+        if exceeds(solutions.estimate, run.estimate):
+            said = disagreement(solutions.estimate, run.estimate)
+            return Exploration(target=target, run=solutions, check=check, notes=said)
+    if wide.linear:
+        check = importance(wide, own[4], MANY_CHECKS)
+    said = disagreement(run.estimate, check) if wide.linear else []
+    return Exploration(target=wide, run=run, check=check, notes=said)
+
+
+def _run(target: Target, label: str, work: Work, rng: np.random.Generator) -> Run:
+    """The merged runs of a target, each of them a piece with random numbers of its own."""
+    seeds = rng.integers(2**63, size=RUNS)
+    share = max(work.live_points // RUNS, 2 * (target.data.space.dimensions + 1) + 1)
+
+    def one(k: int) -> Part:
+        own = np.random.default_rng(seeds[k])
+        part = work.pieces.take(
+            f"{label}-{k + 1}-of-{RUNS}",
+            Part,
+            lambda: sample(target, live_points=share, rng=own),
+        )
+        step()
+        return part
+
+    with (
+        work.progress.task(f"sampling {label}", total=RUNS) as step,
+        ThreadPoolExecutor(work.cores) as pool,
+    ):
+        return merge(list(pool.map(one, range(RUNS))))

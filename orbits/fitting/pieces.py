@@ -1,0 +1,97 @@
+"""Pieces of a fit: kept when finished, so that an interrupted fit need not begin again.
+
+A piece is a dataclass of arrays and plain numbers in one NumPy file, read without pickle. It lies
+in a folder named after a hash of all that the piece depends on: data, model, priors, settings,
+random numbers and versions. Whatever changes, the folder is another and nothing stale is used.
+"""
+
+import hashlib
+import zipfile
+from collections.abc import Callable
+from pathlib import Path
+from typing import TypeVar
+
+import numpy as np
+
+from ..files import whole_file
+from ..provenance import versions
+
+T = TypeVar("T")
+
+
+class Forgotten:
+    """Keeps nothing: the default of the library."""
+
+    def of(self, fingerprint: str) -> "Forgotten":
+        """The pieces of the fit that has this fingerprint."""
+        return self
+
+    def take(self, name: str, kind: type[T], make: Callable[[], T]) -> T:
+        """The piece `name`, made unless it is there already."""
+        return make()
+
+
+class Kept(Forgotten):
+    """Keeps pieces in `folder` until `clear`; `tell` hears which are found there."""
+
+    def __init__(self, folder: Path, tell: Callable[[str], None] = lambda text: None) -> None:
+        self.folder, self.tell = Path(folder), tell
+
+    def of(self, fingerprint: str) -> "Kept":
+        """The pieces of the fit that has this fingerprint."""
+        mine = Kept(self.folder / fingerprint, self.tell)
+        found = sorted(path.stem for path in mine.folder.glob("[!.]*.npz"))
+        if found:
+            self.tell(f"continuing an interrupted fit from {', '.join(found)} in {mine.folder}")
+        return mine
+
+    def take(self, name: str, kind: type[T], make: Callable[[], T]) -> T:
+        """The piece `name`, made and kept unless it can be read."""
+        path = self.folder / f"{name}.npz"
+        piece = _read(path, kind)
+        if piece is None:
+            piece = make()
+            with whole_file(path, force=True) as temporary:
+                np.savez(temporary, **vars(piece))
+        return piece
+
+    def clear(self) -> None:
+        """Remove all pieces, of whatever fit, and the folder if nothing else is in it."""
+        for path in [*self.folder.glob("*/*.npz"), *self.folder.glob("*/.*.npz")]:
+            path.unlink()
+        for folder in [*self.folder.glob("*"), self.folder]:
+            if folder.is_dir() and not any(folder.iterdir()):
+                folder.rmdir()
+
+
+FORGOTTEN = Forgotten()
+
+
+def _read(path: Path, kind: type[T]) -> T | None:
+    """The piece, or None if there is none of this kind."""
+    try:
+        with open(path, "rb") as stream, np.load(stream, allow_pickle=False) as stored:
+            values = {name: stored[name] for name in stored.files}
+        return kind(**{name: v if v.ndim else v.item() for name, v in values.items()})
+    except (OSError, ValueError, TypeError, EOFError, zipfile.BadZipFile):
+        return None
+
+
+def fingerprint(*parts: object) -> str:
+    """Twenty hexadecimal digits that stand for `parts` and the versions of all packages.
+
+    A part is an array, a tuple of parts, or anything else with a telling `repr`.
+    """
+    digest = hashlib.sha256()
+    for part in [*parts, versions()]:
+        digest.update(_bytes(part))
+        digest.update(b"|")
+    return digest.hexdigest()[:20]
+
+
+def _bytes(part: object) -> bytes:
+    if isinstance(part, np.ndarray):
+        return f"{part.dtype} {part.shape} ".encode() + np.ascontiguousarray(part).tobytes()
+    if isinstance(part, tuple):
+        return b",".join(_bytes(item) for item in part)
+    return repr(part).encode()

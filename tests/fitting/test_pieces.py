@@ -1,0 +1,123 @@
+"""Interrupted fits: what is finished is kept, used if nothing changed, and removed in the end."""
+
+from dataclasses import dataclass
+
+import numpy as np
+import pytest
+from made_binaries import binary, moving, seen
+
+from orbits import Priors, fit
+from orbits.fitting import explore
+from orbits.fitting.pieces import Kept, fingerprint
+
+
+class StopError(Exception):
+    """Stands for Ctrl-C."""
+
+
+@pytest.fixture
+def solve(monkeypatch):
+    """Fit with pieces kept in a folder; `stop` interrupts it before that run of nested sampling."""
+    rng = np.random.default_rng(11)
+    positions, velocities = seen(binary(), 12, rng), moving(binary(), 15, rng)
+    priors = Priors.for_data(positions, velocities, period=(20.0, 1000.0))
+    real = explore.sample
+
+    def call(folder, *, stop=None, seed=3, live_points=300, cores=1):
+        count, heard = [], []
+
+        def sample(*given, **named):
+            count.append(1)
+            if len(count) == stop:
+                raise StopError
+            return real(*given, **named)
+
+        monkeypatch.setattr(explore, "sample", sample)
+        solution = fit(
+            positions,
+            velocities=velocities,
+            priors=priors,
+            live_points=live_points,
+            cores=cores,
+            rng=np.random.default_rng(seed),
+            keep=Kept(folder, heard.append),
+        )
+        return solution, len(count), heard
+
+    return call
+
+
+def told(solution):
+    tree = solution.to_json()
+    tree.pop("seconds")
+    return tree, solution.samples.to_numpy().tolist()
+
+
+def test_a_continued_fit_equals_one_that_was_never_interrupted(solve, tmp_path):
+    """All digits of all samples; only the runs that were missing are made."""
+    whole, runs, heard = solve(tmp_path / "whole")
+    assert (runs, heard) == (explore.RUNS, [])
+    with pytest.raises(StopError):
+        solve(tmp_path / "part", stop=4)
+    kept = len(list(tmp_path.glob("part/*/solutions-*.npz")))
+    assert kept >= 3
+    continued, runs, heard = solve(tmp_path / "part", cores=2)
+    assert runs == explore.RUNS - kept > 0
+    assert "proposal, scan, solutions-1" in heard[0]
+    assert told(continued) == told(whole)
+
+
+def test_changed_settings_begin_anew(solve, tmp_path):
+    with pytest.raises(StopError):
+        solve(tmp_path, stop=4)
+    for change in ({"seed": 4}, {"live_points": 320}):
+        _, runs, heard = solve(tmp_path, **change)
+        assert (runs, heard) == (explore.RUNS, [])
+
+
+def test_nothing_is_left_and_nothing_else_is_removed(solve, tmp_path):
+    folder = tmp_path / "unfinished"
+    solve(folder)
+    assert len(list(folder.glob("*/*.npz"))) == explore.RUNS + 2
+    (tmp_path / "unfinished" / "mine.txt").write_text("a note")
+    Kept(folder).clear()
+    assert [path.name for path in folder.iterdir()] == ["mine.txt"]
+    (folder / "mine.txt").unlink()
+    Kept(folder).clear()
+    assert not folder.exists()
+
+
+@dataclass(frozen=True)
+class Piece:
+    """Two numbers."""
+
+    values: np.ndarray
+    count: int
+
+
+def test_pieces_that_cannot_be_read_are_made_again(tmp_path):
+    """Half a file, something else, and a pickle, which must not be opened."""
+    made = Piece(np.arange(3.0), 2)
+    kept = Kept(tmp_path)
+    kept.take("good", Piece, lambda: made)
+    read = kept.take("good", Piece, lambda: pytest.fail("it is there"))
+    assert read.values.tolist() == [0, 1, 2]
+    assert read.count == 2
+    half = (tmp_path / "good.npz").read_bytes()
+    (tmp_path / "half.npz").write_bytes(half[: len(half) // 2])
+    (tmp_path / "text.npz").write_text("no piece")
+    np.savez(tmp_path / "pickle.npz", values=np.array([{}], dtype=object), count=1)
+    np.savez(tmp_path / "other.npz", wrong=1.0)
+    for name in ("half", "text", "pickle", "other", "none"):
+        assert kept.take(name, Piece, lambda: made) is made
+
+
+def test_the_fingerprint_tells_every_part():
+    """One digit, the shape or the type of an array, a text, the order."""
+    array = np.arange(4.0)
+    other = array.copy()
+    other[2] = np.nextafter(2.0, 3.0)
+    parts = [(array,), (other,), (array.reshape(2, 2),), (array.astype(int),), ("a", "b"),
+             ("b", "a"), ("ab",), ((array, "a"), "b"), (array, "a", "b")]  # fmt: skip
+    assert len({fingerprint(*part) for part in parts}) == len(parts)
+    assert fingerprint(array) == fingerprint(np.arange(8.0)[:4])
