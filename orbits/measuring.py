@@ -11,7 +11,7 @@ from .companion.result import Candidate, SearchResult
 from .companion.search import FALSE_ALARM, search
 from .errors import InputError, NothingFound
 from .observation import Observation
-from .oifits import read_epochs
+from .oifits import ErrorBars, read_epochs
 from .oifits.utc import night_label
 from .positions import Positions
 from .progress import SILENT, Silent
@@ -62,15 +62,32 @@ def measure(
     InputError
         If the system names no OIFITS files, or one of them cannot be used.
     """
-    if not system.nights:
-        raise InputError(f"{system.path}: no nights; name OIFITS files under [nights]")
-    epochs = read_epochs(system.nights, target=system.target, flip_phase=system.flip_phase)
+    epochs = observations(system)
     nights = []
     with progress.task("searching nights", total=len(epochs)) as step:
         for observation in epochs:
             nights.append(_measure_night(system, observation, rng))
             step()
     return tuple(nights)
+
+
+def observations(system: System) -> list[Observation]:
+    """The nights of a system, in time order, read as its file says.
+
+    Raises
+    ------
+    InputError
+        If the system names no OIFITS files, or one of them cannot be used.
+    """
+    if not system.nights:
+        raise InputError(f"{system.path}: no nights; name OIFITS files under [nights]")
+    return read_epochs(
+        system.nights,
+        target=system.target,
+        flip_phase=system.flip_phase,
+        errors=ErrorBars.of(system.error_scale, system.error_floor),
+        observables=system.use,
+    )
 
 
 def positions(nights: Sequence[Night]) -> Positions:

@@ -188,6 +188,8 @@ def sides(legs: np.ndarray) -> np.ndarray:
 
 OBSERVABLES = ("v2", "t3", "t3amp", "visamp", "visphi")
 """The observables that an `Observation` may hold, in the order of its correlation matrix."""
+DEFAULT = ("v2", "t3")
+"""Those whose meaning does not depend on the instrument and its calibration."""
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)

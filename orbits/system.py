@@ -3,6 +3,8 @@
 name = "Harrow 7"
 [nights]
 files = ["nights/*.fits"]      # OIFITS, relative to this file
+use = ["v2", "t3", "visphi"]   # observables; v2 and t3 by default
+error_floor = {t3 = 0.5}       # deg for phases; error_scale multiplies the errors first
 v2_calibration = 0.02          # an error that all channels of a baseline share
 [positions]
 tables = ["positions.ecsv"]
@@ -29,6 +31,7 @@ from pathlib import Path
 from typing import Any
 
 from .errors import InputError
+from .observation import DEFAULT, OBSERVABLES
 from .toml import read_toml
 
 
@@ -54,6 +57,12 @@ class System:
     """Uniform-disc diameter of the primary, mas; fitted where None."""
     flip_phase: bool = False
     """The OIFITS files use the opposite sign of phase."""
+    use: tuple[str, ...] = DEFAULT
+    """The observables that are used."""
+    error_scale: Mapping[str, float] = made(default_factory=dict)
+    """Factors for the errors that the files state, by observable."""
+    error_floor: Mapping[str, float] = made(default_factory=dict)
+    """Smallest errors, by observable; deg for phases."""
     shared_baselines: bool = False
     """Closure phases share the noise of their baselines."""
     v2_calibration: float = 0.0
@@ -96,7 +105,7 @@ def read_system(path: Path) -> System:
         velocities=_files(path, values, "velocities", "tables"),
         parallax=_parallax(path, values),
         magnitude=values.get("primary", {}).get("magnitude"),
-        **{key: values["nights"][key] for key in _NIGHTS if key in values.get("nights", {})},
+        **_nights(path, values.get("nights", {})),
         **_fit(path, values),
     )
 
@@ -106,6 +115,9 @@ _NIGHTS = {
     "field": float,
     "diameter": float,
     "flip_phase": bool,
+    "use": list,
+    "error_scale": dict.fromkeys(OBSERVABLES, float),
+    "error_floor": dict.fromkeys(OBSERVABLES, float),
     "shared_baselines": bool,
     "v2_calibration": float,
     "t3_calibration": float,
@@ -162,6 +174,22 @@ def _files(path: Path, values: dict, section: str, key: str) -> tuple[Path, ...]
             raise InputError(f"{path}: {section}.{key}: no file matches {pattern!r}")
         found += [match for match in matches if match not in found]
     return tuple(found)
+
+
+def _nights(path: Path, given: dict[str, Any]) -> dict[str, Any]:
+    """How the files of the nights are read."""
+    used = given.get("use", [])
+    for name in used:
+        if name not in OBSERVABLES:
+            raise InputError(
+                f"{path}: nights.use: no observable {name!r}; there are {', '.join(OBSERVABLES)}"
+            )
+    for key in ("error_scale", "error_floor"):
+        for name, value in given.get(key, {}).items():
+            if not value > 0:
+                raise InputError(f"{path}: nights.{key}.{name} must be positive, got {value!r}")
+    chosen = {key: given[key] for key in _NIGHTS if key in given}
+    return chosen | ({"use": tuple(used)} if used else {})
 
 
 def _fit(path: Path, values: dict) -> dict[str, Any]:

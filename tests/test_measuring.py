@@ -11,13 +11,14 @@ from numpy.testing import assert_allclose
 from orbits import (
     ErrorModel,
     NothingFound,
+    read,
     read_positions,
     read_system,
     search,
     write_positions,
 )
 from orbits.demo import scenario
-from orbits.measuring import measure, positions
+from orbits.measuring import measure, observations, positions
 from orbits.simulation.nights import Spectrum
 from orbits.simulation.outputs import simulate
 
@@ -48,6 +49,16 @@ def test_positions_are_where_the_orbit_was(three_nights, tmp_path):
     chi2 = np.einsum("ni,nij,nj->", off, np.linalg.inv(best.covariance), off)
     # Six offsets: chi-square stays below 27.9 in all but one of 10,000 seeds.
     assert chi2 < 27.9
+
+
+def test_errors_and_observables_are_those_of_the_system_file(three_nights, tmp_path):
+    path = simulate(three_nights, tmp_path, rng=np.random.default_rng(3))
+    lines = 'use = ["t3"]\nerror_scale = {t3 = 2.0}\nerror_floor = {t3 = 5.0}\n'
+    path.write_text(path.read_text().replace("[nights]\n", f"[nights]\n{lines}"))
+    plain = read(tmp_path / "nights" / "01-2024-01-11.fits")
+    seen = observations(read_system(path))[0]
+    assert len(seen.v2) == 0
+    assert_allclose(seen.t3.error, np.maximum(2 * plain.t3.error, np.radians(5.0)))
 
 
 def test_no_companion_is_claimed_where_there_is_none(three_nights, tmp_path):

@@ -56,6 +56,9 @@ def test_paths_are_relative_to_the_file(folder):
         (('["v.csv"]', "[1]"), "velocities.tables must list file names"),
         (('["v.csv"]', '"v.csv"'), "velocities.tables must be a list"),
         (("[fit]", "fit = 1\n[other"), "not TOML"),
+        (("field = 40", 'use = ["v3"]'), "nights.use: no observable 'v3'; there are v2, t3"),
+        (("field = 40", "error_floor = {v3 = 1}"), "unknown key 'nights.error_floor.v3'"),
+        (("field = 40", "error_scale = {v2 = 0}"), "nights.error_scale.v2 must be positive"),
     ],
 )
 def test_faults_are_named(folder, change, message):

@@ -1,9 +1,15 @@
 """Options that the commands on one night share."""
 
+from collections.abc import Callable, Sequence
 from pathlib import Path
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
+
+from .frame import warn
+
+if TYPE_CHECKING:
+    from ..observation import Observation
 
 NightFiles = Annotated[
     list[Path], typer.Argument(help="OIFITS files of one night.", metavar="FILE...")
@@ -30,3 +36,72 @@ IgnoreCorrelations = Annotated[
 FlipPhase = Annotated[
     bool, typer.Option("--flip-phase", help="The files have phases of the opposite sign.")
 ]
+Use = Annotated[
+    list[str] | None,
+    typer.Option(
+        metavar="NAME",
+        help="Observable: v2 and t3, unless told otherwise; t3amp, visamp, visphi; repeatable.",
+    ),
+]
+ErrorScale = Annotated[
+    list[str] | None,
+    typer.Option(metavar="NAME=FACTOR", help="For the errors of an observable; repeatable."),
+]
+ErrorFloor = Annotated[
+    list[str] | None,
+    typer.Option(
+        metavar="NAME=ERROR", help="Least error of an observable, deg for phases; repeatable."
+    ),
+]
+
+
+def read_night(
+    files: Sequence[Path],
+    *,
+    target: str | None,
+    night: str | None,
+    flip_phase: bool,
+    use: Sequence[str] | None = None,
+    error_scale: Sequence[str] | None = None,
+    error_floor: Sequence[str] | None = None,
+) -> "Observation":
+    """The one night that is meant, after a word about what is suspicious in its files."""
+    from ..observation import DEFAULT
+    from ..oifits import ErrorBars, read
+
+    scale, floor = (
+        {name: values[0] for name, values in (named(text, count=1) for text in given or ())}
+        for given in (error_scale, error_floor)
+    )
+    observation = checked(
+        read,
+        files,
+        target=target,
+        night=night,
+        flip_phase=flip_phase,
+        observables=use or DEFAULT,
+        errors=checked(ErrorBars.of, scale, floor),
+    )
+    warn(observation.problems)
+    return observation
+
+
+def named(text: str, *, count: int) -> tuple[str, list[float]]:
+    """NAME=NUMBER,... as a name and `count` numbers."""
+    name, _, numbers = text.partition("=")
+    try:
+        values = [float(number) for number in numbers.split(",")]
+    except ValueError:
+        values = []
+    if len(values) != count:
+        form = "NAME=VALUE" if count == 1 else "NAME=MEAN,SIGMA"
+        raise typer.BadParameter(f"expected {form}, got {text!r}")
+    return name, values
+
+
+def checked(call: Callable[..., Any], *arguments: Any, **options: Any) -> Any:
+    """Call `call`; a wrong argument is wrong usage here, since all of them come from options."""
+    try:
+        return call(*arguments, **options)
+    except ValueError as error:
+        raise typer.BadParameter(str(error)) from error

@@ -1,18 +1,19 @@
 """nodeline search: is there a companion in this epoch, where, how bright, how sure."""
 
-from collections.abc import Callable
 from functools import partial
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated, Any
+from typing import TYPE_CHECKING, Annotated
 
 import typer
 
 from ..errors import NothingFound
 from ..files import refuse_existing
-from .frame import Force, Json, Seed, emit, say, warn
+from .frame import Force, Json, Seed, emit, say
 from .night import (
     CompanionDiameter,
     Diameter,
+    ErrorFloor,
+    ErrorScale,
     FlipPhase,
     HalfField,
     IgnoreCorrelations,
@@ -21,7 +22,11 @@ from .night import (
     SharedBaselines,
     T3Calibration,
     Target,
+    Use,
     V2Calibration,
+    checked,
+    named,
+    read_night,
 )
 
 if TYPE_CHECKING:
@@ -38,9 +43,7 @@ def search(
     files: NightFiles,
     target: Target = None,
     night: NightDate = None,
-    use: Annotated[
-        list[str], typer.Option(help="Observable: v2, t3, t3amp, visamp or visphi; repeatable.")
-    ] = ["v2", "t3"],  # noqa: B006 - typer copies it
+    use: Use = None,
     field: HalfField = None,
     step: Annotated[float | None, typer.Option(help="Of the grid, mas.")] = None,
     diameter: Diameter = None,
@@ -54,6 +57,8 @@ def search(
     t3_calibration: T3Calibration = 0.0,
     ignore_correlations: IgnoreCorrelations = False,
     flip_phase: FlipPhase = False,
+    error_scale: ErrorScale = None,
+    error_floor: ErrorFloor = None,
     primary_shape: Annotated[str, typer.Option(help=SHAPES)] = "disc",
     companion_shape: Annotated[str, typer.Option(help=SHAPES)] = "disc",
     fix: Annotated[
@@ -97,7 +102,6 @@ def search(
     from ..companion.covariance import ErrorModel
     from ..companion.search import Stars
     from ..companion.search import search as look
-    from ..oifits import read
     from ..progress import Bar
 
     def mas(value: float | None) -> u.Quantity | None:
@@ -109,18 +113,18 @@ def search(
     stars = Stars(
         primary=primary_shape,
         companion=companion_shape,
-        fixed={name: values[0] for name, values in map(partial(_named, count=1), fix or ())},
+        fixed={name: values[0] for name, values in map(partial(named, count=1), fix or ())},
         free=tuple(fit or ()),
-        priors={name: tuple(v) for name, v in map(partial(_named, count=2), prior or ())},
+        priors={name: tuple(v) for name, v in map(partial(named, count=2), prior or ())},
         contrast_per_instrument=contrast_per_instrument,
         fibre_fwhm=fibre,
     )
-    observation = _checked(
-        read, files, target=target, night=night, flip_phase=flip_phase, observables=use
-    )
-    warn(observation.problems)
+    observation = read_night(
+        files, target=target, night=night, flip_phase=flip_phase,
+        use=use, error_scale=error_scale, error_floor=error_floor,
+    )  # fmt: skip
     paths = _picture_paths(pictures, observation.target, observation.mjd, force=force)
-    result = _checked(
+    result = checked(
         look,
         observation,
         field=mas(field),
@@ -156,27 +160,6 @@ def search(
             f"{result.target}: no companion can be claimed: noise alone looks as good in "
             f"{result.best.false_alarm_probability:.2g} of its searches (limit {false_alarm:g})"
         )
-
-
-def _named(text: str, *, count: int) -> tuple[str, list[float]]:
-    """NAME=NUMBER,... as a name and `count` numbers."""
-    name, _, numbers = text.partition("=")
-    try:
-        values = [float(number) for number in numbers.split(",")]
-    except ValueError:
-        values = []
-    if len(values) != count:
-        form = "NAME=VALUE" if count == 1 else "NAME=MEAN,SIGMA"
-        raise typer.BadParameter(f"expected {form}, got {text!r}")
-    return name, values
-
-
-def _checked(call: Callable[..., Any], *arguments: Any, **options: Any) -> Any:
-    """Call `call`; a wrong argument is wrong usage here, since all of them come from options."""
-    try:
-        return call(*arguments, **options)
-    except ValueError as error:
-        raise typer.BadParameter(str(error)) from error
 
 
 def _picture_paths(folder: Path | None, target: str, mjd: float, *, force: bool) -> list[Path]:

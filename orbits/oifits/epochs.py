@@ -7,7 +7,7 @@ import astropy.units as u
 import numpy as np
 
 from ..errors import InputError
-from ..observation import OBSERVABLES, Observation
+from ..observation import DEFAULT, OBSERVABLES, Observation
 from ..problems import refuse_suspicious
 from .checking import check, check_together
 from .flattening import observation, shares
@@ -24,7 +24,6 @@ GAP = 8 * u.hour
 """A pause longer than this starts a new night: within a night data follow each other sooner."""
 
 AS_STATED = ErrorBars()
-DEFAULT = ("v2", "t3")
 
 Paths = str | Path | Sequence[str | Path]
 
@@ -100,9 +99,9 @@ def read_epochs(
     ValueError
         If an observable is unknown.
     """
-    unknown = set(observables) - set(OBSERVABLES)
-    if unknown:
-        raise ValueError(f"unknown observables {sorted(unknown)}; there are {OBSERVABLES}")
+    for name in observables:
+        if name not in OBSERVABLES:
+            raise ValueError(f"unknown observable {name!r}; there are {', '.join(OBSERVABLES)}")
     files = [load(path) for path in _listed(paths)]
     for file in files:
         file.problems += check(file)

@@ -6,8 +6,9 @@ from typing import Any
 import numpy as np
 
 from ..constants import MAS
+from ..observation import DEFAULT
 from ..problems import Problem, Severity
-from .epochs import DEFAULT, GAP, night_starts
+from .epochs import GAP, night_starts
 from .links import plain
 from .model import BaselineTable, Flux, OIFile
 from .observables import KINDS, sound, timed, usable

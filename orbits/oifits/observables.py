@@ -2,6 +2,7 @@
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from typing import Self
 
 import astropy.units as u
 import numpy as np
@@ -67,6 +68,12 @@ class ErrorBars:
     """Factor, by observable: v2, t3, t3amp, visamp, visphi."""
     floor: Mapping[str, float | u.Quantity] = field(default_factory=dict)
     """Smallest error, by observable; for phases an angle."""
+
+    @classmethod
+    def of(cls, scale: Mapping[str, float], floor: Mapping[str, float]) -> Self:
+        """From plain numbers, those of phases in deg."""
+        units = {name: u.deg if kind.phase else 1.0 for name, kind in KINDS.items()}
+        return cls(scale=scale, floor={n: x * units.get(n, 1.0) for n, x in floor.items()})
 
     def __post_init__(self) -> None:
         for name in (*self.scale, *self.floor):

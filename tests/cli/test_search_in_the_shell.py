@@ -103,13 +103,41 @@ def test_pictures_are_written_once(nodeline, nights, tmp_path):
         (("--fix", "slope"), "expected NAME=VALUE"),
         (("--prior", "slope=1"), "expected NAME=MEAN,SIGMA"),
         (("--primary-shape", "square"), "one of point"),
-        (("--use", "flux"), "unknown observables"),
+        (("--use", "flux"), "unknown observable 'flux'"),
+        (("--error-floor", "v3=0.1"), "unknown observable 'v3'"),
+        (("--error-scale", "v2=-1"), "scale of v2 must be positive"),
     ],
 )
 def test_wrong_usage_is_exit_code_2(nodeline, nights, options, words):
     code, _, err = nodeline("search", nights / "lit.fits", *options)
     assert code == 2
     assert words in " ".join(err.replace("│", " ").split())
+
+
+def test_errors_can_be_scaled_and_raised(nodeline, nights):
+    """Where no error is left as stated, chi-square falls by the square of the factor."""
+    told = []
+    for options in ((), ("--error-scale", "v2=2", "--error-scale", "t3=2")):
+        code, out, _ = nodeline(
+            "search",
+            nights / "lit.fits",
+            "--field",
+            15,
+            "--json",
+            "--noise-searches",
+            100,
+            *options,
+        )
+        assert code == 0
+        told.append(json.loads(out)["best"])
+    # But for the prior of the companion's diameter the solution is the same.
+    assert told[1]["chi2"] == pytest.approx(told[0]["chi2"] / 4, rel=0.02)
+    code, out, _ = nodeline(
+        "search", nights / "lit.fits", "--field", 15, "--json", "--noise-searches", 100,
+        "--error-floor", "t3=30",
+    )  # fmt: skip
+    assert code == 0
+    assert json.loads(out)["best"]["delta_chi2"] < told[0]["delta_chi2"]
 
 
 def test_correlated_errors_can_be_asked_for(nodeline, nights):

@@ -120,7 +120,7 @@ def test_other_observables_are_there_when_asked_for(rng):
     assert more.correlation.shape == (16 + 12 + 36, 16 + 12 + 36)
     (calibrator,) = observations(file, target="Calibrator of it", observables=wanted)
     np.testing.assert_array_equal(calibrator.t3amp.value, 0.5)
-    with pytest.raises(ValueError, match="unknown observables"):
+    with pytest.raises(ValueError, match="unknown observable"):
         read_epochs("nowhere.fits", observables=("v4",))
 
 
