@@ -83,7 +83,7 @@ class Walk(RWalkSampler):
         length = np.where(rng.uniform(size=count) < WHOLE, 1.0, rng.exponential(0.5, size=count))
         steps[exchange] = (length[:, None] * (pairs[0] - pairs[1]))[exchange]
         u, point = args.u.copy(), np.empty(size - 1)
-        accepted, calls, value = _walk(
+        accepted, calls, value = take_steps(
             u, point, steps, exchange, target.turns, args.loglstar, target.problem
         )
         return SamplerReturn(
@@ -98,7 +98,7 @@ class Walk(RWalkSampler):
 
 
 @compiled
-def _walk(u, point, steps, exchange, turns, least, problem):
+def take_steps(u, point, steps, exchange, turns, least, problem):
     """Move `u` by those of the `steps` (n, d) that keep its value above `least`.
 
     Writes the point that it ends at; returns how many steps within the ellipsoid were taken, of

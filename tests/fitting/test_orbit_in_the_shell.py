@@ -79,6 +79,40 @@ def test_the_same_seed_gives_the_same_result(system, orbit):
     assert first == again
 
 
+def test_an_interrupted_fit_goes_on(system, orbit, monkeypatch):
+    """Ctrl-C in the fit of the second hypothesis: the same command gives the same digits."""
+    from orbits.fitting import explore
+
+    folder = system.with_name("harrow-results")
+    options = (system, "--json", "--compare", "circular")
+    whole = json.loads(orbit(*options)[1])
+    for path in folder.iterdir():
+        path.unlink()
+    real, calls = explore.sample, []
+
+    def sample(*given, **named):
+        calls.append(1)
+        if len(calls) == explore.RUNS + 3:
+            raise KeyboardInterrupt
+        return real(*given, **named)
+
+    monkeypatch.setattr(explore, "sample", sample)
+    code, out, err = orbit(*options)
+    assert (code, out) == (130, "")
+    assert "the same command continues from there" in err
+    assert not (folder / "orbit.json").exists()
+    assert len(list(folder.glob("unfinished/*/*.npz"))) >= explore.RUNS + 2 + 4
+    code, out, err = orbit(*options)
+    assert code == 0
+    assert err.count("continuing an interrupted fit from proposal, scan, solutions-1") == 2
+    assert len(calls) <= 2 * explore.RUNS + 1
+    continued = json.loads(out)
+    whole.pop("seconds"), continued.pop("seconds")
+    assert continued == whole
+    assert not (folder / "unfinished").exists()
+    assert "orbit" in json.loads((folder / "history.json").read_text())
+
+
 def test_unusable_input(system, orbit, tmp_path):
     def failing(text):
         system.write_text(text)
