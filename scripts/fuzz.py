@@ -177,7 +177,7 @@ def run_case(seed: int, bases: list[bytes], folder: Path) -> Outcome:
     start = time.perf_counter()
     child = os.fork()
     if child == 0:
-        _inspect([str(path), *options], words)
+        _inspect([str(path), *options], words, mapped=seed % 2 == 1)
     _, status, usage = os.wait4(child, 0)
     seconds = time.perf_counter() - start
     code = os.waitstatus_to_exitcode(status)
@@ -185,9 +185,15 @@ def run_case(seed: int, bases: list[bytes], folder: Path) -> Outcome:
     return Outcome(seed, mutation.__name__, code, seconds, usage.ru_maxrss / 1024, text)
 
 
-def _inspect(arguments: list[str], words: Path) -> None:
-    """In the child: run the command with its output in a file, then leave for good."""
+def _inspect(arguments: list[str], words: Path, *, mapped: bool) -> None:
+    """In the child: run the command with its output in a file, then leave for good.
+
+    If `mapped`, small tables are read as otherwise only large ones are.
+    """
+    from orbits.oifits import blocks
+
     code = 1
+    blocks.LARGE = 1 if mapped else blocks.LARGE
     try:
         signal.alarm(MAX_SECONDS + 1)
         resource.setrlimit(resource.RLIMIT_AS, (4 * MAX_BYTES, 4 * MAX_BYTES))

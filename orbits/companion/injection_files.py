@@ -1,7 +1,8 @@
 """Put a companion into the data of an OIFITS file, or take one out.
 
-Changed are VIS2DATA, T3AMP, T3PHI and, where VISAMP is a visibility, VISAMP, with the errors of all
-but the phase. VISPHI and complex visibilities refer to something of the instrument's own, and
+Changed are VIS2DATA, T3AMP, T3PHI, VISPHI and, where VISAMP is a visibility, VISAMP, with the
+errors of all but the phases. Differential phases change by what the companion does to a channel
+more than to those it is referred to. Complex visibilities have units of the instrument's own, and
 fluxes are not a matter of fringes: they stay as they were.
 """
 
@@ -12,23 +13,17 @@ import numpy as np
 from ..binary import Scene
 from ..errors import InputError
 from ..observation import Observable, Observation
-from ..oifits import T3, OIFile, Vis, Vis2, observations
+from ..oifits import OIFile, Vis, observations
 from ..oifits.flattening import channels, exposures
-from ..oifits.model import BaselineTable
-from ..oifits.observables import sound
+from ..oifits.model import BaselineTable, DataTable
+from ..oifits.observables import KINDS, Kind, sound
+from ..oifits.references import referred
 from ..oifits.selecting import target_ids
 from ..sampling import Sampling
 from .covariance import Covariance
 from .fit import Problem
 from .injection import Companion, exchange
 from .maps import single_star
-
-_COLUMNS = {
-    Vis2: {"v2": ("vis2data", "vis2err")},
-    T3: {"t3": ("t3phi", "t3phierr"), "t3amp": ("t3amp", "t3amperr")},
-    Vis: {"visamp": ("visamp", "visamperr")},
-}
-"""Columns by table and observable."""
 
 
 def inject_file(file: OIFile, companion: Companion, *, target: str | None = None) -> OIFile:
@@ -91,17 +86,22 @@ def _changed(file: OIFile, companion: Companion, target: str | None, *, put_in: 
     data = []
     for table in file.data:
         rows = np.isin(table.target_id, ids)
-        if type(table) in _COLUMNS and rows.any() and _is_visibility(table):
-            before = _observation(file, table, rows)
-            changes = _columns(table, rows, file, exchange(before, old, new))
-            table = replace(table, **changes)
+        if _kinds(table) and rows.any():
+            after = exchange(_observation(file, table, rows), old, new)
+            table = replace(table, **_columns(table, rows, file, after))
         data.append(table)
     return replace(file, data=data, history=[*file.history, _history(companion, put_in=put_in)])
 
 
-def _is_visibility(table: BaselineTable) -> bool:
-    kind = table.amptyp if isinstance(table, Vis) else None
-    return kind is None or kind.strip().lower() == "absolute"
+def _kinds(table: DataTable) -> list[Kind]:
+    """The observables of a table that a companion changes in a known way."""
+    units = table.amptyp if isinstance(table, Vis) else None
+    visibility = units is None or units.strip().lower() == "absolute"
+    return [
+        kind
+        for kind in KINDS.values()
+        if type(table) is kind.table and (visibility or kind.name != "visamp")
+    ]
 
 
 def _history(companion: Companion, *, put_in: bool) -> str:
@@ -114,18 +114,20 @@ def _history(companion: Companion, *, put_in: bool) -> str:
 
 
 def _observation(file: OIFile, table: BaselineTable, rows: np.ndarray) -> Observation:
-    """All data of some rows of a table, usable or not, but in channels of known wavelength."""
+    """All data of some rows of a table, usable or not, but in channels of known wavelength.
+
+    Phases are 0, so that what becomes of them is their change.
+    """
     spectrum = file.wavelength(table.insname)
     good = sound(spectrum)
     table = table.select(rows, good)
     seen = exposures(table, table.sta_index, 0)
     spectral = channels([spectrum.select(good)])
     parts = {}
-    for name, columns in _COLUMNS[type(table)].items():
-        value, error = (getattr(table, column).ravel() for column in columns)
-        if name == "t3":
-            value, error = np.radians(value), np.radians(error)
-        parts[name] = Observable.filled(seen, spectral, value=value, error=error)
+    for kind in _kinds(table):
+        value = 0.0 if kind.phase else table[kind.value].ravel()
+        error = table[kind.error].ravel()
+        parts[kind.name] = Observable.filled(seen, spectral, value=value, error=error)
     return Observation(target="", instruments=(table.insname,), **parts)
 
 
@@ -134,12 +136,17 @@ def _columns(table, rows, file, after: Observation) -> dict[str, np.ndarray]:
     here = np.ix_(np.flatnonzero(rows), np.flatnonzero(sound(file.wavelength(table.insname))))
     shape = here[0].size, here[1].size
     changes = {}
-    for name, (value, error) in _COLUMNS[type(table)].items():
-        new = getattr(after, name)
-        turn = np.degrees(1.0) if name == "t3" else 1.0
-        for column, values in ((value, new.value * turn), (error, new.error * turn)):
-            if name == "t3" and column == error:
-                continue  # unchanged, and not to be rounded by way of rad
-            changes[column] = getattr(table, column).copy()
-            changes[column][here] = values.reshape(shape)
+    for kind in _kinds(table):
+        new, value = getattr(after, kind.name), table[kind.value].copy()
+        if kind.phase:
+            rise = np.zeros(value.shape)
+            rise[here] = np.degrees(new.value).reshape(shape)
+            if isinstance(table, Vis):
+                rise = referred(table, rise)
+            value[here] = (value[here] + rise[here] + 180) % 360 - 180
+        else:
+            error = table[kind.error].copy()
+            value[here], error[here] = new.value.reshape(shape), new.error.reshape(shape)
+            changes[kind.error.lower()] = error
+        changes[kind.value.lower()] = value
     return changes

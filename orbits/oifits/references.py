@@ -22,6 +22,19 @@ def scale(table: Vis) -> np.ndarray:
     return np.where(others, (channels - 1) / channels, 1.0)
 
 
+def referred(table: Vis, phase: np.ndarray) -> np.ndarray:
+    """Phases (nrow, nwave) less what those of `table` are less: the mean over their references."""
+    if not is_differential(table):
+        return phase
+    if not _mapped(table):
+        return phase - phase.mean(axis=1, keepdims=True)
+    known = table.visrefmap
+    if not known.any(axis=2).all():
+        known = known.swapaxes(1, 2)
+    count = np.maximum(known.sum(axis=2), 1)
+    return phase - np.einsum("rkj,rj->rk", known, phase) / count
+
+
 def understood(table: Vis) -> np.ndarray:
     """(nrow,) whether the reference is one that `scale` allows for.
 

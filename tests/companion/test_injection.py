@@ -11,8 +11,9 @@ from skies import fill, four_stations, wrapped
 from orbits.binary import predict
 from orbits.companion.injection import Companion, inject, remove
 from orbits.companion.injection_files import fitted_diameter, inject_file, remove_file
+from orbits.constants import MAS
 from orbits.errors import InputError
-from orbits.oifits import load, observations
+from orbits.oifits import Vis, load, observations
 from orbits.oifits.validation import validate
 from orbits.simulation.array import Array
 from orbits.simulation.export import night_file
@@ -93,6 +94,34 @@ def test_file_comes_back(night):
     assert_allclose(back.data[0].vis2data, original.data[0].vis2data, rtol=1e-12)
     assert_allclose(back.data[1].t3phi, original.data[1].t3phi, atol=1e-9)
     assert len(back.history) == len(original.history) + 2
+
+
+@pytest.mark.parametrize("kind", ["absolute", "differential"])
+def test_phases_of_baselines_change_as_they_are_referred(night, kind):
+    """Against the Fourier sum over two points; differential phases against all other channels."""
+    file = load(night)
+    file.wavelengths[0].eff_band[:] = 0
+    v2 = file.data[0]
+    shape, channels = v2.vis2data.shape, v2.vis2data.shape[1]
+    differential = kind == "differential"
+    others = np.broadcast_to(~np.eye(channels, dtype=bool), (*shape, channels))
+    visphi = np.full(shape, 3.0)
+    visphi[1, 2] = np.nan
+    table = Vis(
+        insname=v2.insname, arrname=v2.arrname, date_obs=v2.date_obs, target_id=v2.target_id,
+        mjd=v2.mjd, ucoord=v2.ucoord, vcoord=v2.vcoord, sta_index=v2.sta_index, phityp=kind,
+        visphi=visphi, visphierr=np.ones(shape), visrefmap=others if differential else None,
+    )  # fmt: skip
+    file.data.append(table)
+    points = Companion(x=7.0, y=-4.0, contrast=0.05)
+    got = inject_file(file, points).data[-1].visphi - 3.0
+    turns = (7.0 * v2.ucoord - 4.0 * v2.vcoord)[:, None] * MAS
+    turns = turns / file.wavelengths[0].eff_wave.astype(float)
+    phase = np.degrees(np.angle(1 + 0.05 * np.exp(-2j * np.pi * turns)))
+    expected = (phase - phase.mean(axis=1, keepdims=True)) * channels / (channels - 1)
+    expected = expected if differential else phase
+    expected[1, 2] = np.nan
+    assert_allclose(got, expected, atol=1e-9)
 
 
 def test_diameter_of_the_star_is_fitted_with_the_companion_and_without(night):

@@ -153,6 +153,11 @@ def full(rng: np.random.Generator) -> OIFile:
         {"TTYPE": "QUALITY", "TFORM": "5B", "TUNIT": "mark"},
         rng.integers(0, 256, (6, 5)).astype(np.uint8),
     )
+    descriptors = np.array([(n, 4 * n * (n - 1) // 2) for n in range(6)], dtype=">i4")
+    first.extra["MARKS"] = ExtraColumn(
+        {"TTYPE": "MARKS", "TFORM": "1PE(5)"}, descriptors.view(np.uint8)
+    )
+    first.heap = rng.normal(size=15).astype(">f4").tobytes()
     first.cards.append(("MYKEY", 17, "a keyword of ours"))
     phases = t3(
         rng,

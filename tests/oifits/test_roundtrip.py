@@ -11,7 +11,7 @@ from hypothesis import strategies as st
 from hypothesis.extra.numpy import arrays
 
 from orbits import InputError
-from orbits.oifits import Array, OIFile, Target, Vis2, Wavelength, load
+from orbits.oifits import Array, OIFile, Target, Vis2, Wavelength, blocks, load
 from orbits.oifits.validation import validate
 
 OUTSIDE = ("alp_aur-v1.fits", "alp_aur-v2.fits", "contest-2008-binary.oifits")
@@ -24,8 +24,13 @@ def test_outside_files_come_back_bit_for_bit(outside, tmp_path, name):
     make.assert_same(first, load(tmp_path / "copy.fits"))
 
 
-def test_a_file_with_everything_comes_back_bit_for_bit(rng, tmp_path):
-    """All tables, two targets and instruments, flags, NaN, and parts the standard does not know."""
+@pytest.mark.parametrize("large", [1, 2**20])
+def test_a_file_with_everything_comes_back_bit_for_bit(rng, tmp_path, monkeypatch, large):
+    """All tables, two targets and instruments, flags, NaN, and parts the standard does not know.
+
+    Read as large tables are, and as small ones.
+    """
+    monkeypatch.setattr(blocks, "LARGE", large)
     first = make.full(rng)
     first.write(tmp_path / "full.fits")
     again = load(tmp_path / "full.fits")
@@ -40,7 +45,7 @@ def test_columns_of_varying_length_are_kept(rng, tmp_path):
     marks = [np.arange(n, dtype=np.float32) for n in (3, 0, 7, 1, 2, 5)]
     with fits.open(tmp_path / "plain.fits") as opened:
         number = opened.index_of("OI_VIS2")
-        column = fits.Column("MARKS", format="PE()", array=np.array(marks, dtype=object))
+        column = fits.Column("SCORES", format="PE()", array=np.array(marks, dtype=object))
         header = opened[number].header
         with_marks = fits.BinTableHDU.from_columns(opened[number].columns + column, header)
         opened[number] = with_marks
@@ -52,7 +57,7 @@ def test_columns_of_varying_length_are_kept(rng, tmp_path):
     file.write(tmp_path / "part.fits")
     for name, rows in (("whole", range(6)), ("part", (5, 2))):
         with fits.open(tmp_path / f"{name}.fits", checksum=True) as opened:
-            got = opened["OI_VIS2"].data["MARKS"]
+            got = opened["OI_VIS2"].data["SCORES"]
             assert [part.tolist() for part in got] == [marks[row].tolist() for row in rows]
 
 
