@@ -166,6 +166,9 @@ def table(solution: "Solution") -> str:
         f"ln evidence {account['log_evidence']:.2f} +- {account['log_evidence_err']:.2f}; "
         f"{account['effective_samples']:.0f} effective samples; {account['seconds']:.1f} s"
     )
+    sets = account["data"]
+    if len(sets) > 1 or any("instruments" in one for one in sets.values()):
+        lines += _data_sets(sets)
     lines += _solutions(account["solutions"])
     lines += _nights(account["nights"])
     return "\n".join(lines + list(account["notes"]))
@@ -188,6 +191,18 @@ def _digits(plus: float, minus: float) -> int:
 
     smaller = min(plus, minus)
     return 3 if smaller <= 0 else min(max(1 - floor(log10(smaller)), 0), 9)
+
+
+def _data_sets(sets: dict[str, dict]) -> list[str]:
+    """Chi-square of each data set, and of its instruments where there are several."""
+    lines = []
+    for name, one in sets.items():
+        parts = one.get("instruments", {"": one})
+        lines += [
+            f"  {f'{name} {label}'.strip():<28} chi2 {part['chi2']:.1f} of {part['data']} numbers"
+            for label, part in parts.items()
+        ]
+    return lines
 
 
 def _solutions(solutions: list[dict]) -> list[str]:

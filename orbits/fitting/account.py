@@ -99,24 +99,22 @@ def chi_square(data: Data, point: np.ndarray) -> dict:
     """Chi-square of one point by data set, with the stated errors, and the degrees of freedom.
 
     Of alternatives the best counts; nights that are outliers more likely than not do not count.
+    Positions and velocities of several instruments are also told by instrument.
     """
-    parts: dict[str, dict[str, float]] = {}
-    count = 0
+    parts: dict[str, dict] = {}
     if data.positions is not None:
-        square, used = _positions(data, point)
-        parts["positions"] = {"chi2": square, "data": 2 * used}
-        count += 2 * used
+        square, rows = _positions(data, point)
+        parts["positions"] = _set(square, 2, data.positions.instrument[rows])
     if data.velocities is not None:
-        square = _velocities(data, point)
-        parts["velocities"] = {"chi2": square, "data": len(data.velocities)}
-        count += len(data.velocities)
+        parts["velocities"] = _set(_velocities(data, point), 1, data.velocities.instrument)
     if data.tables.parallax[0] == DERIVED:
         found = largest_parallax(point, data.space.columns)
         square = ((found - data.parallax.value) / data.parallax.error) ** 2
         parts["parallax"] = {"chi2": float(square), "data": 1}
-        count += 1
+    count = sum(part["data"] for part in parts.values())
     free = sum(
-        not n.startswith(("log_position", "log_velocity", "outlier")) for n in data.space.names
+        not n.startswith(("log_position", "log_velocity", "outlier", "parallax"))
+        for n in data.space.names
     )
     return {
         "chi2": float(sum(part["chi2"] for part in parts.values())),
@@ -125,7 +123,21 @@ def chi_square(data: Data, point: np.ndarray) -> dict:
     }
 
 
-def _positions(data: Data, point: np.ndarray) -> tuple[float, int]:
+def _set(square: np.ndarray, each: int, instrument: np.ndarray) -> dict:
+    """Chi-square and number of data, `each` a row, of a data set and of its instruments."""
+
+    def total(rows: np.ndarray) -> dict:
+        return {"chi2": float(square[rows].sum()), "data": each * int(rows.sum())}
+
+    made = total(np.ones(len(square), dtype=bool))
+    names = sorted(set(instrument))
+    if len(names) > 1:
+        made["instruments"] = {str(name): total(instrument == name) for name in names}
+    return made
+
+
+def _positions(data: Data, point: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Chi-square (m,) of the nights that count, and the row of each that fits best."""
     labels = data.tables.place_labels[:, 0]
     inside, outside = np.empty(len(labels)), np.empty(len(labels))
     bare = data.tables._replace(
@@ -135,17 +147,17 @@ def _positions(data: Data, point: np.ndarray) -> tuple[float, int]:
     cxx, cxy, cyy = data.tables.places[:, 3:6].T
     square = -2 * (inside - data.tables.places[:, 6]) - np.log(cxx * cyy - cxy**2)
     square -= 2 * math.log(2 * math.pi)
-    starts = np.flatnonzero(np.diff(labels, prepend=-1))
-    least = np.minimum.reduceat(square, starts)
-    if not data.model.outliers:
-        return float(least.sum()), len(least)
-    chosen, outlier = np.empty(len(labels)), np.empty(data.nights)
-    night_probabilities(point[None], data.tables, chosen, outlier)
-    return float(least[outlier < 0.5].sum()), int((outlier < 0.5).sum())
+    nights = (np.flatnonzero(labels == night) for night in range(data.nights))
+    best = np.array([rows[np.argmin(square[rows])] for rows in nights])
+    if data.model.outliers:
+        chosen, outlier = np.empty(len(labels)), np.empty(data.nights)
+        night_probabilities(point[None], data.tables, chosen, outlier)
+        best = best[outlier < 0.5]
+    return square[best], best
 
 
-def _velocities(data: Data, point: np.ndarray) -> float:
-    """Chi-square of the velocities at the zero points that suit them best."""
+def _velocities(data: Data, point: np.ndarray) -> np.ndarray:
+    """Chi-square (n,) of the velocities at the zero points that suit them best."""
     tables = data.tables
     columns = tables.columns
     k1, k2 = (math.exp(point[columns[i]]) if columns[i] >= 0 else 0.0 for i in (K1, K2))
@@ -156,7 +168,7 @@ def _velocities(data: Data, point: np.ndarray) -> float:
     deviates = np.linalg.solve(
         np.eye(design.shape[1]) + design.T @ design, design.T @ (residual / error)
     )
-    return float(np.square(residual / error - design @ deviates).sum())
+    return np.square(residual / error - design @ deviates)
 
 
 def undetermined(data: Data, points: np.ndarray) -> list[str]:

@@ -6,16 +6,15 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Self
 
-import astropy.units as u
 import numpy as np
 from astropy.table import Table
-from astropy.time import Time
 
 from ..elements import Elements
 from ..errors import InputError
 from ..files import refuse_existing, whole_file
 from ..positions import Positions, read_positions, write_positions
 from ..velocities import Velocities, read_velocities, write_velocities
+from .comparing import orbit_of, position_residuals, velocity_residuals
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -67,15 +66,23 @@ class Solution:
         """The elements of the best sample; None without positions."""
         if self.positions is None:
             return None
-        return Elements(
-            period=self.best["period_d"] * u.day,
-            periastron=Time(self.best["periastron_mjd"], format="mjd", scale="tdb"),
-            eccentricity=self.best["eccentricity"],
-            semimajor_axis=self.best["semimajor_axis_mas"] * u.mas,
-            inclination=self.best["inclination_deg"] * u.deg,
-            node=self.best["node_deg"] % 360.0 * u.deg,
-            argument=self.best["argument_deg"] % 360.0 * u.deg,
-        )
+        return orbit_of(self.best)
+
+    @property
+    def residuals(self) -> "dict[str, pd.DataFrame]":
+        """Data less the best sample: "positions" and "velocities", as far as there are any.
+
+        Row by row as in `positions` and `velocities`; the columns are told at `comparing`.
+        """
+        sets = (self.positions, self.velocities)
+        times = np.concatenate([data.mjd for data in sets if data is not None])
+        made = {}
+        if self.positions is not None:
+            made["positions"] = position_residuals(self.best, self.positions)
+        if self.velocities is not None:
+            middle = float(times.min() + times.max()) / 2
+            made["velocities"] = velocity_residuals(self.best, self.velocities, middle)
+        return made
 
     @property
     def summary(self) -> dict[str, Interval]:
