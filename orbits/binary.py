@@ -213,7 +213,7 @@ def sides(visibility: np.ndarray, samples: np.ndarray, turned: np.ndarray) -> np
 def model(
     scene: Scene, values: np.ndarray, sampling: Sampling, free: Sequence[int] = ()
 ) -> tuple[np.ndarray, np.ndarray]:
-    """All data of a scene, stacked in the order of `sampling.SAMPLED`, and their Jacobian.
+    """All data of a scene, stacked in the order of `observation.OBSERVABLES`, and their Jacobian.
 
     Returns
     -------

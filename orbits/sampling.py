@@ -16,7 +16,6 @@ import numpy as np
 from .constants import DAY, MAS
 from .observation import OBSERVABLES, Channels, Exposures, Observation, sides
 
-SAMPLED = OBSERVABLES
 _SAME_BASELINE = 1e-6
 """m; sides that agree to this are one: 1e-5 of a turn at 1 arcsec and 0.5 um."""
 _MOST_NODES = 40
@@ -80,7 +79,7 @@ class Sampling:
         during an integration, that such a source can cause, so that its smeared visibility is
         right to `precision`; without `smearing` it is one.
         """
-        tables = [getattr(observation, name) for name in SAMPLED]
+        tables = [getattr(observation, name) for name in OBSERVABLES]
         scale = np.pi * radius * MAS
         channels, channel_of = _distinct_channels([table.channels for table in tables])
         shortest = channels.wavelength.min(initial=np.inf)

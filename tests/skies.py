@@ -6,8 +6,8 @@ import numpy as np
 
 from orbits.binary import Scene, model
 from orbits.companion.covariance import Covariance
-from orbits.observation import Channels, Exposures, Observable, Observation
-from orbits.sampling import SAMPLED, Sampling
+from orbits.observation import OBSERVABLES, Channels, Exposures, Observable, Observation
+from orbits.sampling import Sampling
 
 
 def table(legs, wavelength, *, bandwidth=0.0, value=0.0, error=1.0, integration=0.0, mjd=0.0):
@@ -97,7 +97,7 @@ def fill(blank, rng=None, scene=None, *, errors=None, **values):
         v2 = data[: len(blank.v2)]
         data = data + Covariance.of(blank, sampling, errors, v2).draw(rng)
     tables, first = {}, 0
-    for name in SAMPLED:
+    for name in OBSERVABLES:
         table = getattr(blank, name)
         value = data[first : first + len(table)]
         phase = name in ("t3", "visphi")

@@ -13,9 +13,8 @@ from scipy import sparse
 
 from ..binary import companion_name
 from ..errors import InputError
-from ..observation import Observation
+from ..observation import OBSERVABLES, Observation
 from ..progress import SILENT, Silent
-from ..sampling import SAMPLED
 from .covariance import Covariance
 from .fit import Fit, Problem, fit
 
@@ -108,7 +107,7 @@ def bootstrap(
 
 def independent_blocks(observation: Observation, covariance: Covariance) -> np.ndarray:
     """(n,) number of the independent block that each datum belongs to, from 0."""
-    tables = [getattr(observation, name) for name in SAMPLED]
+    tables = [getattr(observation, name) for name in OBSERVABLES]
     rows = np.concatenate([table.row for table in tables])
     kind = np.repeat(np.arange(len(tables)), [len(table) for table in tables])
     _, row = np.unique(np.column_stack([kind, rows]), axis=0, return_inverse=True)

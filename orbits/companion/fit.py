@@ -6,8 +6,8 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from ..binary import Scene, model
-from ..observation import Observation
-from ..sampling import SAMPLED, Sampling
+from ..observation import OBSERVABLES, Observation
+from ..sampling import Sampling
 from .covariance import Covariance
 
 _STEPS = 60
@@ -39,7 +39,7 @@ class Problem:
     @classmethod
     def of(cls, observation: Observation, sampling: Sampling, covariance: Covariance) -> "Problem":
         """The data of `observation`."""
-        data = np.concatenate([getattr(observation, name).value for name in SAMPLED])
+        data = np.concatenate([getattr(observation, name).value for name in OBSERVABLES])
         first = len(observation.v2)
         closure_phases = slice(first, first + len(observation.t3))
         return cls(data, closure_phases, observation.visphi.row, sampling, covariance)

@@ -11,9 +11,9 @@ import astropy.units as u
 import numpy as np
 
 from ..binary import Scene, companion_name, model
-from ..observation import Observation
+from ..observation import OBSERVABLES, Observation
 from ..positions import offsets
-from ..sampling import SAMPLED, Sampling
+from ..sampling import Sampling
 
 _LEAST = 1e-9
 """V2 or amplitude of a model below this is a null, and a ratio to it would know no bounds."""
@@ -97,7 +97,7 @@ def exchange(
     sampling = Sampling.of(observation, radius=max(old.reach, new.reach), smearing=smearing)
     before, after = (model(view.scene, view.values, sampling)[0] for view in (old, new))
     changes, first = {}, 0
-    for name in SAMPLED:
+    for name in OBSERVABLES:
         table = getattr(observation, name)
         own = slice(first, first + len(table))
         first += len(table)

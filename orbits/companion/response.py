@@ -13,7 +13,8 @@ from scipy import sparse
 
 from ..binary import sides
 from ..constants import MAS
-from ..sampling import SAMPLED, Sampling
+from ..observation import OBSERVABLES
+from ..sampling import Sampling
 from ..visibility import shape_visibility
 from .grid import Grid
 
@@ -255,7 +256,7 @@ def _response(sampling: Sampling, *entries: _Entries) -> Response:
         np.concatenate([part for entry in entries for part in getattr(entry, name)])
         for name in ("rows", "columns", "values")
     )
-    n = sum(len(getattr(sampling, name)) for name in SAMPLED)
+    n = sum(len(getattr(sampling, name)) for name in OBSERVABLES)
     return Response(u, v, sparse.csr_array((values, (rows, columns)), shape=(n, len(u))))
 
 

@@ -8,9 +8,8 @@ import numpy as np
 
 from ..constants import MAS
 from ..errors import InputError
-from ..observation import Observation
+from ..observation import OBSERVABLES, Observation
 from ..progress import SILENT, Silent
-from ..sampling import SAMPLED
 from .covariance import ErrorModel
 from .epoch import Epoch
 from .grid import Grid
@@ -112,7 +111,7 @@ def choose_grid(
     ValueError
         If `field` or `step` is not positive.
     """
-    tables = [t for t in (getattr(observation, name) for name in SAMPLED) if len(t)]
+    tables = [t for t in (getattr(observation, name) for name in OBSERVABLES) if len(t)]
     if not tables:
         raise InputError(f"{observation.target}: no usable squared visibility or closure phase")
     finest = min((t.wavelength / t.baselines).min() for t in tables) / MAS

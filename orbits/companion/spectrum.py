@@ -12,8 +12,8 @@ import astropy.units as u
 import numpy as np
 
 from ..errors import InputError, NothingFound
-from ..observation import Observable, Observation
-from ..sampling import SAMPLED, Sampling
+from ..observation import OBSERVABLES, Observable, Observation
+from ..sampling import Sampling
 from .covariance import Covariance, ErrorModel
 from .fit import Fit, Problem, fit
 from .result import Candidate
@@ -182,7 +182,7 @@ def _labelled(
     observation: Observation, bins: int | None
 ) -> tuple[Observation, list[tuple[float, float, str]]]:
     """The data with the number of their bin, from 1, as instrument; the bins' wavelengths."""
-    tables = {name: getattr(observation, name) for name in SAMPLED}
+    tables = {name: getattr(observation, name) for name in OBSERVABLES}
     label = {name: np.zeros(len(table.channels), dtype=int) for name, table in tables.items()}
     edges: list[tuple[float, float, str]] = []
     for number, instrument in enumerate(observation.instruments):

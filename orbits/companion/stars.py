@@ -7,8 +7,7 @@ import astropy.units as u
 import numpy as np
 
 from ..binary import PRIMARY, Scene, companion_name
-from ..observation import Observation
-from ..sampling import SAMPLED
+from ..observation import OBSERVABLES, Observation
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -60,7 +59,7 @@ def settled_stars(
 
 def scene_of(observation: Observation, stars: Stars, companions: int) -> Scene:
     """The scene of `stars` with so many companions, contrasts stated at the median wavelength."""
-    wavelengths = [getattr(observation, name).wavelength for name in SAMPLED]
+    wavelengths = [getattr(observation, name).wavelength for name in OBSERVABLES]
     return Scene(
         primary_shape=stars.primary,
         companion_shape=stars.companion,
