@@ -21,6 +21,8 @@ from ..sampling import Sampling
 _SINGULAR = 1e-8
 """Eigenvalues of a correlation block below this part of the largest are taken for zero: sets of
 closure phases are redundant, and what their noise cannot reach their signal cannot reach either."""
+_MOST_PISTONS = 10**8
+"""Data times what the phases of each exposure may have in common: 800 MB."""
 _INDEFINITE = -1e-3
 """An eigenvalue below this part of the largest is no rounding: the matrix is not a correlation."""
 
@@ -81,7 +83,8 @@ class Covariance:
         Raises
         ------
         InputError
-            If the correlations that the files list cannot be those of any errors.
+            If the correlations that the files list cannot be those of any errors, or there are too
+            many phases of single baselines.
         """
         errors = ErrorModel() if errors is None else errors
         sigma = np.concatenate([getattr(observation, name).error for name in OBSERVABLES])
@@ -262,6 +265,12 @@ def _pistons(observation: Observation) -> np.ndarray:
     wave = table.wavelength / table.wavelength.mean()
     shapes = [wave**power for power in (0, -1, *range(1, observation.phase_order + 1))]
     rows, row = np.unique(table.row, return_inverse=True)
+    if n * len(rows) * len(shapes) > _MOST_PISTONS:
+        raise InputError(
+            f"{observation.target}: phases of {len(rows)} exposures among {n} data are more than "
+            "memory holds; take a part of the channels (nodeline inspect --convert --wavelengths), "
+            "or no VISPHI"
+        )
     columns = np.zeros((n, len(shapes), len(rows)))
     for place, shape in enumerate(shapes):
         columns[n - len(table) + np.arange(len(table)), place, row] = shape

@@ -8,8 +8,10 @@ import numpy as np
 import pytest
 from skies import four_stations, offset_in_sigma, with_all_observables
 
-from orbits import read, search
+from orbits import InputError, read, search
 from orbits.binary import Scene, model
+from orbits.companion import covariance
+from orbits.companion.covariance import Covariance
 from orbits.oifits import Array, OIFile, Target, Vis, Vis2, Wavelength
 from orbits.sampling import Sampling
 
@@ -73,3 +75,10 @@ def test_a_companion_is_found_with_its_sign(tmp_path, rng, order):
     alone = search(read(tmp_path / "night.fits", observables=("v2",)), noise_searches=0)
     assert any(one.weight > 0.4 for one in alone.alternatives)
     assert all(one.weight < 1e-3 for one in result.alternatives)
+
+
+def test_more_phases_than_memory_holds_are_refused(monkeypatch):
+    blank = with_all_observables(four_stations(exposures=2, channels=3))
+    monkeypatch.setattr(covariance, "_MOST_PISTONS", 1000)
+    with pytest.raises(InputError, match="phases of 12 exposures among .* take a part"):
+        Covariance.of(blank, Sampling.of(blank, radius=0.0))
