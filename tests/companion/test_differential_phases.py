@@ -80,5 +80,5 @@ def test_a_companion_is_found_with_its_sign(tmp_path, rng, order):
 def test_more_phases_than_memory_holds_are_refused(monkeypatch):
     blank = with_all_observables(four_stations(exposures=2, channels=3))
     monkeypatch.setattr(covariance, "_MOST_PISTONS", 1000)
-    with pytest.raises(InputError, match="phases of 12 exposures among .* take a part"):
+    with pytest.raises(InputError, match=r"phases of 12 exposures among .* take a part"):
         Covariance.of(blank, Sampling.of(blank, radius=0.0))
