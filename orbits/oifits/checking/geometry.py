@@ -42,19 +42,19 @@ def longer_than_array(file: OIFile, log: Log) -> None:
 
 def triangles_of_pairs(file: OIFile, log: Log) -> None:
     """The sides of a triangle are the baselines that OI_VIS2 and OI_VIS have at the same time."""
-    pairs = _pairs(file)
-    if pairs is None:
+    pairs = [(table, (0, 1), table.legs[:, 0]) for table in (*file.of(Vis2), *file.of(Vis))]
+    if not sum(len(leg) for _, _, leg in pairs):
         return
-    keys, baselines = pairs
     for table in file.of(T3):
-        instrument = _instrument_number(file, table)
-        legs = [table.legs[:, 0], table.legs[:, 1], table.legs.sum(axis=1)]
-        differs = np.zeros(len(table), dtype=bool)
-        for (a, b), leg in zip(((0, 1), (1, 2), (0, 2)), legs, strict=True):
-            key, sign = _key(instrument, table, table.sta_index[:, [a, b]])
-            place = np.searchsorted(keys, key).clip(max=len(keys) - 1)
-            away = np.hypot(*(baselines[place] - sign[:, None] * leg).T)
-            differs |= (keys[place] == key) & (away > ALIKE * np.hypot(*leg.T) + SLACK)
+        legs = (table.legs[:, 0], table.legs[:, 1], table.legs.sum(axis=1))
+        sides = [(table, *side) for side in zip(((0, 1), (1, 2), (0, 2)), legs, strict=True)]
+        keys, baselines = zip(*(_oriented(file, *one) for one in (*pairs, *sides)), strict=True)
+        count = sum(len(leg) for _, _, leg in pairs)
+        baseline = np.concatenate(baselines)
+        like = _first_alike(np.concatenate(keys))[count:]
+        away = np.hypot(*(baseline[like] - baseline[count:]).T)
+        differs = (like < count) & (away > ALIKE * np.hypot(*baseline[count:].T) + SLACK)
+        differs = differs.reshape(3, len(table)).any(axis=0)
         if differs.any():
             log.suspicious(
                 table.label,
@@ -64,34 +64,30 @@ def triangles_of_pairs(file: OIFile, log: Log) -> None:
             )
 
 
-_KEY = np.dtype([("instrument", "i4"), ("target", "i4"), ("time", "i8"), ("a", "i4"), ("b", "i4")])
+def _oriented(
+    file: OIFile, table: BaselineTable, ends: tuple[int, int], leg: np.ndarray
+) -> tuple[np.ndarray, np.ndarray]:
+    """What rows of the same two stations and time share, (nrow, 5), and the baseline (nrow, 2).
 
-
-def _pairs(file: OIFile) -> tuple[np.ndarray, np.ndarray] | None:
-    """Sorted keys of all rows of pairs, and their baselines (n, 2)."""
-    keys, baselines = [], []
-    for table in (*file.of(Vis2), *file.of(Vis)):
-        key, sign = _key(_instrument_number(file, table), table, table.sta_index)
-        keys.append(key)
-        baselines.append(table.legs[:, 0] * sign[:, None])
-    if not keys or not sum(map(len, keys)):
-        return None
-    unique, first = np.unique(np.concatenate(keys), return_index=True)
-    return unique, np.concatenate(baselines)[first]
-
-
-def _instrument_number(file: OIFile, table: BaselineTable) -> int:
-    return [w.insname for w in file.wavelengths].index(table.insname)
-
-
-def _key(instrument: int, table: BaselineTable, stations: np.ndarray) -> tuple:
-    """What rows of the same stations and time share, and the sign that orders the stations."""
-    key = np.zeros(len(table), dtype=_KEY)
-    key["instrument"], key["target"] = instrument, table.target_id
+    The baseline is that from the station of lower index to the other.
+    """
+    a, b = table.sta_index[:, ends].T
     time = np.nan_to_num(table.mjd / SAME_TIME, nan=0.0, posinf=0.0, neginf=0.0)
-    key["time"] = np.round(np.clip(time, -1e15, 1e15))
-    key["a"], key["b"] = stations.min(axis=1), stations.max(axis=1)
-    return key, np.where(stations[:, 0] <= stations[:, 1], 1.0, -1.0)
+    instrument = [w.insname for w in file.wavelengths].index(table.insname)
+    key = [
+        np.full(len(table), instrument), table.target_id, np.round(np.clip(time, -1e15, 1e15)),
+        np.minimum(a, b), np.maximum(a, b),
+    ]  # fmt: skip
+    return np.column_stack(key), np.where(a <= b, 1.0, -1.0)[:, None] * leg
+
+
+def _first_alike(keys: np.ndarray) -> np.ndarray:
+    """For each row of `keys` the first row that is the same."""
+    order = np.lexsort(keys.T)
+    new = np.concatenate([[True], (keys[order[1:]] != keys[order[:-1]]).any(axis=1)])
+    first = np.empty(len(keys), dtype=int)
+    first[order] = order[new][np.cumsum(new) - 1]
+    return first
 
 
 CHECKS = (longer_than_array, triangles_of_pairs)
