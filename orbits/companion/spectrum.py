@@ -1,8 +1,8 @@
 """The contrast spectrum of a companion: its contrast channel by channel, with the covariance.
 
 All channels are fitted together with the exact model: one contrast for each, and what they share,
-the diameter of the primary and, unless it is given, the place of the companion. An error of either
-then shows up as covariance between channels.
+the diameters that the search fitted, with their priors, and, unless it is given, the place of the
+companion. An error of these then shows up as covariance between channels.
 """
 
 from dataclasses import dataclass, replace
@@ -11,14 +11,13 @@ from typing import Any
 import astropy.units as u
 import numpy as np
 
+from ..binary import model
 from ..errors import InputError, NothingFound
 from ..observation import OBSERVABLES, Observable, Observation
 from ..sampling import Sampling
 from .covariance import Covariance, ErrorModel
 from .fit import Fit, Problem, fit
 from .result import Candidate
-
-_SHARED = ("primary_diameter", "x", "y")
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -137,6 +136,11 @@ def spectrum(
     start = scene.vector({**own, "contrast": level})
     ratios = [scene.names.index(f"ratio_{k + 1}") for k in range(count)]
     start[ratios] = tilt - 1
+    reach = 1.2 * companion.separation_mas
+    sampling = Sampling.of(labelled, radius=reach, smearing=smearing)
+    v2 = model(known.scene, known.values, sampling)[0][: len(observation.v2)]
+    still = Sampling.of(observation, radius=0.0, smearing=smearing)
+    problem = Problem.of(labelled, sampling, Covariance.of(observation, still, errors, v2))
     replaced = {"contrast", "slope", *(("x", "y") if fix_place else ())}
 
     def here(index: int) -> int:
@@ -144,14 +148,9 @@ def spectrum(
 
     shared = [here(i) for i in known.free if known.scene.names[i] not in replaced]
     squares = [here(i) for i in known.squares]
-    priors = {here(i): prior for i, prior in known.priors.items() if here(i) in (*shared, *squares)}
-    reach = 1.2 * companion.separation_mas
-    still = Sampling.of(observation, radius=0.0, smearing=smearing)
-    covariance = Covariance.of(observation, still, errors)
-    sampling = Sampling.of(labelled, radius=reach, smearing=smearing)
-    problem = Problem.of(labelled, sampling, covariance)
-    free = tuple(sorted((*shared, *ratios)))
-    found = fit(problem, scene, start, free, priors, squares=squares)
+    fitted = (*shared, *squares)
+    priors = {here(i): prior for i, prior in known.priors.items() if here(i) in fitted}
+    found = fit(problem, scene, start, tuple(sorted((*shared, *ratios))), priors, squares=squares)
     return _result(observation, found, ratios, level, edges, fix_place)
 
 
