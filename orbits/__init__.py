@@ -12,7 +12,7 @@ _HOMES = {
     "ErrorModel": ".companion.covariance",
     "InputError": ".errors",
     "Model": ".fitting.model",
-    "Limits": ".companion.limits",
+    "Limits": ".companion.limit_result",
     "NodelineError": ".errors",
     "NothingFound": ".errors",
     "Observable": ".observation",

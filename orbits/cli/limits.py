@@ -18,7 +18,7 @@ from .night import (
 )
 
 if TYPE_CHECKING:
-    from ..companion.limits import Limits
+    from ..companion.limit_result import Limits
     from ..observation import Observation
     from ..system import System
 

@@ -14,6 +14,7 @@ from ..binary import Scene, companion_name, model
 from ..observation import OBSERVABLES, Observation
 from ..positions import offsets
 from ..sampling import Sampling
+from .fit import Fit
 
 _LEAST = 1e-9
 """V2 or amplitude of a model below this is a null, and a ratio to it would know no bounds."""
@@ -59,8 +60,8 @@ class Companion:
     @property
     def pair(self) -> "View":
         """The star with its companion."""
-        scene = Scene()
-        return View(scene, scene.vector(vars(self)))
+        own = {name: getattr(self, name) for name in ("x", "y", "contrast", "diameter")}
+        return self.without.beside(**own)
 
 
 @dataclass(frozen=True, eq=False)
@@ -69,6 +70,18 @@ class View:
 
     scene: Scene
     values: np.ndarray
+
+    @classmethod
+    def of(cls, fitted: Fit) -> "View":
+        """What was fitted."""
+        return cls(fitted.scene, fitted.values)
+
+    def beside(self, **companion: float) -> "View":
+        """The scene with one more companion, of the parameters given (`x`, `y`, `contrast` ...)."""
+        scene = replace(self.scene, companions=self.scene.companions + 1)
+        known = dict(zip(self.scene.names, self.values.tolist(), strict=True))
+        own = {companion_name(name, self.scene.companions): v for name, v in companion.items()}
+        return View(scene, scene.vector({**known, **own}))
 
     @property
     def reach(self) -> float:

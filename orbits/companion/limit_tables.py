@@ -4,7 +4,7 @@ import astropy.units as u
 import numpy as np
 from astropy.table import Table
 
-from .limits import ROUTES, Limits
+from .limit_result import ROUTES, Limits
 
 CONTRASTS = 20
 """Rows of completeness for each separation, evenly spaced in magnitude."""

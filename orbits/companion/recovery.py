@@ -11,18 +11,18 @@ transform a noise realisation gives z, and from the two follows for every place 
 smallest a at which the search finds the companion:
 
 - the peak on the lobe where it was put rises above the threshold of the false alarms, and
-- above every other peak: the sidelobes of rho, each with its own noise, and the noise elsewhere.
+- above every other peak: the sidelobes of rho, each with its own noise, and the peaks of the noise,
+  each lifted by rho. Even where rho is 0.3 a few hundred of these cost a twentieth of the finds.
 
 Exact, for Gaussian noise of the covariance assumed, are the maps: rho and z are those that the
-search itself makes. Approximations: (1) the data answer linearly to the contrast, which overstates
-what V2 shows by the part 2 f; (2) noise shifts the peak of a companion by at most `_REACH`
-steps and those of its sidelobes by one; (3) sidelobes below `FAINTEST` of the peak are taken for
-noise elsewhere. `injection.found` does without any of them, by a search of the data themselves.
+search itself makes. Approximations: (1) the data answer linearly to the contrast, which
+`saturation` puts right; (2) a rival's peak is within a step of that of the sidelobe, or of the
+noise, which makes it; (3) noise below `_HOT` makes no rival but on a sidelobe. `trials` does
+without any of them, by searches of the data themselves.
 """
 
 import os
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass
 
 import numpy as np
 
@@ -32,17 +32,13 @@ from .stack import COMPANION, Stack
 
 LOBE = 0.5
 """A lobe is where rho stays above this; a companion found on the lobe of its place is found."""
-FAINTEST = 0.4
-"""The least rho of a sidelobe that is followed: at the usual thresholds a is near 5.5, and noise
-(of a standard deviation of 1.1 between such places) would have to make up 3.3."""
-_MOST_RIVALS = 40
-_REACH = 6
-"""Steps around a place, its lobe among them: the finest lobe is about two steps in radius."""
-_SHIFT = 2
-"""Steps around a sidelobe: it may move by one, and its height needs the neighbours there."""
-_CLIMB = 2.0
-"""Sigma that a peak of noise gains at most over its value a step away, to be looked at or not."""
+_HOT = 1.5
+"""Noise, in sigma, from which a peak of it may be taken for the companion."""
+_CLIMB = 1.5
+"""Sigma that a peak gains at most over its value a step away, to be looked at or not."""
 _BATCH = 32
+_MOST_PIXELS = 100_000_000
+"""Of noise maps that are kept at a time."""
 _LARGEST = 1e3
 """An amplitude in sigma that no noise hides."""
 _HALVINGS = 10
@@ -51,53 +47,40 @@ _SINGLE = 1e-3
 """Precision of rho: a thousandth of a sigma where sigma matters."""
 
 
-@dataclass(frozen=True, eq=False)
-class Lobes:
-    """For P places, the peak that a companion there makes in the map and the sidelobes it makes."""
+def critical_amplitudes(
+    stack: Stack,
+    place: np.ndarray,
+    threshold: float,
+    count: int,
+    rng: np.random.Generator,
+    progress: Silent = SILENT,
+) -> np.ndarray:
+    """Smallest amplitude, in units of the error of the contrast, at which the search succeeds.
 
-    place: np.ndarray
-    """(P,) index of the place in the flattened grid."""
-    own: np.ndarray
-    """(P, 13, 13): rho around the place; 0 off its lobe and where a companion cannot be seen."""
-    first: np.ndarray
-    """(P + 1,): the sidelobes of place k are first[k] to first[k + 1]."""
-    rival: np.ndarray
-    """(R,) index of each sidelobe in the flattened grid."""
-    rho: np.ndarray
-    """(R, 5, 5): rho around it."""
+    Parameters
+    ----------
+    place : ndarray of int, shape (P,)
+        Indices of the flattened grid.
+    threshold : float
+        The statistic of the search that makes a claim.
+    count : int
+        Number of noise realisations.
 
-
-def lobes(stack: Stack, place: np.ndarray, progress: Silent = SILENT) -> Lobes:
-    """The lobes of companions at places given as indices of the flattened grid."""
-    grid = stack.grid
-    axis, norm = grid.axis, stack.normalisation.astype(np.float32)
-    own = np.zeros((len(place), 2 * _REACH + 1, 2 * _REACH + 1), dtype=np.float32)
-    batches = np.array_split(np.arange(len(place)), max(1, -(-len(place) // _BATCH)))
-    rivals, around = [], []
-
-    def follow(batch: np.ndarray) -> list[tuple[np.ndarray, np.ndarray]]:
-        row, column = np.divmod(place[batch], grid.side)
-        sidelobes = []
-        for k, one in enumerate(responses(stack, axis[column], axis[row])):
-            one *= norm
-            top = one[row[k], column[k]]
-            one *= 1 / top if top > 0 else 0.0
-            index, patches = _lobes(one, row[k], column[k], own[batch[k]])
-            order = np.argsort(-patches[:, _SHIFT, _SHIFT], kind="stable")[:_MOST_RIVALS]
-            sidelobes.append((index[order], patches[order]))
-        return sidelobes
-
-    with (
-        progress.task("companions on their own", len(place)) as tick,
-        ThreadPoolExecutor(os.cpu_count()) as pool,
-    ):
-        for batch in pool.map(follow, batches):
-            for index, patches in batch:
-                rivals.append(index)
-                around.append(patches)
-            tick(len(batch))
-    first = np.concatenate([[0], np.cumsum([len(index) for index in rivals])])
-    return Lobes(place, own, first, np.concatenate(rivals), np.concatenate(around))
+    Returns
+    -------
+    ndarray of shape (count, P)
+        inf where no companion can be seen.
+    """
+    found = np.empty((count, len(place)), dtype=np.float32)
+    at_a_time = max(1, _MOST_PIXELS // stack.grid.side**2)
+    parts = [min(at_a_time, count - start) for start in range(0, count, at_a_time)]
+    with progress.task("injecting and recovering", len(parts) * len(place)) as tick:
+        start = 0
+        for part in parts:
+            noise = _Noise(stack, threshold, part, rng)
+            found[start : start + part] = _recovered(stack, place, noise, tick)
+            start += part
+    return found
 
 
 def responses(stack: Stack, x: np.ndarray, y: np.ndarray) -> np.ndarray:
@@ -111,87 +94,140 @@ def responses(stack: Stack, x: np.ndarray, y: np.ndarray) -> np.ndarray:
     return total
 
 
-def critical_amplitudes(
-    stack: Stack,
-    companions: Lobes,
-    threshold: float,
-    count: int,
-    rng: np.random.Generator,
-    progress: Silent = SILENT,
-) -> np.ndarray:
-    """Smallest amplitude, in units of the error of the contrast, at which the search succeeds.
+class _Noise:
+    """Flattened maps of noise alone, with their peaks and with what a claim takes in each."""
 
-    Parameters
-    ----------
-    threshold : float
-        The statistic of the search that makes a claim.
-    count : int
-        Number of noise realisations.
+    def __init__(self, stack: Stack, threshold: float, count: int, rng: np.random.Generator):
+        # Errors stated too small are made up for by the search itself, by division by the reduced
+        # chi-square; errors stated too large are not.
+        floor = 1 / np.mean(stack.scale**2)
+        self.z = np.empty((count, stack.grid.side**2), dtype=np.float32)
+        self.claim = np.empty(count)
+        """(count,) height of a peak that is claimed."""
+        peaks = []
+        for k, (z, chi2) in enumerate(stack.noise(count, rng)):
+            self.z[k] = z.ravel()
+            self.claim[k] = np.sqrt(threshold * max(floor, stack.reduced(chi2, COMPANION)))
+            hot = _peaks(self.z[k], stack.grid.side, _HOT)
+            peaks.append(hot[np.argsort(-self.z[k, hot], kind="stable")])
+        self.first = np.concatenate([[0], np.cumsum([len(hot) for hot in peaks])])
+        """(count + 1,): the peaks of map k are first[k] to first[k + 1]."""
+        self.peak = np.concatenate(peaks)
+        """Pixels of the peaks, the highest of each map first."""
+        self.height = np.concatenate([z[hot] for z, hot in zip(self.z, peaks, strict=True)])
+        """Heights of the peaks."""
 
-    Returns
-    -------
-    ndarray of shape (count, P)
-        inf where no companion can be seen.
-    """
-    found = np.empty((count, len(companions.place)), dtype=np.float32)
-    # Errors stated too small are made up for by the search itself, by division by the reduced
-    # chi-square; errors stated too large are not.
-    floor = 1 / np.mean(stack.scale**2)
-    workers = os.cpu_count() or 1
-    parts = np.array_split(np.arange(len(companions.place)), workers)
 
-    def judge(part: np.ndarray, z: np.ndarray, claim: float, out: np.ndarray) -> None:
-        if part.size:
-            _critical(
-                z, int(np.argmax(z)), claim, part[0], part[-1] + 1, companions.place,
-                companions.own, companions.first, companions.rival, companions.rho, out,
-            )  # fmt: skip
+def _recovered(stack: Stack, place: np.ndarray, noise: _Noise, tick) -> np.ndarray:
+    """(count, P) smallest amplitudes."""
+    grid, norm = stack.grid, stack.normalisation.astype(np.float32)
+    found = np.empty((len(place), len(noise.claim)), dtype=np.float32)
 
-    with (
-        progress.task("injecting and recovering", count) as tick,
-        ThreadPoolExecutor(workers) as pool,
-    ):
-        for out, (z, chi2) in zip(found, stack.noise(count, rng), strict=True):
-            claim = np.sqrt(threshold * max(floor, stack.reduced(chi2, COMPANION)))
-            list(pool.map(lambda part, z=z, c=claim, out=out: judge(part, z, c, out), parts))
-            tick()
-    return found
+    def judge(batch: np.ndarray) -> int:
+        row, column = np.divmod(place[batch], grid.side)
+        each = responses(stack, grid.axis[column], grid.axis[row]) * norm
+        for k, rho in zip(batch, each.reshape(len(batch), -1), strict=True):
+            top = rho[place[k]]
+            if top > 0:
+                rho /= top
+                _critical(
+                    rho, grid.side, place[k], noise.z, noise.claim, noise.peak, noise.height,
+                    noise.first, found[k],
+                )  # fmt: skip
+            else:
+                found[k] = np.inf
+        return len(batch)
+
+    batches = np.array_split(np.arange(len(place)), max(1, -(-len(place) // _BATCH)))
+    with ThreadPoolExecutor(os.cpu_count()) as pool:
+        for done in pool.map(judge, batches):
+            tick(done)
+    return found.T
 
 
 @compiled
-def _lobes(rho, row, column, own):
-    """Fill `own` with the lobe of (row, column); indices and surroundings of the sidelobes."""
-    side = rho.shape[0]
-    lobe = np.zeros((side, side), dtype=np.bool_)
-    waiting = [(row, column)]
-    lobe[row, column] = True
-    while len(waiting):
-        i, j = waiting.pop()
-        m, n = i - row + _REACH, j - column + _REACH
-        if 0 <= m <= 2 * _REACH and 0 <= n <= 2 * _REACH:
-            own[m, n] = rho[i, j]
-        for m in range(max(i - 1, 0), min(i + 2, side)):
-            for n in range(max(j - 1, 0), min(j + 2, side)):
-                if rho[m, n] > LOBE and not lobe[m, n]:
-                    lobe[m, n] = True
-                    waiting.append((m, n))
-    index = []
-    for i in range(_SHIFT, side - _SHIFT):
-        for j in range(_SHIFT, side - _SHIFT):
-            r = rho[i, j]
-            if r < FAINTEST or lobe[i, j]:
-                continue
-            if (
-                r > rho[i, j - 1] and r >= rho[i, j + 1] and r > rho[i - 1, j]
-                and r >= rho[i + 1, j] and r > rho[i - 1, j - 1] and r >= rho[i + 1, j + 1]
-                and r > rho[i - 1, j + 1] and r >= rho[i + 1, j - 1]
-            ):  # fmt: skip
-                index.append(i * side + j)
-    around = np.empty((len(index), 2 * _SHIFT + 1, 2 * _SHIFT + 1), dtype=np.float32)
-    for k in range(len(index)):
-        i, j = index[k] // side, index[k] % side
-        around[k] = rho[i - _SHIFT : i + _SHIFT + 1, j - _SHIFT : j + _SHIFT + 1]
-    return np.array(index, dtype=np.int64), around
+def _critical(rho, side, place, z, claim, peak, height, first, found):
+    """Smallest amplitudes at a place, of which `rho` is the response, in each of the maps `z`."""
+    lobe = _lobe(rho, side, place)
+    own = np.flatnonzero(lobe)
+    sidelobes = _peaks(rho, side, LOBE)
+    for k in range(len(claim)):
+        a = np.inf  # at which a pixel of the lobe reaches the claim
+        for q in own:
+            a = min(a, (claim[k] - z[k, q]) / rho[q])
+        a = max(0.0, a)
+        for _ in range(_STEPS):  # the parabola adds a little to the highest pixel
+            a = max(0.0, a + claim[k] - _own_height(a, rho, z[k], side, own))
+        here = _own_height(a, rho, z[k], side, own)
+        for q in sidelobes:
+            if not lobe[q] and a * rho[q] + z[k, q] > here - _CLIMB:
+                a, here = _above(a, here, rho, z[k], side, lobe, own, q)
+        for n in range(first[k], first[k + 1]):
+            q = peak[n]
+            if a * rho[q] + height[n] > here - _CLIMB and not lobe[q]:
+                a, here = _above(a, here, rho, z[k], side, lobe, own, q)
+        found[k] = a
+
+
+@compiled
+def _above(a, here, rho, z, side, lobe, own, q):
+    """The smallest amplitude, `a` or more, at which the lobe beats the pixel q, and its height."""
+    if here > _rival_height(a, rho, z, side, lobe, q):
+        return a, here
+    low, high = a, a
+    while high < _LARGEST:
+        high += 1.0
+        if _own_height(high, rho, z, side, own) > _rival_height(high, rho, z, side, lobe, q):
+            break
+        low = high
+    for _ in range(_HALVINGS):
+        a = (low + high) / 2
+        if _own_height(a, rho, z, side, own) > _rival_height(a, rho, z, side, lobe, q):
+            high = a
+        else:
+            low = a
+    return high, _own_height(high, rho, z, side, own)
+
+
+@compiled
+def _own_height(a, rho, z, side, own):
+    """Height of the highest peak of a rho + z on the pixels `own`."""
+    best, top = -np.inf, own[0]
+    for q in own:
+        value = a * rho[q] + z[q]
+        if value > best:
+            best, top = value, q
+    return _peak(a, rho, z, side, top)
+
+
+@compiled
+def _rival_height(a, rho, z, side, lobe, q):
+    """Height of the peak off the lobe within a step of the pixel q, which is not at the edge.
+
+    -inf where what is highest there is the flank of the lobe.
+    """
+    best, top = -np.inf, q
+    for down in (-side, 0, side):
+        for n in range(q + down - 1, q + down + 2):
+            value = a * rho[n] + z[n]
+            if value > best and not lobe[n]:
+                best, top = value, n
+    for down in (-side, 0, side):
+        for n in range(max(top + down - 1, 0), min(top + down + 2, rho.size)):
+            if lobe[n] and a * rho[n] + z[n] > best:
+                return -np.inf
+    return _peak(a, rho, z, side, top)
+
+
+@compiled
+def _peak(a, rho, z, side, q):
+    """Height of a rho + z about the pixel q, by a parabola along either axis."""
+    top = a * rho[q] + z[q]
+    if not (0 < q % side < side - 1 and side <= q < rho.size - side):
+        return top
+    across = _vertex(top, a * rho[q - 1] + z[q - 1], a * rho[q + 1] + z[q + 1])
+    before, after = a * rho[q - side] + z[q - side], a * rho[q + side] + z[q + side]
+    return top + across + _vertex(top, before, after)
 
 
 @compiled
@@ -203,100 +239,35 @@ def _vertex(top, before, after):
 
 
 @compiled
-def _peak(a, rho, m, n, z, i, j):
-    """Height of a rho + z about the pixel that is (m, n) in `rho` and (i, j) in `z`."""
-    last = z.shape[0] - 1
-    top = a * rho[m, n] + z[i, j]
-    if not (
-        0 < i < last and 0 < j < last and 0 < m < rho.shape[0] - 1 and 0 < n < rho.shape[1] - 1
-    ):
-        return top
-    rise = _vertex(top, a * rho[m, n - 1] + z[i, j - 1], a * rho[m, n + 1] + z[i, j + 1])
-    return (
-        top + rise + _vertex(top, a * rho[m - 1, n] + z[i - 1, j], a * rho[m + 1, n] + z[i + 1, j])
-    )
+def _lobe(rho, side, place):
+    """Which pixels are on the lobe of a place: joined to it by a rho above `LOBE`."""
+    lobe = np.zeros(rho.size, dtype=np.bool_)
+    lobe[place] = True
+    waiting = [place]
+    while len(waiting):
+        q = waiting.pop()
+        row, column = q // side, q % side
+        for m in range(max(row - 1, 0), min(row + 2, side)):
+            for n in range(max(column - 1, 0), min(column + 2, side)):
+                if rho[m * side + n] > LOBE and not lobe[m * side + n]:
+                    lobe[m * side + n] = True
+                    waiting.append(m * side + n)
+    return lobe
 
 
 @compiled
-def _own_height(a, rho, z, i, j):
-    """Height of the highest peak on the lobe of the place (i, j)."""
-    side = z.shape[0]
-    best, m_best, n_best = -np.inf, 0, 0
-    for m in range(max(0, _REACH - i), min(2 * _REACH + 1, side + _REACH - i)):
-        for n in range(max(0, _REACH - j), min(2 * _REACH + 1, side + _REACH - j)):
-            if rho[m, n] > 0:
-                value = a * rho[m, n] + z[i + m - _REACH, j + n - _REACH]
-                if value > best:
-                    best, m_best, n_best = value, m, n
-    return _peak(a, rho, m_best, n_best, z, i + m_best - _REACH, j + n_best - _REACH)
-
-
-@compiled
-def _rises_above(wanted, rho, z, i, j):
-    """The smallest a at which a pixel on the lobe of the place (i, j) reaches `wanted`."""
-    side = z.shape[0]
-    least = np.inf
-    for m in range(max(0, _REACH - i), min(2 * _REACH + 1, side + _REACH - i)):
-        for n in range(max(0, _REACH - j), min(2 * _REACH + 1, side + _REACH - j)):
-            if rho[m, n] > 0:
-                least = min(least, (wanted - z[i + m - _REACH, j + n - _REACH]) / rho[m, n])
-    return least
-
-
-@compiled
-def _rival_height(a, rho, z, i, j):
-    """Height of the highest peak within a step of the sidelobe at (i, j)."""
-    best, m_best, n_best = -np.inf, 0, 0
-    for m in range(1, 2 * _SHIFT):
-        for n in range(1, 2 * _SHIFT):
-            value = a * rho[m, n] + z[i + m - _SHIFT, j + n - _SHIFT]
-            if value > best:
-                best, m_best, n_best = value, m, n
-    return _peak(a, rho, m_best, n_best, z, i + m_best - _SHIFT, j + n_best - _SHIFT)
-
-
-@compiled
-def _critical(z, worst, claim, begin, end, place, own, first, rival, rho, found):
-    """Smallest amplitudes at the places from `begin` to `end` that pass `claim` and all rivals."""
-    side = z.shape[0]
-    highest = z[worst // side, worst % side]
-    for p in range(begin, end):
-        i, j = place[p] // side, place[p] % side
-        if own[p, _REACH, _REACH] == 0.0:
-            found[p] = np.inf
-            continue
-        m, n = worst // side - i + _REACH, worst % side - j + _REACH
-        near = 0 <= m <= 2 * _REACH and 0 <= n <= 2 * _REACH and own[p, m, n] > 0
-        wanted = claim if near else max(claim, highest)
-        a = max(0.0, _rises_above(wanted, own[p], z, i, j))
-        for _ in range(_STEPS):  # the parabola adds a little to the highest pixel
-            a = max(0.0, a + wanted - _own_height(a, own[p], z, i, j))
-        found[p] = _above_rivals(a, z, own[p], i, j, first[p], first[p + 1], rival, rho)
-
-
-@compiled
-def _above_rivals(a, z, own, i, j, begin, end, rival, rho):
-    """The smallest amplitude, `a` or more, at which the peak of a place beats its sidelobes."""
-    side = z.shape[0]
-    here = _own_height(a, own, z, i, j)
-    for r in range(begin, end):
-        m, n = rival[r] // side, rival[r] % side
-        if a * rho[r, _SHIFT, _SHIFT] + z[m, n] < here - _CLIMB:
-            continue
-        if here > _rival_height(a, rho[r], z, m, n):
-            continue
-        low, high = a, a
-        while high < _LARGEST:
-            high += 1.0
-            if _own_height(high, own, z, i, j) > _rival_height(high, rho[r], z, m, n):
-                break
-            low = high
-        for _ in range(_HALVINGS):
-            middle = (low + high) / 2
-            if _own_height(middle, own, z, i, j) > _rival_height(middle, rho[r], z, m, n):
-                high = middle
-            else:
-                low = middle
-        a = high
-        here = _own_height(a, own, z, i, j)
-    return a
+def _peaks(field, side, least):
+    """Pixels of the local maxima above `least` of a flattened map, but for its edge."""
+    found = []
+    for row in range(1, side - 1):
+        for q in range(row * side + 1, row * side + side - 1):
+            r = field[q]
+            if (
+                r > least
+                and r > field[q - 1] and r >= field[q + 1]
+                and r > field[q - side] and r >= field[q + side]
+                and r > field[q - side - 1] and r >= field[q + side + 1]
+                and r > field[q - side + 1] and r >= field[q + side - 1]
+            ):  # fmt: skip
+                found.append(q)
+    return np.array(found, dtype=np.int64)

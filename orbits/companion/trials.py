@@ -8,12 +8,11 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..binary import companion_name
+from ..errors import NothingFound
 from ..observation import Observation
-from .epoch import Epoch
-from .fit import Fit
 from .injection import View, exchange
 from .maps import Field
+from .night import Night, NightSearch
 from .recovery import LOBE
 
 _BETWEEN = 9
@@ -38,13 +37,33 @@ class Trial:
         return self.claimed and self.in_place
 
 
-def with_companion(epoch: Epoch, null: Fit, x: float, y: float, contrast: float) -> Observation:
-    """The data of `epoch` with the companion that it looks for put in (mas)."""
-    known = dict(zip(null.scene.names, null.values.tolist(), strict=True))
-    own = {"x": x, "y": y, "contrast": contrast, "diameter": epoch.stars.fixed.get("diameter", 0.0)}
-    added = {companion_name(name, epoch.last): value for name, value in own.items()}
-    lit = View(epoch.scene, epoch.scene.vector({**known, **added}))
-    return exchange(epoch.observation, View(null.scene, null.values), lit, smearing=epoch.smearing)
+def trial(
+    search: NightSearch, night: Night, *, x: float, y: float, contrast: float, threshold: float
+) -> Trial:
+    """Put one companion at x, y (mas) into the data of `night`, and search for it."""
+    lit = with_companion(night, x=x, y=y, contrast=contrast)
+    return looked_for(search, night, lit, x=x, y=y, contrast=contrast, threshold=threshold)
+
+
+def looked_for(
+    search: NightSearch, night: Night, lit: Observation, *, x: float, y: float, contrast: float,
+    threshold: float,
+) -> Trial:  # fmt: skip
+    """Search the data `lit`, which are those of `night` or like them with a companion."""
+    try:
+        result = search.search(lit, companions=1 + night.epoch.last)
+    except NothingFound:
+        return Trial(x, y, contrast, claimed=False, in_place=False)
+    place = result.best.x_mas, result.best.y_mas
+    claimed = result.statistic >= threshold
+    return Trial(x, y, contrast, claimed, same_lobe(night.field, (x, y), place))
+
+
+def with_companion(night: Night, *, x: float, y: float, contrast: float) -> Observation:
+    """The data of `night` with a companion of the kind that it is searched for."""
+    before = View.of(night.field.null)
+    after = before.beside(x=x, y=y, contrast=contrast, diameter=night.field.companion[1])
+    return exchange(night.epoch.observation, before, after, smearing=night.epoch.smearing)
 
 
 def same_lobe(field: Field, start: tuple[float, float], end: tuple[float, float]) -> bool:

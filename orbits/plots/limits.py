@@ -5,8 +5,8 @@ from typing import TYPE_CHECKING
 import astropy.units as u
 import numpy as np
 
+from ..companion.limit_result import Limits
 from ..companion.limit_tables import delta_magnitude
-from ..companion.limits import Limits
 from . import style
 
 if TYPE_CHECKING:
