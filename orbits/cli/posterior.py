@@ -19,7 +19,7 @@ from .night import (
 )
 
 if TYPE_CHECKING:
-    from ..companion.posterior import EpochPosterior
+    from ..companion.posterior_result import EpochPosterior
 
 _SHOWN = 10
 

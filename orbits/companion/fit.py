@@ -81,6 +81,8 @@ class Fit:
     squares: Mapping[int, float] = field(default_factory=dict)
     """Index of a diameter whose square was fitted too: the standard error of the square (mas2). Its
     uncertainty is a part of `covariance`; a prior on it is one on the square."""
+    joint: np.ndarray = field(default_factory=lambda: np.empty((0, 0)))
+    """(p, p) covariance of the free parameters and, after them, of the squares."""
 
     def value(self, name: str) -> float:
         """The value of a parameter by its name."""
@@ -147,11 +149,11 @@ def fit(
         if settled:
             break
     dof = problem.covariance.rank + len(priors) - len(index)
-    covariance = _inverse(jacobian.T @ jacobian)
-    errors = np.sqrt(np.diag(covariance))[len(free) :].tolist()
-    covariance = covariance[: len(free), : len(free)]
+    joint = _inverse(jacobian.T @ jacobian)
+    errors = np.sqrt(np.diag(joint))[len(free) :].tolist()
+    covariance = joint[: len(free), : len(free)]
     wide = dict(zip(squares, errors, strict=True))
-    return Fit(scene, values, tuple(free), chi2, dof, covariance, settled, priors, wide)
+    return Fit(scene, values, tuple(free), chi2, dof, covariance, settled, priors, wide, joint)
 
 
 def polish(problem: Problem, rough: Fit) -> Fit:

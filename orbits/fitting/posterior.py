@@ -6,6 +6,7 @@ import numpy as np
 import pandas as pd
 
 from ..compiled import compiled
+from ..resampling import systematic
 from .data import Data
 from .derived import NAMES, derived
 from .knowledge import NEXT
@@ -16,11 +17,7 @@ from .space import PARALLAX
 
 def equal_weight(run: Run, rng: np.random.Generator) -> np.ndarray:
     """Indices of as many points as the run is worth, drawn by systematic resampling, shuffled."""
-    count = max(int(run.effective_samples), 1)
-    weight = np.exp(run.log_weight)
-    places = (np.arange(count) + rng.uniform()) / count
-    chosen = np.searchsorted(np.cumsum(weight / weight.sum()), places)
-    return rng.permutation(np.minimum(chosen, len(weight) - 1))
+    return rng.permutation(systematic(np.exp(run.log_weight), rng))
 
 
 def sample_table(data: Data, points: np.ndarray, rng: np.random.Generator) -> pd.DataFrame:

@@ -15,10 +15,7 @@ def clear():
     rng = np.random.default_rng(4)
     truth = {"x": -7.3, "y": 9.1, "contrast": 0.08, "primary_diameter": 1.2}
     observation = fill(four_stations(exposures=2, channels=3), rng, **truth)
-    return posterior(
-        observation, field=20 * u.mas, companion_diameter=0 * u.mas, live_points=100,
-        rng=np.random.default_rng(1),
-    )  # fmt: skip
+    return posterior(observation, field=20 * u.mas, live_points=100, rng=np.random.default_rng(1))
 
 
 def test_clear_detection_agrees_with_its_covariance(clear):
@@ -26,13 +23,14 @@ def test_clear_detection_agrees_with_its_covariance(clear):
     best = clear.search.best
     heavy = clear.modes[0]
     assert heavy.weight > 0.99
-    free = [best.fit.scene.names.index(name) for name in clear.names]
-    error = np.sqrt(np.diag(best.fit.covariance)) * best.error_scale
-    assert (
-        np.abs(heavy.mean - np.abs(best.fit.values[free]) * np.sign(heavy.mean)) < 0.2 * error
-    ).all()
+    assert clear.names == ("primary_diameter", "x", "y", "contrast", "diameter_squared")
+    error = np.sqrt(np.diag(best.fit.joint)) * best.error_scale
+    square = best.fit.value("diameter") * abs(best.fit.value("diameter"))
+    fitted = np.append(best.fit.values[list(best.fit.free)], square)
+    slack = 1 / np.sqrt(len(clear.samples))
+    assert (np.abs(heavy.mean - fitted) < (0.2 + 4 * slack) * error).all()
     width = np.sqrt(np.diag(heavy.covariance)) / error
-    assert_allclose(width, 1, atol=max(0.1, 4 / np.sqrt(2 * len(clear.samples))))
+    assert_allclose(width, 1, atol=max(0.1, 4 * slack / np.sqrt(2)))
 
 
 def test_clear_detection_beats_the_single_star_by_its_chi_square(clear):
@@ -44,8 +42,11 @@ def test_clear_detection_beats_the_single_star_by_its_chi_square(clear):
     star = np.log(
         clear.search.null.error("primary_diameter") * best.error_scale * np.sqrt(2 * np.pi)
     )
-    size = 0.5 * np.linalg.slogdet(2 * np.pi * best.fit.covariance * best.error_scale**2)[1]
-    expected = best.delta_chi2 / best.error_scale**2 / 2 + size - star - np.log(40.0**2)
+    size = 0.5 * np.linalg.slogdet(2 * np.pi * best.fit.joint * best.error_scale**2)[1]
+    # Of the priors those of the place, and of the square of the companion's diameter, are left.
+    width = best.companion_diameter_prior_mas**2 * best.error_scale * np.sqrt(2 * np.pi)
+    prior = np.log(40.0**2) + np.log(width)
+    expected = best.delta_chi2 / best.error_scale**2 / 2 + size - star - prior
     assert_allclose(clear.log_evidence, expected, atol=0.5 + 4 * clear.log_evidence_error)
 
 
