@@ -15,6 +15,8 @@ from .night import (
     T3Calibration,
     Target,
     V2Calibration,
+    error_model,
+    length,
 )
 
 if TYPE_CHECKING:
@@ -71,7 +73,6 @@ def limits(
     import astropy.units as u
     import numpy as np
 
-    from ..companion.covariance import ErrorModel
     from ..companion.limits import limits as find
     from ..files import refuse_existing
     from ..progress import Bar
@@ -80,9 +81,6 @@ def limits(
     for name, value in shares.items():
         if not 0 < value < 1:
             raise typer.BadParameter(f"--{name} must be between 0 and 1, got {value}")
-    for name, value in (("--field", field), ("--diameter", diameter)):
-        if value is not None and not value > 0:
-            raise typer.BadParameter(f"{name} must be positive, got {value}")
     system, observations = _given(files, target, night, flip_phase)
     warn(observations[0].problems)
     if system is not None:
@@ -95,13 +93,13 @@ def limits(
     refuse_existing(*paths.values(), force=force)
     result = find(
         observations,
-        field=None if field is None else field * u.mas,
-        diameter=None if diameter is None else diameter * u.mas,
-        errors=ErrorModel(
-            correlated=not ignore_correlations,
+        field=length("--field", field),
+        diameter=length("--diameter", diameter),
+        errors=error_model(
             shared_baselines=shared_baselines,
             v2_calibration=v2_calibration,
-            t3_calibration=np.radians(t3_calibration),
+            t3_calibration=t3_calibration,
+            ignore_correlations=ignore_correlations,
         ),
         confidence=confidence,
         completeness=completeness,

@@ -9,6 +9,9 @@ import typer
 from .frame import warn
 
 if TYPE_CHECKING:
+    import astropy.units as u
+
+    from ..companion.covariance import ErrorModel
     from ..observation import Observation
 
 NightFiles = Annotated[
@@ -84,6 +87,37 @@ def read_night(
     )
     warn(observation.problems)
     return observation
+
+
+def length(option: str, value: float | None) -> "u.Quantity | None":
+    """The value of `option` in mas, which must be positive; None where it was not given."""
+    import astropy.units as u
+
+    if value is None:
+        return None
+    if not value > 0:
+        raise typer.BadParameter(f"{option} must be positive, got {value}")
+    return value * u.mas
+
+
+def error_model(
+    *,
+    shared_baselines: bool,
+    v2_calibration: float,
+    t3_calibration: float,
+    ignore_correlations: bool,
+) -> "ErrorModel":
+    """How the errors of a night hang together, as its options say."""
+    import numpy as np
+
+    from ..companion.covariance import ErrorModel
+
+    return ErrorModel(
+        correlated=not ignore_correlations,
+        shared_baselines=shared_baselines,
+        v2_calibration=v2_calibration,
+        t3_calibration=float(np.radians(t3_calibration)),
+    )
 
 
 def named(text: str, *, count: int) -> tuple[str, list[float]]:

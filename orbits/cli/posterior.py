@@ -5,17 +5,22 @@ from typing import TYPE_CHECKING, Annotated
 
 import typer
 
-from .frame import Force, Json, Seed, emit, say, warn
+from .frame import Force, Json, Seed, emit, say
 from .night import (
     CompanionDiameter,
     Diameter,
     FlipPhase,
     HalfField,
+    IgnoreCorrelations,
     NightDate,
     NightFiles,
+    SharedBaselines,
     T3Calibration,
     Target,
     V2Calibration,
+    error_model,
+    length,
+    read_night,
 )
 
 if TYPE_CHECKING:
@@ -31,8 +36,10 @@ def posterior(
     field: HalfField = None,
     diameter: Diameter = None,
     companion_diameter: CompanionDiameter = None,
+    shared_baselines: SharedBaselines = False,
     v2_calibration: V2Calibration = 0.0,
     t3_calibration: T3Calibration = 0.0,
+    ignore_correlations: IgnoreCorrelations = False,
     flip_phase: FlipPhase = False,
     live_points: Annotated[int, typer.Option(min=50, help="Of nested sampling.")] = 200,
     output: Annotated[Path | None, typer.Option(help="Samples (ECSV).")] = None,
@@ -45,40 +52,34 @@ def posterior(
 ) -> None:
     """Sample all of a night's posterior: every solution with its share, and the evidence.
 
-    Flat priors: places in the field, contrasts from 0 to 1, diameters up to 3 resolutions.
+    Flat priors: places in the field, contrasts from 0 to 1, diameters up to 3 resolutions. The
+    square of the diameter of a companion that is not resolved has the prior of the search.
     """
     import astropy.units as u
     import numpy as np
 
-    from ..companion.covariance import ErrorModel
     from ..companion.posterior import posterior as sample
     from ..files import refuse_existing, whole_file
-    from ..oifits import read
-    from ..oifits.epochs import night_label
+    from ..oifits.utc import night_label
     from ..positions import write_positions
     from ..progress import Bar
 
-    def mas(value: float | None) -> u.Quantity | None:
-        return None if value is None else value * u.mas
-
-    for name, value in (("--field", field), ("--diameter", diameter)):
-        if value is not None and not value > 0:
-            raise typer.BadParameter(f"{name} must be positive, got {value}")
     refuse_existing(*(path for path in (output, positions) if path), force=force)
-    observation = read(files, target=target, night=night, flip_phase=flip_phase)
-    warn(observation.problems)
+    half, primary = length("--field", field), length("--diameter", diameter)
+    observation = read_night(files, target=target, night=night, flip_phase=flip_phase)
     result = sample(
         observation,
-        field=mas(field),
-        diameter=mas(diameter),
-        companion_diameter=mas(companion_diameter),
-        errors=ErrorModel(
-            v2_calibration=v2_calibration, t3_calibration=float(np.radians(t3_calibration))
+        field=half,
+        diameter=primary,
+        companion_diameter=None if companion_diameter is None else companion_diameter * u.mas,
+        errors=error_model(
+            shared_baselines=shared_baselines, v2_calibration=v2_calibration,
+            t3_calibration=t3_calibration, ignore_correlations=ignore_correlations,
         ),
         live_points=live_points,
         rng=np.random.default_rng(seed),
         progress=Bar(),
-    )
+    )  # fmt: skip
     say(describe(result), json=json)
     if output:
         with whole_file(output, force=force) as temporary:

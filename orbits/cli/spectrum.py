@@ -6,16 +6,21 @@ from typing import TYPE_CHECKING, Annotated
 import typer
 
 from ..errors import NothingFound
-from .frame import Force, Json, Seed, emit, say, warn
+from .frame import Force, Json, Seed, emit, say
 from .night import (
     Diameter,
     FlipPhase,
     HalfField,
+    IgnoreCorrelations,
     NightDate,
     NightFiles,
+    SharedBaselines,
     T3Calibration,
     Target,
     V2Calibration,
+    error_model,
+    length,
+    read_night,
 )
 
 if TYPE_CHECKING:
@@ -23,7 +28,6 @@ if TYPE_CHECKING:
 
 _SHOWN = 12
 """Channels in the table for people; the file has all of them."""
-CLAIM = 0.01
 
 
 def spectrum(
@@ -38,8 +42,10 @@ def spectrum(
     fix_place: Annotated[
         bool, typer.Option("--fix-place", help="Take the place found for known exactly.")
     ] = False,
+    shared_baselines: SharedBaselines = False,
     v2_calibration: V2Calibration = 0.0,
     t3_calibration: T3Calibration = 0.0,
+    ignore_correlations: IgnoreCorrelations = False,
     flip_phase: FlipPhase = False,
     output: Annotated[Path | None, typer.Option(help="Table (ECSV), with the covariance.")] = None,
     picture: Annotated[Path | None, typer.Option(help="A .png, .pdf or .svg file.")] = None,
@@ -49,39 +55,30 @@ def spectrum(
 ) -> None:
     """Find the companion of a night and measure its contrast in every channel.
 
-    The channels are fitted together, with the place of the companion and the diameter of the
-    primary, whose errors tie the contrasts together: the covariance says how.
+    The channels are fitted together, with the place of the companion and the diameters of the
+    stars, whose errors tie the contrasts together: the covariance says how.
     """
-    import astropy.units as u
     import numpy as np
 
-    from ..companion.covariance import ErrorModel
-    from ..companion.search import search
+    from ..companion.search import FALSE_ALARM, search
     from ..companion.spectrum import spectrum as measure
     from ..files import refuse_existing, whole_file
-    from ..oifits import read
     from ..progress import Bar
 
-    for name, value in (("--field", field), ("--diameter", diameter)):
-        if value is not None and not value > 0:
-            raise typer.BadParameter(f"{name} must be positive, got {value}")
     if picture and picture.suffix.lower() not in (".png", ".pdf", ".svg"):
         raise typer.BadParameter("the name of a picture ends in .png, .pdf or .svg")
     refuse_existing(*(path for path in (output, picture) if path), force=force)
-    observation = read(files, target=target, night=night, flip_phase=flip_phase)
-    warn(observation.problems)
-    errors = ErrorModel(
-        v2_calibration=v2_calibration, t3_calibration=float(np.radians(t3_calibration))
-    )
+    half, primary = length("--field", field), length("--diameter", diameter)
+    observation = read_night(files, target=target, night=night, flip_phase=flip_phase)
+    errors = error_model(
+        shared_baselines=shared_baselines, v2_calibration=v2_calibration,
+        t3_calibration=t3_calibration, ignore_correlations=ignore_correlations,
+    )  # fmt: skip
     found = search(
-        observation,
-        field=None if field is None else field * u.mas,
-        diameter=None if diameter is None else diameter * u.mas,
-        errors=errors,
-        rng=np.random.default_rng(seed),
-        progress=Bar(),
-    )
-    if not found.best.false_alarm_probability < CLAIM:
+        observation, field=half, diameter=primary, errors=errors,
+        rng=np.random.default_rng(seed), progress=Bar(),
+    )  # fmt: skip
+    if not found.best.false_alarm_probability < FALSE_ALARM:
         raise NothingFound(
             f"{found.target}: no companion can be claimed, so there is no spectrum of one"
         )
