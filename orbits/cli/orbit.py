@@ -28,7 +28,7 @@ def orbit(
         bool, typer.Option("--pictures", help="Also draw the joint distribution and the scan.")
     ] = False,
     cores: Annotated[
-        int, typer.Option(min=1, help="Threads; the result is the same for any number.")
+        int, typer.Option(min=1, help="Cores to use; the result is the same for any number.")
     ] = 1,
     seed: Seed = 0,
     force: Force = False,

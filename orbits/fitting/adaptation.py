@@ -12,7 +12,7 @@ import numpy as np
 
 from .data import Data
 from .proposal import PRIOR_SHARE, Proposal
-from .target import Target
+from .target import IMPOSSIBLE, Target
 
 DRAWS = 3000
 ROUNDS = 8
@@ -53,10 +53,9 @@ def _converge(data, proposal, rng) -> tuple[Proposal, float]:
 
 def _weighted(target: Target, rng) -> tuple[np.ndarray, np.ndarray, float]:
     """Draws, their weights (tempered where a few of them would carry all), and the efficiency."""
-    points = target.draw(DRAWS, rng)
-    log_weight = target.log_weight(points)
+    points, log_weight = target.draw(DRAWS, rng)
     most = log_weight.max()
-    if not np.isfinite(most):
+    if most <= IMPOSSIBLE:
         return points[:0], np.empty(0), 0.0
     log_weight = log_weight - most
     weight = np.exp(log_weight)

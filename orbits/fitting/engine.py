@@ -60,7 +60,9 @@ def fit(
     live_points
         Live points of the nested sampling; the number of samples grows with it.
     cores
-        Threads. The result does not depend on it.
+        Threads of the scan, and processes that sample where the data do not confine the orbit. The
+        result does not depend on it. A script that asks for several must start its work under
+        ``if __name__ == "__main__":``.
     keep
         Where finished pieces are kept, for a fit that is interrupted: see `pieces.Kept`.
 

@@ -5,7 +5,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from .target import Target
+from .target import IMPOSSIBLE, Target
 
 DISAGREE = 4.0
 """Standard errors beyond which two estimates of the evidence cannot both be right."""
@@ -27,10 +27,10 @@ class Estimate:
 
 def importance(target: Target, rng: np.random.Generator, count: int) -> Estimate:
     """The evidence by importance sampling; from few draws of large weight it comes out too low."""
-    parts = [target.log_weight(target.draw(AT_ONCE, rng)) for _ in range(count // AT_ONCE)]
+    parts = [target.draw(AT_ONCE, rng)[1] for _ in range(count // AT_ONCE)]
     log_weight = np.array(parts)
     most = log_weight.max()
-    if not np.isfinite(most):
+    if most <= IMPOSSIBLE:
         return Estimate(value=-1e300, error=1e300, efficiency=0.0)
     weight = np.exp(log_weight - most)
     mean, groups = weight.mean(), np.square(weight).mean(axis=1)

@@ -4,9 +4,12 @@ A proposal that suits the posterior badly may have missed a part of it. All that
 is then searched as well, and what finds more evidence counts, since what misses a part finds less.
 """
 
-from collections.abc import Sequence
-from concurrent.futures import ThreadPoolExecutor
+import signal
+from collections.abc import Callable, Iterator, Sequence
+from concurrent.futures import ProcessPoolExecutor, ThreadPoolExecutor
+from contextlib import contextmanager
 from dataclasses import dataclass
+from multiprocessing import get_context
 
 import numpy as np
 
@@ -78,19 +81,36 @@ def _run(target: Target, label: str, work: Work, rng: np.random.Generator) -> Ru
     """The merged runs of a target, each of them a piece with random numbers of its own."""
     seeds = rng.integers(2**63, size=RUNS)
     share = max(work.live_points // RUNS, 2 * (target.data.space.dimensions + 1) + 1)
+    # A process takes seconds to start, as long as all runs take where the orbit is confined.
+    cores = 1 if target.confined else min(work.cores, RUNS)
 
     def one(k: int) -> Part:
         own = np.random.default_rng(seeds[k])
         part = work.pieces.take(
             f"{label}-{k + 1}-of-{RUNS}",
             Part,
-            lambda: sample(target, live_points=share, rng=own),
+            lambda: call(sample, target, live_points=share, rng=own),
         )
         step()
         return part
 
-    with (
-        work.progress.task(f"sampling {label}", total=RUNS) as step,
-        ThreadPoolExecutor(work.cores) as pool,
-    ):
-        return merge(list(pool.map(one, range(RUNS))))
+    with work.progress.task(f"sampling {label}", total=RUNS) as step, _processes(cores) as call:
+        if cores == 1:
+            return merge([one(k) for k in range(RUNS)])
+        with ThreadPoolExecutor(cores) as pool:
+            return merge(list(pool.map(one, range(RUNS))))
+
+
+@contextmanager
+def _processes(count: int) -> Iterator[Callable]:
+    """A function that calls another one in one of `count` processes, here if there is but one."""
+    if count == 1:
+        yield lambda function, *given, **named: function(*given, **named)
+        return
+    with ProcessPoolExecutor(count, get_context("spawn"), initializer=_deaf) as pool:
+        yield lambda *given, **named: pool.submit(*given, **named).result()
+
+
+def _deaf() -> None:
+    """Leave Ctrl-C to the process that started this one."""
+    signal.signal(signal.SIGINT, signal.SIG_IGN)

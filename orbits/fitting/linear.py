@@ -82,7 +82,9 @@ def _conditional(point, scales, tables, share, mean, root):
         floor += ROUNDING * information[a, a]
     most = -math.inf
     for k in range(scales.size):
-        root[k] = information
+        for a in range(4):
+            for b in range(a + 1):
+                root[k, a, b] = information[a, b]
         share[k] = -4 * math.log(scales[k])
         for a in range(4):
             root[k, a, a] += floor + 1 / scales[k] ** 2
@@ -132,7 +134,8 @@ def place_linear(cube, scales, tables, region, point):
     for a, axis in enumerate((AXIS, COS_I, LONGITUDE, NODE)):
         offset[a] = deviate(cube[columns[axis] + 1])
     _back(root[k], offset)
-    offset += mean[k]
+    for a in range(4):
+        offset[a] += mean[k, a]
     p, n = math.hypot(offset[0], offset[1]), math.hypot(offset[2], offset[3])
     plus, minus = math.atan2(offset[1], offset[0]), math.atan2(offset[3], offset[2])
     point[columns[AXIS]] = math.log((p + n) / 2)

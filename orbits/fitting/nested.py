@@ -8,7 +8,7 @@ from .target import Target, value_of
 
 WALK_BELOW = 1.0
 """Acceptance, per cent, below which a walk within ellipsoids finds new points sooner."""
-WALK, LONG_WALK = 30, 100
+WALK, LONG_WALK = 30, 200
 """Steps of a walk; long where no normal densities lead to a posterior that is narrow and bent."""
 REMAINDER = 0.5
 """The run ends when the live points can add no more than this to ln of the evidence."""
@@ -69,7 +69,7 @@ def sample(
     results = sampler.results
     born = np.concatenate([[-np.inf], results.logl])[results.samples_it]
     return Part(
-        points=target.place(results.samples),
+        points=target.place(results.samples)[0],
         value=results.logl,
         birth=born,
         live_points=live_points,

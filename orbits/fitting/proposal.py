@@ -88,7 +88,7 @@ class Mixture(NamedTuple):
 
 
 def mixture_of(proposal: Proposal, space: Space) -> Mixture:
-    """The same for compiled functions."""
+    """The same for compiled functions, which are compiled anew for arrays of another layout."""
     roots = np.linalg.cholesky(proposal.covariance)
     log_determinants = 2 * np.log(np.einsum("jii->ji", roots)).sum(axis=1)
     return Mixture(
@@ -97,10 +97,10 @@ def mixture_of(proposal: Proposal, space: Space) -> Mixture:
         offsets=np.log(proposal.weight)
         - 0.5 * (log_determinants + space.dimensions * math.log(2 * math.pi))
         - np.array([space.log_density(int(chart)) for chart in proposal.chart]),
-        charts=proposal.chart,
-        means=proposal.mean,
-        roots=roots,
-        inverses=np.linalg.inv(roots),
+        charts=np.ascontiguousarray(proposal.chart),
+        means=np.ascontiguousarray(proposal.mean),
+        roots=np.ascontiguousarray(roots),
+        inverses=np.ascontiguousarray(np.linalg.inv(roots)),
         periodic=np.array([space.periodic(chart) for chart in range(3)]),
     )
 

@@ -231,7 +231,8 @@ def _solve_positions(frequency, phase, table, places, nights, weights, seeds, cu
             value = _choose(motion, places, nights, weights, trial, cut, use)
         if value < best:
             best = value
-            constants[:] = trial
+            for a in range(4):
+                constants[a] = trial[a]
     return best
 
 
@@ -300,7 +301,8 @@ def _solve_velocities(frequency, phase, table, speeds, design, amplitudes):
         c, s = _look_up(table, speeds[i, 0], frequency, phase, 2)
         row[0], row[1] = speeds[i, 3] * c, speeds[i, 3] * s
         row[2], row[3] = speeds[i, 4] * c, speeds[i, 4] * s
-        row[4:] = design[i]
+        for k in range(terms):
+            row[4 + k] = design[i, k]
         weight = 1 / speeds[i, 2]
         square += weight * speeds[i, 1] ** 2
         for a in range(size):

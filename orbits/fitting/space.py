@@ -175,7 +175,7 @@ def make_space(
         axes[f"scale_{i}"] = (-math.inf, math.inf)
     for i in range(angles):
         axes[f"angle_{i}"] = (-math.inf, math.inf)
-    low, high = np.array(list(axes.values())).T
+    low, high = np.array(list(zip(*axes.values(), strict=True)))
     return Space(
         names=tuple(axes),
         low=low,
@@ -193,7 +193,8 @@ def _logs(bounds: tuple[float, float]) -> tuple[float, float]:
 @compiled
 def to_chart(point, chart, columns, coordinates):
     """Write the coordinates of `point` in a chart."""
-    coordinates[:] = point
+    for k in range(point.size):
+        coordinates[k] = point[k]
     if chart == PLAIN:
         return
     cosine = point[columns[COS_I]]
@@ -211,7 +212,8 @@ def to_chart(point, chart, columns, coordinates):
 @compiled
 def from_chart(coordinates, chart, columns, point):
     """Write the point that has these coordinates in a chart; the inverse of `to_chart`."""
-    point[:] = coordinates
+    for k in range(point.size):
+        point[k] = coordinates[k]
     if chart == PLAIN:
         return
     ux, uy, other = (

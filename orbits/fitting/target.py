@@ -65,21 +65,19 @@ class Target:
             angles.add("node")
         return np.array([False, *(not self.confined and name in angles for name in space.names)])
 
-    def draw(self, count: int, rng: np.random.Generator) -> np.ndarray:
-        """(count, d) points drawn from the proposal; NaN for draws off the chart."""
+    def draw(self, count: int, rng: np.random.Generator) -> tuple[np.ndarray, np.ndarray]:
+        """(count, d) points drawn from the proposal, and what they weigh (count,).
+
+        The weight is ln(likelihood * prior / proposal). Where the prior is 0, it is IMPOSSIBLE or
+        less; the point may be NaN, off the chart that it was drawn in.
+        """
         return self.place(rng.uniform(size=(count, self.data.space.dimensions + 1)))
 
-    def place(self, cube: np.ndarray) -> np.ndarray:
-        """(S, d) points from (S, d + 1) uniform numbers, the first choosing the component."""
-        points = np.empty((cube.shape[0], cube.shape[1] - 1))
-        _place_all(cube, self.problem, points)
-        return points
-
-    def log_weight(self, points: np.ndarray) -> np.ndarray:
-        """(S,) ln(likelihood * prior / proposal); -inf where the prior is 0."""
-        out = np.empty(len(points))
-        _log_weights(points, self.problem, out)
-        return out
+    def place(self, cube: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """The same from (S, d + 1) uniform numbers, the first choosing the component."""
+        points, out = np.empty((cube.shape[0], cube.shape[1] - 1)), np.empty(len(cube))
+        first_above(np.inf, cube, points, out, self.problem)
+        return points, out
 
     def log_likelihood(self, points: np.ndarray) -> np.ndarray:
         """(S,) ln of the likelihood and further knowledge; -inf where the prior is 0."""
@@ -100,24 +98,8 @@ class Target:
         return share, inverse_square, offsets
 
 
-@compiled
-def place(cube, problem, point):
-    """Write the point (d,) that d + 1 uniform numbers stand for; NaN where there is none."""
-    if problem.scales.size:
-        place_linear(cube, problem.scales, problem.tables, problem.region, point)
-    else:
-        place_in_mixture(cube, problem.mixture, problem.region, point)
-
-
-@compiled
-def log_weight(point, problem):
-    """ln(likelihood * prior / proposal); -inf where the prior is 0."""
-    if not allowed(point, problem.region):
-        return -np.inf
-    value = log_likelihood(point, problem.tables)
-    if problem.scales.size:
-        return value - linear_ratio(point, problem.scales, problem.tables, problem.region)
-    return value - mixture_ratio(point, problem.mixture, problem.region)
+# Each compiled function that Python calls takes seconds to compile, with all that it calls in turn:
+# hence few of them, and loops where the assignment of arrays would bring in messages of errors.
 
 
 @compiled
@@ -125,23 +107,35 @@ def value_of(cube, problem, point):
     """ln weight of the point that d + 1 uniform numbers stand for, written to `point` (d,).
 
     Where the prior is 0, it is a number far below all others; by the first of the uniform numbers
-    no two of these are alike, lest there be a plateau.
+    no two of these are alike, lest there be a plateau in nested sampling.
     """
-    place(cube, problem, point)
-    value = log_weight(point, problem)
+    tables, region = problem.tables, problem.region
+    linear = problem.scales.size > 0
+    if linear:
+        place_linear(cube, problem.scales, tables, region, point)
+    else:
+        place_in_mixture(cube, problem.mixture, region, point)
+    value = IMPOSSIBLE
+    if allowed(point, region):
+        value = log_likelihood(point, tables)
+        if linear:
+            value -= linear_ratio(point, problem.scales, tables, region)
+        else:
+            value -= mixture_ratio(point, problem.mixture, region)
     return value if value > IMPOSSIBLE else IMPOSSIBLE * (1 + cube[0])
 
 
 @compiled
-def _place_all(cube, problem, points):
-    for s in range(points.shape[0]):
-        place(cube[s], problem, points[s])
+def first_above(least, cube, points, out, problem):
+    """Write points and weights of uniform numbers (S, d + 1) until a weight exceeds `least`.
 
-
-@compiled
-def _log_weights(points, problem, out):
-    for s in range(points.shape[0]):
-        out[s] = log_weight(points[s], problem)
+    Returns the row of that one, or their number if there is none.
+    """
+    for s in range(cube.shape[0]):
+        out[s] = value_of(cube[s], problem, points[s])
+        if out[s] > least:
+            return s
+    return cube.shape[0]
 
 
 @compiled

@@ -4,7 +4,7 @@ import numpy as np
 from dynesty.internal_samplers import InternalSampler, RWalkSampler, SamplerReturn
 
 from ..compiled import compiled
-from .target import value_of
+from .target import first_above, value_of
 
 EXCHANGES = 0.5
 """Share of the steps that go by the difference of two live points (ter Braak 2006, Stat. Comput.
@@ -27,10 +27,10 @@ class Everywhere(InternalSampler):
     @staticmethod
     def sample(args):
         target, rng, calls = args.kwargs["target"], args.rseed, 0
-        point = np.empty(args.u.size - 1)
+        points, out = np.empty((BLOCK, args.u.size - 1)), np.empty(BLOCK)
         while True:
             cube = rng.uniform(size=(BLOCK, args.u.size))
-            taken, value = _first_above(cube, point, args.loglstar, target.problem)
+            taken = first_above(args.loglstar, cube, points, out, target.problem)
             if taken < BLOCK:
                 break
             calls += BLOCK
@@ -38,25 +38,12 @@ class Everywhere(InternalSampler):
         return SamplerReturn(
             u=u,
             v=u,
-            logl=value,
+            logl=out[taken],
             ncalls=calls + taken + 1,
             tuning_info=None,
             evaluation_history=[],
             proposal_stats={},
         )
-
-
-@compiled
-def _first_above(cube, point, least, problem):
-    """Index of the first row of `cube` whose value exceeds `least`, and the value.
-
-    Writes its point; the index is the number of rows where there is none.
-    """
-    for row in range(cube.shape[0]):
-        value = value_of(cube[row], problem, point)
-        if value > least:
-            return row, value
-    return cube.shape[0], least
 
 
 class Walk(RWalkSampler):
@@ -82,9 +69,9 @@ class Walk(RWalkSampler):
         pairs = live[rng.integers(len(live), size=(2, count))]
         length = np.where(rng.uniform(size=count) < WHOLE, 1.0, rng.exponential(0.5, size=count))
         steps[exchange] = (length[:, None] * (pairs[0] - pairs[1]))[exchange]
-        u, point = args.u.copy(), np.empty(size - 1)
+        u = args.u.copy()
         accepted, calls, value = take_steps(
-            u, point, steps, exchange, target.turns, args.loglstar, target.problem
+            u, steps, exchange, target.turns, args.loglstar, target.problem
         )
         return SamplerReturn(
             u=u,
@@ -98,13 +85,12 @@ class Walk(RWalkSampler):
 
 
 @compiled
-def take_steps(u, point, steps, exchange, turns, least, problem):
+def take_steps(u, steps, exchange, turns, least, problem):
     """Move `u` by those of the `steps` (n, d) that keep its value above `least`.
 
-    Writes the point that it ends at; returns how many steps within the ellipsoid were taken, of
-    how many, and the value.
+    Returns how many steps within the ellipsoid were taken, of how many, and the value in the end.
     """
-    trial, there = np.empty_like(u), np.empty_like(point)
+    trial, point = np.empty_like(u), np.empty(u.size - 1)
     value = value_of(u, problem, point)
     accepted, calls = 0, 0
     for k in range(steps.shape[0]):
@@ -119,9 +105,10 @@ def take_steps(u, point, steps, exchange, turns, least, problem):
                 inside = False
         if not inside:
             continue
-        found = value_of(trial, problem, there)
+        found = value_of(trial, problem, point)
         if found > least:
-            u[:], point[:] = trial, there
+            for a in range(u.size):
+                u[a] = trial[a]
             value = found
             if not exchange[k]:
                 accepted += 1

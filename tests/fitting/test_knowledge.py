@@ -54,7 +54,7 @@ def axes(data, points):
 def test_elements_and_masses_of_a_double_lined_binary():
     """Each quantity from its own formula (masses by Kepler's third law), one at a time."""
     data = data_of(np.random.default_rng(1))
-    points = Target.prior(data).draw(40, np.random.default_rng(2))
+    points = Target.prior(data).draw(40, np.random.default_rng(2))[0]
     period, e, phase, value = axes(data, points)
     tilt, axis = np.arccos(value["cos_inclination"]), np.exp(value["log_axis"])
     k1, k2 = np.exp(value["log_k1"]), np.exp(value["log_k2"])
@@ -98,7 +98,7 @@ def test_positions_alone_know_the_node_by_half_a_turn():
     """The mean of the densities of both nodes, argument and node turned together."""
     kind = {"stars": ()}
     data = data_of(np.random.default_rng(1), **kind)
-    points = Target.prior(data).draw(40, np.random.default_rng(2))
+    points = Target.prior(data).draw(40, np.random.default_rng(2))[0]
     _, _, phase, value = axes(data, points)
     node, argument = np.degrees(value["node"]), np.degrees(value["longitude"] - phase)
 
@@ -117,7 +117,7 @@ def test_systemic_velocity_and_drift():
     kind = {"positions": False, "stars": (0,), "model": Model(drift=True)}
     known = {"gamma_kms": (8.0, 2.0), "drift_kms_per_year": (-1.0, 0.5)}
     data = data_of(np.random.default_rng(1), **kind)
-    points = Target.prior(data).draw(10, np.random.default_rng(2))
+    points = Target.prior(data).draw(10, np.random.default_rng(2))[0]
     period, e, phase, value = axes(data, points)
     speed = data.velocities
     years = (speed.mjd - data.reference) / 365.25
