@@ -130,20 +130,24 @@ def _given(
 ) -> tuple["System | None", list["Observation"]]:
     """The nights asked for, and the system file if they come from one."""
     from ..errors import InputError
-    from ..oifits import read, read_epochs
+    from ..oifits import ErrorBars, read, read_epochs
     from ..system import read_system
 
-    system = None
+    system, options = None, {"target": target, "flip_phase": flip_phase}
     if len(files) == 1 and files[0].suffix == ".toml":
         system = read_system(files[0])
         if not system.nights:
             raise InputError(f"{system.path}: no nights; name OIFITS files under [nights]")
         files = list(system.nights)
-        target = system.target if target is None else target
-        flip_phase = flip_phase or system.flip_phase
+        options = {
+            "target": system.target if target is None else target,
+            "flip_phase": flip_phase or system.flip_phase,
+            "observables": system.use,
+            "errors": ErrorBars.of(system.error_scale, system.error_floor),
+        }
     if night is not None:
-        return system, [read(files, target=target, night=night, flip_phase=flip_phase)]
-    return system, read_epochs(files, target=target, flip_phase=flip_phase)
+        return system, [read(files, night=night, **options)]
+    return system, read_epochs(files, **options)
 
 
 def _paths(folder: Path, *, several: bool) -> dict[str, Path]:
