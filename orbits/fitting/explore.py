@@ -31,6 +31,9 @@ CHECKS, MANY_CHECKS = 20_000, 200_000
 """Draws of the proposal that check the evidence; many where it is wide."""
 SURE = 0.3
 """Error of ln evidence by draws above which a few of them rule it, and the error too."""
+UNCHECKED = (
+    f"No second way of sampling checks the evidence; its error is the scatter of {RUNS} runs."
+)
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -49,8 +52,10 @@ class Exploration:
 
     target: Target
     run: Run
-    check: Estimate
-    """The same evidence by plain draws of a proposal."""
+    efficiency: float
+    """Of the adapted mixture."""
+    check: Estimate | None
+    """The same evidence by plain draws of a proposal, where that can be trusted."""
     notes: Sequence[str] = ()
 
 
@@ -59,22 +64,34 @@ def explore(data: Data, adapted: Proposal, work: Work, rng: np.random.Generator)
     own = [np.random.default_rng(seed) for seed in rng.integers(2**63, size=5)]
     target = Target(data, adapted)
     check = importance(target, own[0], CHECKS)
-    if check.efficiency >= TRUSTED:
+    efficiency = check.efficiency
+    if efficiency >= TRUSTED:
         run = _run(target, "solutions", work, own[1])
-        said = disagreement(run.estimate, check)
-        return Exploration(target=target, run=run, check=check, notes=said)
+        return _checked(target, run, check, efficiency)
     check = importance(target, own[2], MANY_CHECKS)
     wide = Target.prior(data, linear=suits(data))
     run = _run(wide, "priors", work, own[3])
     if check.error < SURE and exceeds(check, run.estimate):
         solutions = _run(target, "solutions", work, own[1])
         if exceeds(solutions.estimate, run.estimate):
-            said = disagreement(solutions.estimate, run.estimate)
-            return Exploration(target=target, run=solutions, check=check, notes=said)
+            return _checked(target, solutions, check, efficiency)
     if wide.linear:
         check = importance(wide, own[4], MANY_CHECKS)
-    said = disagreement(run.estimate, check) if wide.linear else []
-    return Exploration(target=wide, run=run, check=check, notes=said)
+    elif exceeds(run.estimate, check):  # the mixture does miss a part, and is no check
+        check = None
+    return _checked(wide, run, check, efficiency)
+
+
+def _checked(target: Target, run: Run, check: Estimate | None, efficiency: float) -> Exploration:
+    """The exploration, and what is to be said of the agreement of its two estimates."""
+    sure = check is not None and check.error < SURE
+    return Exploration(
+        target=target,
+        run=run,
+        efficiency=efficiency,
+        check=check if sure else None,
+        notes=disagreement(run.estimate, check) if sure else [UNCHECKED],
+    )
 
 
 def _run(target: Target, label: str, work: Work, rng: np.random.Generator) -> Run:

@@ -27,13 +27,16 @@ def solution_of(
     samples.insert(0, "solution", label)
     top = int(np.argmax(target.log_likelihood(points)))
     best = samples.drop(columns="solution").iloc[top].to_dict()
+    checked = {}
+    if check is not None:
+        checked["log_evidence_check"] = {"value": check.value, "error": check.error}
     account = {
         "log_evidence": run.log_evidence,
         "log_evidence_err": run.log_evidence_error,
-        "log_evidence_check": {"value": check.value, "error": check.error},
+        **checked,
         "effective_samples": run.effective_samples,
         "likelihood_calls": run.calls,
-        "proposal_efficiency": check.efficiency,
+        "proposal_efficiency": explored.efficiency,
         **chi_square(data, points[top]),
         "solutions": [
             {

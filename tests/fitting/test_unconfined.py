@@ -2,12 +2,16 @@
 
 import numpy as np
 import pytest
-from made_binaries import binary, seen
+from made_binaries import binary, moving, seen
 from numpy.testing import assert_allclose
 
 from orbits import Model, Priors, fit
+from orbits.fitting import explore
 from orbits.fitting.data import make_data
 from orbits.fitting.evidence import Estimate, disagreement
+from orbits.fitting.laplace import Normal
+from orbits.fitting.merging import Run
+from orbits.fitting.proposal import Proposal
 from orbits.fitting.target import Target
 
 
@@ -94,3 +98,62 @@ def test_estimates_of_the_evidence_that_disagree_are_said():
     (said,) = disagreement(estimate(-11.7, 0.06), estimate(-12.2, 0.08))
     assert "-11.70 +- 0.06" in said
     assert "-12.20 +- 0.08" in said
+
+
+@pytest.mark.parametrize(
+    ("efficiency", "drawn", "wide", "solutions", "confined", "checked", "said"),
+    [
+        (0.5, (-10, 0.1), None, (-10, 0.1), True, True, []),
+        (0.5, (-12, 0.1), None, (-10, 0.1), True, True, ["a second way -12.00"]),
+        # Distrusted: the search of the priors counts, unless the solutions find more.
+        (0.01, (-13, 0.1), (-10, 0.2), None, False, False, ["No second way"]),
+        (0.01, (-10, 0.1), (-10, 0.2), None, False, True, []),
+        (0.01, (-10, 0.1), (-13, 0.4), (-10, 0.1), True, True, []),
+        (0.01, (-10, 0.1), (-13, 0.4), (-13, 0.1), False, True, ["a second way -10.00"]),
+        # A few draws of great weight are no reason to believe the solutions.
+        (0.01, (-5, 0.8), (-10, 0.2), None, False, False, ["No second way"]),
+    ],
+)
+def test_what_finds_more_evidence_counts(
+    monkeypatch, efficiency, drawn, wide, solutions, confined, checked, said
+):
+    """The choice between solutions and priors, by evidences (value, error) that are made up."""
+    rng = np.random.default_rng(11)
+    velocities = moving(binary(), 15, rng)
+    priors = Priors.for_data(None, velocities)
+    data = make_data(None, velocities, None, priors, Model())
+    size = data.space.dimensions
+    centre = Normal(chart=0, mean=np.zeros(size), covariance=np.eye(size), log_weight=0.0)
+
+    def run(target, label, work, rng):
+        value, error = {"solutions": solutions, "priors": wide}[label]
+        return Run(points=np.zeros((1, size)), log_weight=np.zeros(1), log_evidence=value,
+                   log_evidence_error=error, calls=1)  # fmt: skip
+
+    def importance(target, rng, count):
+        return Estimate(value=drawn[0], error=drawn[1], efficiency=efficiency)
+
+    monkeypatch.setattr(explore, "_run", run)
+    monkeypatch.setattr(explore, "importance", importance)
+    work = explore.Work(live_points=100)
+    found = explore.explore(data, Proposal.around([centre], size), work, rng)
+    assert found.target.confined == confined
+    assert (found.check is not None) == checked
+    assert len(found.notes) == len(said)
+    for note, part in zip(found.notes, said, strict=True):
+        assert part in note
+
+
+def test_processes_give_the_same_runs(monkeypatch):
+    """Two cores, each run in another process, digit by digit the same."""
+    positions, priors = short_arc(61)
+    data = make_data(positions, None, None, priors, Model())
+    target = Target.prior(data, linear=True)
+    monkeypatch.setattr(explore, "RUNS", 2)
+    one, two = (
+        explore._run(target, "priors", explore.Work(live_points=100, cores=cores),
+                     np.random.default_rng(5))
+        for cores in (1, 2)
+    )  # fmt: skip
+    assert one.log_evidence == two.log_evidence
+    assert np.array_equal(one.points, two.points)
