@@ -1,14 +1,12 @@
 """nodeline simulate: a star, an array and noise to OIFITS; a companion into data or out."""
 
 from pathlib import Path
-from typing import TYPE_CHECKING, Annotated
+from typing import Annotated
 
 import typer
 
 from .frame import Force, Json, Seed, emit, say
-
-if TYPE_CHECKING:
-    from ..companion.injection import Companion
+from .night import checked
 
 Place = tuple[float, float, float]
 
@@ -42,12 +40,15 @@ def simulate(
     """Simulate the nights and velocities of a scenario, and a system file to analyse them with.
 
     With --inject or --remove: put a companion into observed data, or take one out, and keep the
-    noise. Put in, its V2 and amplitudes are multiplied by the model's and its phases added.
+    noise. V2 and amplitudes are multiplied by the model's, and its phases are added. What a night
+    shows besides, its star and a companion that can be claimed, is found first.
     """
     if inject is not None and remove is not None:
         raise typer.BadParameter("choose one of --inject and --remove")
     if inject is not None or remove is not None:
-        _exchange(given, output, inject, remove, diameter, companion_diameter, target, force, json)
+        _exchange(
+            given, output, inject, remove, diameter, companion_diameter, target, seed, force, json
+        )
         return
     for name, value in (("--diameter", diameter), ("--target", target)):
         if value is not None:
@@ -67,30 +68,53 @@ def simulate(
         emit({"name": plan.name, "system": str(system), "nights": len(plan.nights.dates)})
 
 
-def _exchange(given, output, inject, remove, diameter, companion_diameter, target, force, json):
+def _exchange(
+    given, output, inject, remove, diameter, companion_diameter, target, seed, force, json
+):
     """Put a companion into a file, or take one out."""
     import astropy.units as u
+    import numpy as np
 
     from ..companion.injection import Companion
-    from ..companion.injection_files import fitted_diameter, inject_file, remove_file
+    from ..companion.injection_files import (
+        beside,
+        inject_file,
+        primary_diameter,
+        remove_file,
+        shown,
+    )
     from ..files import refuse_existing
     from ..oifits import load
+    from ..progress import Bar
 
     separation, angle, contrast = inject or remove
-    try:
-        companion = Companion.at(
-            separation * u.mas, angle * u.deg, contrast,
-            diameter=companion_diameter, primary_diameter=diameter or 0.0,
-        )  # fmt: skip
-    except ValueError as error:
-        raise typer.BadParameter(str(error)) from error
+    companion = checked(
+        Companion.at, separation * u.mas, angle * u.deg, contrast, diameter=companion_diameter
+    )
     refuse_existing(output, force=force)
     file = load(given)
-    if diameter is None:
-        companion = fitted_diameter(file, companion, target=target, present=inject is None)
-    change = remove_file if inject is None else inject_file
-    change(file, companion, target=target).write(output, force=force)
-    say(_told(companion, separation, angle, put_in=inject is not None) + f": {output}", json=json)
+    options = {
+        "target": target,
+        "diameter": None if diameter is None else diameter * u.mas,
+        "rng": np.random.default_rng(seed),
+        "progress": Bar(),
+    }
+    if inject is None:
+        nights = beside(file, companion, **options)
+        changed = remove_file(file, companion, nights, target=target)
+    else:
+        nights = shown(file, **options)
+        changed = inject_file(file, companion, nights, target=target)
+    changed.write(output, force=force)
+    others = sum(view.scene.companions for _, view in nights)
+    done = "put in" if remove is None else "taken out"
+    say(
+        f"companion at {separation:g} mas, PA {angle:g} deg, contrast {contrast:g} {done} "
+        f"(primary of {primary_diameter(nights):.3f} mas"
+        + (f", and its companion in {others} of {len(nights)} nights): " if others else "): ")
+        + str(output),
+        json=json,
+    )
     if json:
         emit(
             {
@@ -100,14 +124,8 @@ def _exchange(given, output, inject, remove, diameter, companion_diameter, targe
                 "position_angle_deg": angle,
                 "contrast": contrast,
                 "companion_diameter_mas": companion.diameter,
-                "primary_diameter_mas": companion.primary_diameter,
+                "primary_diameter_mas": primary_diameter(nights),
+                "nights": len(nights),
+                "nights_with_another_companion": others,
             }
         )
-
-
-def _told(companion: "Companion", separation: float, angle: float, *, put_in: bool) -> str:
-    done = "put in" if put_in else "taken out"
-    return (
-        f"companion at {separation:g} mas, PA {angle:g} deg, contrast {companion.contrast:g} "
-        f"{done} (primary of {companion.primary_diameter:.3f} mas)"
-    )

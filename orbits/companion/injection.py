@@ -60,8 +60,12 @@ class Companion:
     @property
     def pair(self) -> "View":
         """The star with its companion."""
+        return self.added_to(self.without)
+
+    def added_to(self, scene: "View") -> "View":
+        """`scene` with this companion in it too."""
         own = {name: getattr(self, name) for name in ("x", "y", "contrast", "diameter")}
-        return self.without.beside(**own)
+        return scene.beside(**own)
 
 
 @dataclass(frozen=True, eq=False)
