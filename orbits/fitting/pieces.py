@@ -40,9 +40,10 @@ class Kept(Forgotten):
     def of(self, fingerprint: str) -> "Kept":
         """The pieces of the fit that has this fingerprint."""
         mine = Kept(self.folder / fingerprint, self.tell)
-        found = sorted(path.stem for path in mine.folder.glob("[!.]*.npz"))
+        found = len(list(mine.folder.glob("[!.]*.npz")))
         if found:
-            self.tell(f"continuing an interrupted fit from {', '.join(found)} in {mine.folder}")
+            pieces = "1 piece" if found == 1 else f"{found} pieces"
+            self.tell(f"continuing an interrupted fit from {pieces} of it, kept in {mine.folder}")
         return mine
 
     def take(self, name: str, kind: type[T], make: Callable[[], T]) -> T:

@@ -34,12 +34,13 @@ START, SPAN = 60_000.0, 400.0
 
 @dataclass(frozen=True, kw_only=True)
 class Kind:
-    """A kind of data: how many nights and velocities, of which stars."""
+    """A kind of data: how many nights and velocities, of which stars, within how many days."""
 
     nights: int
     epochs: int
     stars: tuple[int, ...]
     parallax: Parallax | None
+    span: float = SPAN
 
 
 KINDS = {
@@ -99,7 +100,8 @@ def simulate(truth: Truth, kind: Kind, rng: np.random.Generator):
         argument=truth["argument_deg"] * u.deg,
     )
     n = kind.nights
-    mjd = np.concatenate([[START, START + SPAN], rng.uniform(START, START + SPAN, n - 2)])
+    middle = START + SPAN / 2
+    mjd = middle + kind.span * np.concatenate([[-0.5, 0.5], rng.uniform(-0.5, 0.5, n - 2)])
     x, y = elements.offsets(Time(mjd, format="mjd", scale="tdb"))
     axes = rng.uniform(0.2, 1.0, (n, 2))
     turn = rng.uniform(0, np.pi, n)
@@ -184,6 +186,13 @@ def ranks(
     kind: Kind, rng: np.random.Generator, *, solve: Callable[..., Solution] = fit
 ) -> dict[str, int]:
     """Rank, 0 to SAMPLES, of each true value of one system among posterior samples."""
+    return solved_ranks(kind, rng, solve=solve)[0]
+
+
+def solved_ranks(
+    kind: Kind, rng: np.random.Generator, *, solve: Callable[..., Solution] = fit
+) -> tuple[dict[str, int], Solution]:
+    """The same, and the solution that they come from."""
     truth = draw_truth(kind, rng)
     positions, velocities = simulate(truth, kind, rng)
     solution = solve(
@@ -198,11 +207,12 @@ def ranks(
     table = {name: samples[name].to_numpy() for name in samples}
     table["phase"] = (START + SPAN / 2 - table["periastron_mjd"]) / table["period_d"]
     true = quantities(with_masses(truth, kind), kind)
-    return {
+    found = {
         name: int((values < true[name]).sum())
         for name, values in quantities(table, kind).items()
         if name in true
     }
+    return found, solution
 
 
 def uniformity(found: list[int]) -> float:

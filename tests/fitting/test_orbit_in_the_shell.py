@@ -104,7 +104,7 @@ def test_an_interrupted_fit_goes_on(system, orbit, monkeypatch):
     assert len(list(folder.glob("unfinished/*/*.npz"))) >= explore.RUNS + 2 + 4
     code, out, err = orbit(*options)
     assert code == 0
-    assert err.count("continuing an interrupted fit from proposal, scan, solutions-1") == 2
+    assert err.count("continuing an interrupted fit from") == 2
     assert len(calls) <= 2 * explore.RUNS + 1
     continued = json.loads(out)
     whole.pop("seconds"), continued.pop("seconds")

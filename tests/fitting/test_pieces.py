@@ -63,7 +63,7 @@ def test_a_continued_fit_equals_one_that_was_never_interrupted(solve, tmp_path):
     assert kept >= 3
     continued, runs, heard = solve(tmp_path / "part", cores=2)
     assert runs == explore.RUNS - kept > 0
-    assert "proposal, scan, solutions-1" in heard[0]
+    assert f"continuing an interrupted fit from {kept + 2} pieces" in heard[0]
     assert told(continued) == told(whole)
 
 
