@@ -3,8 +3,12 @@
 import warnings
 from collections.abc import Iterator
 from contextlib import contextmanager
+from typing import TYPE_CHECKING
 
 import numpy as np
+
+if TYPE_CHECKING:
+    from astropy.time import Time
 
 YEAR_KINDS = {"besselian": "byear", "julian": "jyear"}
 
@@ -19,6 +23,18 @@ def utc_of_tdb(mjd: np.ndarray) -> np.ndarray:
     """MJD UTC of MJD TDB."""
     with _quiet_offline_astropy() as Time:
         return Time(np.asarray(mjd, dtype=float), format="mjd", scale="tdb").utc.mjd
+
+
+def mjd_utc(time: "Time") -> float:
+    """MJD UTC of an astropy Time on any scale."""
+    with _quiet_offline_astropy():
+        return float(time.utc.mjd)
+
+
+def iso_utc(time: "Time") -> str:
+    """Date and time, UTC, of an astropy Time on any scale, such as 2026-03-14T03:12:00.000."""
+    with _quiet_offline_astropy():
+        return str(time.utc.isot)
 
 
 def tdb_of_year(year: np.ndarray, kind: str) -> np.ndarray:

@@ -8,6 +8,7 @@ import numpy as np
 from astropy.time import Time
 
 from ..errors import InputError
+from ..times import iso_utc, mjd_utc
 from .correlation import Cut, renumbered
 from .links import plain
 from .model import DataTable, Flux, OIFile, Wavelength
@@ -34,7 +35,7 @@ class Selection:
         if self.instrument is not None:
             parts.append(f"instrument {self.instrument}")
         if self.dates is not None:
-            parts.append("dates {} to {}".format(*(time.isot for time in self.dates)))
+            parts.append("dates {} to {}".format(*map(iso_utc, self.dates)))
         if self.wavelengths is not None:
             parts.append("wavelengths {:g} to {:g} um".format(*self.wavelengths.to_value(u.um)))
         if self.baselines is not None:
@@ -151,7 +152,7 @@ def _rows(
 ) -> np.ndarray:
     keep = np.ones(len(table), dtype=bool)
     if selection.dates is not None:
-        first, last = (time.utc.mjd for time in selection.dates)
+        first, last = map(mjd_utc, selection.dates)
         keep &= (table.mjd >= first) & (table.mjd <= last)
     if selection.baselines is not None and not isinstance(table, Flux):
         low, high = selection.baselines.to_value(u.m)

@@ -175,6 +175,16 @@ def test_a_selection_of_nothing_says_so(rng, selection, words):
         select(make.small(rng), selection)
 
 
+def test_dates_of_a_selection_are_told_in_utc():
+    """2024-01-01 0 h UTC is 0 h 1 min 9.184 s TT: 37 leap seconds and 32.184 s. And a date for
+    which there are no leap seconds yet is no cause for a warning."""
+    dates = Time(["2024-01-01T00:01:09.184", "2080-01-01T00:01:09.184"], scale="tt")
+    selection = Selection(dates=tuple(dates))
+    assert str(selection) == "dates 2024-01-01T00:00:00.000 to 2080-01-01T00:00:00.000"
+    with pytest.raises(InputError, match="nothing remains"):
+        select(make.small(np.random.default_rng(1)), Selection(dates=(dates[1], dates[1])))
+
+
 def test_files_join_by_content_not_by_number(rng, tmp_path):
     """The same names with other contents, and the same contents under other numbers."""
     one, two, three = (make.small(rng) for _ in range(3))
