@@ -17,6 +17,12 @@ OLDEST_MJD, YOUNGEST_MJD = 10_000.0, 100_000.0
 """1886 and 2132: no star was measured by interferometry before, and this is not for ever."""
 
 
+LARGEST_TYPICAL_AMPLITUDE = 2.0
+LEAST_ERROR = 1e-3
+"""Of what is typical of its table: smaller errors are slips of a pipeline, and one datum with such
+an error would outweigh all others."""
+LARGEST_VALUE = 1e9
+"""No visibility, nor a phase in degrees, is as large."""
 ENOUGH = 100_000
 """So many data tell what is typical of a table of any length."""
 
@@ -100,20 +106,42 @@ class ErrorBars:
 def usable(table: BaselineTable, kind: Kind) -> np.ndarray:
     """(nrow, nwave) bool: the data of an observable that can be used.
 
-    A datum counts unless it is flagged, it or its error is not finite, its error is not positive,
-    or its row has no time or no believable baseline. Triple amplitudes of a table in which they
-    are not normalised do not count at all.
+    A datum counts unless it is flagged, it or its error is not finite or absurd, its error is not
+    positive, or its row has no time or no believable baseline. Amplitudes of a table in which they
+    are not those of a visibility do not count at all.
     """
     value, error = table[kind.value], table[kind.error]
     keep = ~table.flag
-    keep &= error > 0  # false for NaN
+    keep &= error > least_error(error, table.flag)  # false for NaN
     keep &= error < np.inf
-    keep &= np.isfinite(value)
+    keep &= value < LARGEST_VALUE
+    keep &= value > -LARGEST_VALUE
     keep &= (timed(table) & (table.sides < LONGEST).all(axis=1))[:, None]
     some = sampled(keep)
-    if kind.name == "t3amp" and unnormalised(value[some][keep[some]], error[some][keep[some]]):
+    amplitude, spread = value[some][keep[some]], error[some][keep[some]]
+    if (kind.name == "t3amp" and unnormalised(amplitude, spread)) or (
+        kind.name == "visamp" and not (is_visibility(table) and fringes(amplitude))
+    ):
         keep[:] = False
     return keep
+
+
+def least_error(error: np.ndarray, flag: np.ndarray) -> float:
+    """The error below which data of a table with errors and flags (nrow, nwave) do not count."""
+    some = sampled(error)
+    known = error[some][~flag[some]]
+    known = known[(known > 0) & (known < np.inf)]
+    return LEAST_ERROR * float(np.median(known)) if known.size else 0.0
+
+
+def is_visibility(table: Vis) -> bool:
+    """Whether the amplitudes of a table are said to be those of a visibility."""
+    return (table.amptyp or "absolute").strip().lower() == "absolute"
+
+
+def fringes(amplitude: np.ndarray) -> bool:
+    """Whether amplitudes are typically such as a visibility can have."""
+    return not amplitude.size or float(np.median(amplitude)) <= LARGEST_TYPICAL_AMPLITUDE
 
 
 def timed(table: DataTable) -> np.ndarray:

@@ -5,13 +5,28 @@ import numpy as np
 from ...problems import Log
 from .. import references
 from ..model import T3, BaselineTable, OIFile, Vis
-from ..observables import ENOUGH, KINDS, Kind, sampled, sound, unnormalised, usable
+from ..observables import (
+    ENOUGH,
+    KINDS,
+    LARGEST_VALUE,
+    LEAST_ERROR,
+    Kind,
+    fringes,
+    is_visibility,
+    least_error,
+    sampled,
+    sound,
+    unnormalised,
+    usable,
+)
 
 TOO_SMALL = 30.0
 """Scatter over error beyond which errors are called far too small: one and a half decades."""
 ROUGH = 300.0
 """The same for the scatter between channels, to which a companion far out contributes: bright ones
 make neighbouring closure phases differ by tens of degrees, hundreds of times the best errors."""
+MAY_BE_MISSING = {"T3AMP", "VISAMP", "VISPHI", "RVIS", "IVIS", "FLUXDATA"}
+"""What instruments leave out while they measure the rest of a table."""
 BEST = {"v2": 1e-6, "t3": 1e-4}
 """Errors (of V2; of closure phase, deg) that no interferometer has come near."""
 SHORT_TIME = 15 / 1440
@@ -22,13 +37,18 @@ def errors(file: OIFile, log: Log) -> None:
     """Errors are positive and finite."""
     for table in file.data:
         for value, error, _ in table.measured if len(table) else ():
-            if table[error].min() > 0 and table[error].max() < np.inf:
+            least = least_error(table[error], table.flag)
+            if table[error].min() > least and table[error].max() < np.inf:
                 continue
             counted = ~table.flag & ~np.isnan(table[value])
             for what, bad in (
                 ("negative", table[error] < 0),
                 ("0", table[error] == 0),
                 ("infinite", np.isinf(table[error])),
+                (
+                    f"over {1 / LEAST_ERROR:.0f} times smaller than is typical",
+                    (table[error] > 0) & (table[error] <= least),
+                ),
             ):
                 bad &= counted
                 if bad.any():
@@ -55,7 +75,9 @@ def missing_values(file: OIFile, log: Log) -> None:
             if not nan.any():
                 pass
             elif nan.sum() == np.count_nonzero(~table.flag):
-                log.note(table.label, f"column {value} holds no number", "taken as not measured")
+                empty = value if np.isnan(table[value][nan]).all() else error
+                say = log.note if value in MAY_BE_MISSING else log.suspicious
+                say(table.label, f"column {empty} holds no number", "taken as not measured")
             else:
                 log.note(
                     table.label, f"column {value} or {error} is NaN in {_where(nan)}", "left out"
@@ -64,6 +86,22 @@ def missing_values(file: OIFile, log: Log) -> None:
             if infinite.any():
                 log.unusable(
                     table.label, f"column {value} is infinite in {_where(infinite)}", "left out"
+                )
+
+
+def absurd_values(file: OIFile, log: Log) -> None:
+    """Visibilities and phases are numbers that such a thing can have."""
+    for kind in KINDS.values():
+        for table in file.of(kind.table):
+            value = table[kind.value]
+            if not value.size or -LARGEST_VALUE < value.min() <= value.max() < LARGEST_VALUE:
+                continue
+            absurd = (np.abs(value) >= LARGEST_VALUE) & np.isfinite(value) & ~table.flag
+            if absurd.any():
+                log.unusable(
+                    table.label,
+                    f"column {kind.value} is {value[absurd][0]:.2g} in {_where(absurd)}",
+                    "left out",
                 )
 
 
@@ -81,6 +119,25 @@ def triple_amplitudes(file: OIFile, log: Log) -> None:
             )
         elif amplitude.size and not amplitude.any() and not np.nan_to_num(table.t3amp).any():
             log.note(table.label, "column T3AMP is 0 throughout", "do not ask for it")
+
+
+def amplitudes(file: OIFile, log: Log) -> None:
+    """Amplitudes are those of a visibility, and about as large."""
+    for table in file.of(Vis):
+        some = sampled(table.flag)
+        keep = ~table.flag[some] & (table.visamperr[some] > 0) & np.isfinite(table.visamp[some])
+        amplitude = table.visamp[some][keep]
+        if not amplitude.size:
+            continue
+        if not is_visibility(table):
+            what = f"AMPTYP {table.amptyp!r}"
+            log.note(table.label, f"column VISAMP is no visibility: {what}", "not used as one")
+        elif not fringes(amplitude):
+            log.suspicious(
+                table.label,
+                f"column VISAMP is no normalised visibility (median {np.median(amplitude):.3g})",
+                "not used as one",
+            )
 
 
 def data_in_use(file: OIFile, log: Log) -> None:
@@ -106,17 +163,6 @@ def range_of_v2(table: BaselineTable, kind: Kind, keep: np.ndarray, log: Log) ->
             f"column {kind.value} is far outside 0 to 1 in {_where(far)}, "
             f"such as {value[far][0]:.3g} +- {table[kind.error][far][0]:.2g}",
             "used; is it calibrated?",
-        )
-
-
-def amplitudes(table: BaselineTable, kind: Kind, keep: np.ndarray, log: Log) -> None:
-    """Amplitudes that are called those of a visibility are about as large as one."""
-    typical = float(np.median(table.visamp[keep]))
-    if typical > 2 and (table.amptyp or "absolute").lower() == "absolute":
-        log.suspicious(
-            table.label,
-            f"column {kind.value} is no normalised visibility (median {typical:.3g})",
-            "do not ask for it as one",
         )
 
 
@@ -242,7 +288,14 @@ def _where(bad: np.ndarray) -> str:
 JUDGES = {
     "v2": (range_of_v2, tiny_errors),
     "t3": (phases_in_radians, useless_phases, tiny_errors),
-    "visamp": (amplitudes,),
     "visphi": (references_of_phases,),
 }
-CHECKS = (errors, nothing_left, missing_values, triple_amplitudes, data_in_use)
+CHECKS = (
+    errors,
+    nothing_left,
+    missing_values,
+    absurd_values,
+    triple_amplitudes,
+    amplitudes,
+    data_in_use,
+)
