@@ -11,9 +11,8 @@ EXCHANGES = 0.5
 16, 239); the others go within the ellipsoid around the start, as dynesty's own."""
 WHOLE = 0.3
 """Share of those that go by the whole difference, which leads from one solution to another."""
-
-
 BLOCK = 16
+"""Draws made at once."""
 
 
 class Everywhere(InternalSampler):
@@ -26,6 +25,7 @@ class Everywhere(InternalSampler):
 
     @staticmethod
     def sample(args):
+        """Draw a new live point; see `InternalSampler.sample`."""
         target, rng, calls = args.kwargs["target"], args.rseed, 0
         points, out = np.empty((BLOCK, args.u.size - 1)), np.empty(BLOCK)
         while True:
