@@ -1,9 +1,12 @@
 """The command lines of limits, spectrum, posterior and of companions put into files."""
 
 import json
+from pathlib import Path
 
 import numpy as np
 import pytest
+from astropy.table import Table
+from numpy.testing import assert_allclose
 
 from orbits.binary import predict
 from orbits.cli import app
@@ -55,7 +58,30 @@ def test_limits_writes_tables_and_a_picture_once(night, tmp_path, monkeypatch, c
     assert len(told["curve"]) == 20
     names = {path.name for path in (tmp_path / "out").iterdir()}
     assert names == {"limits.ecsv", "limits-map.ecsv", "completeness.ecsv", "limits.png"}
+    curve = Table.read(tmp_path / "out" / "limits.ecsv")
+    # 12 mas of parallax: 1 / 12 au for each mas, and a modulus of 5 log10(100 / 12) = 4.604.
+    assert_allclose(curve["separation_au"], curve["separation"] / 12.0)
+    seen = curve[np.isfinite(curve["recovered"])]
+    absolute = seen["absolute_mag_recovered"] - seen["delta_mag_recovered"]
+    assert_allclose(absolute, 4.9 - 4.604, atol=1e-3)
     assert command(monkeypatch, capsys, *arguments)[0] == 3
+
+
+def test_interrupted_limits_leave_no_half_written_file(night, tmp_path, monkeypatch, capsys):
+    """Ctrl-C in the middle of the second table: the first is whole, nothing else is there."""
+    folder = tmp_path / "out"
+
+    class Interrupted:
+        def write(self, path, **_):
+            Path(path).write_text("# half of it")
+            raise KeyboardInterrupt
+
+    monkeypatch.setattr("orbits.companion.limit_tables.map_table", lambda _: Interrupted())
+    code, _, words = command(monkeypatch, capsys, "limits", night, *QUICK, "--output", folder)
+    assert code == 130
+    assert "no file was left half written" in words
+    assert [path.name for path in folder.iterdir()] == ["limits.ecsv"]
+    assert len(Table.read(folder / "limits.ecsv")) == 20
 
 
 def test_companion_goes_in_and_comes_out(night, tmp_path, monkeypatch, capsys):
