@@ -211,7 +211,7 @@ class Observation:
     """Visibility amplitudes; empty unless asked for."""
     visphi: Observable = field(default_factory=lambda: Observable.empty(1))
     """Visibility phases, rad; empty unless asked for. Their mean in each exposure, and their slope
-    over wavenumber, mean nothing."""
+    over wavenumber, mean nothing; slopes of more than a fraction of a turn are taken out."""
     phase_order: int = 0
     """Order of the polynomials in wavelength that were taken out of `visphi` besides."""
     correlation: "csr_array | None" = None

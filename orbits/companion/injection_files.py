@@ -17,7 +17,7 @@ from ..observation import Observable, Observation
 from ..oifits import OIFile, Vis, observations
 from ..oifits.flattening import channels, exposures
 from ..oifits.model import BaselineTable, DataTable
-from ..oifits.observables import KINDS, Kind, sound
+from ..oifits.observables import KINDS, Kind, is_visibility, sound
 from ..oifits.references import referred
 from ..oifits.selecting import target_ids
 from ..progress import SILENT, Silent
@@ -159,12 +159,10 @@ def _changed(
 
 def _kinds(table: DataTable) -> list[Kind]:
     """The observables of a table that a companion changes in a known way."""
-    units = table.amptyp if isinstance(table, Vis) else None
-    visibility = units is None or units.strip().lower() == "absolute"
     return [
         kind
         for kind in KINDS.values()
-        if type(table) is kind.table and (visibility or kind.name != "visamp")
+        if type(table) is kind.table and (kind.name != "visamp" or is_visibility(table))
     ]
 
 

@@ -9,6 +9,7 @@ import numpy as np
 from ..observation import OBSERVABLES, Channels, Exposures, Observable, Observation
 from . import references
 from .correlation import Numbers, mended
+from .delays import without_delay
 from .model import BaselineTable, OIFile, Vis, Wavelength
 from .observables import KINDS, ErrorBars, Kind, sound, usable
 
@@ -76,18 +77,17 @@ def _flat(
     table, kind, keep = share.table, share.kind, share.keep
     number = spectra.names.index(table.insname)
     value, error = table[kind.value], table[kind.error]
+    # Indices of 64 bits would be as large as the data.
+    rows = np.arange(len(table), dtype=np.int32)
+    width = np.arange(keep.shape[1], dtype=np.int32) + spectra.first[number]
+    if kind.name == "visphi":
+        value, error = _differences(table, keep, spectra.channels.wavelength[width])
     if keep.all():
         value, error = value.ravel(), error.ravel()  # views
     else:
         value, error = value[keep], error[keep]
     if kind.phase:
         value, error = np.radians(within_a_turn(value)), np.radians(error)
-    if kind.name == "visphi":
-        factor = np.repeat(references.scale(table), np.count_nonzero(keep, axis=1))
-        value, error = value * factor, error * factor
-    # Indices of 64 bits would be as large as the data.
-    rows = np.arange(len(table), dtype=np.int32)
-    width = np.arange(keep.shape[1], dtype=np.int32) + spectra.first[number]
     return Observable(
         exposures=exposures(table, stations.of(table), number),
         channels=spectra.channels,
@@ -96,6 +96,17 @@ def _flat(
         value=value,
         error=errors.apply(kind.name, error),
     )
+
+
+def _differences(
+    table: Vis, keep: np.ndarray, wavelength: np.ndarray
+) -> tuple[np.ndarray, np.ndarray]:
+    """VISPHI and its errors, deg, without group delays and about a reference common to a row."""
+    phase, factor = table.visphi.copy(), references.scale(table)[:, None]
+    used = np.flatnonzero(keep.any(axis=0))
+    straight = without_delay(np.radians(phase[:, used]), keep[:, used], wavelength[used])
+    phase[:, used] = np.degrees(straight)
+    return phase * factor, table.visphierr * factor
 
 
 def _order(table: Vis) -> int:

@@ -5,6 +5,8 @@ the mean of all N; against channels that are the same for all it differs by a co
 free mean for every row the two are one, up to that factor.
 """
 
+from dataclasses import replace
+
 import numpy as np
 
 from .model import Vis
@@ -20,6 +22,21 @@ def scale(table: Vis) -> np.ndarray:
     channels = table.visphi.shape[1]
     others = _to_all_others(table) if _mapped(table) else np.zeros(len(table), dtype=bool)
     return np.where(others, (channels - 1) / channels, 1.0)
+
+
+def before_a_cut(table: Vis) -> Vis:
+    """`table` with phases that any of its channels may be taken from.
+
+    Phases against all others are brought to the mean of all, and the map says so: against how many
+    they were could not be told from a part of it.
+    """
+    factor = scale(table)[:, None]
+    if (factor == 1).all():
+        return table
+    everyone = np.where(factor[:, :, None] == 1, table.visrefmap, True)
+    return replace(
+        table, visphi=table.visphi * factor, visphierr=table.visphierr * factor, visrefmap=everyone
+    )
 
 
 def referred(table: Vis, phase: np.ndarray) -> np.ndarray:

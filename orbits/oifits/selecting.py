@@ -11,7 +11,8 @@ from ..errors import InputError
 from ..times import iso_utc, mjd_utc
 from .correlation import Cut, renumbered
 from .links import plain
-from .model import DataTable, Flux, OIFile, Wavelength
+from .model import DataTable, Flux, OIFile, Vis, Wavelength
+from .references import before_a_cut
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -46,6 +47,7 @@ class Selection:
 
 
 EVERYTHING = Selection()
+COMMON_REFERENCE = "VISPHI brought from all other channels to the mean of all as reference"
 
 
 def select(file: OIFile, selection: Selection = EVERYTHING, *, target: str | None = None) -> OIFile:
@@ -62,12 +64,16 @@ def select(file: OIFile, selection: Selection = EVERYTHING, *, target: str | Non
     channels = _channels(file, selection)
     stations = _station_ids(file, selection.stations)
     cuts: list[Cut] = []
+    brought = False
     for table in file.data:
         if table.insname not in channels:
             continue
         rows = np.isin(table.target_id, ids) & _rows(table, selection, stations)
         chosen = channels[table.insname]
         if rows.any() and chosen.any():
+            if isinstance(table, Vis) and not chosen.all():
+                before, table = table, before_a_cut(table)
+                brought |= table is not before
             whole = rows.all() and chosen.all()
             after = table if whole else table.select(rows, chosen)
             cuts.append(Cut(after, np.flatnonzero(chosen)))
@@ -84,6 +90,7 @@ def select(file: OIFile, selection: Selection = EVERYTHING, *, target: str | Non
         data=data,
         arrays=arrays or file.arrays,
         correlations=correlations,
+        history=[*file.history, COMMON_REFERENCE] if brought else file.history,
         polarisations=list(_polarisations(file, present, channels, used)),
     )
 
