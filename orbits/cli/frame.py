@@ -33,7 +33,7 @@ def run(app: typer.Typer) -> int:
     except NothingFound as error:
         return _stop(error, NOTHING_FOUND)
     except (KeyboardInterrupt, typer.Abort):
-        return _stop("stopped; no file was left half written", INTERRUPTED)
+        code = INTERRUPTED
     except Exception as error:
         # Typer's own errors of usage know how to show themselves, whichever click they come from.
         if hasattr(error, "show") and hasattr(error, "exit_code"):
@@ -43,6 +43,8 @@ def run(app: typer.Typer) -> int:
 
         traceback.print_exc()
         return _stop("this is a fault of nodeline; the lines above say where", OUR_FAULT)
+    if code == INTERRUPTED:  # Typer may have turned Ctrl-C into this
+        return _stop("stopped; no file was left half written", INTERRUPTED)
     return code if isinstance(code, int) else DONE
 
 
