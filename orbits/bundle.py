@@ -156,8 +156,9 @@ class Bundle:
     def of_solution(cls, solution: "Solution") -> Self:
         """The bundle of a fit: its best sample, its posterior, and the data that were fitted.
 
-        Velocities come without the zero points of their instruments and without the drift, so that
-        they can be held against the orbit alone. Elements that the data cannot give are NaN.
+        Velocities come without the zero points of their instruments and without the drift,
+        positions without errors of scale and orientation, so that they can be held against the
+        orbit alone. Elements that the data cannot give are NaN.
         """
         best = {name: np.array([value]) for name, value in solution.best.items()}
         velocities = solution.velocities
@@ -169,7 +170,7 @@ class Bundle:
             draws=orbits_of_samples(solution.samples),
             spread="posterior",
             ascending=velocities is not None and solution.positions is not None,
-            positions=solution.positions,
+            positions=_calibrated(solution),
             velocities=velocities,
         )
 
@@ -221,6 +222,25 @@ def _shifts(solution: "Solution") -> np.ndarray:
     drift = best.get("drift_kms_per_year", 0.0) / JULIAN_YEAR
     # The difference of both stars' velocities knows neither.
     return np.where(velocities.star == 2, 0.0, shifts + drift * (velocities.mjd - middle))
+
+
+def _calibrated(solution: "Solution") -> "Positions | None":
+    """The positions as an instrument without errors of scale and orientation would give them."""
+    from .fitting.comparing import calibration_of
+
+    positions = solution.positions
+    if positions is None:
+        return None
+    scale, turn = calibration_of(solution.best, positions.instrument)
+    if (scale == 1).all() and (turn == 0).all():
+        return positions
+    c, s = np.cos(turn) / scale, np.sin(turn) / scale
+    back = np.stack([np.stack([c, -s], -1), np.stack([s, c], -1)], -2)
+    return replace(
+        positions,
+        xy=np.einsum("nij,nj->ni", back, positions.xy),
+        covariance=back @ positions.covariance @ np.swapaxes(back, 1, 2),
+    )
 
 
 SAMPLE_COLUMNS = {

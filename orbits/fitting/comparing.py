@@ -29,6 +29,18 @@ def orbit_of(sample: Mapping[str, float]) -> Elements:
     )
 
 
+def calibration_of(
+    sample: Mapping[str, float], instrument: np.ndarray
+) -> tuple[np.ndarray, np.ndarray]:
+    """(n,) scale and orientation, rad, of the instrument of each row of positions."""
+
+    def of(stem: str, unit: str, none: float) -> np.ndarray:
+        alone = sample.get(f"{stem}{unit}", none)  # of the only instrument
+        return np.array([sample.get(f"{stem}_{name}{unit}", alone) for name in instrument])
+
+    return of("scale", "", 1.0), np.radians(of("angle", "_deg", 0.0))
+
+
 def position_residuals(sample: Mapping[str, float], positions: Positions) -> "pd.DataFrame":
     """Measured less computed place of each row: night, mjd, instrument, east_mas, north_mas, chi2.
 
@@ -39,11 +51,8 @@ def position_residuals(sample: Mapping[str, float], positions: Positions) -> "pd
 
     x, y = orbit_of(sample).offsets(Time(positions.mjd, format="mjd", scale="tdb"))
     x, y = x.to_value(u.mas), y.to_value(u.mas)
-    scale, turn = (
-        np.array([_of_instrument(sample, stem, unit, name, none) for name in positions.instrument])
-        for stem, unit, none in (("scale", "", 1.0), ("angle", "_deg", 0.0))
-    )
-    c, s = scale * np.cos(np.radians(turn)), scale * np.sin(np.radians(turn))
+    scale, turn = calibration_of(sample, positions.instrument)
+    c, s = scale * np.cos(turn), scale * np.sin(turn)
     rest = positions.xy - np.column_stack([c * x + s * y, c * y - s * x])
     square = np.einsum("ni,nij,nj->n", rest, np.linalg.inv(positions.covariance), rest)
     return pd.DataFrame(
@@ -87,8 +96,3 @@ def velocity_residuals(
             "chi2": (rest / velocities.error) ** 2,
         }
     )
-
-
-def _of_instrument(sample, stem, unit, name, none) -> float:
-    """A calibration error: of this instrument, of the only one, or none."""
-    return sample.get(f"{stem}_{name}{unit}", sample.get(f"{stem}{unit}", none))

@@ -11,6 +11,7 @@ from numpy.testing import assert_allclose
 from scipy.stats import chi2
 
 from orbits import Model, Parallax, Priors, fit, masses
+from orbits.bundle import Bundle
 
 K1, K2 = (float(k) for k in masses.amplitudes(104.0, 0.35, np.radians(137.0), 1.8, 1.2))
 AXIS = float(masses.kepler_axis(104.0, 3.0))
@@ -97,6 +98,19 @@ def test_residuals_and_chi_square_by_data_set(solution):
     assert_allclose(total, solution.account["chi2"])
     # 11 elements and amplitudes less the parallax, 2 of calibration, gamma, zero point, drift.
     assert solution.account["dof"] == 48 + 48 - 9 - 2 - 3
+
+
+def test_drawings_hold_positions_of_a_true_scale_against_the_orbit(solution):
+    """The places that are drawn, less the orbit: as large as the residuals, to first order."""
+    bundle = Bundle.of_solution(solution)
+    drawn = bundle.position_residuals()
+    left = solution.residuals["positions"][["east_mas", "north_mas"]].to_numpy()
+    # They differ by the instrument's own scale and turn of 0.01: of 0.3 mas, 0.006 mas at most.
+    assert_allclose(drawn, left, atol=0.006)
+    raw = solution.positions.xy - np.column_stack(
+        [v[0] for v in bundle.best.offsets(solution.positions.mjd)]
+    )
+    assert np.abs(raw - left).max() > 0.1  # uncorrected they would miss the orbit
 
 
 def test_correlations_and_the_next_periastron(solution, several):
