@@ -172,20 +172,25 @@ def _rates(exposures: Exposures) -> np.ndarray:
 
     OIFITS stores no rates, and station coordinates in circulation are unreliable; the rows tell.
     """
-    mjd, legs = exposures.mjd, exposures.legs
-    rates = np.zeros_like(legs)
-    if not exposures.integration.any() or (exposures.stations < 0).any():
-        return rates
-    label = np.column_stack([exposures.stations, exposures.instrument])
+    rates = np.zeros_like(exposures.legs)
+    known = (exposures.stations >= 0).all(axis=1) & exposures.integration.any()
+    label = np.column_stack([exposures.stations, exposures.instrument])[known]
     _, group = np.unique(label, axis=0, return_inverse=True)
-    for g in range(group.max() + 1):
-        rows = np.flatnonzero(group.ravel() == g)
-        rows = rows[np.argsort(mjd[rows], kind="stable")]
-        seconds = (mjd[rows] - mjd[rows[0]]) * DAY
-        # Beyond two hours apart a straight line no longer follows the turning baseline.
-        if rows.size > 1 and np.diff(seconds).min() > 0 and np.diff(seconds).max() < 7200:
-            rates[rows] = np.gradient(legs[rows], seconds, axis=0)
+    for g in range(group.max(initial=-1) + 1):
+        rows = np.flatnonzero(known)[group.ravel() == g]
+        times, first, which = np.unique(exposures.mjd[rows], return_index=True, return_inverse=True)
+        rates[rows] = _slopes(times * DAY, exposures.legs[rows[first]])[which]
     return rates
+
+
+def _slopes(seconds: np.ndarray, legs: np.ndarray) -> np.ndarray:
+    """How fast `legs` (t, ...) change at the times `seconds` (t,), which ascend."""
+    slopes = np.zeros_like(legs)
+    # Beyond two hours apart a straight line no longer follows the turning baseline.
+    for run in np.split(np.arange(len(seconds)), np.flatnonzero(np.diff(seconds) > 7200) + 1):
+        if run.size > 1:
+            slopes[run] = np.gradient(legs[run], seconds[run], axis=0)
+    return slopes
 
 
 def _distinct(key: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

@@ -207,6 +207,26 @@ def test_a_fibre_dims_what_lies_off_its_axis():
     assert_allclose(half, predict(observation, x=30.0, contrast=0.1)[0], rtol=1e-13)
 
 
+def test_a_later_visit_and_a_row_given_twice_leave_the_smearing_as_it_is():
+    """The rate of a baseline is that of its neighbours within two hours, at different times."""
+    turning = [[30.0, 80.0], [34.0, 78.0], [38.0, 75.0]]
+    minutes = np.array([0.0, 20.0, 40.0])
+    plain = epoch(v2_legs=turning, integration=600.0, mjd=60000 + minutes / 1440)
+    more = epoch(
+        v2_legs=[*turning, turning[1], [60.0, 20.0]],
+        integration=600.0,
+        mjd=60000 + np.array([*minutes, 20.0, 400.0]) / 1440,
+    )
+    scene = {"x": 30.0, "contrast": 0.5}
+    expected, _ = predict(plain, **scene)
+    got, _ = predict(more, **scene)
+    sharp, _ = predict(plain, smearing=False, **scene)
+    assert np.abs(expected - sharp).max() > 1e-3
+    assert_allclose(got[:3], expected, rtol=1e-12)
+    assert_allclose(got[3], got[1], rtol=1e-12)
+    assert_allclose(got[4], predict(more, smearing=False, **scene)[0][4], rtol=1e-12)
+
+
 def test_jacobian_is_the_slope_of_the_model():
     """Central differences of every parameter; h = 1e-5 leaves 1e-10 of truncation and rounding."""
     observation = epoch(

@@ -155,32 +155,46 @@ class _Spectra:
 
 
 class _Stations:
-    """The stations that take part, and the numbers they get."""
+    """The stations that take part, and the numbers they get.
+
+    Where no OI_ARRAY names them, STA_INDEX does, unless it is the same at both ends of a baseline.
+    """
 
     def __init__(self, file: OIFile, given: Sequence[Share]) -> None:
-        arrays = [a for a in file.arrays if any(s.table.arrname == a.arrname for s in given)]
         self.names: list[str] = []
         self._numbers: dict[str | None, dict[int, int]] = {}
-        for array in arrays:
+        taken = list(dict.fromkeys(share.table.arrname for share in given))
+        for arrname in taken:
             used = [
-                share.table.sta_index[share.keep.any(axis=1)].ravel()
-                for share in given
-                if share.table.arrname == array.arrname
+                s.table.sta_index[s.keep.any(axis=1)] for s in given if s.table.arrname == arrname
             ]
-            present = np.isin(array.sta_index, np.concatenate(used))
-            prefix = f"{array.arrname} " if len(arrays) > 1 else ""
-            numbers = self._numbers.setdefault(array.arrname, {})
-            for row in np.flatnonzero(present):
-                index = int(array.sta_index[row])
+            array = file.array(arrname)
+            if array is None:
+                real = [pairs[_differ(pairs)].ravel() for pairs in used]
+                named = {int(index): str(index) for index in np.unique(np.concatenate(real))}
+            else:
+                present = np.isin(array.sta_index, np.concatenate([u.ravel() for u in used]))
+                rows = zip(array.sta_index[present], array.sta_name[present], strict=True)
+                named = {int(index): str(name) or str(index) for index, name in rows}
+            prefix = f"{arrname} " if len(taken) > 1 and arrname else ""
+            numbers = self._numbers.setdefault(arrname, {})
+            for index, name in named.items():
                 numbers[index] = len(self.names)
-                self.names.append(prefix + (str(array.sta_name[row]) or str(index)))
+                self.names.append(prefix + name)
 
     def of(self, table: BaselineTable) -> np.ndarray:
         """Positions in `names` of the stations of each row of `table`; -1 where unknown."""
         known = self._numbers.get(table.arrname, {})
         old, where = np.unique(table.sta_index, return_inverse=True)
         new = np.array([known.get(index, -1) for index in old.tolist()], dtype=np.int16)
-        return new[where].reshape(table.sta_index.shape)
+        found = new[where].reshape(table.sta_index.shape)
+        return np.where(_differ(table.sta_index)[:, None], found, np.int16(-1))
+
+
+def _differ(stations: np.ndarray) -> np.ndarray:
+    """(nrow,) whether the two or three stations of a row are all different."""
+    ordered = np.sort(stations, axis=1)
+    return (np.diff(ordered) != 0).all(axis=1)
 
 
 def _correlation(file: OIFile, given: Sequence[Share]) -> "csr_array | None":

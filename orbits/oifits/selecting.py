@@ -136,7 +136,10 @@ def _inside_range(table: Wavelength, limits: u.Quantity | None) -> np.ndarray:
 
 
 def _station_ids(file: OIFile, wanted: tuple[str, ...]) -> dict[str | None, list[int]] | None:
-    """For each array, the STA_INDEX of the stations wanted; None if all are."""
+    """For each array, the STA_INDEX of the stations wanted; None if all are.
+
+    Where tables have no array, stations go by that number.
+    """
     if not wanted:
         return None
     names = {plain(name) for name in wanted}
@@ -147,10 +150,14 @@ def _station_ids(file: OIFile, wanted: tuple[str, ...]) -> dict[str | None, list
         known = [(index, name) for index, name in pairs if name in names]
         found[array.arrname] = [index for index, _ in known]
         seen |= {name for _, name in known}
+    if any(file.array(table.arrname) is None for table in file.data):
+        found[None] = [int(name) for name in names if name.isdigit()]
+        seen |= {name for name in names if name.isdigit()}
     missing = [name for name in wanted if plain(name) not in seen]
     if missing:
         known = [name for array in file.arrays for name in array.sta_name.tolist()]
-        raise InputError(f"{file.source}: no station {missing[0]!r}; there is {_listed(known)}")
+        there = f"there is {_listed(known)}" if known else "there is no OI_ARRAY: give STA_INDEX"
+        raise InputError(f"{file.source}: no station {missing[0]!r}; {there}")
     return found
 
 

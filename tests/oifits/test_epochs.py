@@ -34,6 +34,24 @@ def test_several_targets_must_be_chosen_from(full):
     assert read(full, target="Calibrator of it").instrument == "SIM_K"
 
 
+def test_stations_go_by_their_numbers_where_no_array_names_them(rng):
+    file = make.small(rng)
+    file.arrays = []
+    for table in file.data:
+        table.arrname = None
+    (night,) = observations(file)
+    assert night.stations == ("1", "2", "3", "4")
+    np.testing.assert_array_equal(night.v2.exposures.stations + 1, file.data[0].sta_index)
+    part = select(file, Selection(stations=("1", "2", "3")))
+    assert {len(table) for table in part.data} == {3, 1}
+    with pytest.raises(InputError, match="no station 'S1'; there is no OI_ARRAY: give STA_INDEX"):
+        select(file, Selection(stations=("S1",)))
+    # Zeros stand for no station at all.
+    file.data[0].sta_index[:] = 0
+    (night,) = observations(file)
+    assert (night.v2.exposures.stations == -1).all()
+
+
 def test_every_datum_is_the_one_of_its_row_and_channel(full, rng):
     """Against a loop over rows and channels of the table as it was written."""
     file = make.full(np.random.default_rng(20260314))
