@@ -89,7 +89,8 @@ class Limits:
         `separation` (mas, middle of the annulus), for each route `<route>_median` and
         `<route>_worst` over the position angles, `expected_median`, and `recovered`, the contrast
         found with the completeness asked for over all position angles together. inf where nothing
-        is excluded.
+        is excluded. Rows near the star rest on few places, if the field is wide: limits change
+        steeply there, and a smaller field tells them better.
         """
         rings = [self.ring(separation) for separation in self.separations]
         columns = {"separation": self.separations}

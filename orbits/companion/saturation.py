@@ -28,6 +28,8 @@ _LINEAR = 0.01
 """Contrast below which c, which is about 1, changes nothing that matters."""
 _ROUNDS = 2
 """Evaluations of each place, the second at the limit that the first leads to."""
+_NEAR = 0.05
+"""A first correction smaller than this needs no second: c changes by less than its part in it."""
 
 
 def saturation(
@@ -54,6 +56,8 @@ def saturation(
                 contrast = min(1.0, float(unsaturated(linear[k], c[k])))
                 answer = _answer(stack, nights, int(place[k]), contrast, whole=whole)
                 c[k] = (contrast / answer - 1) / contrast if answer > 0 else np.inf
+                if abs(c[k]) * contrast < _NEAR:
+                    break
             tick()
     return c
 
