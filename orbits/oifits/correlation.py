@@ -28,6 +28,9 @@ ROUNDING = 1e-3
 is right as it is: sets of closure phases are redundant."""
 LARGE = 1500
 """Groups beyond this size have their smallest eigenvalue found by iteration."""
+FILLED = 0.25
+"""A large group with more than this part of all correlations is cheaper to factorise than to
+iterate on, and the full matrix takes no more memory than a few copies of the sparse one."""
 
 
 class Lookup:
@@ -40,9 +43,11 @@ class Lookup:
     def __call__(self, queries: np.ndarray) -> np.ndarray:
         """The values at `queries`; -1 where none is given."""
         if not self._points.size:
-            return np.full(queries.shape, -1)
+            return np.full(queries.shape, -1, dtype=self._values.dtype)
         place = np.searchsorted(self._points, queries).clip(max=self._points.size - 1)
-        return np.where(self._points[place] == queries, self._values[place], -1)
+        return np.where(
+            self._points[place] == queries, self._values[place], self._values.dtype.type(-1)
+        )
 
 
 class Numbers:
@@ -76,31 +81,52 @@ class Numbers:
         valid = (i >= 0) & (i < size) & (j >= 0) & (j < size)
         return start + i, start + j, valid
 
+    def named(self, table: Corr) -> np.ndarray:
+        """The numbers that the rows of `table` name, in ascending order."""
+        start, size = self._range[table.corrname]
+        i, j, valid = self.pairs(table)
+        if size > len(table):
+            return np.unique(np.concatenate([i[valid], j[valid]]))
+        there = np.zeros(size, dtype=bool)
+        there[i[valid] - start] = there[j[valid] - start] = True
+        return start + np.flatnonzero(there)
+
     def matrix(self, numbers: np.ndarray) -> "csr_array | None":
         """Correlation matrix of data with these numbers (-1: none); None if all are independent."""
-        from scipy.sparse import coo_array, eye_array
+        from scipy.sparse import coo_array
 
         known = np.flatnonzero(numbers >= 0)
-        place = Lookup(numbers[known], known)
-        rows, cols, values = [], [], []
+        place = Lookup(numbers[known], known.astype(np.int32))
+        parts = []
         for table in self.tables:
             i, j, keep = self.pairs(table)
             # NaN fails the second condition too.
             keep &= (i != j) & (np.abs(table.corr) <= 1) & (table.corr != 0)
             i, j = place(i[keep]), place(j[keep])
             kept = (i >= 0) & (j >= 0)
-            rows.append(i[kept])
-            cols.append(j[kept])
-            values.append(table.corr[keep][kept])
-        i, j, r = (np.concatenate(parts) for parts in (rows, cols, values))
+            parts.append((np.minimum(i, j)[kept], np.maximum(i, j)[kept], table.corr[keep][kept]))
+        i, j, r = (np.concatenate(column) for column in zip(*parts, strict=True))
         if not i.size:
             return None
-        # A pair that is listed twice, in whichever order, counts once.
-        _, first = np.unique(np.minimum(i, j) * len(numbers) + np.maximum(i, j), return_index=True)
-        i, j, r = i[first], j[first], r[first]
-        shape = (len(numbers), len(numbers))
-        upper = coo_array((r, (i, j)), shape=shape)
-        return (upper + upper.T + eye_array(len(numbers))).tocsr()
+        once = first_of_pairs(i, j)
+        if not once.all():
+            i, j, r = i[once], j[once], r[once]
+        size = len(numbers)
+        every = np.arange(size, dtype=np.int32)
+        rows, cols = np.concatenate([i, j, every]), np.concatenate([j, i, every])
+        r = np.concatenate([r, r, np.ones(size)])
+        return coo_array((r, (rows, cols)), shape=(size, size)).tocsr()
+
+
+def first_of_pairs(low: np.ndarray, high: np.ndarray) -> np.ndarray:
+    """(n,) bool: which pairs, `low` not above `high`, were not there before."""
+    key = low.astype(np.int64) * 2**32 + high
+    if (key[1:] > key[:-1]).all():  # as most writers list them
+        return np.ones(key.size, dtype=bool)
+    order = np.argsort(key, kind="stable")
+    new = np.ones(key.size, dtype=bool)
+    new[order[1:]] = key[order[1:]] != key[order[:-1]]
+    return new
 
 
 @dataclass(frozen=True)
@@ -127,11 +153,18 @@ def mended(matrix: "csr_array") -> tuple["csr_array", Repair | None]:
     smallest, changed = np.inf, 0
     sizes = np.bincount(group)
     for size in np.unique(sizes[sizes > 1]):
-        lowest = _lowest_eigenvalues(entries, group, np.flatnonzero(sizes == size), int(size))
-        for which, value in lowest.items():
-            if value < -ROUNDING:
-                factor[group == which] = (1 - RIDGE) / (1 - value)
-                smallest, changed = min(smallest, value), changed + 1
+        chosen = np.flatnonzero(np.isin(group, np.flatnonzero(sizes == size)))
+        members = chosen[np.argsort(group[chosen], kind="stable")].reshape(-1, size)
+        if size > LARGE:
+            lowest = [_lowest_of_large(matrix, rows) for rows in members]
+        else:
+            lowest = _lowest_of_small(_dense(entries, members))
+        found = zip(group[members[:, 0]].tolist(), lowest, strict=True)
+        for which, value in found:
+            if value >= -ROUNDING:
+                continue
+            factor[group == which] = (1 - RIDGE) / (1 - value)
+            smallest, changed = min(smallest, value), changed + 1
     if not changed:
         return matrix, None
     values = np.where(entries.row == entries.col, 1.0, entries.data * factor[entries.row])
@@ -140,32 +173,54 @@ def mended(matrix: "csr_array") -> tuple["csr_array", Repair | None]:
     return shrunk, Repair(changed, smallest)
 
 
-def _lowest_eigenvalues(
-    entries: "coo_array", group: np.ndarray, chosen: np.ndarray, size: int
-) -> dict[int, float]:
-    """The smallest eigenvalue of each of the groups `chosen`, all of `size` data."""
-    members = np.flatnonzero(np.isin(group, chosen))
-    members = members[np.argsort(group[members], kind="stable")].reshape(-1, size)
-    place = np.full(len(group), -1)
+def _dense(entries: "coo_array", members: np.ndarray) -> np.ndarray:
+    """(blocks, size, size) matrices of the data `members` (blocks, size)."""
+    count, size = members.shape
+    place, block = np.full((2, entries.shape[0]), -1)
     place[members] = np.arange(size)
-    if size > LARGE:
-        return {int(group[rows[0]]): _lowest_by_iteration(entries, rows) for rows in members}
-    block = np.full(len(group), -1)
-    block[members] = np.arange(len(members))[:, None]
-    inside = block[entries.row] >= 0
-    row, col = entries.row[inside], entries.col[inside]
-    dense = np.zeros((len(members), size, size))
-    dense[block[row], place[row], place[col]] = entries.data[inside]
-    lowest = np.linalg.eigvalsh(dense)[:, 0]
-    return dict(zip(group[members[:, 0]].tolist(), lowest.tolist(), strict=True))
+    block[members] = np.arange(count)[:, None]
+    row, col, data = entries.row, entries.col, entries.data
+    if members.size < len(block):
+        inside = block[row] >= 0
+        row, col, data = row[inside], col[inside], data[inside]
+    dense = np.zeros((count, size, size))
+    dense[block[row], place[row], place[col]] = data
+    return dense
 
 
-def _lowest_by_iteration(entries: "coo_array", rows: np.ndarray) -> float:
+def _positive(dense: np.ndarray) -> bool:
+    """Whether no eigenvalue of any of the blocks is below -`ROUNDING`.
+
+    Then, and only then, there is a Cholesky factor after adding that much to the diagonals, which
+    takes a small part of the time of eigenvalues.
+    """
+    diagonal = np.arange(dense.shape[-1])
+    dense[:, diagonal, diagonal] += ROUNDING
+    try:
+        np.linalg.cholesky(dense)
+    except np.linalg.LinAlgError:
+        return False
+    finally:
+        dense[:, diagonal, diagonal] -= ROUNDING
+    return True
+
+
+def _lowest_of_small(dense: np.ndarray) -> list[float]:
+    """The smallest eigenvalue of each block, or 0 for all if none is below -`ROUNDING`."""
+    return [0.0] * len(dense) if _positive(dense) else np.linalg.eigvalsh(dense)[:, 0].tolist()
+
+
+def _lowest_of_large(matrix: "csr_array", rows: np.ndarray) -> float:
+    """The smallest eigenvalue of a block, to a part in a thousand, or 0 if it is not below
+    -`ROUNDING`."""
     from scipy.sparse import eye_array
     from scipy.sparse.linalg import eigsh
 
+    block = matrix[rows][:, rows] if rows.size < matrix.shape[0] else matrix
+    if block.nnz > FILLED * rows.size**2 and _positive(block.toarray()[None]):
+        return 0.0
     # The tolerance is relative: with 1 added, an eigenvalue near 0 is no harder than any other.
-    block = entries.tocsr()[rows][:, rows] + eye_array(rows.size)
+    block = block + eye_array(rows.size, format="csr")
     start = np.cos(np.arange(rows.size))  # any start without symmetry, the same in every run
     lowest = eigsh(block, k=1, which="SA", v0=start, tol=1e-3, ncv=60, return_eigenvectors=False)
     return float(lowest[0]) - 1

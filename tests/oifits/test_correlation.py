@@ -222,6 +222,29 @@ def test_chains_of_correlated_data_are_mended_whatever_their_length(monkeypatch,
     np.testing.assert_array_equal(same.toarray(), sound.toarray())
 
 
+@pytest.mark.parametrize(("r", "sound"), [(0.3, True), (-0.012, True), (-0.1, False)])
+def test_large_full_groups_are_iterated_on_only_if_they_must_be_mended(monkeypatch, r, sound):
+    """All pairs of n data with the correlation r: the eigenvalues are 1 - r and 1 + (n - 1) r."""
+    import scipy.sparse.linalg
+
+    iterate, called = scipy.sparse.linalg.eigsh, []
+
+    def eigsh(*arguments, **options):
+        called.append(True)
+        return iterate(*arguments, **options)
+
+    monkeypatch.setattr(scipy.sparse.linalg, "eigsh", eigsh)
+    monkeypatch.setattr(correlation, "LARGE", 70)
+    size = 80
+    better, repair = mended(csr_array(np.full((size, size), r) + (1 - r) * np.eye(size)))
+    assert (repair is None, not called) == (sound, sound)
+    lowest = np.linalg.eigvalsh(better.toarray())[0]
+    # The iteration stops at a part in a thousand of the eigenvalue with 1 added, here 5.9, and
+    # the mending shrinks that error with the matrix, by (1 - 0.01) / (1 + 6.9).
+    assert lowest == pytest.approx(1 - r if r > 0 else 1 + (size - 1) * r if sound else 0.01,
+                                   abs=1e-3)  # fmt: skip
+
+
 def test_redundant_closure_phases_are_left_as_they_are():
     """Four closure phases of four stations correlate by 1/3 or -1/3 and have rank three."""
     third = 1 / 3

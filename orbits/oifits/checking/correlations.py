@@ -3,7 +3,7 @@
 import numpy as np
 
 from ...problems import Log
-from ..correlation import Numbers, mended
+from ..correlation import Numbers, first_of_pairs, mended
 from ..model import Corr, OIFile
 
 
@@ -37,8 +37,8 @@ def strengths(file: OIFile, log: Log) -> None:
 def repetitions(file: OIFile, log: Log) -> None:
     """No pair is listed twice."""
     for table in file.correlations:
-        pairs = np.sort(np.column_stack([table.iindx, table.jindx]), axis=1)
-        double = len(table) - len(np.unique(pairs, axis=0))
+        low, high = np.minimum(table.iindx, table.jindx), np.maximum(table.iindx, table.jindx)
+        double = np.count_nonzero(~first_of_pairs(low, high))
         if double:
             log.suspicious(table.label, f"{double} pairs are listed twice", "the first is used")
 
@@ -68,8 +68,7 @@ def definite(file: OIFile, log: Log) -> None:
     """
     numbers = Numbers(file)
     for table in file.correlations:
-        i, j, valid = numbers.pairs(table)
-        matrix = numbers.matrix(np.unique(np.concatenate([i[valid], j[valid]])))
+        matrix = numbers.matrix(numbers.named(table))
         repair = None if matrix is None else mended(matrix)[1]
         if repair is not None:
             log.suspicious(
