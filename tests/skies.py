@@ -4,10 +4,13 @@ from dataclasses import replace
 
 import numpy as np
 
-from orbits.binary import Scene, model
+from orbits.binary import Scene, model, predict
 from orbits.companion.covariance import Covariance
 from orbits.observation import OBSERVABLES, Channels, Exposures, Observable, Observation
 from orbits.sampling import Sampling
+from orbits.simulation.array import Array
+from orbits.simulation.export import night_file
+from orbits.simulation.nights import Spectrum, blank_night, observe
 
 
 def table(legs, wavelength, *, bandwidth=0.0, value=0.0, error=1.0, integration=0.0, mjd=0.0):
@@ -110,3 +113,17 @@ def offset_in_sigma(candidate, x, y):
     """How far a solution lies from (x, y), mas, in units of its error ellipse."""
     d = np.array([candidate.x_mas - x, candidate.y_mas - y])
     return np.sqrt(d @ np.linalg.solve(candidate.covariance_xy_mas2, d))
+
+
+def night_of(target, noise, rng, *, channels, **star):
+    """An `OIFile` of two exposures in the K band, with four telescopes on real baselines."""
+    ground = np.array([[0, 0, 0], [48, 22, 0], [-35, 81, 0], [66, 103, 0]], float)
+    array = Array(
+        name="FOUR", latitude=-24.6, longitude=-70.4, diameter=1.0, stations=tuple("ABCD"),
+        local=ground,
+    )  # fmt: skip
+    spectrum = Spectrum.even("K", 2.0e-6, 2.4e-6, channels)
+    mjd = 60000.1 + np.arange(2) / 24
+    blank = blank_night(array, spectrum, target=target, ra=40.0, dec=-30.0, mjd=mjd)
+    taken = observe(blank, lambda one: predict(one, **star), noise, rng)
+    return night_file(taken, array, spectrum, ra=40.0, dec=-30.0)

@@ -6,9 +6,8 @@ import astropy.units as u
 import numpy as np
 import pytest
 from numpy.testing import assert_allclose
-from skies import fill, four_stations, wrapped
+from skies import fill, four_stations, night_of, wrapped
 
-from orbits.binary import predict
 from orbits.companion.injection import Companion, exchange, inject, remove
 from orbits.companion.injection_files import (
     beside,
@@ -21,9 +20,7 @@ from orbits.constants import MAS
 from orbits.errors import InputError
 from orbits.oifits import Vis, load, observations
 from orbits.oifits.validation import validate
-from orbits.simulation.array import Array
-from orbits.simulation.export import night_file
-from orbits.simulation.nights import Noise, Spectrum, blank_night, observe
+from orbits.simulation.nights import Noise
 
 STAR = {"primary_diameter": 1.1}
 PAIR = {**STAR, "x": 7.0, "y": -4.0, "contrast": 0.05, "diameter": 0.3}
@@ -62,17 +59,8 @@ def test_companion_by_separation_and_position_angle():
 @pytest.fixture
 def night(tmp_path, rng):
     """A simulated file, with a flagged datum, and one that is no number."""
-    array = Array(
-        name="FOUR", latitude=-24.6, longitude=-70.4, diameter=1.0, stations=("A", "B", "C", "D"),
-        local=np.array([[0, 0, 0], [48, 22, 0], [-35, 81, 0], [66, 103, 0]], float),
-    )  # fmt: skip
-    spectrum = Spectrum.even("K", 2.0e-6, 2.4e-6, 5)
-    blank = blank_night(
-        array, spectrum, target="Harrow 7", ra=40.0, dec=-30.0, mjd=60000.1 + np.arange(2) / 24
-    )
     noise = Noise(v2_floor=0.002, closure_phase=1e-3)
-    taken = observe(blank, lambda one: predict(one, **STAR), noise, rng)
-    file = night_file(taken, array, spectrum, ra=40.0, dec=-30.0)
+    file = night_of("Harrow 7", noise, rng, channels=5, **STAR)
     file.data[0].flag[0, 0] = True
     file.data[1].t3phi[0, 1] = np.nan
     path = tmp_path / "night.fits"

@@ -7,29 +7,18 @@ import numpy as np
 import pytest
 from astropy.table import Table
 from numpy.testing import assert_allclose
+from skies import night_of
 
-from orbits.binary import predict
 from orbits.cli import app
 from orbits.cli.frame import run
-from orbits.simulation.array import Array
-from orbits.simulation.export import night_file
-from orbits.simulation.nights import Noise, Spectrum, blank_night, observe
+from orbits.simulation.nights import Noise
 
 
 @pytest.fixture
 def night(tmp_path, rng):
-    array = Array(
-        name="FOUR", latitude=-24.6, longitude=-70.4, diameter=1.0, stations=("A", "B", "C", "D"),
-        local=np.array([[0, 0, 0], [48, 22, 0], [-35, 81, 0], [66, 103, 0]], float),
-    )  # fmt: skip
-    spectrum = Spectrum.even("K", 2.0e-6, 2.4e-6, 3)
-    blank = blank_night(
-        array, spectrum, target="Harrow 9", ra=40.0, dec=-30.0, mjd=60000.1 + np.arange(2) / 24
-    )
-    noise = Noise(v2_floor=0.01, closure_phase=0.01)
-    taken = observe(blank, lambda one: predict(one, primary_diameter=1.0), noise, rng)
     path = tmp_path / "night.fits"
-    night_file(taken, array, spectrum, ra=40.0, dec=-30.0).write(path)
+    noise = Noise(v2_floor=0.01, closure_phase=0.01)
+    night_of("Harrow 9", noise, rng, channels=3, primary_diameter=1.0).write(path)
     return path
 
 
