@@ -11,7 +11,7 @@ from .companion.result import Candidate, SearchResult
 from .companion.search import FALSE_ALARM, search
 from .errors import InputError, NothingFound
 from .observation import Observation
-from .oifits import ErrorBars, read_epochs
+from .oifits import ErrorBars, Selection, read_epochs
 from .oifits.utc import night_label
 from .positions import Positions
 from .progress import SILENT, Silent
@@ -79,12 +79,21 @@ def observations(system: System) -> list[Observation]:
     InputError
         If the system names no OIFITS files, or one of them cannot be used.
     """
+    import astropy.units as u
+
     if not system.nights:
         raise InputError(f"{system.path}: no nights; name OIFITS files under [nights]")
     return read_epochs(
         system.nights,
         target=system.target,
         flip_phase=system.flip_phase,
+        gap=system.gap * u.hour,
+        selection=Selection(
+            instrument=system.instrument,
+            wavelengths=None if system.wavelengths is None else system.wavelengths * u.um,
+            baselines=None if system.baselines is None else system.baselines * u.m,
+            stations=system.stations,
+        ),
         errors=ErrorBars.of(system.error_scale, system.error_floor),
         observables=system.use,
     )

@@ -57,6 +57,16 @@ class System:
     """Uniform-disc diameter of the primary, mas; fitted where None."""
     flip_phase: bool = False
     """The OIFITS files use the opposite sign of phase."""
+    instrument: str | None = None
+    """INSNAME of the only spectral set-up to use."""
+    wavelengths: tuple[float, float] | None = None
+    """Shortest and longest, um."""
+    baselines: tuple[float, float] | None = None
+    """Shortest and longest, m."""
+    stations: tuple[str, ...] = ()
+    """Only data between these; all where empty."""
+    gap: float = 8.0
+    """A pause longer than this, h, starts a new night."""
     use: tuple[str, ...] = DEFAULT
     """The observables that are used."""
     error_scale: Mapping[str, float] = made(default_factory=dict)
@@ -115,6 +125,11 @@ _NIGHTS = {
     "field": float,
     "diameter": float,
     "flip_phase": bool,
+    "instrument": str,
+    "wavelengths": list,
+    "baselines": list,
+    "stations": list,
+    "gap": float,
     "use": list,
     "error_scale": dict.fromkeys(OBSERVABLES, float),
     "error_floor": dict.fromkeys(OBSERVABLES, float),
@@ -178,8 +193,7 @@ def _files(path: Path, values: dict, section: str, key: str) -> tuple[Path, ...]
 
 def _nights(path: Path, given: dict[str, Any]) -> dict[str, Any]:
     """How the files of the nights are read."""
-    used = given.get("use", [])
-    for name in used:
+    for name in given.get("use", []):
         if name not in OBSERVABLES:
             raise InputError(
                 f"{path}: nights.use: no observable {name!r}; there are {', '.join(OBSERVABLES)}"
@@ -188,8 +202,16 @@ def _nights(path: Path, given: dict[str, Any]) -> dict[str, Any]:
         for name, value in given.get(key, {}).items():
             if not value > 0:
                 raise InputError(f"{path}: nights.{key}.{name} must be positive, got {value!r}")
+    if not given.get("gap", 1.0) > 0:
+        raise InputError(f"{path}: nights.gap must be a positive number of hours")
     chosen = {key: given[key] for key in _NIGHTS if key in given}
-    return chosen | ({"use": tuple(used)} if used else {})
+    for key in ("wavelengths", "baselines"):
+        if key in chosen:
+            chosen[key] = _pair(path, f"nights.{key}", chosen[key])
+    for key in ("use", "stations"):
+        if key in chosen:
+            chosen[key] = _names(path, f"nights.{key}", chosen[key])
+    return chosen
 
 
 def _fit(path: Path, values: dict) -> dict[str, Any]:
@@ -200,9 +222,7 @@ def _fit(path: Path, values: dict) -> dict[str, Any]:
         raise InputError(f"{path}: fit.live_points must be at least 50, got {live_points}")
     for key in ("scale", "position_angle_zero"):
         if key in model:
-            if not all(isinstance(name, str) for name in model[key]):
-                raise InputError(f"{path}: fit.{key} must list names of instruments")
-            model[key] = tuple(model[key])
+            model[key] = _names(path, f"fit.{key}", model[key])
     priors = dict(values.get("priors", {}))
     for key, value in priors.items():
         if isinstance(value, list):
@@ -214,6 +234,12 @@ def _fit(path: Path, values: dict) -> dict[str, Any]:
     if normal:
         priors["normal"] = normal
     return {"live_points": live_points, "model": model, "priors": priors}
+
+
+def _names(path: Path, name: str, value: list) -> tuple[str, ...]:
+    if not all(isinstance(one, str) for one in value):
+        raise InputError(f"{path}: {name} must list names, got {value!r}")
+    return tuple(value)
 
 
 def _pair(path: Path, name: str, value: list) -> tuple[float, float]:

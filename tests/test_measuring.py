@@ -53,12 +53,15 @@ def test_positions_are_where_the_orbit_was(three_nights, tmp_path):
 
 def test_errors_and_observables_are_those_of_the_system_file(three_nights, tmp_path):
     path = simulate(three_nights, tmp_path, rng=np.random.default_rng(3))
-    lines = 'use = ["t3"]\nerror_scale = {t3 = 2.0}\nerror_floor = {t3 = 5.0}\n'
+    lines = 'stations = ["N1", "E2", "S1"]\nwavelengths = [1.5, 1.65]\nbaselines = [50, 500]\n'
+    lines += 'instrument = "THICKET_H"\nuse = ["t3"]\nerror_scale = {t3 = 2.0}\nerror_floor = {t3 = 5.0}\n'
     path.write_text(path.read_text().replace("[nights]\n", f"[nights]\n{lines}"))
     plain = read(tmp_path / "nights" / "01-2024-01-11.fits")
     seen = observations(read_system(path))[0]
     assert len(seen.v2) == 0
-    assert_allclose(seen.t3.error, np.maximum(2 * plain.t3.error, np.radians(5.0)))
+    assert len(seen.t3) == len(plain.t3) / 4 / 2  # of four triangles, and eight channels
+    assert seen.t3.wavelength.max() <= 1.65e-6
+    assert_allclose(seen.t3.error, np.radians(5.0))
 
 
 def test_no_companion_is_claimed_where_there_is_none(three_nights, tmp_path):

@@ -5,24 +5,22 @@ from typing import Annotated, Any
 
 import typer
 
+from ..errors import InputError
 from .frame import Force, Json, emit, say, warn
-
-Between = tuple[float, float]
+from .night import Baselines, Instrument, Station, Wavelengths, selection
 
 
 def inspect(
     files: Annotated[list[Path], typer.Argument(help="OIFITS files.", metavar="FILE...")],
     target: Annotated[str | None, typer.Option(help="Only this target.")] = None,
-    instrument: Annotated[str | None, typer.Option(help="Only this INSNAME.")] = None,
+    instrument: Instrument = None,
     dates: Annotated[
         tuple[str, str] | None,
         typer.Option(help="Only from one date (0 h UTC if no time is given) to another."),
     ] = None,
-    wavelengths: Annotated[Between | None, typer.Option(help="Only between these, um.")] = None,
-    baselines: Annotated[Between | None, typer.Option(help="Only between these, m.")] = None,
-    station: Annotated[
-        list[str] | None, typer.Option(help="Only between the stations named; repeat.")
-    ] = None,
+    wavelengths: Wavelengths = None,
+    baselines: Baselines = None,
+    station: Station = None,
     flip_phase: Annotated[
         bool, typer.Option("--flip-phase", help="Reverse the sign of all phases.")
     ] = False,
@@ -63,18 +61,30 @@ def inspect(
     if colour not in (None, "time", "wavelength"):
         raise typer.BadParameter(f"--colour is time or wavelength, not {colour!r}")
     refuse_existing(*(path for path in (plot, convert) if path), force=force)
-    selection = _selection(instrument, dates, wavelengths, baselines, tuple(station or ()))
-    parts, results = [], []
+    wanted = selection(
+        instrument=instrument, wavelengths=wavelengths, baselines=baselines,
+        station=station, dates=dates,
+    )  # fmt: skip
+    parts, results, nothing = [], [], []
     with Bar().task("reading", total=len(files)) as step:
         for path in dict.fromkeys(files):
             file = load(path)
             file.problems += check(file)
             if flip_phase:
                 file = flipped(file)
-            parts.append(select(file, selection, target=target))
-            results.append(describe(parts[-1], validate(path) if file.version == 2 else None))
             step()
+            try:
+                part = select(file, wanted, target=target)
+            except InputError as reason:
+                nothing.append(reason)
+                continue
+            parts.append(part)
+            results.append(describe(part, validate(path) if file.version == 2 else None))
+    if not parts:
+        raise nothing[0]
     say("\n".join(map(in_words, results)), json=json)
+    for reason in nothing:
+        say(f"left out: {reason}", json=json)
     whole = join(parts)
     together = check_together(whole)
     warn(together)
@@ -82,12 +92,14 @@ def inspect(
     if strict:
         refuse_suspicious(whole.problems)
     outcome: dict[str, Any] = {"files": results, "together": list(map(problem_entry, together))}
+    if nothing:
+        outcome["left_out"] = list(map(str, nothing))
     if plot:
         _draw(whole, plot, colour, force=force)
         outcome["plot"] = str(plot)
         say(f"drawn: {plot}", json=json)
     if convert:
-        notes = [f"only {selection}"] if str(selection) else []
+        notes = [f"only {wanted}"] if str(wanted) else []
         notes += [f"only target {target}"] if target is not None else []
         notes += ["sign of all phases reversed"] if flip_phase else []
         copy, breaches = write_copy(whole, convert, notes=notes, force=force)
@@ -99,22 +111,6 @@ def inspect(
         say(f"written: {convert}, {_verdict(breaches)}", json=json)
     if json:
         emit(outcome)
-
-
-def _selection(instrument, dates, wavelengths, baselines, stations):
-    import astropy.units as u
-    from astropy.time import Time
-
-    from ..dates import read_date
-    from ..oifits.selecting import Selection
-
-    return Selection(
-        instrument=instrument,
-        dates=dates and tuple(Time(read_date(date), format="mjd", scale="tdb") for date in dates),
-        wavelengths=None if wavelengths is None else wavelengths * u.um,
-        baselines=None if baselines is None else baselines * u.m,
-        stations=stations,
-    )
 
 
 def _draw(file, path: Path, colour: str | None, *, force: bool) -> None:

@@ -13,6 +13,7 @@ if TYPE_CHECKING:
 
     from ..companion.covariance import ErrorModel
     from ..observation import Observation
+    from ..oifits import Selection
 
 NightFiles = Annotated[
     list[Path], typer.Argument(help="OIFITS files of one night.", metavar="FILE...")
@@ -39,6 +40,13 @@ IgnoreCorrelations = Annotated[
 FlipPhase = Annotated[
     bool, typer.Option("--flip-phase", help="The files have phases of the opposite sign.")
 ]
+Between = tuple[float, float]
+Instrument = Annotated[str | None, typer.Option(help="Only this INSNAME.")]
+Wavelengths = Annotated[Between | None, typer.Option(help="Only between these, um.")]
+Baselines = Annotated[Between | None, typer.Option(help="Only between these, m.")]
+Station = Annotated[
+    list[str] | None, typer.Option(help="Only between the stations named; repeatable.")
+]
 Use = Annotated[
     list[str] | None,
     typer.Option(
@@ -64,13 +72,14 @@ def read_night(
     target: str | None,
     night: str | None,
     flip_phase: bool,
+    selection: "Selection | None" = None,
     use: Sequence[str] | None = None,
     error_scale: Sequence[str] | None = None,
     error_floor: Sequence[str] | None = None,
 ) -> "Observation":
     """The one night that is meant, after a word about what is suspicious in its files."""
     from ..observation import DEFAULT
-    from ..oifits import ErrorBars, read
+    from ..oifits import ErrorBars, Selection, read
 
     scale, floor = (
         {name: values[0] for name, values in (named(text, count=1) for text in given or ())}
@@ -82,11 +91,36 @@ def read_night(
         target=target,
         night=night,
         flip_phase=flip_phase,
+        selection=selection or Selection(),
         observables=use or DEFAULT,
         errors=checked(ErrorBars.of, scale, floor),
     )
     warn(observation.problems)
     return observation
+
+
+def selection(
+    *,
+    instrument: str | None,
+    wavelengths: Between | None,
+    baselines: Between | None,
+    station: Sequence[str] | None,
+    dates: tuple[str, str] | None = None,
+) -> "Selection":
+    """The part of the data that the options name."""
+    import astropy.units as u
+    from astropy.time import Time
+
+    from ..dates import read_date
+    from ..oifits import Selection
+
+    return Selection(
+        instrument=instrument,
+        dates=dates and tuple(Time(read_date(date), format="mjd", scale="tdb") for date in dates),
+        wavelengths=None if wavelengths is None else wavelengths * u.um,
+        baselines=None if baselines is None else baselines * u.m,
+        stations=tuple(station or ()),
+    )
 
 
 def length(option: str, value: float | None) -> "u.Quantity | None":

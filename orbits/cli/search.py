@@ -10,6 +10,7 @@ from ..errors import NothingFound
 from ..files import refuse_existing
 from .frame import Force, Json, Seed, emit, say
 from .night import (
+    Baselines,
     CompanionDiameter,
     Diameter,
     ErrorFloor,
@@ -17,16 +18,20 @@ from .night import (
     FlipPhase,
     HalfField,
     IgnoreCorrelations,
+    Instrument,
     NightDate,
     NightFiles,
     SharedBaselines,
+    Station,
     T3Calibration,
     Target,
     Use,
     V2Calibration,
+    Wavelengths,
     checked,
     named,
     read_night,
+    selection,
 )
 
 if TYPE_CHECKING:
@@ -43,6 +48,10 @@ def search(
     files: NightFiles,
     target: Target = None,
     night: NightDate = None,
+    instrument: Instrument = None,
+    wavelengths: Wavelengths = None,
+    baselines: Baselines = None,
+    station: Station = None,
     use: Use = None,
     field: HalfField = None,
     step: Annotated[float | None, typer.Option(help="Of the grid, mas.")] = None,
@@ -121,6 +130,9 @@ def search(
     )
     observation = read_night(
         files, target=target, night=night, flip_phase=flip_phase,
+        selection=selection(
+            instrument=instrument, wavelengths=wavelengths, baselines=baselines, station=station
+        ),
         use=use, error_scale=error_scale, error_floor=error_floor,
     )  # fmt: skip
     paths = _picture_paths(pictures, observation.target, observation.mjd, force=force)

@@ -137,7 +137,12 @@ def observations(
     times = [share.table.mjd[rows] for share, rows in zip(given, with_data, strict=True)]
     if not sum(map(len, times)):
         words = " or ".join(KINDS[key].words for key in observables)
-        raise InputError(f"{file.source}: no usable {words} of {name}")
+        others = shares(file, ids, [key for key in OBSERVABLES if key not in observables])
+        there = dict.fromkeys(share.kind for share in others if share.keep.any())
+        remedy = "".join(
+            f"; it has {kind.words}: ask for them (--use {kind.name})" for kind in there
+        )
+        raise InputError(f"{file.source}: no usable {words} of {name}{remedy}")
     starts = night_starts(np.concatenate(times), gap.to_value(u.day))
     epochs = []
     for start, end in zip(starts, [*starts[1:], np.inf], strict=True):

@@ -9,7 +9,7 @@ import pytest
 from astropy.time import Time
 
 from orbits import InputError, read, read_epochs
-from orbits.oifits import ErrorBars, Selection, observations, select
+from orbits.oifits import ErrorBars, Selection, Vis, observations, select
 from orbits.oifits.checking import check
 from orbits.oifits.joining import join
 
@@ -32,6 +32,13 @@ def test_several_targets_must_be_chosen_from(full):
     assert observation.instruments == ("SIM_H",)
     assert observation.stations == ("S1", "S2", "S3", "S4")
     assert read(full, target="Calibrator of it").instrument == "SIM_K"
+
+
+def test_observables_that_would_do_are_named(rng):
+    file = make.full(rng)
+    file.data, file.correlations = file.of(Vis), []
+    with pytest.raises(InputError, match=r"closure phases of Harrow 7; it has amplitudes: ask for"):
+        observations(file)
 
 
 def test_stations_go_by_their_numbers_where_no_array_names_them(rng):

@@ -56,6 +56,22 @@ def test_the_numbers_are_those_of_the_file(rng):
     ]
 
 
+def test_files_of_which_nothing_is_wanted_are_left_out(nodeline, full, tmp_path):
+    """Two nights in two files; only the second is asked for."""
+    part = tmp_path / "part.fits"
+    code, _, _ = nodeline("inspect", full, "--target", "Harrow 7", "--convert", part)
+    assert code == 0
+    options = ("--target", "Calibrator of it", "--convert", tmp_path / "copy.fits", "--json")
+    code, out, _ = nodeline("inspect", part, full, *options)
+    assert code == 0
+    result = json.loads(out)
+    assert [entry["file"] for entry in result["files"]] == [str(full)]
+    assert result["left_out"][0].startswith(f"{part}: no target 'Calibrator of it'")
+    code, _, err = nodeline("inspect", part, "--target", "Calibrator of it")
+    assert code == 3
+    assert "no target" in err
+
+
 def test_json_is_one_object_and_nothing_else(nodeline, full):
     code, out, err = nodeline("inspect", full, "--json")
     result = json.loads(out)
