@@ -86,6 +86,23 @@ class BinTable:
 
         The array is a view of the file's bytes where it can be.
         """
+        values = self._stored(field)
+        scale, zero = field.cards.get("TSCAL", 1), field.cards.get("TZERO", 0)
+        if field.code in "AL" or (scale == 1 and zero == 0):
+            return values
+        with np.errstate(over="ignore", invalid="ignore"):  # scales can be any numbers
+            return values.astype(np.float64) * scale + zero
+
+    def nulls(self, field: Field) -> np.ndarray | None:
+        """(nrow, repeat) bool: where a column of whole numbers has none; None if nowhere."""
+        null = field.cards.get("TNULL")
+        if field.code not in "BIJK" or null is None:
+            return None
+        missing = self._stored(field) == null
+        return missing if missing.any() else None
+
+    def _stored(self, field: Field) -> np.ndarray:
+        """(nrow, repeat) in the file's own type, text as (nrow,) bytes; before any scaling."""
         form = f"S{field.width}" if field.code == "A" else _NUMPY.get(field.code)
         if form is None:
             raise Malformed(f"column {field.name} has the form {field.cards['TFORM']!r}")
@@ -103,12 +120,7 @@ class BinTable:
             if self.nrow
             else np.empty((0, 1 if field.code == "A" else field.repeat), dtype)
         )
-        if field.code == "A":
-            return values[:, 0]
-        scale, zero = field.cards.get("TSCAL", 1), field.cards.get("TZERO", 0)
-        if field.code == "L" or (scale == 1 and zero == 0):
-            return values
-        return values.astype(np.float64) * scale + zero
+        return values[:, 0] if field.code == "A" else values
 
 
 def _field(header, number: int, offset: int) -> Field:

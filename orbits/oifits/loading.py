@@ -11,7 +11,7 @@ from ..problems import Log
 from . import amending, checksum, links
 from .bintable import CARDS, BinTable, Field, Malformed
 from .blocks import HDU, read_hdus
-from .model import KINDS, DataTable, OIFile, OtherHDU
+from .model import KINDS, Array, DataTable, OIFile, OtherHDU, Target
 from .schema import (
     DTYPES,
     NWAVE,
@@ -34,6 +34,10 @@ COMPATIBLE = {
     "L": "LBIJ", "I": "IJBK", "J": "IJBK", "E": "EDIJBK", "D": "EDIJBK", "C": "CM", "A": "A",
 }  # fmt: skip
 """Which forms of the file can stand for a form of the standard."""
+NO_ID = np.iinfo(np.int16).min
+"""Stands for an id that is NULL: no target, station or datum has a number so low."""
+NUMBERED = {Target: "TARGET_ID", Array: "STA_INDEX"}
+"""Where ids are given to what others refer to."""
 ALIASES = {"FLUX": "FLUXDATA"}
 """Columns that pipelines still write as drafts of version 2 called them."""
 
@@ -116,7 +120,7 @@ def _table(kind: type[Table], hdu: HDU, log: Log) -> Table:
             units[column.name] = field.unit
     values |= _keywords(kind, hdu, found, label, log)
     try:
-        return kind(
+        table = kind(
             **values,
             units=units,
             extra=extra,
@@ -128,6 +132,17 @@ def _table(kind: type[Table], hdu: HDU, log: Log) -> Table:
         )
     except ValueError as fault:
         raise Malformed(str(fault).removeprefix(f"{kind.extname}: ")) from fault
+    return _with_ids(table, NUMBERED[kind], log) if kind in NUMBERED else table
+
+
+def _with_ids(table: Table, column: str, log: Log) -> Table:
+    """The rows of a table that its ids tell apart: those that have one."""
+    none = table[column] == NO_ID
+    if not none.any():
+        return table
+    what = f"column {column} is NULL in {np.count_nonzero(none)} rows"
+    log.unusable(table.label, what, "these rows are left out")
+    return table.select(~none)
 
 
 def _sorted_out(
@@ -170,36 +185,62 @@ def _values(content: BinTable, field: Field, column: Column, label: str, log: Lo
     values = content.values(field)
     if column.code == "A":
         return _texts(values)
+    nulls = content.nulls(field)
     if column.code == "L":
-        values = _logical(values, field, label, log)
-    elif column.code == "I" and field.code == "K" and values.size:
-        limit = np.iinfo(np.int32)
-        if values.min() < limit.min or values.max() > limit.max:
-            raise Malformed(f"column {name} has numbers beyond 32 bits")
+        values = _logical(values, nulls, field, label, log)
+    else:
+        values = _without_nulls(values, nulls, column, label, log)
     values = _shaped(values, column)
     if column.code == "E" and field.code == "D":
         log.note(label, f"column {name} is in double precision", "rounded to single precision")
     with np.errstate(over="ignore"):
         values = values.astype(DTYPES[column.code], copy=column.code != "L")
-    if column.unit not in (OPEN, ""):
-        scale = factor(column.unit, field.unit)
-        if scale is None and column.unit == "m" and column.fill is None:
-            raise Malformed(
-                f"column {name} has the unit {field.unit!r}, which is no length: convert it to m"
-            )
-        if scale is None:
-            log.suspicious(
-                label,
-                f"column {name} has the unit {field.unit!r}",
-                f"its numbers are taken as {column.unit}",
-            )
-        elif scale != 1.0:
-            values *= values.dtype.type(scale)
-            log.note(label, f"column {name} is in {field.unit}", f"converted to {column.unit}")
+    return _in_unit_of_standard(values, field.unit, column, label, log)
+
+
+def _without_nulls(
+    values: np.ndarray, nulls: np.ndarray | None, column: Column, label: str, log: Log
+) -> np.ndarray:
+    """Numbers, with NaN where the file has none, and `NO_ID` in columns of ids."""
+    whole = column.code in "IJ"
+    if nulls is not None:
+        log.note(
+            label,
+            f"column {column.name}: {np.count_nonzero(nulls)} values are NULL",
+            "taken as unknown ids" if whole else "taken as NaN: not measured",
+        )
+        values = values.astype(np.int64 if whole else np.float64)
+        values[nulls] = NO_ID if whole else np.nan
+    if whole and values.dtype.itemsize == 8 and values.size:
+        limit = np.iinfo(np.int32)
+        if not (values.min() >= limit.min and values.max() <= limit.max):  # NaN is neither
+            raise Malformed(f"column {column.name} has numbers beyond 32 bits")
     return values
 
 
-def _logical(stored: np.ndarray, field: Field, label: str, log: Log) -> np.ndarray:
+def _in_unit_of_standard(
+    values: np.ndarray, unit: str, column: Column, label: str, log: Log
+) -> np.ndarray:
+    """`values`, which the file states in `unit`, in the unit of the standard."""
+    name = column.name
+    if column.unit in (OPEN, ""):
+        return values
+    scale = factor(column.unit, unit)
+    if scale is None and column.unit == "m" and column.fill is None:
+        raise Malformed(f"column {name} has the unit {unit!r}, which is no length: convert it to m")
+    if scale is None:
+        log.suspicious(
+            label, f"column {name} has the unit {unit!r}", f"its numbers are taken as {column.unit}"
+        )
+    elif scale != 1.0:
+        values *= values.dtype.type(scale)
+        log.note(label, f"column {name} is in {unit}", f"converted to {column.unit}")
+    return values
+
+
+def _logical(
+    stored: np.ndarray, nulls: np.ndarray | None, field: Field, label: str, log: Log
+) -> np.ndarray:
     """Truth of the bytes T and F; others are undefined, which in a FLAG means not to be used.
 
     In a column of numbers, as some write it, 0 stands for false.
@@ -207,7 +248,7 @@ def _logical(stored: np.ndarray, field: Field, label: str, log: Log) -> np.ndarr
     name = field.name
     if field.code != "L":
         log.note(label, f"column {name} holds numbers", "0 taken as false, others as true")
-        return stored != 0
+        return (stored != 0) | (False if nulls is None else nulls)
     true = stored != ord("F")
     undefined = np.count_nonzero(true) - np.count_nonzero(stored == ord("T"))
     if undefined:

@@ -92,7 +92,50 @@ def one_flagged(flags):
     return flags
 
 
+def with_null(name, old, form, null, where, scale=None):
+    """An edit that writes a column in whole numbers, one of them NULL, perhaps scaled."""
+
+    def stored(values):
+        whole = np.round(values / (scale or 1)).astype(int)
+        whole[where] = null
+        return whole
+
+    def edit(opened):
+        column(name, old, form, stored)(opened)
+        number = opened[name].columns.names.index(old) + 1
+        opened[name].header[f"TNULL{number}"] = null
+        if scale:
+            opened[name].header[f"TSCAL{number}"] = scale
+
+    return edit
+
+
 FAULTS = {
+    "NULL in scaled data": (
+        with_null("OI_VIS2", "VIS2DATA", "3I", -32768, (1, 2), 1e-4),
+        NOTE, r"VIS2DATA: 1 values are NULL", (17, 12),
+    ),
+    "NULL in scaled errors": (
+        with_null("OI_T3", "T3PHIERR", "3J", 0, (slice(None), 0), 1e-4),
+        NOTE, r"T3PHIERR: 4 values are NULL", (18, 8),
+    ),
+    "NULL in whole times": (
+        with_null("OI_VIS2", "MJD", "K", 99, 0), NOTE, r"MJD: 1 values are NULL", (15, 12),
+    ),
+    "NULL in flags": (
+        with_null("OI_VIS2", "FLAG", "3B", 0, (slice(None), 0)), NOTE, r"holds numbers", (0, 12),
+    ),
+    "no target": (
+        with_null("OI_VIS2", "TARGET_ID", "I", 99, 0),
+        UNUSABLE, r"1 rows have TARGET_ID -32768", (15, 12),
+    ),
+    "a number that stands for NULL": (
+        with_null("OI_T3", "TARGET_ID", "B", 1, 0), NOTE, r"TARGET_ID: 4 values are NULL", (18, 0),
+    ),
+    "no station": (
+        with_null("OI_VIS2", "STA_INDEX", "2I", -1, (0, 1)),
+        SUSPICIOUS, r"1 entries, such as -32768", KEPT,
+    ),
     "flags as numbers": (
         column("OI_VIS2", "FLAG", "3I", one_flagged), NOTE, r"FLAG holds numbers", (17, 12),
     ),
@@ -243,6 +286,37 @@ def test_a_sound_file_has_no_fault(rng, tmp_path):
     file = load(path)
     problems = [p.what for p in file.problems + check(file)]
     assert problems == ["column T3AMP holds no number"]
+
+
+def test_nulls_of_ids_belong_to_nothing(rng, tmp_path):
+    """NULL in OI_TARGET and in a row of data are not the same star; nor are stations and data."""
+
+    def edit(opened):
+        for name in ("OI_TARGET", "OI_VIS2"):
+            number = opened[name].columns.names.index("TARGET_ID") + 1
+            opened[name].header[f"TNULL{number}"] = 2
+        for name in ("OI_ARRAY", "OI_VIS2"):
+            number = opened[name].columns.names.index("STA_INDEX") + 1
+            opened[name].header[f"TNULL{number}"] = 4
+        number = opened["OI_VIS2"].columns.names.index("CORRINDX_VIS2DATA") + 1
+        opened["OI_VIS2"].header[f"TNULL{number}"] = 1
+
+    path = damaged(rng, tmp_path, edit, make_file=make.full)
+    file = load(path)
+    assert file.target.target.tolist() == ["Harrow 7"]
+    said = [str(p) for p in file.problems + check(file)]
+    for words in (
+        "OI_TARGET (HDU 1): column TARGET_ID is NULL in 1 rows; these rows are left out",
+        "OI_ARRAY (HDU 2): column STA_INDEX is NULL in 1 rows; these rows are left out",
+        "OI_VIS2 (HDU 8): column STA_INDEX: 3 values are NULL; taken as unknown ids",
+        "OI_VIS2 (HDU 8): column CORRINDX_VIS2DATA: 1 values are NULL; taken as unknown ids",
+    ):
+        assert words in said
+    observation = read(path)
+    assert observation.stations == ("S1", "S2", "S3")
+    np.testing.assert_array_equal((observation.v2.stations < 0).any(axis=1).sum(), 3 * 3 - 1)
+    # The three data of the first row were numbers 1 to 3, which correlated with each other.
+    np.testing.assert_array_equal(observation.correlation.toarray()[:3], np.eye(28)[:3])
 
 
 def test_strict_refuses_what_is_suspicious_but_not_a_note(rng, tmp_path):
