@@ -1,4 +1,4 @@
-"""Observation: one target, one epoch, one instrument set-up, as plain arrays.
+"""Observation: one target, one night, and whatever instruments took part, as plain arrays.
 
 Sky: x grows to the East, y to the North. A spatial frequency is (u, v) / wavelength with (u, v)
 as stored in OIFITS, and V(u, v) = integral I(x, y) exp(-2 pi i (u x + v y)) dx dy.

@@ -21,8 +21,8 @@ from ..sampling import Sampling
 _SINGULAR = 1e-8
 """Eigenvalues of a correlation block below this part of the largest are taken for zero: sets of
 closure phases are redundant, and what their noise cannot reach their signal cannot reach either."""
-_MOST_PISTONS = 10**8
-"""Data times what the phases of each exposure may have in common: 800 MB."""
+_MOST_PISTONS = 4 * 10**7
+"""Data times what the phases of each exposure may have in common: 1 GB while it is made ready."""
 _INDEFINITE = -1e-3
 """An eigenvalue below this part of the largest is no rounding: the matrix is not a correlation."""
 
