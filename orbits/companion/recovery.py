@@ -32,6 +32,9 @@ from .stack import COMPANION, Stack
 
 LOBE = 0.5
 """A lobe is where rho stays above this; a companion found on the lobe of its place is found."""
+TWIN = 0.99
+"""A place of such a rho cannot be told from that of the companion: without phases the opposite one.
+What is found there is found, and listed with its twin."""
 _HOT = 1.5
 """Noise, in sigma, from which a peak of it may be taken for the companion."""
 _CLIMB = 1.5
@@ -240,10 +243,12 @@ def _vertex(top, before, after):
 
 @compiled
 def _lobe(rho, side, place):
-    """Which pixels are on the lobe of a place: joined to it by a rho above `LOBE`."""
+    """Which pixels are joined by a rho above `LOBE` to a place, or to its twin."""
     lobe = np.zeros(rho.size, dtype=np.bool_)
-    lobe[place] = True
     waiting = [place]
+    waiting.extend(_peaks(rho, side, TWIN))
+    for q in waiting:
+        lobe[q] = True
     while len(waiting):
         q = waiting.pop()
         row, column = q // side, q % side

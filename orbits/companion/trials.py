@@ -13,7 +13,7 @@ from ..observation import Observation
 from .injection import View, exchange
 from .maps import Field
 from .night import Night, NightSearch
-from .recovery import LOBE
+from .recovery import LOBE, TWIN
 
 _BETWEEN = 9
 """Points on the way from where a companion was put to where it was found."""
@@ -67,10 +67,27 @@ def with_companion(night: Night, *, x: float, y: float, contrast: float) -> Obse
 
 
 def same_lobe(field: Field, start: tuple[float, float], end: tuple[float, float]) -> bool:
-    """Whether the response to a companion at `start` stays high all the way to `end` (mas)."""
+    """Whether the response to a companion at `start` stays high all the way to `end` (mas).
+
+    Or to its opposite, where that cannot be told from it.
+    """
+    twin = -start[0], -start[1]
+    if _rho(field, start, *np.transpose([twin]))[0] > TWIN and _joined(field, twin, end):
+        return True
+    return _joined(field, start, end)
+
+
+def _joined(field: Field, start: tuple[float, float], end: tuple[float, float]) -> bool:
     part = np.linspace(0.0, 1.0, _BETWEEN)
     x, y = (a + part * (b - a) for a, b in zip(start, end, strict=True))
+    return bool(_rho(field, start, x, y).min() > LOBE)
+
+
+def _rho(field: Field, start: tuple[float, float], x: np.ndarray, y: np.ndarray) -> np.ndarray:
+    """(p,) response at places x, y to a companion at `start`, all in mas; see `recovery`."""
+    x, y = np.append(start[0], x), np.append(start[1], y)
     white = field.project(field.covariance.whiten(field.response.at(x, y).T))
     size = np.linalg.norm(white, axis=0)
-    rho = np.divide(white[:, 0] @ white, size[0] * size, out=np.zeros_like(size), where=size > 0)
-    return bool(rho.min() > LOBE)
+    scale = size[0] * size
+    rho = np.divide(white[:, 0] @ white, scale, out=np.zeros_like(size), where=scale > 0)
+    return rho[1:]

@@ -209,11 +209,19 @@ def test_two_nights_go_deeper_by_the_root_of_two(observation, result):
     assert_allclose(ratio, np.sqrt(0.5), rtol=0.12)
 
 
-def test_without_closure_phases_there_is_no_published_route(observation):
+def test_without_closure_phases_opposite_places_are_one(observation):
+    """V2 does not tell them apart: a companion found at either is found, and none is lost."""
     alone = replace(observation, t3=Observable.empty(2))
-    result = limits(alone, **QUICK)
+    result = limits(alone, trials=3, **QUICK)
     assert "published" not in result.maps
     assert json.loads(json.dumps(result.to_json(), allow_nan=False))["curve"]
+    seen = np.isfinite(result.expected)
+    assert (result.maps["recovered"] < 4 * result.expected)[seen].all()
+    # Half of them lie opposite; that one of three is missed has a chance of a quarter.
+    assert sum(one.found for one in result.trials) >= 2
+    opposite = (6.0, -9.0), (-6.0, 9.0)
+    fields = [_search(one).night(one).field for one in (alone, observation)]
+    assert [same_lobe(field, *opposite) for field in fields] == [True, False]
 
 
 def test_tables_have_units_and_conversions(result):
