@@ -14,6 +14,7 @@ from .blocks import HDU, read_hdus
 from .model import KINDS, Array, DataTable, OIFile, OtherHDU, Target
 from .schema import (
     DTYPES,
+    FLUX_ONLY,
     NWAVE,
     OPEN,
     Column,
@@ -107,6 +108,9 @@ def _table(kind: type[Table], hdu: HDU, log: Log) -> Table:
         if column.name not in found:
             _missing(column, label, log)
             continue
+        if column.unit == FLUX_ONLY:
+            flux = hdu.header.text("AMPTYP").lower() == "correlated flux"
+            column = replace(column, unit=OPEN if flux else "")
         field = found[column.name]
         try:
             values[attribute(column.name)] = _values(content, field, column, label, log)
@@ -223,18 +227,20 @@ def _in_unit_of_standard(
 ) -> np.ndarray:
     """`values`, which the file states in `unit`, in the unit of the standard."""
     name = column.name
-    if column.unit in (OPEN, ""):
+    if column.unit == OPEN or (not column.unit and column.code not in "ED"):
         return values
     scale = factor(column.unit, unit)
     if scale is None and column.unit == "m" and column.fill is None:
         raise Malformed(f"column {name} has the unit {unit!r}, which is no length: convert it to m")
     if scale is None:
+        meant = column.unit or "plain numbers"
         log.suspicious(
-            label, f"column {name} has the unit {unit!r}", f"its numbers are taken as {column.unit}"
+            label, f"column {name} has the unit {unit!r}", f"its numbers are taken as {meant}"
         )
     elif scale != 1.0:
         values *= values.dtype.type(scale)
-        log.note(label, f"column {name} is in {unit}", f"converted to {column.unit}")
+        meant = column.unit or "plain numbers"
+        log.note(label, f"column {name} is in {unit}", f"converted to {meant}")
     return values
 
 

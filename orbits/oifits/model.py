@@ -17,7 +17,7 @@ import numpy as np
 
 from ..observation import sides
 from ..problems import Problem
-from .schema import NWAVE, OPEN, Table, column, keyword
+from .schema import FLUX_ONLY, NWAVE, OPEN, Table, column, keyword
 
 
 @dataclass(kw_only=True, eq=False)
@@ -142,8 +142,8 @@ class Vis(BaselineTable):
     time: np.ndarray = column("D", unit="s", fill=0.0)
     mjd: np.ndarray = column("D", unit="day")
     int_time: np.ndarray = column("D", unit="s", fill=0.0)
-    visamp: np.ndarray = column("D", NWAVE, fill=np.nan)
-    visamperr: np.ndarray = column("D", NWAVE, fill=np.nan)
+    visamp: np.ndarray = column("D", NWAVE, unit=FLUX_ONLY, fill=np.nan)
+    visamperr: np.ndarray = column("D", NWAVE, unit=FLUX_ONLY, fill=np.nan)
     corrindx_visamp: np.ndarray | None = column("J", since=2, optional=True)
     visphi: np.ndarray = column("D", NWAVE, unit="deg", fill=np.nan)
     visphierr: np.ndarray = column("D", NWAVE, unit="deg", fill=np.nan)
@@ -347,6 +347,8 @@ class OIFile:
     """The files it was read from."""
     problems: list[Problem] = field(default_factory=list)
     """What departed from the standard when it was read."""
+    clashes: list[Problem] = field(default_factory=list)
+    """What did not agree between the files that it was joined from."""
 
     @property
     def source(self) -> str:

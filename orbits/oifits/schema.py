@@ -16,6 +16,10 @@ NWAVE = "nwave"
 OPEN = "open"
 """Stands for a unit that the standard leaves to the file, which must state one."""
 
+FLUX_ONLY = "flux only"
+"""Stands for no unit, unless the amplitudes of the table are correlated fluxes: then the file
+states one."""
+
 DTYPES = {
     "L": np.dtype(bool),
     "I": np.dtype(np.int32),  # wider than the file's int16, so that no foreign id can wrap

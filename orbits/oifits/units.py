@@ -11,11 +11,13 @@ SYNONYMS = {
     "m/s": {"m/s", "m s-1", "m s**-1", "m.s-1"},
     "deg/yr": {"deg/yr", "deg/year", "degrees/year", "deg yr-1", "deg.yr-1"},
     "arcsec": {"arcsec", "arcsecond", "arcseconds", '"'},
-    "": {"", "none", "-", "adim", "dimensionless"},
+    "": {"", "none", "-", "1", "adim", "dimensionless", "unitless", "no unit", "n/a"},
 }
 """Ways to write each unit of the standard, in lower case."""
 
 FACTORS = {
+    ("", "%"): 1e-2,
+    ("", "percent"): 1e-2,
     ("deg", "rad"): math.degrees(1.0),
     ("deg", "radian"): math.degrees(1.0),
     ("deg", "radians"): math.degrees(1.0),

@@ -12,7 +12,7 @@ from .blocks import BLOCK
 from .checksum import encode, ones_sum
 from .model import OIFile
 from .observables import timed
-from .schema import OPEN, Column, Table, keywords
+from .schema import FLUX_ONLY, OPEN, Column, Table, keywords
 from .utc import iso
 
 _NUMPY = {"L": "S1", "I": ">i2", "J": ">i4", "E": ">f4", "D": ">f8", "C": ">c8"}
@@ -134,7 +134,8 @@ def _description(table: Table, known: Column) -> dict[str, object]:
     values = table[known.name]
     repeat = _width(known, values) if known.code == "A" else int(np.prod(values.shape[1:]))
     cards: dict[str, object] = {"TTYPE": known.name, "TFORM": f"{repeat}{known.code}"}
-    unit = table.units.get(known.name, "") if known.unit == OPEN else known.unit
+    stated = known.unit in (OPEN, FLUX_ONLY)
+    unit = table.units.get(known.name, "") if stated else known.unit
     if unit:
         cards["TUNIT"] = unit
     if len(known.shape) == 2:

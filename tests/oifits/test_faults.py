@@ -6,7 +6,7 @@ import pytest
 from astropy.io import fits
 
 from orbits import InputError, read
-from orbits.oifits import Flux, Wavelength, load
+from orbits.oifits import Flux, Target, Wavelength, load
 from orbits.oifits.checking import check
 from orbits.problems import Severity
 
@@ -106,6 +106,19 @@ def with_null(name, old, form, null, where, scale=None):
         opened[name].header[f"TNULL{number}"] = null
         if scale:
             opened[name].header[f"TSCAL{number}"] = scale
+
+    return edit
+
+
+def _twice(declination):
+    """An edit that adds a second row for the target, which stands at RA 84.1, Dec -1.2 deg."""
+
+    def edit(opened):
+        place = opened.index_of("OI_TARGET")
+        table = opened[place]
+        rows = np.concatenate([table.data, table.data])
+        rows["DECEP0"][1] = declination
+        opened[place] = fits.BinTableHDU(rows, header=table.header)
 
     return edit
 
@@ -254,6 +267,16 @@ FAULTS = {
     "no DATE-OBS": (keyword("OI_VIS2", "DATE-OBS", None), NOTE, r"DATE-OBS is missing", KEPT),
     "ids of 0": (values("OI_ARRAY", "STA_INDEX", 0, 3), NOTE, r"STA_INDEX has numbers below", KEPT),
     "TIME in version 2": (values("OI_VIS2", "TIME", 5.0, 0), NOTE, r"TIME is not 0", KEPT),
+    "V2 in an odd unit": (
+        unit("OI_VIS2", "VIS2DATA", "Jy"), SUSPICIOUS, r"VIS2DATA has the unit 'Jy'", KEPT,
+    ),
+    "unit of no unit": (
+        unit("OI_VIS2", "VIS2ERR", "0.01"), SUSPICIOUS, r"VIS2ERR has the unit '0.01'", KEPT,
+    ),
+    "a target twice at two places": (
+        _twice(declination=48.8), SUSPICIOUS, r"TARGET_ID 1 appears twice, 50 deg apart", KEPT,
+    ),
+    "a target twice": (_twice(declination=-1.201), NOTE, r"TARGET_ID 1 appears twice$", KEPT),
     "odd unit": (unit("OI_T3", "T3PHI", "furlong"), SUSPICIOUS, r"the unit 'furlong'", KEPT),
     "odd FRAME": (keyword("OI_ARRAY", "FRAME", "LOCAL"), NOTE, r"FRAME is 'LOCAL'", KEPT),
     "OI_T3 without phases": (
@@ -319,6 +342,26 @@ def test_nulls_of_ids_belong_to_nothing(rng, tmp_path):
     np.testing.assert_array_equal(observation.correlation.toarray()[:3], np.eye(28)[:3])
 
 
+def test_two_stars_of_one_name_in_a_file_are_told_apart(rng, tmp_path):
+    file = make.small(rng)
+    file.target = Target(
+        target_id=[1, 2, 3], target=["STAR", "star", "Star"], raep0=[84.1, 200.0, 84.11],
+        decep0=[-1.2, 50.0, -1.2],
+    )  # fmt: skip
+    file.data[1].target_id[:] = [2, 2, 3, 3]
+    file.write(tmp_path / "night.fits")
+    again = load(tmp_path / "night.fits")
+    assert again.target.target.tolist() == ["STAR", "star_2", "Star"]
+    # By the spherical law of cosines, 107.26 deg.
+    assert [str(p) for p in again.problems if p.severity == SUSPICIOUS] == [
+        "OI_TARGET (HDU 1): two targets 'star' are 107 deg apart; the second is called 'star_2'"
+    ]
+    with pytest.raises(InputError, match="several targets; choose one of 'STAR', 'star_2'"):
+        read(tmp_path / "night.fits")
+    one, two = (read(tmp_path / "night.fits", target=name) for name in ("star", "star_2"))
+    assert (len(one.v2), len(one.t3), len(two.v2), len(two.t3)) == (18, 6, 0, 6)
+
+
 def test_strict_refuses_what_is_suspicious_but_not_a_note(rng, tmp_path):
     path = damaged(rng, tmp_path, lambda opened: None)
     assert len(read(path, strict=True).v2) == 18
@@ -358,6 +401,26 @@ def test_stated_units_are_converted(rng, tmp_path):
     np.testing.assert_allclose(file.wavelengths[0].eff_wave, plain.wavelengths[0].eff_wave, 2e-7)
     np.testing.assert_allclose(file.data[1].t3phi, plain.data[1].t3phi, rtol=1e-14)
     np.testing.assert_allclose(file.arrays[0].staxyz, make.STATIONS, rtol=1e-14)
+
+
+def test_percent_is_converted(rng, tmp_path):
+    plain = make.small(np.random.default_rng(3))
+
+    def edit(opened):
+        table = opened["OI_VIS2"]
+        table.data["VIS2DATA"] *= 100
+        table.data["VIS2ERR"] *= 100
+        table.columns["VIS2DATA"].unit = "%"  # which holds for the errors too
+
+    file = load(damaged(np.random.default_rng(3), tmp_path, edit))
+    # Two roundings, each by half of 2^-52.
+    np.testing.assert_allclose(file.data[0].vis2data, plain.data[0].vis2data, rtol=3e-16)
+    np.testing.assert_allclose(file.data[0].vis2err, plain.data[0].vis2err, rtol=3e-16)
+    notes = [str(p) for p in file.problems if "is in %" in p.what]
+    assert notes == [
+        f"OI_VIS2 (HDU 4): column {name} is in %; converted to plain numbers"
+        for name in ("VIS2DATA", "VIS2ERR")
+    ]
 
 
 def test_errors_without_a_unit_share_that_of_their_data(rng, tmp_path):

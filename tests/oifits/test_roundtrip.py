@@ -1,6 +1,7 @@
 """Reading, writing and reading again changes nothing."""
 
 import warnings
+from dataclasses import replace
 
 import numpy as np
 import oifits_files as make
@@ -59,6 +60,25 @@ def test_columns_of_varying_length_are_kept(rng, tmp_path):
         with fits.open(tmp_path / f"{name}.fits", checksum=True) as opened:
             got = opened["OI_VIS2"].data["SCORES"]
             assert [part.tolist() for part in got] == [marks[row].tolist() for row in rows]
+
+
+def test_correlated_fluxes_keep_their_unit(rng, tmp_path):
+    """VISAMP has a unit where AMPTYP is 'correlated flux', and only there."""
+    file = make.full(rng)
+    units = {**file.data[0].units, "VISAMP": "Jy", "VISAMPERR": "Jy"}
+    file.data[0] = replace(file.data[0], amptyp="correlated flux", units=units)
+    file.write(tmp_path / "flux.fits")
+    again = load(tmp_path / "flux.fits")
+    make.assert_same(file, again)
+    again.write(tmp_path / "again.fits")
+    with fits.open(tmp_path / "again.fits") as opened:
+        assert [opened["OI_VIS"].columns[name].unit for name in ("VISAMP", "VISAMPERR")] == [
+            "Jy"
+        ] * 2
+    file.data[0] = replace(file.data[0], amptyp="absolute")
+    file.write(tmp_path / "odd.fits")
+    said = [p.what for p in load(tmp_path / "odd.fits").problems]
+    assert said[:1] == ["column VISAMP has the unit 'Jy'"]
 
 
 def test_a_gzipped_file_reads_like_the_plain_one(rng, tmp_path):
