@@ -10,9 +10,10 @@ from dataclasses import replace
 import numpy as np
 
 from .correlation import Cut, renumbered
-from .links import mapped, plain
+from .links import mapped
 from .model import T3, Array, DataTable, Flux, OIFile, Vis
 from .observables import timed
+from .stars import plain
 from .utc import iso
 
 UNKNOWN_ARRAY = "UNKNOWN"

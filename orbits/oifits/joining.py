@@ -5,20 +5,24 @@ from dataclasses import replace
 
 import numpy as np
 
-from .links import mapped, plain, same_content
+from ..problems import Log
+from .links import mapped, same_content
 from .model import Array, OIFile, Target, Wavelength
 from .schema import Table, attribute, columns
+from .stars import Stars, places, plain
 
 
 def join(files: Sequence[OIFile]) -> OIFile:
     """One `OIFile` with all tables of `files`.
 
-    Targets of one name (but for case and blanks) become one. Spectral set-ups, arrays and
-    correlations that share a name but differ are told apart by a number after the name.
+    Targets of one name (but for case and blanks) become one, unless they stand at different
+    places. Those, and spectral set-ups, arrays and correlations that share a name but differ, are
+    told apart by a number after the name.
     """
     if len(files) == 1:
         return files[0]
-    target, ids = _targets(files)
+    log = Log(", ".join(name for file in files for name in file.files))
+    target, ids = _targets(files, log)
     wavelengths: dict[str, Wavelength] = {}
     arrays: dict[str, Array] = {}
     correlations: dict[str, Table] = {}
@@ -66,21 +70,29 @@ def join(files: Sequence[OIFile]) -> OIFile:
         version=max(file.version for file in files),
         files=tuple(name for file in files for name in file.files),
         problems=[problem for file in files for problem in file.problems],
+        clashes=log.problems,
     )
 
 
-def _targets(files: Sequence[OIFile]) -> tuple[Target, list[dict[int, int]]]:
+def _targets(files: Sequence[OIFile], log: Log) -> tuple[Target, list[dict[int, int]]]:
     """One table of all targets, and for each file the new id of each of its ids."""
+    stars = Stars()
     numbers: dict[str, int] = {}
     maps: list[dict[int, int]] = []
     parts: list[Target] = []
     for file in files:
-        names = [plain(name) for name in file.target.target.tolist()]
-        fresh = [n not in numbers and n not in names[:i] for i, n in enumerate(names)]
-        for name in names:
-            numbers.setdefault(name, len(numbers) + 1)
-        maps.append({int(i): numbers[n] for i, n in zip(file.target.target_id, names, strict=True)})
-        parts.append(file.target.select(np.array(fresh, dtype=bool)))
+        names, fresh, ids = [], [], []
+        for wanted, place in zip(file.target.target.tolist(), places(file.target), strict=True):
+            name, away = stars.name(wanted, place)
+            names.append(name)
+            fresh.append(plain(name) not in numbers)
+            ids.append(numbers.setdefault(plain(name), len(numbers) + 1))
+            if away:
+                what = f"target {wanted!r} of {file.source} is {away:.3g} deg from that of others"
+                log.suspicious(Target.extname, what, f"taken as another star, {name!r}")
+        maps.append(dict(zip(file.target.target_id.tolist(), ids, strict=True)))
+        table = replace(file.target, target=np.array(names, dtype=str))
+        parts.append(table.select(np.array(fresh, dtype=bool)))
     joined: dict[str, np.ndarray | None] = {}
     for column in columns(Target):
         values = [part[column.name] for part in parts]
@@ -91,7 +103,26 @@ def _targets(files: Sequence[OIFile]) -> tuple[Target, list[dict[int, int]]]:
             ]
         joined[attribute(column.name)] = np.concatenate(values) if known else None
     joined["target_id"] = np.arange(1, len(numbers) + 1)
-    return Target(**joined, cards=parts[0].cards), maps
+    return Target(**joined, **_foreign([p for p in parts if len(p)] or parts[:1], log)), maps
+
+
+def _foreign(parts: Sequence[Target], log: Log) -> dict[str, object]:
+    """What the standard does not know of the tables: cards of the first, columns that all have."""
+    forms = [{name: extra.cards for name, extra in part.extra.items()} for part in parts]
+    names = dict.fromkeys(name for form in forms for name in form)
+    # Columns of varying length point into their own table.
+    simple = len(parts) == 1 or not any(part.heap for part in parts)
+    kept = [n for n in names if simple and all(form.get(n) == forms[0].get(n) for form in forms)]
+    lost = [name for name in names if name not in kept]
+    if lost:
+        what = f"the unknown columns {', '.join(lost)} are not the same in all files"
+        log.note(Target.extname, what, "left out of what is joined")
+    first = parts[0]
+    extra = {
+        name: replace(first.extra[name], raw=np.concatenate([p.extra[name].raw for p in parts]))
+        for name in kept
+    }
+    return {"extra": extra, "heap": first.heap if simple else b"", "cards": first.cards}
 
 
 def _place(table: Table, key: str, placed: dict[str, Table], *, share: bool = True) -> str:

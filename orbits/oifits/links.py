@@ -1,5 +1,6 @@
 """Links between the tables of one file: names and ids resolved, once, when it is read."""
 
+from dataclasses import replace
 from pathlib import Path
 from typing import TypeVar
 
@@ -19,6 +20,7 @@ from .model import (
     Wavelength,
 )
 from .schema import Table, columns, keywords
+from .stars import SAME_PLACE, Stars, places, plain
 
 T = TypeVar("T", bound=Table)
 
@@ -85,24 +87,39 @@ def _target(path: Path, tables: list[Target], log: Log) -> Target:
     if not len(table):
         raise InputError(f"{path}: {table.label} has no rows")
     keep = np.ones(len(table), dtype=bool)
-    first: dict[int, str] = {}
-    for row, (number, name) in enumerate(zip(table.target_id, table.target, strict=True)):
-        known = first.get(int(number))
-        if known is None:
-            first[int(number)] = str(name)
+    first: dict[int, int] = {}
+    where = places(table)
+    for row, number in enumerate(table.target_id.tolist()):
+        known = first.setdefault(number, row)
+        if known == row:
+            continue
+        one, two = str(table.target[known]), str(table.target[row])
+        if plain(one) != plain(two):
+            raise InputError(
+                f"{path}: {table.label}: TARGET_ID {number} is both {one!r} and {two!r}"
+            )
+        keep[row] = False
+        away = where[known].away(where[row]) or 0.0
+        if away >= SAME_PLACE:
+            what = f"TARGET_ID {number} appears twice, {away:.3g} deg apart"
+            log.suspicious(table.label, what, "the first is used")
         else:
-            if plain(known) != plain(str(name)):
-                raise InputError(
-                    f"{path}: {table.label}: TARGET_ID {number} is both {known!r} and {str(name)!r}"
-                )
-            keep[row] = False
             log.note(table.label, f"TARGET_ID {number} appears twice", "one row is kept")
-    return table if keep.all() else table.select(keep)
+    return _told_apart(table if keep.all() else table.select(keep), log)
 
 
-def plain(name: str) -> str:
-    """A name for comparison: without regard to case and repeated blanks."""
-    return " ".join(name.split()).casefold()
+def _told_apart(table: Target, log: Log) -> Target:
+    """The targets with names that no two stars share."""
+    stars = Stars()
+    given = [
+        stars.name(name, place)
+        for name, place in zip(table.target.tolist(), places(table), strict=True)
+    ]
+    for wanted, (name, away) in zip(table.target.tolist(), given, strict=True):
+        if away:
+            what = f"two targets {wanted!r} are {away:.3g} deg apart"
+            log.suspicious(table.label, what, f"the second is called {name!r}")
+    return replace(table, target=np.array([name for name, _ in given], dtype=str))
 
 
 def mapped(ids: np.ndarray, new: dict[int, int]) -> np.ndarray:

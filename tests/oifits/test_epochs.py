@@ -6,12 +6,14 @@ import astropy.units as u
 import numpy as np
 import oifits_files as make
 import pytest
+from astropy.io import fits
 from astropy.time import Time
 
 from orbits import InputError, read, read_epochs
-from orbits.oifits import ErrorBars, Selection, Vis, observations, select
-from orbits.oifits.checking import check
+from orbits.oifits import ErrorBars, Selection, Target, Vis, observations, select
+from orbits.oifits.checking import check, check_together
 from orbits.oifits.joining import join
+from orbits.oifits.schema import ExtraColumn
 
 
 @pytest.fixture
@@ -234,6 +236,59 @@ def test_files_join_by_content_not_by_number(rng, tmp_path):
     assert other.instruments == ("SIM_H_2",)
     np.testing.assert_array_equal(np.unique(other.v2.wavelength), three.wavelengths[0].eff_wave)
     assert (first.files, second.files) == ((str(paths[0]),), (str(paths[1]),))
+
+
+FAR = {"raep0": [200.0], "decep0": [50.0]}
+
+
+@pytest.mark.parametrize(
+    ("other", "one"),
+    [
+        (FAR, False),
+        ({"raep0": [84.1], "decep0": [-1.2 + 1.01 / 60]}, False),
+        ({"raep0": [84.1 - 360], "decep0": [-1.2 + 0.99 / 60]}, True),
+        ({"raep0": [0.0], "decep0": [0.0]}, True),
+        ({"raep0": [np.nan], "decep0": [-1.2]}, True),
+        ({**FAR, "equinox": [1950.0]}, True),
+    ],
+    ids=["far", "beyond an arcminute", "within", "0, 0", "NaN", "another equinox"],
+)
+def test_a_name_is_one_star_unless_it_stands_at_two_places(rng, tmp_path, other, one):
+    first, second, third = (make.small(rng) for _ in range(3))
+    second.target = Target(target_id=[1], target=["harrow 7"], **other)
+    third.target.target[:] = "Calibrator"
+    third.data = third.data[:1]
+    for number, file in enumerate((first, third, second)):
+        for table in file.data:
+            table.mjd[:] += 0.02 * number
+        file.write(tmp_path / f"{number}.fits")
+    paths = [tmp_path / f"{number}.fits" for number in range(3)]
+    night = read(paths, target="Harrow 7")
+    said = [str(p) for p in night.problems if "from that of others" in p.what]
+    if one:
+        assert (len(night.v2), said) == (36, [])
+        return
+    assert (len(night.v2), len(said)) == (18, 1)
+    assert f"target 'harrow 7' of {paths[2]} is " in said[0]
+    assert said[0].endswith("taken as another star, 'harrow 7_2'")
+    seen = read(paths, target="Harrow 7_2")
+    np.testing.assert_array_equal(seen.v2.value, second.data[0].vis2data.ravel())
+
+
+def test_unknown_columns_of_targets_survive_joining_if_they_are_alike(rng, tmp_path):
+    files = [make.small(rng) for _ in range(3)]
+    for number, file in enumerate(files):
+        file.target.target[:] = f"Star {number}"
+        form = "D" if number < 2 else "E"
+        raw = np.array([[4.0 + number]], dtype=">f8" if number < 2 else ">f4").view(np.uint8)
+        file.target.extra["MAGNITUDE"] = ExtraColumn({"TTYPE": "MAGNITUDE", "TFORM": form}, raw)
+    join(files[:2]).write(tmp_path / "both.fits")
+    with fits.open(tmp_path / "both.fits") as opened:
+        assert opened["OI_TARGET"].data["MAGNITUDE"].tolist() == [4.0, 5.0]
+    whole = join(files)
+    assert not whole.target.extra
+    (said,) = [p for p in check_together(whole) if "MAGNITUDE" in p.what]
+    assert said.done == "left out of what is joined"
 
 
 def test_each_night_names_the_files_that_its_data_come_from(rng, tmp_path):

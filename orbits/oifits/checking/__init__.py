@@ -25,4 +25,4 @@ def check_together(file: OIFile) -> list[Problem]:
     """What is wrong with files, each sound by itself, that `file` was joined from."""
     log = Log(file.source)
     repeats.between_files(file, log)
-    return log.problems
+    return [*file.clashes, *log.problems]

@@ -5,8 +5,8 @@ from collections import Counter
 import numpy as np
 
 from ...problems import Log
-from ..links import plain
 from ..model import BaselineTable, OIFile
+from ..stars import plain
 
 
 def revisions(file: OIFile, log: Log) -> None:
