@@ -103,6 +103,9 @@ def spectrum(
 ) -> ContrastSpectrum:
     """Contrast per channel of a companion that was found.
 
+    It is taken to stand still: one that moves, while it is observed, by several times the error of
+    its place shifts single channels by about their errors.
+
     Parameters
     ----------
     companion : Candidate
