@@ -236,6 +236,10 @@ FAULTS = {
     "sides of a triangle": (
         values("OI_T3", "U1COORD", 3.0, 2), SUSPICIOUS, r"of 1 rows \(first: row 3\)", KEPT,
     ),
+    "no baselines": (
+        lambda opened: [every("OI_VIS2", c, lambda x: 0 * x)(opened) for c in ("UCOORD", "VCOORD")],
+        SUSPICIOUS, r"\(u, v\) are 0, 0 in 6 rows \(first: row 1\)", KEPT,
+    ),
     "unknown station": (
         values("OI_VIS2", "STA_INDEX", 9, (0, 1)), SUSPICIOUS, r"1 entries, such as 9", KEPT,
     ),
@@ -507,6 +511,20 @@ def test_baselines_in_wavelengths_are_refused(rng, tmp_path):
 
     with pytest.raises(InputError, match="perhaps in wavelengths: convert them to m"):
         load(damaged(rng, tmp_path, edit))
+
+
+@pytest.mark.parametrize("start", np.arange(0, 4, 0.25))
+def test_triangles_are_compared_with_pairs_of_about_the_same_time(rng, start):
+    """Half a second apart, wherever that falls (here in steps of 0.25 s); not a minute apart."""
+    for apart, found in ((0.5, True), (60.0, False)):
+        file = make.small(rng)
+        pairs, triangles = file.data
+        pairs.mjd[:] += start / 86400
+        triangles.mjd[:] += (start + apart) / 86400
+        triangles.u2coord[:] *= -1
+        triangles.v2coord[:] *= -1
+        said = [p for p in check(file) if "are not those of the same stations" in p.what]
+        assert [p.what.split(" (first")[0] for p in said] == ["(u, v) of 4 rows"] * found
 
 
 def test_missing_times_of_version_1_come_from_date_and_time(rng, tmp_path):

@@ -11,6 +11,21 @@ SAME_TIME = 2e-5
 """Rows within this time, d (2 s), were measured together."""
 
 
+def no_baselines(file: OIFile, log: Log) -> None:
+    """Baselines have a length, but for rows of which nothing counts."""
+    for table in file.data:
+        if not isinstance(table, BaselineTable):
+            continue
+        none = (table.legs == 0).all(axis=(1, 2)) & ~table.flag.all(axis=1)
+        if none.any():
+            log.suspicious(
+                table.label,
+                f"(u, v) are 0, 0 in {np.count_nonzero(none)} rows (first: row "
+                f"{int(np.argmax(none)) + 1})",
+                "used as stored: a model has visibility 1 there, whatever the companion",
+            )
+
+
 def longer_than_array(file: OIFile, log: Log) -> None:
     """No projected baseline is longer than the distance of its stations."""
     for table in file.data:
@@ -50,10 +65,16 @@ def triangles_of_pairs(file: OIFile, log: Log) -> None:
         sides = [(table, *side) for side in zip(((0, 1), (1, 2), (0, 2)), legs, strict=True)]
         keys, baselines = zip(*(_oriented(file, *one) for one in (*pairs, *sides)), strict=True)
         count = sum(len(leg) for _, _, leg in pairs)
-        baseline = np.concatenate(baselines)
-        like = _first_alike(np.concatenate(keys))[count:]
-        away = np.hypot(*(baseline[like] - baseline[count:]).T)
-        differs = (like < count) & (away > ALIKE * np.hypot(*baseline[count:].T) + SLACK)
+        key, baseline = np.concatenate(keys), np.concatenate(baselines)
+        differs = np.zeros(3 * len(table), dtype=bool)
+        # Rows of about the same time are in the same interval, or else in the same when all the
+        # intervals are shifted by half.
+        for shift in (0.0, 0.5):
+            like = _first_alike(np.column_stack([key[:, :-1], np.floor(key[:, -1] + shift)]))
+            like = like[count:]
+            away = np.hypot(*(baseline[like] - baseline[count:]).T)
+            far = away > ALIKE * np.hypot(*baseline[count:].T) + SLACK
+            differs |= (like < count) & far
         differs = differs.reshape(3, len(table)).any(axis=0)
         if differs.any():
             log.suspicious(
@@ -67,16 +88,17 @@ def triangles_of_pairs(file: OIFile, log: Log) -> None:
 def _oriented(
     file: OIFile, table: BaselineTable, ends: tuple[int, int], leg: np.ndarray
 ) -> tuple[np.ndarray, np.ndarray]:
-    """What rows of the same two stations and time share, (nrow, 5), and the baseline (nrow, 2).
+    """What tells the stations and time of rows, (nrow, 5), and the baseline, (nrow, 2).
 
-    The baseline is that from the station of lower index to the other.
+    The baseline is that from the station of lower index to the other. Times come last, in
+    intervals of which each is two times `SAME_TIME` long.
     """
     a, b = table.sta_index[:, ends].T
-    time = np.nan_to_num(table.mjd / SAME_TIME, nan=0.0, posinf=0.0, neginf=0.0)
+    time = np.nan_to_num(table.mjd / (2 * SAME_TIME), nan=0.0, posinf=0.0, neginf=0.0)
     instrument = [w.insname for w in file.wavelengths].index(table.insname)
     key = [
-        np.full(len(table), instrument), table.target_id, np.round(np.clip(time, -1e15, 1e15)),
-        np.minimum(a, b), np.maximum(a, b),
+        np.full(len(table), instrument), table.target_id,
+        np.minimum(a, b), np.maximum(a, b), np.clip(time, -1e15, 1e15),
     ]  # fmt: skip
     return np.column_stack(key), np.where(a <= b, 1.0, -1.0)[:, None] * leg
 
@@ -90,4 +112,4 @@ def _first_alike(keys: np.ndarray) -> np.ndarray:
     return first
 
 
-CHECKS = (longer_than_array, triangles_of_pairs)
+CHECKS = (no_baselines, longer_than_array, triangles_of_pairs)
