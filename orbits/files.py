@@ -15,11 +15,16 @@ def refuse_existing(*paths: Path, force: bool) -> None:
     Raises
     ------
     InputError
-        If one of `paths` exists and `force` is false.
+        If one of `paths` exists and `force` is false, or nothing can be written to its folder.
+        A folder that is missing will be made.
     """
     for path in paths:
         if path.exists() and not force:
             raise InputError(f"{path} exists already; give another name, or --force to replace it")
+        folder = next(parent for parent in path.absolute().parents if parent.exists())
+        if not folder.is_dir() or not os.access(folder, os.W_OK):
+            what = "is a file" if folder.is_file() else "cannot be written to"
+            raise InputError(f"{path}: {folder} {what}; choose another folder")
 
 
 @contextmanager

@@ -3,7 +3,7 @@
 import pytest
 
 from orbits import InputError
-from orbits.files import whole_file
+from orbits.files import refuse_existing, whole_file
 
 
 def test_file_appears_only_when_the_block_ends_well(tmp_path):
@@ -49,3 +49,19 @@ def test_permissions_are_those_of_an_ordinary_new_file(tmp_path):
     with whole_file(tmp_path / "result.txt"):
         pass
     assert (tmp_path / "result.txt").stat().st_mode == plain.stat().st_mode
+
+
+def test_a_file_in_the_place_of_a_folder_is_named(tmp_path):
+    (tmp_path / "results").write_text("no folder")
+    for path in (tmp_path / "results" / "table.csv", tmp_path / "results" / "deep" / "table.csv"):
+        with pytest.raises(InputError, match=r"results is a file; choose another folder"):
+            refuse_existing(path, force=True)
+        with pytest.raises(InputError, match="is a file"), whole_file(path):
+            pass
+
+
+def test_a_folder_that_is_closed_is_named_before_any_work(tmp_path, monkeypatch):
+    """Whoever runs the tests may write anywhere, so the answer of the system is set."""
+    monkeypatch.setattr("os.access", lambda path, mode: False)
+    with pytest.raises(InputError, match=f"{tmp_path} cannot be written to; choose another"):
+        refuse_existing(tmp_path / "new" / "table.csv", force=False)

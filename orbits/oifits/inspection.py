@@ -220,7 +220,8 @@ def _verdict(result: dict[str, Any]) -> Iterator[str]:
     """Whether a file is valid, if that was looked into."""
     breaches = result.get("breaches")
     if breaches is not None:
-        yield _row("standard", f"{len(breaches)} breaches" if breaches else "valid")
+        count = "1 breach" if len(breaches) == 1 else f"{len(breaches)} breaches"
+        yield _row("standard", count if breaches else "valid")
         yield from (_row("", breach) for breach in breaches[:MOST_BREACHES])
         if len(breaches) > MOST_BREACHES:
             yield _row("", f"and {len(breaches) - MOST_BREACHES} more")

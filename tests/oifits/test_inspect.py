@@ -109,7 +109,7 @@ def test_a_file_that_breaks_the_standard_is_told_so(nodeline, rng, tmp_path):
     assert json.loads(out)["files"][0]["breaches"] == [
         "error: OI_VIS2 (HDU 4): column VIS2ERR is negative in unflagged data"
     ]
-    assert "standard     1 breaches" in nodeline("inspect", tmp_path / "night.fits")[1]
+    assert "standard     1 breach\n" in nodeline("inspect", tmp_path / "night.fits")[1]
 
 
 def test_strict_makes_the_suspicious_unusable(nodeline, rng, tmp_path):
