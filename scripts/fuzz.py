@@ -1,7 +1,9 @@
-"""Damage valid OIFITS files at random and inspect them: scripts/fuzz.py [--cases N] [FILE ...].
+"""Damage valid OIFITS files at random and use them: scripts/fuzz.py [--cases N] [FILE ...].
 
-Every case runs `nodeline inspect` in a child process. It must end within 10 s and 1 GiB, with the
-exit code 0 or 3, and without a traceback. Prints what went wrong, with the seed to repeat it.
+Every case runs in a child process: one half `nodeline inspect`, the other reads all observables of
+every target and makes them ready for a search. It must end within 10 s and 1 GiB, with the exit
+code 0 or 3 (refused), and without a traceback or a warning. Prints what went wrong, with the seed
+to repeat it.
 """
 
 import argparse
@@ -12,6 +14,7 @@ import signal
 import sys
 import tempfile
 import time
+import traceback
 from collections import Counter
 from collections.abc import Callable, Sequence
 from contextlib import redirect_stderr, redirect_stdout
@@ -24,6 +27,8 @@ ROOT = Path(__file__).resolve().parents[1]
 sys.path.insert(0, str(ROOT / "tests" / "oifits"))
 
 BLOCK = 2880
+RADIUS = 20.0
+"""How far from the centre a search is made ready for, mas."""
 MAX_SECONDS = 10
 MAX_BYTES = 2**30
 ODD_VALUES = (
@@ -146,6 +151,8 @@ class Outcome:
     """How a case ended."""
 
     seed: int
+    way: str
+    """What was done with the file: inspect or read."""
     mutation: str
     code: int
     seconds: float
@@ -168,25 +175,28 @@ class Outcome:
 
 
 def run_case(seed: int, bases: list[bytes], folder: Path) -> Outcome:
-    """Damage one of `bases` as `seed` has it, and inspect it in a child process."""
+    """Damage one of `bases` as `seed` has it, and use it in a child process."""
     rng = np.random.default_rng(seed)
     mutation = MUTATIONS[rng.integers(len(MUTATIONS))]
     path, words = folder / "case.fits", folder / "words.txt"
     path.write_bytes(mutation(bases[rng.integers(len(bases))], rng))
     options = ([], ["--json"], ["--convert", str(folder / "copy.fits"), "--force"])[rng.integers(3)]
+    way = ("inspect", "read")[rng.integers(2)]
     start = time.perf_counter()
     child = os.fork()
     if child == 0:
-        _inspect([str(path), *options], words, mapped=seed % 2 == 1)
+        if way == "inspect":
+            _leave_with(lambda: _command("inspect", str(path), *options), words, seed % 2 == 1)
+        _leave_with(lambda: _read(path), words, seed % 2 == 1)
     _, status, usage = os.wait4(child, 0)
     seconds = time.perf_counter() - start
     code = os.waitstatus_to_exitcode(status)
     text = words.read_text(errors="replace")
-    return Outcome(seed, mutation.__name__, code, seconds, usage.ru_maxrss / 1024, text)
+    return Outcome(seed, way, mutation.__name__, code, seconds, usage.ru_maxrss / 1024, text)
 
 
-def _inspect(arguments: list[str], words: Path, *, mapped: bool) -> None:
-    """In the child: run the command with its output in a file, then leave for good.
+def _leave_with(step: Callable[[], int], words: Path, mapped: bool) -> None:
+    """In the child: run `step` with its output in a file, then leave for good with its code.
 
     If `mapped`, small tables are read as otherwise only large ones are.
     """
@@ -198,9 +208,35 @@ def _inspect(arguments: list[str], words: Path, *, mapped: bool) -> None:
         signal.alarm(MAX_SECONDS + 1)
         resource.setrlimit(resource.RLIMIT_AS, (4 * MAX_BYTES, 4 * MAX_BYTES))
         with open(words, "w") as out, redirect_stdout(out), redirect_stderr(out):
-            code = _command("inspect", *arguments)
+            try:
+                code = step()
+            except Exception:
+                traceback.print_exc()
     finally:
         os._exit(code)
+
+
+def _read(path: Path) -> int:
+    """Read every target of a file and make it ready for a search; 3 if none can be read."""
+    from orbits import InputError, read_epochs
+    from orbits.companion.covariance import Covariance
+    from orbits.observation import OBSERVABLES
+    from orbits.oifits import load
+    from orbits.sampling import Sampling
+
+    code = 3
+    try:
+        names = sorted(set(load(path).target.target.tolist()))
+    except InputError:
+        return code
+    for name in names:
+        try:
+            for epoch in read_epochs(path, target=name, observables=OBSERVABLES):
+                Covariance.of(epoch, Sampling.of(epoch, radius=RADIUS))
+            code = 0
+        except InputError as error:
+            print(error)
+    return code
 
 
 def _command(*arguments: str) -> int:
@@ -235,6 +271,7 @@ def fuzz(cases: int, first: int = 0, more: Sequence[Path] = ()) -> list[Outcome]
         # Everything that a child needs is imported by a first case in the parent.
         with redirect_stdout(io.StringIO()):
             _command("inspect", str(folder / "base.fits"), "--convert", str(folder / "first.fits"))
+            _read(folder / "base.fits")
         return [run_case(seed, bases, folder) for seed in range(first, first + cases)]
 
 
@@ -248,7 +285,7 @@ def main() -> int:
     outcomes = fuzz(options.cases, options.first, options.files)
     for outcome in outcomes:
         if outcome.fault:
-            print(f"seed {outcome.seed}, {outcome.mutation}: {outcome.fault}\n")
+            print(f"seed {outcome.seed}, {outcome.way}, {outcome.mutation}: {outcome.fault}\n")
     faults = sum(bool(outcome.fault) for outcome in outcomes)
     codes = Counter(outcome.code for outcome in outcomes)
     print(
