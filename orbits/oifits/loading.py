@@ -213,7 +213,8 @@ def _without_nulls(
             f"column {column.name}: {np.count_nonzero(nulls)} values are NULL",
             "taken as unknown ids" if whole else "taken as NaN: not measured",
         )
-        values = values.astype(np.int64 if whole else np.float64)
+        real = not whole or values.dtype.kind == "f"  # ids that are scaled can be any numbers
+        values = values.astype(np.float64 if real else np.int64)
         values[nulls] = NO_ID if whole else np.nan
     if whole and values.dtype.itemsize == 8 and values.size:
         limit = np.iinfo(np.int32)

@@ -145,6 +145,13 @@ FAULTS = {
     "a number that stands for NULL": (
         with_null("OI_T3", "TARGET_ID", "B", 1, 0), NOTE, r"TARGET_ID: 4 values are NULL", (18, 0),
     ),
+    "no target beside senseless ones": (
+        lambda opened: [
+            with_null("OI_VIS2", "TARGET_ID", "I", 99, 0)(opened),
+            opened["OI_VIS2"].header.set("TSCAL1", 1e300),
+        ],
+        UNUSABLE, r"TARGET_ID has numbers beyond 32 bits", (0, 12),
+    ),
     "no station": (
         with_null("OI_VIS2", "STA_INDEX", "2I", -1, (0, 1)),
         SUSPICIOUS, r"1 entries, such as -32768", KEPT,
