@@ -1,5 +1,6 @@
 """nodeline limits: the faintest companion that a night, or several, would have shown."""
 
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
@@ -8,15 +9,20 @@ import typer
 from .frame import Force, Json, Seed, emit, say, warn
 from .night import (
     Diameter,
+    ErrorFloor,
+    ErrorScale,
     FlipPhase,
     HalfField,
     IgnoreCorrelations,
     SharedBaselines,
     T3Calibration,
     Target,
+    Use,
     V2Calibration,
+    checked,
     error_model,
     length,
+    numbers,
 )
 
 if TYPE_CHECKING:
@@ -50,6 +56,9 @@ def limits(
     t3_calibration: T3Calibration = 0.0,
     ignore_correlations: IgnoreCorrelations = False,
     flip_phase: FlipPhase = False,
+    use: Use = None,
+    error_scale: ErrorScale = None,
+    error_floor: ErrorFloor = None,
     confidence: Annotated[float, typer.Option(help="Of what chi-square excludes.")] = 0.9973,
     completeness: Annotated[float, typer.Option(help="Share of companions to be found.")] = 0.9,
     false_alarm: Annotated[float, typer.Option(help="Of what counts as found.")] = 0.01,
@@ -81,7 +90,15 @@ def limits(
     for name, value in shares.items():
         if not 0 < value < 1:
             raise typer.BadParameter(f"--{name} must be between 0 and 1, got {value}")
-    system, observations = _given(files, target, night, flip_phase)
+    system, observations = _given(
+        files,
+        night,
+        target=target,
+        flip_phase=flip_phase,
+        use=use,
+        error_scale=numbers(error_scale),
+        error_floor=numbers(error_floor),
+    )
     warn(observations[0].problems)
     if system is not None:
         field = system.field if field is None else field
@@ -126,28 +143,44 @@ def limits(
 
 
 def _given(
-    files: list[Path], target: str | None, night: str | None, flip_phase: bool
+    files: list[Path],
+    night: str | None,
+    *,
+    target: str | None,
+    flip_phase: bool,
+    use: list[str] | None,
+    error_scale: dict[str, float],
+    error_floor: dict[str, float],
 ) -> tuple["System | None", list["Observation"]]:
     """The nights asked for, and the system file if they come from one."""
-    from ..errors import InputError
-    from ..oifits import ErrorBars, read, read_epochs
+    from ..measuring import observations
+    from ..observation import DEFAULT
+    from ..oifits import ErrorBars, read_epochs
+    from ..oifits.epochs import one_night
     from ..system import read_system
 
-    system, options = None, {"target": target, "flip_phase": flip_phase}
+    system = None
     if len(files) == 1 and files[0].suffix == ".toml":
         system = read_system(files[0])
-        if not system.nights:
-            raise InputError(f"{system.path}: no nights; name OIFITS files under [nights]")
-        files = list(system.nights)
-        options = {
-            "target": system.target if target is None else target,
-            "flip_phase": flip_phase or system.flip_phase,
-            "observables": system.use,
-            "errors": ErrorBars.of(system.error_scale, system.error_floor),
-        }
-    if night is not None:
-        return system, [read(files, night=night, **options)]
-    return system, read_epochs(files, **options)
+        system = replace(
+            system,
+            target=system.target if target is None else target,
+            flip_phase=flip_phase or system.flip_phase,
+            use=use or system.use,
+            error_scale={**system.error_scale, **error_scale},
+            error_floor={**system.error_floor, **error_floor},
+        )
+        epochs = checked(observations, system)
+    else:
+        epochs = checked(
+            read_epochs,
+            files,
+            target=target,
+            flip_phase=flip_phase,
+            observables=use or DEFAULT,
+            errors=checked(ErrorBars.of, error_scale, error_floor),
+        )
+    return system, epochs if night is None else [one_night(epochs, night)]
 
 
 def _paths(folder: Path, *, several: bool) -> dict[str, Path]:

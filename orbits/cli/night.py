@@ -81,10 +81,6 @@ def read_night(
     from ..observation import DEFAULT
     from ..oifits import ErrorBars, Selection, read
 
-    scale, floor = (
-        {name: values[0] for name, values in (named(text, count=1) for text in given or ())}
-        for given in (error_scale, error_floor)
-    )
     observation = checked(
         read,
         files,
@@ -93,7 +89,7 @@ def read_night(
         flip_phase=flip_phase,
         selection=selection or Selection(),
         observables=use or DEFAULT,
-        errors=checked(ErrorBars.of, scale, floor),
+        errors=checked(ErrorBars.of, numbers(error_scale), numbers(error_floor)),
     )
     warn(observation.problems)
     return observation
@@ -152,6 +148,11 @@ def error_model(
         v2_calibration=v2_calibration,
         t3_calibration=float(np.radians(t3_calibration)),
     )
+
+
+def numbers(given: Sequence[str] | None) -> dict[str, float]:
+    """Values of NAME=VALUE, by name."""
+    return {name: values[0] for name, values in (named(text, count=1) for text in given or ())}
 
 
 def named(text: str, *, count: int) -> tuple[str, list[float]]:

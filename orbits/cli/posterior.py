@@ -9,6 +9,8 @@ from .frame import Force, Json, Seed, emit, say
 from .night import (
     CompanionDiameter,
     Diameter,
+    ErrorFloor,
+    ErrorScale,
     FlipPhase,
     HalfField,
     IgnoreCorrelations,
@@ -17,6 +19,7 @@ from .night import (
     SharedBaselines,
     T3Calibration,
     Target,
+    Use,
     V2Calibration,
     error_model,
     length,
@@ -41,6 +44,9 @@ def posterior(
     t3_calibration: T3Calibration = 0.0,
     ignore_correlations: IgnoreCorrelations = False,
     flip_phase: FlipPhase = False,
+    use: Use = None,
+    error_scale: ErrorScale = None,
+    error_floor: ErrorFloor = None,
     live_points: Annotated[int, typer.Option(min=50, help="Of nested sampling.")] = 200,
     output: Annotated[Path | None, typer.Option(help="Samples (ECSV).")] = None,
     positions: Annotated[
@@ -66,7 +72,10 @@ def posterior(
 
     refuse_existing(*(path for path in (output, positions) if path), force=force)
     half, primary = length("--field", field), length("--diameter", diameter)
-    observation = read_night(files, target=target, night=night, flip_phase=flip_phase)
+    observation = read_night(
+        files, target=target, night=night, flip_phase=flip_phase,
+        use=use, error_scale=error_scale, error_floor=error_floor,
+    )  # fmt: skip
     result = sample(
         observation,
         field=half,

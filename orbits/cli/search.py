@@ -29,6 +29,8 @@ from .night import (
     V2Calibration,
     Wavelengths,
     checked,
+    error_model,
+    length,
     named,
     read_night,
     selection,
@@ -108,17 +110,13 @@ def search(
     import astropy.units as u
     import numpy as np
 
-    from ..companion.covariance import ErrorModel
     from ..companion.search import Stars
     from ..companion.search import search as look
     from ..progress import Bar
 
-    def mas(value: float | None) -> u.Quantity | None:
-        return None if value is None else value * u.mas
-
-    for name, value in (("--field", field), ("--step", step), ("--fibre", fibre)):
-        if value is not None and not value > 0:
-            raise typer.BadParameter(f"{name} must be positive, got {value}")
+    half, grid_step = length("--field", field), length("--step", step)
+    if fibre is not None and not fibre > 0:
+        raise typer.BadParameter(f"--fibre must be positive, got {fibre}")
     stars = Stars(
         primary=primary_shape,
         companion=companion_shape,
@@ -139,16 +137,16 @@ def search(
     result = checked(
         look,
         observation,
-        field=mas(field),
-        step=mas(step),
-        diameter=mas(diameter),
-        companion_diameter=mas(companion_diameter),
+        field=half,
+        step=grid_step,
+        diameter=None if diameter is None else diameter * u.mas,
+        companion_diameter=None if companion_diameter is None else companion_diameter * u.mas,
         stars=stars,
-        errors=ErrorModel(
-            correlated=not ignore_correlations,
+        errors=error_model(
             shared_baselines=shared_baselines,
             v2_calibration=v2_calibration,
-            t3_calibration=np.radians(t3_calibration),
+            t3_calibration=t3_calibration,
+            ignore_correlations=ignore_correlations,
         ),
         companions=companions,
         noise_searches=noise_searches,

@@ -9,6 +9,8 @@ from ..errors import NothingFound
 from .frame import Force, Json, Seed, emit, say
 from .night import (
     Diameter,
+    ErrorFloor,
+    ErrorScale,
     FlipPhase,
     HalfField,
     IgnoreCorrelations,
@@ -17,6 +19,7 @@ from .night import (
     SharedBaselines,
     T3Calibration,
     Target,
+    Use,
     V2Calibration,
     error_model,
     length,
@@ -47,6 +50,9 @@ def spectrum(
     t3_calibration: T3Calibration = 0.0,
     ignore_correlations: IgnoreCorrelations = False,
     flip_phase: FlipPhase = False,
+    use: Use = None,
+    error_scale: ErrorScale = None,
+    error_floor: ErrorFloor = None,
     output: Annotated[Path | None, typer.Option(help="Table (ECSV), with the covariance.")] = None,
     picture: Annotated[Path | None, typer.Option(help="A .png, .pdf or .svg file.")] = None,
     seed: Seed = 0,
@@ -69,7 +75,10 @@ def spectrum(
         raise typer.BadParameter("the name of a picture ends in .png, .pdf or .svg")
     refuse_existing(*(path for path in (output, picture) if path), force=force)
     half, primary = length("--field", field), length("--diameter", diameter)
-    observation = read_night(files, target=target, night=night, flip_phase=flip_phase)
+    observation = read_night(
+        files, target=target, night=night, flip_phase=flip_phase,
+        use=use, error_scale=error_scale, error_floor=error_floor,
+    )  # fmt: skip
     errors = error_model(
         shared_baselines=shared_baselines, v2_calibration=v2_calibration,
         t3_calibration=t3_calibration, ignore_correlations=ignore_correlations,

@@ -48,12 +48,23 @@ def read(
     InputError
         If a file is unusable, or holds several targets or nights and none was chosen.
     """
-    epochs = read_epochs(paths, target=target, **options)
+    return one_night(read_epochs(paths, target=target, **options), night)
+
+
+def one_night(epochs: Sequence[Observation], night: str | None) -> Observation:
+    """The one of `epochs` whose date begins with `night`, or the only one.
+
+    Raises
+    ------
+    InputError
+        If there is none, or several.
+    """
     chosen = [e for e in epochs if night is None or night_label(e.mjd).startswith(night)]
     if len(chosen) != 1:
         found = f"{len(chosen) or 'no'} night{'s' if len(chosen) != 1 else ''}"
+        files = dict.fromkeys(name for epoch in epochs for name in epoch.files)
         raise InputError(
-            f"{', '.join(map(str, _listed(paths)))}: {found} {night or ''} of {epochs[0].target}; "
+            f"{', '.join(files)}: {found} {night or ''} of {epochs[0].target}; "
             f"choose one of {', '.join(night_label(e.mjd) for e in epochs)}"
         )
     return chosen[0]

@@ -98,6 +98,28 @@ def test_companion_goes_in_and_comes_out(night, tmp_path, monkeypatch, capsys):
     assert command(monkeypatch, capsys, "spectrum", dark, "--field", 15)[0] == 4
 
 
+def test_limits_heed_errors_and_parts_of_the_data(night, tmp_path, monkeypatch, capsys):
+    """With errors ten times what the noise is, the limit is z errors: ten times z + n of before.
+
+    z is 2.8 at 99.73% of one side, and n, the noise of the first limit, nearly always below 3.
+    """
+    scaled = ("--error-scale", "v2=10", "--error-scale", "t3=10")
+    typical = []
+    for options in ((), scaled):
+        code, out, words = command(monkeypatch, capsys, "limits", night, *QUICK, "--json", *options)
+        assert code == 0, words
+        curve = [row["contrast_profile_median"] for row in json.loads(out)["curve"]]
+        typical.append(np.median([contrast for contrast in curve if contrast is not None]))
+    assert typical[1] > 10 * typical[0] * 2.8 / (2.8 + 3)
+    system = tmp_path / "part.toml"
+    system.write_text(
+        'name = "Harrow 9"\n[nights]\nfiles = ["night.fits"]\nstations = ["T1", "T9"]\n'
+    )
+    code, _, words = command(monkeypatch, capsys, "limits", system, *QUICK)
+    assert code == 3
+    assert "no station 'T" in words
+
+
 def test_wrong_usage_is_said(night, tmp_path, monkeypatch, capsys):
     assert command(monkeypatch, capsys, "limits", night, "--confidence", 1.5)[0] == 2
     both = ("--inject", 1, 2, 0.1, "--remove", 1, 2, 0.1)
