@@ -190,7 +190,8 @@ def _target(file: OIFile, wanted: str | None) -> tuple[str, list[int]]:
     if len(names) != 1:
         known = ", ".join(repr(name) for name in file.target.target.tolist())
         what = "several targets" if names else f"no data of {wanted!r}"
-        raise InputError(f"{file.source}: {what}; choose one of {known}")
+        why = "".join(f" ({problem.what})" for problem in file.clashes)
+        raise InputError(f"{file.source}: {what}{why}; choose one of {known}")
     return next(iter(names.values())), ids
 
 
