@@ -55,7 +55,7 @@ def test_errors_and_observables_are_those_of_the_system_file(three_nights, tmp_p
     path = simulate(three_nights, tmp_path, rng=np.random.default_rng(3))
     lines = 'stations = ["N1", "E2", "S1"]\nwavelengths = [1.5, 1.65]\nbaselines = [50, 500]\n'
     lines += 'instrument = "THICKET_H"\nuse = ["t3"]\n'
-    lines += 'error_scale = {t3 = 2.0}\nerror_floor = {t3 = 5.0}\n'
+    lines += "error_scale = {t3 = 2.0}\nerror_floor = {t3 = 5.0}\n"
     path.write_text(path.read_text().replace("[nights]\n", f"[nights]\n{lines}"))
     plain = read(tmp_path / "nights" / "01-2024-01-11.fits")
     seen = observations(read_system(path))[0]
