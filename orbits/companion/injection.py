@@ -41,14 +41,19 @@ class Companion:
         Raises
         ------
         ValueError
-            If the contrast is not between 0 and 1, or the separation negative.
+            If the contrast is not between 0 and 1, the separation negative, or a length or the
+            angle not finite.
         """
         if not 0 < contrast <= 1:
             raise ValueError(f"contrast must be above 0 and at most 1, got {contrast}")
-        distance = separation.to_value(u.mas)
-        if not distance >= 0:
+        distance, angle = separation.to_value(u.mas), position_angle.to_value(u.deg)
+        lengths = {"separation": distance, "position angle": angle, **diameters}
+        for name, value in lengths.items():
+            if not np.isfinite(value):
+                raise ValueError(f"{name.replace('_', ' ')} must be a finite number, got {value}")
+        if distance < 0:
             raise ValueError(f"separation must not be negative, got {separation}")
-        x, y = offsets(distance, position_angle.to_value(u.deg))
+        x, y = offsets(distance, angle)
         return cls(x=float(x), y=float(y), contrast=contrast, **diameters)
 
     @property

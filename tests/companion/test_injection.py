@@ -56,6 +56,24 @@ def test_companion_by_separation_and_position_angle():
         Companion.at(-1 * u.mas, 90 * u.deg, 0.5)
 
 
+@pytest.mark.parametrize(
+    ("name", "given"),
+    [
+        ("separation", (np.nan, 90, 0.1)),
+        ("separation", (np.inf, 90, 0.1)),
+        ("position angle", (10, np.nan, 0.1)),
+        ("position angle", (10, -np.inf, 0.1)),
+        ("contrast", (10, 90, np.nan)),
+    ],
+)
+def test_companion_that_is_nowhere_is_refused(name, given):
+    separation, angle, contrast = given
+    with pytest.raises(ValueError, match=name):
+        Companion.at(separation * u.mas, angle * u.deg, contrast)
+    with pytest.raises(ValueError, match="diameter must be a finite number"):
+        Companion.at(10 * u.mas, 90 * u.deg, 0.1, diameter=np.nan)
+
+
 @pytest.fixture
 def night(tmp_path, rng):
     """A simulated file, with a flagged datum, and one that is no number."""

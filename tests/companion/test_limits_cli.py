@@ -127,3 +127,8 @@ def test_wrong_usage_is_said(night, tmp_path, monkeypatch, capsys):
     assert command(monkeypatch, capsys, "simulate", night, *both, "--output", out)[0] == 2
     wrong = ("--inject", 1, 2, 3.0)
     assert command(monkeypatch, capsys, "simulate", night, *wrong, "--output", out)[0] == 2
+    nowhere = ("--inject", 15, "nan", 0.1)
+    code, _, words = command(monkeypatch, capsys, "simulate", night, *nowhere, "--output", out)
+    assert code == 2
+    assert "must be a finite number" in " ".join(words.split())
+    assert not out.exists()
