@@ -114,8 +114,18 @@ def _run(target: Target, label: str, work: Work, rng: np.random.Generator) -> Ru
     with work.progress.task(f"sampling {label}", total=RUNS) as step, _processes(cores) as call:
         if cores == 1:
             return merge([one(k) for k in range(RUNS)])
-        with ThreadPoolExecutor(cores) as pool:
+        with ThreadPoolExecutor(cores) as pool, _answering(work.pieces):
             return merge(list(pool.map(one, range(RUNS))))
+
+
+@contextmanager
+def _answering(pieces: Forgotten) -> Iterator[None]:
+    """Answer Ctrl-C at once, since processes first finish what they are at."""
+    try:
+        yield
+    except KeyboardInterrupt:
+        pieces.tell("stopping when the pieces at work are done")
+        raise
 
 
 @contextmanager

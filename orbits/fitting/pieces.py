@@ -30,16 +30,23 @@ class Forgotten:
         """The piece `name`, made unless it is there already."""
         return make()
 
+    def tell(self, text: str) -> None:
+        """Say to a person what becomes of the pieces."""
+
 
 class Kept(Forgotten):
-    """Keeps pieces in `folder` until `clear`; `tell` hears which are found there."""
+    """Keeps pieces in `folder` until `clear`; `hear` is told which are found there."""
 
-    def __init__(self, folder: Path, tell: Callable[[str], None] = lambda text: None) -> None:
-        self.folder, self.tell = Path(folder), tell
+    def __init__(self, folder: Path, hear: Callable[[str], None] = lambda text: None) -> None:
+        self.folder, self.hear = Path(folder), hear
+
+    def tell(self, text: str) -> None:
+        """Say to a person what becomes of the pieces."""
+        self.hear(text)
 
     def of(self, fingerprint: str) -> "Kept":
         """The pieces of the fit that has this fingerprint."""
-        mine = Kept(self.folder / fingerprint, self.tell)
+        mine = Kept(self.folder / fingerprint, self.hear)
         found = len(list(mine.folder.glob("[!.]*.npz")))
         if found:
             pieces = "1 piece" if found == 1 else f"{found} pieces"

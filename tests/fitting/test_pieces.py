@@ -1,14 +1,19 @@
 """Interrupted fits: what is finished is kept, used if nothing changed, and removed in the end."""
 
+import signal
+import threading
+from contextlib import contextmanager
 from dataclasses import dataclass
 
 import numpy as np
 import pytest
 from made_binaries import binary, moving, seen
 
-from orbits import Priors, fit
+from orbits import Model, Priors, fit
 from orbits.fitting import explore
+from orbits.fitting.data import make_data
 from orbits.fitting.pieces import Kept, fingerprint
+from orbits.fitting.target import Target
 
 
 class StopError(Exception):
@@ -85,6 +90,40 @@ def test_nothing_is_left_and_nothing_else_is_removed(solve, tmp_path):
     (folder / "mine.txt").unlink()
     Kept(folder).clear()
     assert not folder.exists()
+
+
+def test_ctrl_c_is_answered_while_the_pieces_at_work_go_on(monkeypatch, tmp_path):
+    """A piece at work ends only when the word was said: the answer does not wait for it."""
+    said, heard, in_time = threading.Event(), [], []
+
+    def hear(text):
+        heard.append(text)
+        said.set()
+
+    def sample(*given, **named):
+        signal.pthread_kill(threading.main_thread().ident, signal.SIGINT)
+        monkeypatch.setattr(explore, "sample", wait)
+        return wait()
+
+    def wait(*given, **named):
+        in_time.append(said.wait(5.0))  # far more than two threads need; a failure lasts as long
+        return Piece(np.zeros(1), 0)
+
+    @contextmanager
+    def here(count):
+        yield lambda function, *given, **named: function(*given, **named)
+
+    monkeypatch.setattr(explore, "_processes", here)
+    monkeypatch.setattr(explore, "sample", sample)
+    positions = seen(binary(), 4, np.random.default_rng(1))
+    priors = Priors.for_data(positions, None)
+    target = Target.prior(make_data(positions, None, None, priors, Model()))
+    work = explore.Work(live_points=100, cores=2, pieces=Kept(tmp_path, hear))
+    with pytest.raises(KeyboardInterrupt):
+        explore._run(target, "priors", work, np.random.default_rng(1))
+    assert heard == ["stopping when the pieces at work are done"]
+    assert in_time
+    assert all(in_time)
 
 
 @dataclass(frozen=True)
