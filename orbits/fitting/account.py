@@ -189,7 +189,7 @@ def undetermined(data: Data, points: np.ndarray) -> list[str]:
         ends = name not in ("cos_inclination", "outlier_fraction")
         vague = name.startswith("log_") and points[:, i].std() > VAGUE
         if part.std() > 0.2 or vague or (ends and _touches(part, low=True, high=True)):
-            told.append(_NAMES.get(name) or data.nuisances.get(name, name))
+            told.append(told_name(data, name))
     if "h_x" in space.names:
         i, j = space.names.index("h_x"), space.names.index("h_y")
         low, high = space.eccentricity
@@ -208,6 +208,11 @@ def undetermined(data: Data, points: np.ndarray) -> list[str]:
         if abs(np.exp(1j * factor * points[:, space.names.index("node")]).mean()) < 0.3:
             told.append("node_deg")
     return told
+
+
+def told_name(data: Data, name: str) -> str:
+    """What results call a coordinate of the sampled space."""
+    return _NAMES.get(name) or data.nuisances.get(name, name)
 
 
 def _touches(part: np.ndarray, *, low: bool, high: bool) -> bool:

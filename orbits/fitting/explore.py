@@ -21,6 +21,7 @@ from .merging import Run, merge
 from .nested import Part, sample
 from .pieces import FORGOTTEN, Forgotten
 from .proposal import Proposal
+from .space import Space
 from .target import Target
 
 RUNS = 8
@@ -82,6 +83,19 @@ def explore(data: Data, adapted: Proposal, work: Work, rng: np.random.Generator)
     return _checked(wide, run, check, efficiency)
 
 
+def features(space: Space) -> tuple[list[str], Callable[[np.ndarray], np.ndarray]]:
+    """Names of quantities that are no angles, and the function of points that gives them."""
+    angles = {"longitude", "node", "h_x", "h_y"}
+    columns = [i for i, n in enumerate(space.names) if n not in angles and not space.normal[i]]
+    names = [space.names[i] for i in columns]
+    if "h_x" not in space.names:
+        return names, lambda points: points[:, columns]
+    x, y = space.names.index("h_x"), space.names.index("h_y")
+    return [*names, "eccentricity"], lambda points: np.column_stack(
+        [points[:, columns], points[:, x] ** 2 + points[:, y] ** 2]
+    )
+
+
 def _checked(target: Target, run: Run, check: Estimate | None, efficiency: float) -> Exploration:
     """The exploration, and what is to be said of the agreement of its two estimates."""
     sure = check is not None and check.error < SURE
@@ -112,10 +126,11 @@ def _run(target: Target, label: str, work: Work, rng: np.random.Generator) -> Ru
         return part
 
     with work.progress.task(f"sampling {label}", total=RUNS) as step, _processes(cores) as call:
+        about = features(target.data.space)[1]
         if cores == 1:
-            return merge([one(k) for k in range(RUNS)])
+            return merge([one(k) for k in range(RUNS)], about)
         with ThreadPoolExecutor(cores) as pool, _answering(work.pieces):
-            return merge(list(pool.map(one, range(RUNS))))
+            return merge(list(pool.map(one, range(RUNS))), about)
 
 
 @contextmanager

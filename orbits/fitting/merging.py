@@ -6,7 +6,7 @@ Anal. 13, 873). They can run at the same time, and how far they differ tells how
 """
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -14,6 +14,9 @@ import numpy as np
 from .evidence import Estimate
 from .nested import Part
 
+DIFFER = 0.1
+"""Of Kish's number: fewer independent samples than this do not come by chance. The scatter of eight
+runs is known to a factor, which of five features is below 0.15 in one of 10,000 fits."""
 PRIOR_RUNS = 4
 """Runs whose scatter the theory counts for beside the scatter found."""
 
@@ -30,6 +33,9 @@ class Run:
     log_evidence_error: float
     calls: int
     """Number of likelihood evaluations."""
+    independent: np.ndarray
+    """(m,) how many independent samples would leave the means of the features as uncertain as the
+    scatter of the runs says they are."""
 
     @property
     def estimate(self) -> Estimate:
@@ -37,14 +43,27 @@ class Run:
         return Estimate(value=self.log_evidence, error=self.log_evidence_error, efficiency=math.nan)
 
     @property
-    def effective_samples(self) -> float:
+    def kish(self) -> float:
         """(sum w)^2 / sum w^2 (Kish 1965)."""
         weight = np.exp(self.log_weight)
         return float(weight.sum() ** 2 / np.square(weight).sum())
 
+    @property
+    def differ(self) -> np.ndarray:
+        """(m,) bool: the features about which the runs differ more than their samples may."""
+        return self.independent < DIFFER * self.kish
 
-def merge(parts: Sequence[Part]) -> Run:
-    """One run of all the live points of the parts."""
+    @property
+    def effective_samples(self) -> float:
+        """Kish's number, or where the runs differ what their scatter makes of it."""
+        return float(self.independent.min()) if self.differ.any() else self.kish
+
+
+def merge(parts: Sequence[Part], features: Callable[[np.ndarray], np.ndarray]) -> Run:
+    """One run of all the live points of the parts.
+
+    `features` takes points (n, d) to the numbers (n, m) about which the runs should agree.
+    """
     points, value, log_weight, log_evidence = _in_order(parts)
     return Run(
         points=points,
@@ -52,7 +71,27 @@ def merge(parts: Sequence[Part]) -> Run:
         log_evidence=log_evidence,
         log_evidence_error=_error(parts, value, log_weight, log_evidence),
         calls=sum(part.calls for part in parts),
+        independent=independent_samples(parts, features),
     )
+
+
+def independent_samples(
+    parts: Sequence[Part], features: Callable[[np.ndarray], np.ndarray]
+) -> np.ndarray:
+    """(m,) how many independent samples would leave the means of `features` as uncertain.
+
+    The uncertainty is the scatter of the means of the runs, so a run that stayed in a part of the
+    posterior shows, of which Kish's number knows nothing.
+    """
+    means, variances = [], []
+    for part in parts:
+        points, _, log_weight, _ = _in_order([part])
+        weight, values = np.exp(log_weight), features(points)
+        means.append(weight @ values)
+        variances.append(weight @ np.square(values - means[-1]))
+    between = np.var(means, axis=0, ddof=1)
+    total = np.mean(variances, axis=0) + between
+    return len(parts) * total / np.maximum(between, 1e-300)
 
 
 def _in_order(parts):

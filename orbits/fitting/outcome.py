@@ -2,9 +2,10 @@
 
 import numpy as np
 
-from .account import chi_square, nights, notes, solutions_of, undetermined
+from .account import chi_square, nights, notes, solutions_of, told_name, undetermined
 from .data import Data
-from .explore import Exploration
+from .explore import RUNS, Exploration, features
+from .merging import Run
 from .posterior import equal_weight, sample_table
 from .scan import Scan
 from .solution import Solution, summarise, summarise_json
@@ -30,6 +31,8 @@ def solution_of(
     checked = {}
     if check is not None:
         checked["log_evidence_check"] = {"value": check.value, "error": check.error}
+    names, _ = features(data.space)
+    unsettled = [told_name(data, names[k]) for k in np.flatnonzero(run.differ)]
     account = {
         "log_evidence": run.log_evidence,
         "log_evidence_err": run.log_evidence_error,
@@ -46,11 +49,17 @@ def solution_of(
             }
             for k in range(len(parts))
         ],
-        "undetermined": undetermined(data, points[label == label[0]]),
+        "undetermined": list(
+            dict.fromkeys([*undetermined(data, points[label == label[0]]), *unsettled])
+        ),
         "nights": nights(data, points),
         "model": {k: v for k, v in vars(data.model).items() if v},
         "priors": data.priors.to_json(),
-        "notes": [*notes(data, confined=target.confined), *explored.notes],
+        "notes": [
+            *notes(data, confined=target.confined),
+            *explored.notes,
+            *runs_differ(run, unsettled),
+        ],
     }
     return Solution(
         name=name,
@@ -61,3 +70,15 @@ def solution_of(
         velocities=data.velocities,
         scan=pd.DataFrame({"period_d": found.period, "chi2": found.chi2.min(axis=1)}),
     )
+
+
+def runs_differ(run: Run, unsettled: list[str]) -> list[str]:
+    """A sentence where the merged runs do not agree about some quantities."""
+    if not unsettled:
+        return []
+    return [
+        f"The {RUNS} runs of the sampling differ about {', '.join(unsettled)}: their samples are "
+        f"worth some {run.effective_samples:.0f} independent ones, so medians, intervals and the "
+        "weights of periods are rough, and some may be missing; more live points (fit.live_points) "
+        "or more nights help."
+    ]

@@ -1,5 +1,7 @@
 """Merged runs of nested sampling against evidences known exactly."""
 
+from dataclasses import replace
+
 import numpy as np
 from numpy.testing import assert_allclose
 from scipy.stats import kstest
@@ -39,6 +41,26 @@ def run(rng, *, live=20, flat=0.0, spike=0.0):
     )
 
 
+def together(parts):
+    """The parts merged; they should agree about where the points are."""
+    return merge(parts, lambda points: points)
+
+
+def test_runs_that_stay_in_different_places_are_worth_few_samples():
+    """Half of the runs have their points at X, the others at X + 1: two places, and no third."""
+    rng = np.random.default_rng(8)
+    parts = [run(rng, live=100) for _ in range(8)]
+    alike = together(parts)
+    assert not alike.differ.any()
+    assert alike.effective_samples == alike.kish
+    moved = [replace(part, points=part.points + k % 2) for k, part in enumerate(parts)]
+    split = together(moved)
+    assert split.differ.all()
+    # Eight means at 0 or 1, of a spread of 0.5 each, are worth about eight samples.
+    assert 4 < split.effective_samples < 16
+    assert split.kish == alike.kish
+
+
 def test_evidence_and_its_error():
     """8 runs merged, 100 times: no bias, and the scatter that is stated.
 
@@ -49,7 +71,7 @@ def test_evidence_and_its_error():
     rng = np.random.default_rng(4)
     for flat in (0.0, 0.6):
         exact = np.log(WIDTH * (1 - np.exp(-(1 - flat) / WIDTH)))
-        found = [merge([run(rng, flat=flat) for _ in range(8)]) for _ in range(100)]
+        found = [together([run(rng, flat=flat) for _ in range(8)]) for _ in range(100)]
         z = np.array([one.log_evidence for one in found])
         stated = np.sqrt(np.mean([one.log_evidence_error**2 for one in found]))
         assert abs(z.mean() - exact) < 5 * z.std() / np.sqrt(100) + z.var() / 2
@@ -63,14 +85,14 @@ def test_runs_that_disagree_make_the_error_larger():
     """
     rng = np.random.default_rng(5)
     parts = [run(rng) for _ in range(8)]
-    assert merge(parts).log_evidence_error < 0.5
-    assert merge([*parts[:7], run(rng, spike=12.0)]).log_evidence_error > 1.0
+    assert together(parts).log_evidence_error < 0.5
+    assert together([*parts[:7], run(rng, spike=12.0)]).log_evidence_error > 1.0
 
 
 def test_posterior_is_the_exponential_that_it_should_be():
     """X follows a truncated exponential: Kolmogorov-Smirnov on as many samples as it is worth."""
     rng = np.random.default_rng(6)
-    merged = merge([run(rng, live=100) for _ in range(8)])
+    merged = together([run(rng, live=100) for _ in range(8)])
     count = int(merged.effective_samples)
     chosen = rng.choice(len(merged.points), count, p=np.exp(merged.log_weight))
     assert kstest(merged.points[chosen, 0], "expon", args=(0, WIDTH)).pvalue > 1e-4
