@@ -86,8 +86,9 @@ def limits(
     from ..files import refuse_existing
     from ..progress import Bar
 
-    shares = {"confidence": confidence, "completeness": completeness, "false-alarm": false_alarm}
-    for name, value in shares.items():
+    if not 0.5 < confidence < 1:
+        raise typer.BadParameter(f"--confidence must be between 0.5 and 1, got {confidence}")
+    for name, value in {"completeness": completeness, "false-alarm": false_alarm}.items():
         if not 0 < value < 1:
             raise typer.BadParameter(f"--{name} must be between 0 and 1, got {value}")
     system, observations = _given(
@@ -265,4 +266,6 @@ def _magnitudes(contrast: float) -> str:
 
     if not math.isfinite(contrast):
         return "none"
+    if contrast == 0:
+        return "0"  # any companion is excluded, however faint
     return f"{contrast:.2g} ({-2.5 * math.log10(contrast):.2f})"

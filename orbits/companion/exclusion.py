@@ -18,7 +18,8 @@ def profile_limit(n: np.ndarray, d: np.ndarray, confidence: float) -> np.ndarray
     One parameter, one-sided: a companion of the true contrast f is wrongly excluded in a share
     1 - `confidence` of all nights, and less often where its estimate would be negative, since
     f = 0 is then what it is compared with (the profile likelihood ratio with a boundary; Cowan et
-    al. 2011, Eur. Phys. J. C 71, 1554). inf where the data say nothing.
+    al. 2011, Eur. Phys. J. C 71, 1554). inf where the data say nothing. `confidence` is above 0.5:
+    below, the quantile is negative, and its square would rise again.
     """
     from scipy.stats import norm
 
@@ -36,11 +37,13 @@ def published_limit(
     The errors are scaled so that the single star has a reduced chi-square of 1, and f is rejected
     where the probability of a chi-square as large as dof chi2(f) / chi2(0), for `dof` degrees of
     freedom, is below 1 - `confidence` (0.27 per cent for 3 sigma). The expression is from memory
-    of that paper, not checked against its text. `chi2` is chi2(0).
+    of that paper, not checked against its text. `chi2` is chi2(0). `confidence` is above 0.5.
     """
     from scipy.stats import chi2 as law
 
     allowed = chi2 * (law.isf(1 - confidence, dof) / dof - 1)  # chi2(f) - chi2(0)
+    # The median lies below `dof`: with few of them, a low confidence rejects all that fits worse.
+    allowed = max(allowed, 0.0)
     error2 = _inverse(d)
     best = n * np.where(np.isfinite(error2), error2, 0.0)
     return best + np.sqrt(best**2 + allowed * error2)

@@ -74,7 +74,7 @@ def limits(
     field, step, diameter, stars, errors, smearing
         As for `search`; several nights share the widest field and the finest step.
     confidence : float
-        Of the routes by chi-square, one-sided.
+        Of the routes by chi-square, one-sided: above 0.5, the confidence of the best estimate.
     completeness : float
         Share of injected companions that the route by recovery wants found.
     false_alarm : float
@@ -95,15 +95,16 @@ def limits(
     InputError
         If an observation has no data that can show a companion.
     ValueError
-        If a probability is not between 0 and 1, or there is no observation.
+        If a probability is not between 0 and 1, or `confidence` not above 0.5, or there is no
+        observation.
     """
     began = time.perf_counter()
     given = [observations] if isinstance(observations, Observation) else list(observations)
     if not given:
         raise ValueError("no observation was given")
-    for name, value in (
-        ("confidence", confidence), ("completeness", completeness), ("false_alarm", false_alarm)
-    ):  # fmt: skip
+    if not 0.5 < confidence < 1:
+        raise ValueError(f"confidence must be between 0.5 and 1, got {confidence}")
+    for name, value in (("completeness", completeness), ("false_alarm", false_alarm)):
         if not 0 < value < 1:
             raise ValueError(f"{name} must be between 0 and 1, got {value}")
     rng = np.random.default_rng(0) if rng is None else rng

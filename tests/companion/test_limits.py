@@ -12,6 +12,7 @@ from scipy.stats import chi2 as chi2_law
 from scipy.stats import ncx2, norm
 from skies import fill, four_stations
 
+from orbits.cli.limits import describe
 from orbits.companion.covariance import ErrorModel
 from orbits.companion.epoch import Epoch
 from orbits.companion.exclusion import profile_limit, published_limit
@@ -68,6 +69,20 @@ def test_published_limit_is_where_the_total_becomes_improbable():
     there = total - 2 * limit * n + limit**2 * d
     assert_allclose(chi2_law.sf(dof * there / total, dof), 0.0027, rtol=1e-6)
     assert np.isinf(published_limit(np.zeros(1), np.zeros(1), total, dof, 0.9973)).all()
+
+
+def test_limits_rise_with_confidence():
+    """With few data too, where the median of chi-square (2.37 for 3) is less than the fit has."""
+    n, d = np.array([-0.2, 0.0, 5.0, -40.0]), np.full(4, 4e2)
+    confidence = (0.501, 0.55, 0.6, 0.7, 0.9, 0.9973)
+    profile = np.array([profile_limit(n, d, one) for one in confidence])
+    assert (np.diff(profile, axis=0) > 0).all()
+    for dof in (1, 3, 100):
+        total = np.array([published_limit(n, d, 1.3 * dof, dof, one) for one in confidence])
+        steps = np.diff(total, axis=0)
+        assert (steps >= 0).all()
+        assert (total >= np.maximum(2 * n / d, 0)).all()  # as good a fit as the single star is kept
+        assert (steps[-3:] > 0).all()
 
 
 def test_response_to_a_companion_is_its_map(observation, result):
@@ -179,6 +194,15 @@ def test_routes_are_ordered_and_complete(result):
     assert_allclose(found, [0.0, 1.0], atol=0.01)
 
 
+def test_limits_of_nothing_and_of_everything_can_be_told(result):
+    """A contrast of 0 has no magnitude: the least confident limits from few data may be one."""
+    size = result.maps["profile"].shape
+    words = describe(replace(result, maps={"profile": np.zeros(size), "recovered": np.ones(size)}))
+    assert "1 (-0.00) / 1 (-0.00)" in words
+    assert "0 / 0\n" in words
+    assert "none / none" in describe(replace(result, maps={"profile": np.full(size, np.inf)}))
+
+
 def test_same_seed_gives_the_same_limits(observation, result):
     again = limits(observation, **QUICK)
     for name, values in result.maps.items():
@@ -240,8 +264,11 @@ def test_tables_have_units_and_conversions(result):
 
 
 def test_wrong_arguments_are_refused(observation):
-    with pytest.raises(ValueError, match="confidence must be between 0 and 1"):
-        limits(observation, confidence=1.0)
+    for confidence in (1.0, 0.5, 0.3, np.nan):
+        with pytest.raises(ValueError, match=r"confidence must be between 0\.5 and 1"):
+            limits(observation, confidence=confidence)
+    with pytest.raises(ValueError, match="completeness must be between 0 and 1"):
+        limits(observation, completeness=1.0)
     with pytest.raises(ValueError, match="no observation"):
         limits([])
     with pytest.raises(InputError, match="no usable"):

@@ -121,7 +121,12 @@ def test_limits_heed_errors_and_parts_of_the_data(night, tmp_path, monkeypatch, 
 
 
 def test_wrong_usage_is_said(night, tmp_path, monkeypatch, capsys):
-    assert command(monkeypatch, capsys, "limits", night, "--confidence", 1.5)[0] == 2
+    for confidence in (1.5, 0.4):
+        code, _, words = command(
+            monkeypatch, capsys, "limits", night, *QUICK, "--confidence", confidence
+        )
+        assert code == 2
+        assert "between 0.5 and 1" in words
     both = ("--inject", 1, 2, 0.1, "--remove", 1, 2, 0.1)
     out = tmp_path / "x.fits"
     assert command(monkeypatch, capsys, "simulate", night, *both, "--output", out)[0] == 2
