@@ -175,14 +175,25 @@ def table(solution: "Solution") -> str:
 
 
 def comparison_table(hypotheses: "list[Hypothesis]") -> str:
-    """Evidence and odds of hypotheses."""
-    lines = ["hypothesis        ln evidence            odds      chi2   dof"]
-    lines += [
-        f"{one.name:<16} {one.log_evidence:>9.2f} +- {one.log_evidence_err:.2f} {one.odds:>12.4g} "
-        f"{one.chi2:>9.1f} {one.dof:>5}"
-        for one in hypotheses
-    ]
+    """Evidence and odds of hypotheses, columns as wide as their widest entry."""
+    rows = [("hypothesis", "ln evidence", "odds", "chi2", "dof")]
+    for one in hypotheses:
+        evidence = f"{one.log_evidence:.2f} +- {one.log_evidence_err:.2f}"
+        rows.append((one.name, evidence, _odds(one), f"{one.chi2:.1f}", str(one.dof)))
+    widths = [max(map(len, column)) for column in zip(*rows, strict=True)]
+    lines = []
+    for name, *numbers in rows:
+        cells = [f"{cell:>{width}}" for cell, width in zip(numbers, widths[1:], strict=True)]
+        lines.append("  ".join([f"{name:<{widths[0]}}", *cells]))
     return "\n".join(lines)
+
+
+def _odds(hypothesis: "Hypothesis") -> str:
+    from math import log
+
+    if hypothesis.odds is None:
+        return f"10^{hypothesis.log_odds / log(10):.0f}"
+    return f"{hypothesis.odds:.4g}"
 
 
 def _digits(plus: float, minus: float) -> int:

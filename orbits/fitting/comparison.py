@@ -1,9 +1,8 @@
 """Hypotheses about the same data, by their evidence."""
 
+import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
-
-import numpy as np
 
 from .model import Model
 from .solution import Solution
@@ -16,6 +15,8 @@ CHANGES: dict[str, dict[str, bool]] = {
     "outliers": {"outliers": True},
 }
 """What each hypothesis adds to the model of the system."""
+LARGEST = 700.0
+"""ln of odds, either way, that a number of 64 bits still holds with all its digits."""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -25,8 +26,10 @@ class Hypothesis:
     name: str
     log_evidence: float
     log_evidence_err: float
-    odds: float
-    """Evidence over that of the first hypothesis."""
+    log_odds: float
+    """ln of the evidence over that of the first hypothesis."""
+    odds: float | None
+    """The same without ln; None beyond what a number can hold."""
     chi2: float
     dof: int
 
@@ -55,9 +58,14 @@ def compare(
             name=name,
             log_evidence=one.account["log_evidence"],
             log_evidence_err=one.account["log_evidence_err"],
-            odds=float(np.exp(np.clip(one.account["log_evidence"] - first, -700, 700))),
+            log_odds=one.account["log_evidence"] - first,
+            odds=_odds(one.account["log_evidence"] - first),
             chi2=one.account["chi2"],
             dof=one.account["dof"],
         )
         for name, one in solutions.items()
     ]
+
+
+def _odds(log_odds: float) -> float | None:
+    return math.exp(log_odds) if abs(log_odds) < LARGEST else None
