@@ -38,7 +38,8 @@ _ROUTES = """
     in chi-square of {threshold:.1f})
   difference:  chi-square there grows too much for it, at {confidence:.2%}, the place being given
   total:       chi-square of all closure phases, taken as independent, is improbable at the same
-    level; far weaker the more data there are, and wrong where they are correlated: to compare with
+    level, in the form of Absil et al. 2011 as we recall it, not checked against the paper's text;
+    far weaker the more data there are, and wrong where they are correlated: to compare with
     papers"""
 
 

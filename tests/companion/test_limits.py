@@ -194,6 +194,11 @@ def test_routes_are_ordered_and_complete(result):
     assert_allclose(found, [0.0, 1.0], atol=0.01)
 
 
+def test_words_say_where_the_total_is_from(result):
+    words = " ".join(describe(result).split())
+    assert "in the form of Absil et al. 2011 as we recall it, not checked against" in words
+
+
 def test_limits_of_nothing_and_of_everything_can_be_told(result):
     """A contrast of 0 has no magnitude: the least confident limits from few data may be one."""
     size = result.maps["profile"].shape
