@@ -23,6 +23,8 @@ NEXT = "next_periastron_mjd"
 NEED_PARALLAX = frozenset({"parallax_mas", "total_msun", "primary_msun", "companion_msun",
                            "mass_ratio", "semimajor_axis_au"})  # fmt: skip
 """Quantities that a parallax gives where the velocities of one star at most are known."""
+BOTH_STARS = frozenset({"primary_msun", "companion_msun", "mass_ratio"})
+"""Those of them for which positions and a parallax are not enough."""
 ANGLES = frozenset({"inclination_deg", "node_deg", "argument_deg"})
 PLAIN, ANGLE, DATE = range(3)
 ROOT_2PI = math.sqrt(2 * math.pi)
@@ -97,5 +99,17 @@ def check_knowledge(data: "Data") -> None:
     for name in data.priors.normal:
         if name not in given:
             raise InputError(
-                f"priors.normal: {name!r} is not among what these data give: {', '.join(given)}"
+                f"priors.normal: {name!r} is not among what these data give: "
+                f"{', '.join(given)}{_remedy(name, positions=data.positions is not None)}"
             )
+
+
+def _remedy(name: str, *, positions: bool) -> str:
+    """What would give the quantity, where that is a distance or the masses of both stars."""
+    if name not in NEED_PARALLAX:
+        return ""
+    if name in BOTH_STARS:
+        what = "velocities of both stars, or of one and a parallax ([parallax])"
+    else:
+        what = "a parallax ([parallax]) or velocities of both stars"
+    return f"; it takes {what}" if positions else f"; it takes positions, and {what}"

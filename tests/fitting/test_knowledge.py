@@ -12,7 +12,7 @@ from scipy.stats import multivariate_normal, norm
 
 from orbits import InputError, Model, Parallax, Priors, fit, masses
 from orbits.fitting.data import make_data
-from orbits.fitting.knowledge import check_knowledge
+from orbits.fitting.knowledge import NEED_PARALLAX, check_knowledge
 from orbits.fitting.target import Target
 
 PRIORS = Priors(
@@ -194,3 +194,27 @@ def test_what_the_data_do_not_give_is_refused(kind, name):
     data = data_of(np.random.default_rng(1), normal={name: (1.0, 1.0)}, **kind)
     with pytest.raises(InputError, match=f"'{name}' is not among what these data give: period_d"):
         check_knowledge(data)
+
+
+@pytest.mark.parametrize("name", sorted(NEED_PARALLAX))
+@pytest.mark.parametrize(
+    "kind", [{"stars": ()}, {"stars": (0,)}, {"stars": (0,), "positions": False}]
+)
+def test_the_refusal_names_a_remedy_that_helps(kind, name):
+    """What the sentence asks for is given, one way after the other, and the name is accepted."""
+    rng = np.random.default_rng(1)
+    with pytest.raises(InputError, match=r"; it takes .*parallax") as refused:
+        check_knowledge(data_of(rng, normal={name: (1.0, 1.0)}, **kind))
+    remedy = str(refused.value).partition("; it takes ")[2]
+    assert remedy.startswith("positions, and ") == ("positions" in kind)
+    assert "velocities of both stars" in remedy
+    check_knowledge(data_of(rng, normal={name: (1.0, 1.0)}))  # positions and both stars
+    one = (0,) if "or of one and a parallax ([parallax])" in remedy else ()
+    check_knowledge(data_of(rng, normal={name: (1.0, 1.0)}, stars=one, parallax=PARALLAX))
+
+
+def test_a_name_that_no_distance_gives_has_no_such_remedy():
+    data = data_of(np.random.default_rng(1), normal={"height": (1.0, 1.0)}, stars=())
+    with pytest.raises(InputError, match="'height'") as refused:
+        check_knowledge(data)
+    assert "it takes" not in str(refused.value)
