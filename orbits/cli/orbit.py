@@ -79,6 +79,8 @@ def orbit(
     try:
         solution = solve(model)
         hypotheses = weigh(names, model, solve, solution) if names else []
+    except InputError as error:  # of a fit, which knows no files
+        raise InputError(f"{given.path}: {error}") from error
     except KeyboardInterrupt:
         print("what is finished is kept; the same command continues from there", file=sys.stderr)
         raise

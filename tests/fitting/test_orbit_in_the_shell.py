@@ -125,7 +125,7 @@ def test_unusable_input(system, orbit, tmp_path):
     assert "period needs a range" in err
     code, err = failing(SYSTEM + "[priors.normal]\nheight = [1, 1]\n")
     assert code == 3
-    assert "'height' is not among what these data give" in err
+    assert f"{system}: priors.normal: 'height' is not among what these data give" in err
     code, err = failing('name = "empty"\n')
     assert code == 3
     assert "no nights, positions or velocities" in err
@@ -135,3 +135,13 @@ def test_unusable_input(system, orbit, tmp_path):
     code, _, err = orbit(system, "--compare", "square")
     assert code == 2
     assert "no hypothesis 'square'" in err
+
+
+def test_too_few_data_are_refused_by_the_name_of_their_file(system, orbit, tmp_path):
+    """Once, although the sentence comes from a fit that knows no files."""
+    write_positions(tmp_path / "two.ecsv", seen(binary(), 2, np.random.default_rng(31)))
+    system.write_text('name = "two"\n[positions]\ntables = ["two.ecsv"]\n')
+    code, out, err = orbit(system)
+    assert (code, out) == (3, "")
+    assert err.startswith(f"nodeline: {system}: 2 nights with a position and no velocities")
+    assert err.count(str(system)) == 1
