@@ -5,6 +5,7 @@ from typing import Annotated
 
 import typer
 
+from ..errors import InputError
 from .frame import Force, Json, Seed, emit, say
 from .night import checked
 
@@ -59,6 +60,7 @@ def simulate(
     from ..simulation.outputs import simulate as carry_out
     from ..simulation.scenario import read_scenario
 
+    _refuse_data(given)
     plan = read_scenario(given)
     rng = np.random.default_rng(seed)
     system = carry_out(plan, output, rng=rng, force=force, progress=Bar())
@@ -66,6 +68,30 @@ def simulate(
         json=json)  # fmt: skip
     if json:
         emit({"name": plan.name, "system": str(system), "nights": len(plan.nights.dates)})
+
+
+def _refuse_data(given: Path) -> None:
+    """Say what to do with data, or with the system file of data, given for a scenario."""
+    import tomllib
+
+    if not given.is_file():
+        return
+    content = given.read_bytes()
+    if content.startswith((b"SIMPLE  =", b"\x1f\x8b")):  # FITS, plain or gzipped
+        raise InputError(
+            f"{given}: FITS data, not a scenario; to put a companion into them or take one out, "
+            "add --inject or --remove with its separation, position angle and contrast"
+        )
+    try:
+        tree = tomllib.loads(content.decode())
+    except (tomllib.TOMLDecodeError, UnicodeDecodeError):
+        return  # the reader of scenarios says where
+    sections = [part for part in tree.values() if isinstance(part, dict)]
+    if "star" not in tree and any(part.keys() & {"files", "tables"} for part in sections):
+        raise InputError(
+            f"{given}: a system file, which names data, not a scenario, which describes a star, "
+            f"its orbit and an array; to analyse its data: nodeline measure {given}"
+        )
 
 
 def _exchange(

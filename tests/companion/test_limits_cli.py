@@ -1,5 +1,6 @@
 """The command lines of limits, spectrum, posterior and of companions put into files."""
 
+import gzip
 import json
 from pathlib import Path
 
@@ -118,6 +119,41 @@ def test_limits_heed_errors_and_parts_of_the_data(night, tmp_path, monkeypatch, 
     code, _, words = command(monkeypatch, capsys, "limits", system, *QUICK)
     assert code == 3
     assert "no station 'T" in words
+
+
+@pytest.mark.parametrize("packed", [False, True])
+def test_data_are_no_scenario(packed, night, tmp_path, monkeypatch, capsys):
+    if packed:
+        zipped = night.with_suffix(".fits.gz")
+        zipped.write_bytes(gzip.compress(night.read_bytes()))
+        night = zipped
+    out = tmp_path / "x"
+    code, _, words = command(monkeypatch, capsys, "simulate", night, "--output", out)
+    assert code == 3
+    assert f"{night}: FITS data, not a scenario" in words
+    assert "--inject" in words
+
+
+@pytest.mark.parametrize(
+    "section", ['nights]\nfiles = ["night.fits"]', 'positions]\ntables = ["p.csv"]']
+)
+def test_a_system_is_no_scenario(section, tmp_path, monkeypatch, capsys):
+    system = tmp_path / "harrow.toml"
+    system.write_text(f'name = "Harrow 9"\n[{section}\n')
+    given = ("simulate", system, "--output", tmp_path / "x")
+    code, _, words = command(monkeypatch, capsys, *given)
+    assert code == 3
+    assert f"{system}: a system file" in words
+    assert f"nodeline measure {system}" in words
+
+
+@pytest.mark.parametrize("text", ["name = ", 'name = "x"\n[nights]\ndates = [60000]\n', "\xff"])
+def test_a_scenario_with_a_mistake_is_one(text, tmp_path, monkeypatch, capsys):
+    path = tmp_path / "scenario.toml"
+    path.write_text(text, encoding="latin-1")
+    code, _, words = command(monkeypatch, capsys, "simulate", path, "--output", tmp_path / "x")
+    assert code == 3
+    assert "not TOML" in words or "star is missing" in words
 
 
 def test_wrong_usage_is_said(night, tmp_path, monkeypatch, capsys):
