@@ -120,4 +120,11 @@ def describe(result: "ContrastSpectrum") -> str:
         f"  {1e6 * result.wavelength[k]:.4f} um   {result.contrast[k]:.5f} +- {result.error[k]:.5f}"
         for k in range(0, len(result.contrast), step)
     ]
+    flat = result.flatness
+    if flat is not None:
+        lines.append(
+            f"  one constant contrast of {flat.contrast:.5f}: chi-square {flat.chi2:.1f} for "
+            f"{flat.dof} degree{'s' if flat.dof > 1 else ''} of freedom, which noise reaches with "
+            f"probability {flat.probability:.2g}"
+        )
     return "\n".join(lines)

@@ -19,6 +19,22 @@ from .covariance import Covariance, ErrorModel
 from .fit import Fit, Problem, fit
 from .result import Candidate
 
+_UNKNOWN = 1e6
+"""Variance of a contrast about which a channel says nothing."""
+
+
+@dataclass(frozen=True, kw_only=True)
+class Flatness:
+    """How well one constant contrast explains a spectrum."""
+
+    contrast: float
+    """The constant that fits best."""
+    chi2: float
+    """Of the contrasts about it."""
+    dof: int
+    probability: float
+    """Of a chi-square as large, if the contrast is constant."""
+
 
 @dataclass(frozen=True, eq=False, kw_only=True)
 class ContrastSpectrum:
@@ -49,6 +65,26 @@ class ContrastSpectrum:
     def error(self) -> np.ndarray:
         """(K,) standard errors, for each bin by itself."""
         return np.sqrt(np.diag(self.covariance))
+
+    @property
+    def flatness(self) -> Flatness | None:
+        """The contrasts against one constant, by their covariance (generalised least squares).
+
+        None where fewer than two channels say anything.
+        """
+        from scipy.stats import chi2 as law
+
+        known = np.diag(self.covariance) < _UNKNOWN
+        dof = int(known.sum()) - 1
+        if dof < 1:
+            return None
+        contrast, covariance = self.contrast[known], self.covariance[np.ix_(known, known)]
+        weights = np.linalg.solve(covariance, np.ones(dof + 1))
+        constant = float(weights @ contrast / weights.sum())
+        miss = contrast - constant
+        chi2 = float(miss @ np.linalg.solve(covariance, miss))
+        probability = float(law.sf(chi2, dof))
+        return Flatness(contrast=constant, chi2=chi2, dof=dof, probability=probability)
 
     def to_json(self) -> dict[str, Any]:
         """One object of plain numbers and words."""
@@ -161,7 +197,7 @@ def _result(observation, found: Fit, ratios, level, edges, fixed) -> ContrastSpe
     places = [found.free.index(index) for index in ratios]
     scale2 = max(1.0, found.reduced)
     covariance = level**2 * scale2 * found.covariance[np.ix_(places, places)]
-    if not (np.diag(covariance) < 1e6).any():
+    if not (np.diag(covariance) < _UNKNOWN).any():
         raise NothingFound(f"{observation.target}: no channel says anything about the companion")
     return ContrastSpectrum(
         target=observation.target,

@@ -5,13 +5,14 @@ from dataclasses import replace
 import numpy as np
 import pytest
 from numpy.testing import assert_allclose
-from scipy.stats import chi2
+from scipy.stats import chi2, norm
 from skies import fill, four_stations
 
 from orbits.binary import Scene, model
+from orbits.cli.spectrum import describe
 from orbits.companion.covariance import Covariance, ErrorModel
 from orbits.companion.search import search
-from orbits.companion.spectrum import spectrum
+from orbits.companion.spectrum import ContrastSpectrum, spectrum
 from orbits.errors import InputError
 from orbits.sampling import Sampling
 
@@ -97,3 +98,52 @@ def test_common_calibration_errors_tie_the_channels_together(rng):
     free = spectrum(observation, best, fix_place=True)
     mean = [one.covariance.mean() / np.diag(one.covariance).mean() for one in (tied, free)]
     assert mean[0] > mean[1]
+
+
+def of_contrasts(contrast, covariance):
+    size = len(contrast)
+    return ContrastSpectrum(
+        target="Harrow 9", instrument=np.array(["TEST"] * size), wavelength=np.linspace(1, 2, size),
+        width=np.ones(size), contrast=np.asarray(contrast), covariance=np.asarray(covariance),
+        error_scale=1.0, x_mas=1.0, y_mas=2.0, place_fixed=False, primary_diameter_mas=1.0,
+        chi2=1.0, dof=1,
+    )  # fmt: skip
+
+
+def test_constant_contrast_is_judged_by_the_differences_between_channels(rng):
+    """Chi-square about the best constant is that of neighbours' differences, D C D^T."""
+    contrast = 0.03 + 0.004 * rng.standard_normal(6)
+    root = rng.standard_normal((6, 6))
+    covariance = 1e-5 * (root @ root.T / 6 + np.full((6, 6), 3.0))
+    flat = of_contrasts(contrast, covariance).flatness
+    difference = np.diff(np.eye(6), axis=0)
+    step = difference @ contrast
+    own = difference @ covariance @ difference.T
+    assert_allclose(flat.chi2, step @ np.linalg.solve(own, step), rtol=1e-8)
+    assert flat.dof == 5
+    nearby = [flat.contrast + shift for shift in (-1e-4, 0.0, 1e-4)]
+    sums = [(contrast - c) @ np.linalg.solve(covariance, contrast - c) for c in nearby]
+    assert np.argmin(sums) == 1
+
+
+def test_slope_of_two_channels_is_no_more_than_their_difference():
+    """Two channels 1.5 of the error of their difference apart: the two-sided normal tail.
+
+    That error is sqrt(2 (1 - rho)) of that of one, since an error in common shows no slope.
+    """
+    rho, sigma = 0.8, 0.002
+    apart = 1.5 * sigma * np.sqrt(2 * (1 - rho))
+    covariance = sigma**2 * np.array([[1.0, rho], [rho, 1.0]])
+    two = of_contrasts([0.03, 0.03 + apart], covariance)
+    assert_allclose(two.flatness.probability, 2 * norm.sf(1.5), rtol=1e-9)
+    said = "chi-square 2.2 for 1 degree of freedom, which noise reaches with probability 0.13"
+    assert said in describe(two)
+
+
+def test_silent_channels_do_not_judge_a_constant():
+    heard = of_contrasts([0.03, 0.05, 0.04], np.diag([1e-6, 1e-6, 1e9]))
+    assert heard.flatness.dof == 1
+    assert_allclose(heard.flatness.chi2, 0.02**2 / 2e-6)
+    alone = of_contrasts([0.03, 0.05], np.diag([1e-6, 1e9]))
+    assert alone.flatness is None
+    assert "constant" not in describe(alone)
