@@ -123,8 +123,7 @@ def describe(result: "ContrastSpectrum") -> str:
     flat = result.flatness
     if flat is not None:
         lines.append(
-            f"  one constant contrast of {flat.contrast:.5f}: chi-square {flat.chi2:.1f} for "
-            f"{flat.dof} degree{'s' if flat.dof > 1 else ''} of freedom, which noise reaches with "
-            f"probability {flat.probability:.2g}"
+            f"  against one constant, {flat.contrast:.5f}: chi-square {flat.chi2:.1f} for "
+            f"{flat.dof} degree{'s' if flat.dof > 1 else ''} of freedom (p = {flat.probability:.2g})"
         )
     return "\n".join(lines)
