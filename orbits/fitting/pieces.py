@@ -6,6 +6,7 @@ random numbers and versions. Whatever changes, the folder is another and nothing
 """
 
 import hashlib
+import time
 import zipfile
 from collections.abc import Callable
 from pathlib import Path
@@ -17,6 +18,8 @@ from ..files import whole_file
 from ..provenance import versions
 
 T = TypeVar("T")
+ABANDONED = 7 * 86400.0
+"""Age in seconds of the newest piece at which nobody is thought to continue a fit."""
 
 
 class Forgotten:
@@ -39,6 +42,7 @@ class Kept(Forgotten):
 
     def __init__(self, folder: Path, hear: Callable[[str], None] = lambda text: None) -> None:
         self.folder, self.hear = Path(folder), hear
+        self.taken: set[str] = set()
 
     def tell(self, text: str) -> None:
         """Say to a person what becomes of the pieces."""
@@ -46,6 +50,7 @@ class Kept(Forgotten):
 
     def of(self, fingerprint: str) -> "Kept":
         """The pieces of the fit that has this fingerprint."""
+        self.taken.add(fingerprint)
         mine = Kept(self.folder / fingerprint, self.hear)
         found = len(list(mine.folder.glob("[!.]*.npz")))
         if found:
@@ -64,15 +69,25 @@ class Kept(Forgotten):
         return piece
 
     def clear(self) -> None:
-        """Remove all pieces, of whatever fit, and the folder if nothing else is in it."""
-        for path in [*self.folder.glob("*/*.npz"), *self.folder.glob("*/.*.npz")]:
-            path.unlink()
-        for folder in [*self.folder.glob("*"), self.folder]:
-            if folder.is_dir() and not any(folder.iterdir()):
-                folder.rmdir()
+        """Remove the pieces of all fits that were asked for here, and of those left long ago.
+
+        Another process may be at a fit of its own in the same folder, which goes if it is empty.
+        """
+        now = time.time()
+        for folder in self.folder.glob("*/"):
+            if folder.name in self.taken or now - folder.stat().st_mtime > ABANDONED:
+                for path in folder.glob("*.npz"):  # half-written ones too
+                    path.unlink()
+                _remove_empty(folder)
+        _remove_empty(self.folder)
 
 
 FORGOTTEN = Forgotten()
+
+
+def _remove_empty(folder: Path) -> None:
+    if folder.is_dir() and not any(folder.iterdir()):
+        folder.rmdir()
 
 
 def _read(path: Path, kind: type[T]) -> T | None:
