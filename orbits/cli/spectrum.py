@@ -122,8 +122,9 @@ def describe(result: "ContrastSpectrum") -> str:
     ]
     flat = result.flatness
     if flat is not None:
+        plural = "s" if flat.dof > 1 else ""
         lines.append(
             f"  against one constant, {flat.contrast:.5f}: chi-square {flat.chi2:.1f} for "
-            f"{flat.dof} degree{'s' if flat.dof > 1 else ''} of freedom (p = {flat.probability:.2g})"
+            f"{flat.dof} degree{plural} of freedom (p = {flat.probability:.2g})"
         )
     return "\n".join(lines)
