@@ -75,9 +75,10 @@ class Priors:
     ) -> Self:
         """Wide densities that suit the data, but for what is `given`.
 
-        Periods run from the shortest interval between two nights (0.5 d at least) to a thousand
-        times the span of the data, semimajor axes from a third of the largest separation, which
-        no orbit can undercut, to a thousand times it.
+        Periods run from the shortest interval between two nights, or a tenth of the span of the
+        data if that is less (0.5 d at least), to a thousand times the span. Semimajor axes run from
+        a third of the largest separation (or of the typical error, if that is more), which no orbit
+        can undercut, to a thousand times that separation.
         """
         made: dict[str, object] = {"period": default_periods(positions, velocities)}
         if positions is not None:
