@@ -163,10 +163,11 @@ def table(solution: "Solution") -> str:
         lines.append(
             f"  {name:<28} {median:>16.{digits}f}  +{plus:.{digits}f}  -{minus:.{digits}f}{mark}"
         )
+    seconds = f"; {account['seconds']:.1f} s" if "seconds" in account else ""
     lines.append(
         f"chi2 {account['chi2']:.1f} for {account['dof']} degrees of freedom; "
         f"ln evidence {account['log_evidence']:.2f} +- {account['log_evidence_err']:.2f}; "
-        f"{account['effective_samples']:.0f} effective samples; {account['seconds']:.1f} s"
+        f"{account['effective_samples']:.0f} effective samples{seconds}"
     )
     sets = account["data"]
     if len(sets) > 1 or any("instruments" in one for one in sets.values()):

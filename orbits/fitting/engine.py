@@ -89,7 +89,8 @@ def fit(
     work = Work(live_points=live_points, cores=cores, progress=progress, pieces=pieces)
     explored = explore(data, adapted, work, own[2])
     solution = solution_of(data, explored, found, name=name, rng=own[3])
-    solution.account["seconds"] = time.monotonic() - begin
+    if not pieces.continued:  # else the time is that of the rest alone
+        solution.account["seconds"] = time.monotonic() - begin
     return solution
 
 

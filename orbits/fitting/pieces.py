@@ -25,6 +25,9 @@ ABANDONED = 7 * 86400.0
 class Forgotten:
     """Keeps nothing: the default of the library."""
 
+    continued = False
+    """Whether pieces of this fit were there before it began."""
+
     def of(self, fingerprint: str) -> "Forgotten":
         """The pieces of the fit that has this fingerprint."""
         return self
@@ -54,6 +57,7 @@ class Kept(Forgotten):
         mine = Kept(self.folder / fingerprint, self.hear)
         found = len(list(mine.folder.glob("[!.]*.npz")))
         if found:
+            mine.continued = True
             pieces = "1 piece" if found == 1 else f"{found} pieces"
             self.tell(f"continuing an interrupted fit from {pieces} of it, kept in {mine.folder}")
         return mine

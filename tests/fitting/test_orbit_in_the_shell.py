@@ -106,9 +106,9 @@ def test_an_interrupted_fit_goes_on(system, orbit, monkeypatch):
     assert code == 0
     assert err.count("continuing an interrupted fit from") == 2
     assert len(calls) <= 2 * explore.RUNS + 1
-    continued = json.loads(out)
-    whole.pop("seconds"), continued.pop("seconds")
-    assert continued == whole
+    whole.pop("seconds")  # of a continued fit only the last part could be timed
+    assert json.loads(out) == whole
+    assert "effective samples\n" in err
     assert not (folder / "unfinished").exists()
     assert "orbit" in json.loads((folder / "history.json").read_text())
 

@@ -57,7 +57,7 @@ def solve(monkeypatch):
 
 def told(solution):
     tree = solution.to_json()
-    tree.pop("seconds")
+    tree.pop("seconds", None)
     return tree, solution.samples.to_numpy().tolist()
 
 
@@ -73,6 +73,9 @@ def test_a_continued_fit_equals_one_that_was_never_interrupted(solve, tmp_path):
     assert runs == explore.RUNS - kept > 0
     assert f"continuing an interrupted fit from {kept + 2} pieces" in heard[0]
     assert told(continued) == told(whole)
+    # The time of the last part would pass for that of the fit.
+    assert whole.account["seconds"] > 0
+    assert "seconds" not in continued.account
 
 
 def test_changed_settings_begin_anew(solve, tmp_path):
