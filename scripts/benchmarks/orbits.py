@@ -16,7 +16,7 @@ from orbits import Elements, Positions, Priors, Velocities, fit
 
 from . import row
 
-LIVE_POINTS = 200
+LIVE_POINTS = 500
 NIGHTS, EPOCHS = 20, 40
 START, SPAN = 60_000.0, 1500.0
 ERROR_MAS, ERROR_KMS = 0.1, 0.3
