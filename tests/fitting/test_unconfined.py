@@ -128,7 +128,7 @@ def test_what_finds_more_evidence_counts(
     def run(target, label, work, rng):
         value, error = {"solutions": solutions, "priors": wide}[label]
         return Run(points=np.zeros((1, size)), log_weight=np.zeros(1), log_evidence=value,
-                   log_evidence_error=error, calls=1)  # fmt: skip
+                   log_evidence_error=error, calls=1, independent=np.full(1, 1e3))  # fmt: skip
 
     def importance(target, rng, count):
         return Estimate(value=drawn[0], error=drawn[1], efficiency=efficiency)
